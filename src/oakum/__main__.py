@@ -1,0 +1,5 @@
+"""`python -m oakum`."""
+
+from oakum.cli import main
+
+main()

@@ -1,0 +1,45 @@
+"""The application: its commands, and the options that belong to none of them."""
+
+from typing import Annotated
+
+import typer
+
+from oakum.cli import describe, protect, repair, verify
+
+app = typer.Typer(
+    name="oakum",
+    help=(
+        "Keep archived files whole: write a sidecar of parity beside them, find every flipped bit years "
+        "later, and put the bytes right."
+    ),
+    epilog="Exit status: 0 whole or put right, 10 correctable damage, 20 damage beyond correction, 30 could "
+    "not check, 2 wrong usage, 1 a fault of the program itself. More: man oakum.",
+    # Plain help loads in a third of the time, and reads the same in a pager, a log and a screen reader.
+    rich_markup_mode=None,
+    pretty_exceptions_enable=False,
+    add_completion=False,
+    context_settings={"help_option_names": ["-h", "--help"], "max_content_width": 100},
+)
+
+
+def _show_version(wanted: bool) -> None:
+    if wanted:
+        from importlib.metadata import version
+
+        typer.echo(f"oakum {version('oakum')}")
+        raise typer.Exit
+
+
+@app.callback()
+def oakum(
+    version: Annotated[
+        bool, typer.Option("--version", help="Show the version.", callback=_show_version, is_eager=True)
+    ] = False,
+) -> None:
+    """Options before the command; the help text stands above."""
+
+
+app.command("protect")(protect.protect)
+app.command("verify")(verify.verify)
+app.command("repair")(repair.repair)
+app.command("describe")(describe.describe)

@@ -1,0 +1,49 @@
+"""`oakum verify`."""
+
+from typing import Annotated
+
+import typer
+
+from oakum.cli.checking import check
+from oakum.cli.options import DEFAULT_MEMORY, Jobs, Json, Memory, Quiet, Root, Sidecar, Target, Unreadable
+from oakum.results import Outcome
+
+_STATUS = {Outcome.INTACT: 0, Outcome.CORRECTABLE: 10, Outcome.UNCORRECTABLE: 20, Outcome.UNCHECKED: 30}
+
+
+def verify(
+    target: Target,
+    sidecar: Sidecar = None,
+    root: Root = None,
+    digests_only: Annotated[
+        bool,
+        typer.Option(
+            "--digests-only", help="Only find damage, do not try to correct it.", show_default=False
+        ),
+    ] = False,
+    unreadable: Unreadable = None,
+    json: Json = False,
+    quiet: Quiet = False,
+    memory: Memory = DEFAULT_MEMORY,
+    jobs: Jobs = None,
+) -> int:
+    """Find damage and say whether it can be corrected; writes nothing."""
+    from oakum.jobs.verify import verify as job
+
+    result = check(
+        "verify",
+        target,
+        as_json=json,
+        quiet=quiet,
+        job=lambda progress: job(
+            target,
+            sidecar=sidecar,
+            root=root,
+            digests_only=digests_only,
+            unreadable=unreadable,
+            memory=memory,
+            jobs=jobs,
+            progress=progress,
+        ),
+    )
+    return _STATUS[result.outcome]

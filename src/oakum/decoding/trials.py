@@ -1,0 +1,145 @@
+"""Which symbols a trial erases, and which solutions may be believed.
+
+The trials of one round are those of generalised minimum distance decoding (Forney, IEEE Trans. Inform.
+Theory 12, 1966) on the reliabilities that a bounded-distance inner decoder leaves: nothing erased beyond
+what is known to be bad, then the flagged words, then also the words in which most flips were corrected.
+Verdicts about density add trials before and between; they never take one away.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from oakum.kernels.words import FLAGGED
+
+Bytes = NDArray[np.uint8]
+Places = NDArray[np.intp]
+Mask = NDArray[np.bool_]
+
+DENSE = 254
+"""Status of a word that lies in a burst, of its data or of its inner parity: its bytes stay as received."""
+
+UNUSABLE = 253
+"""Status of a word whose inner parity could not be read: its bytes stay as received."""
+
+BELIEVED = float(np.log(1e-9))
+"""Log of the chance below which a column that a random word could have passed for is believed."""
+
+USABLE = float(np.log(1e-4))
+"""Log of the chance below which such a column is used for the time being, until something speaks against it."""
+
+LIKELY = 3
+"""A byte of a flagged word of so few unknown bytes is more likely wrong than right (two flips among them)."""
+
+DENSE_RUN = 32
+"""So many words in a row without a clean one are a burst in the data or in its inner parity."""
+
+
+@dataclass(frozen=True)
+class Reliability:
+    """What is known of each symbol of the rows in question, arrays of shape [R, columns].
+
+    `erased`: known to be bad. `dense`: inside a burst, by the density of its words or by its row.
+    `status`: that of the symbol's word (see `WordCodec.correct`). `open_bytes`: how many bytes of its word
+    are not yet known to be right; 0 where the symbol itself is known, and then nothing else is set.
+    """
+
+    erased: Mask
+    dense: Mask
+    status: Bytes
+    open_bytes: Bytes
+
+    def take(self, columns: Places) -> Reliability:
+        """The same for some of the columns."""
+        return Reliability(*(a[:, columns] for a in (self.erased, self.dense, self.status, self.open_bytes)))
+
+
+def erasure_trials(known: Reliability, t: int) -> Iterator[Mask]:
+    """The sets of symbols to erase, most promising first, each different from the one before."""
+    flagged = known.status == FLAGGED
+    previous: Mask | None = None
+    for base in (known.erased | known.dense, known.erased):
+        for trial in _graded(base, flagged, known, t):
+            if previous is None or not np.array_equal(trial, previous):
+                yield trial
+            previous = trial
+        if not known.dense.any():
+            return
+
+
+def _graded(base: Mask, flagged: Mask, known: Reliability, t: int) -> Iterator[Mask]:
+    """Erase more and more on top of `base`: likely wrong, none, more of the flagged, all, then corrected words."""
+    yield base | (flagged & (known.open_bytes <= LIKELY))
+    yield base
+    for most in (5, 8):
+        yield base | (flagged & (known.open_bytes <= most))
+    yield base | flagged
+    for least in range(t, 0, -1):
+        yield base | flagged | ((known.status >= least) & (known.status <= t))
+
+
+_LOG_FACTORIAL = np.concatenate([[0.0], np.cumsum(np.log(np.arange(1, 256)))])
+
+
+def chance_of_acceptance(places: Places, errors: Places, checks: Places) -> NDArray[np.float64]:
+    """Natural log of the chance that a random word is decoded to `errors` wrong symbols.
+
+    `places` is the number of symbols that may be wrong and are not erased, `checks` = r - erasures:
+    C(places, e) (255/256)^e 256^(e - checks) (the expected number of codewords so near a random word).
+    """
+    errors = np.minimum(errors, places)
+    choose = _LOG_FACTORIAL[places] - _LOG_FACTORIAL[errors] - _LOG_FACTORIAL[places - errors]
+    return np.asarray(choose + errors * np.log(255 / 256) + (errors - checks) * np.log(256.0))
+
+
+def generalised_distance(known: Reliability, wrong: Mask, d: int) -> NDArray[np.float64]:
+    """Forney's measure of how far a solution is from what was received, for each column, in symbols.
+
+    With e flips corrected in its word a symbol has the reliability (d - 2e)/d, an erased or flagged one 0;
+    a symbol that the solution leaves as it is adds 1 - reliability, one that it alters (`wrong`, bool[R,
+    columns]) adds 1 + reliability. At most one codeword is nearer than D; see the source above.
+    """
+    flips = np.where(known.status <= UNUSABLE - 1, known.status, 0).astype(np.float64)
+    reliability = np.maximum(1.0 - 2.0 * flips / d, 0.0)
+    reliability[known.erased | (known.status == FLAGGED)] = 0.0
+    terms = np.where(wrong, 1.0 + reliability, 1.0 - reliability)
+    return np.asarray(np.where(known.open_bytes > 0, terms, 0.0).sum(axis=0))
+
+
+def dense_words(status: Bytes) -> Mask:
+    """Which words, bool[R, words], lie in a run of at least DENSE_RUN words none of which is clean."""
+    rows, words = status.shape
+    if words < DENSE_RUN:
+        return np.zeros(status.shape, bool)
+    clean = np.zeros((rows, words + 1), np.int32)
+    np.cumsum(status == 0, axis=1, out=clean[:, 1:])
+    begins = clean[:, DENSE_RUN:] == clean[:, :-DENSE_RUN]
+    if not begins.any():
+        return np.zeros(status.shape, bool)
+    covered = np.zeros((rows, words + 1), np.int32)
+    covered[:, : begins.shape[1]] += begins
+    covered[:, DENSE_RUN:] -= begins[:, : words + 1 - DENSE_RUN]
+    return np.asarray(np.cumsum(covered, axis=1)[:, :words] > 0)
+
+
+def neighbouring_rows(strips: Places, r: int) -> Mask:
+    """Which of the strips in question stand next to each other, as those of one long burst do.
+
+    Longest runs first, as many as r erasures allow; none where there is no such run.
+    """
+    chosen = np.zeros(len(strips), bool)
+    if not len(strips):
+        return chosen
+    opens = np.flatnonzero(np.diff(strips, prepend=-2) != 1)
+    lengths = np.diff(np.append(opens, len(strips)))
+    room = r
+    for i in np.argsort(-lengths, kind="stable"):
+        if lengths[i] < 2 or lengths[i] > room:
+            continue
+        chosen[opens[i] : opens[i] + lengths[i]] = True
+        room -= int(lengths[i])
+    return chosen

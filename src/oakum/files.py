@@ -1,0 +1,204 @@
+"""The one place where files are opened, read and replaced.
+
+Reading never raises for bytes that cannot be read: they come back as zeros together with their ranges.
+Writing goes to a temporary file in the same folder, which takes the final name only when it is whole.
+"""
+
+from __future__ import annotations
+
+import errno
+import os
+import secrets
+from pathlib import Path
+from types import TracebackType
+
+import numpy as np
+from numpy.typing import NDArray
+
+from oakum.errors import CannotCheck, UsageError
+
+Fault = tuple[int, int]
+
+_PAGE = 4096
+_SECTOR = 512
+
+
+def read_into(fd: int, offset: int, buffer: memoryview) -> list[Fault]:
+    """Fill `buffer` from `offset` of a file. What cannot be read is zero and its ranges are returned.
+
+    A read error is narrowed down to pages of 4 KiB and then to sectors of 512 bytes. Bytes past the end
+    of the file count as unreadable.
+    """
+    faults: list[Fault] = []
+    done = 0
+    while done < len(buffer):
+        try:
+            got = os.preadv(fd, [buffer[done:]], offset + done)
+        except OSError as error:
+            if error.errno not in (errno.EIO, errno.ENODATA, errno.EREMOTEIO):
+                raise
+            done = _step_over(fd, offset, buffer, done, faults)
+            continue
+        if got == 0:
+            buffer[done:] = bytes(len(buffer) - done)
+            _add(faults, done, len(buffer))
+            break
+        done += got
+    return faults
+
+
+def _step_over(fd: int, offset: int, buffer: memoryview, done: int, faults: list[Fault]) -> int:
+    """Get past a place that does not read: sector by sector up to the end of its page."""
+    end = min(len(buffer), done + _PAGE - (offset + done) % _PAGE)
+    while done < end:
+        stop = min(end, done + _SECTOR - (offset + done) % _SECTOR)
+        try:
+            got = os.preadv(fd, [buffer[done:stop]], offset + done)
+        except OSError:
+            got = 0
+        if got < stop - done:
+            buffer[done + got : stop] = bytes(stop - done - got)
+            _add(faults, done + got, stop)
+        done = stop
+    return done
+
+
+def _add(faults: list[Fault], start: int, stop: int) -> None:
+    """Append a range, joined to the one before where they touch."""
+    if faults and faults[-1][1] == start:
+        faults[-1] = (faults[-1][0], stop)
+    else:
+        faults.append((start, stop))
+
+
+class FileBytes:
+    """A file as a source of bytes that may be missing; satisfies the sidecar reader's `ByteSource`."""
+
+    def __init__(self, path: Path) -> None:
+        """Open `path` for reading. Raises CannotCheck with a plain sentence when that is not possible."""
+        try:
+            self._fd = os.open(path, os.O_RDONLY | os.O_CLOEXEC)
+        except OSError as error:
+            raise CannotCheck(f"{path} cannot be opened: {reason(error)}") from None
+        self.path = path
+        self.size = os.fstat(self._fd).st_size
+
+    def read(self, offset: int, length: int) -> tuple[NDArray[np.uint8], list[Fault]]:
+        """uint8[length] from `offset` (which may be negative or past the end), and what is missing."""
+        out = np.zeros(length, np.uint8)
+        before = min(max(0, -offset), length)
+        faults = [(0, before)] if before else []
+        if before < length:
+            for start, stop in read_into(self._fd, offset + before, memoryview(out)[before:]):
+                _add(faults, before + start, before + stop)
+        return out, faults
+
+    def close(self) -> None:
+        """Close the file."""
+        os.close(self._fd)
+
+    def __enter__(self) -> FileBytes:
+        return self
+
+    def __exit__(self, kind: object, value: object, trace: object) -> None:
+        self.close()
+
+
+class NewFile:
+    """A file in the making: written under a temporary name, given its own by `commit`.
+
+    Used as a context manager; without `commit` nothing is left behind.
+    """
+
+    def __init__(self, path: Path, *, overwrite: bool = False) -> None:
+        """Begin a file that will be `path`. Raises UsageError when it exists and must not be replaced."""
+        self.path = path
+        self._overwrite = overwrite
+        if not overwrite and os.path.lexists(path):
+            raise UsageError(f"{path} exists already; choose another name or give --overwrite")
+        self._temporary = path.with_name(f".{path.name[:200]}.{secrets.token_hex(6)}.part")
+        try:
+            flags = os.O_RDWR | os.O_CREAT | os.O_EXCL | os.O_CLOEXEC | os.O_NOFOLLOW
+            self._fd = os.open(self._temporary, flags, 0o666)
+        except OSError as error:
+            raise CannotCheck(f"{path} cannot be written: {reason(error)}") from None
+
+    @property
+    def fd(self) -> int:
+        """The open descriptor."""
+        return self._fd
+
+    def write(self, offset: int, data: bytes | bytearray | memoryview) -> None:
+        """Put all of `data` at `offset`."""
+        view = memoryview(data)
+        try:
+            while view:
+                written = os.pwrite(self._fd, view, offset)
+                offset += written
+                view = view[written:]
+        except OSError as error:
+            raise CannotCheck(f"{self.path} could not be written: {reason(error)}") from None
+
+    def read(self, offset: int, length: int) -> bytes:
+        """The bytes written at `offset`."""
+        data = os.pread(self._fd, length, offset)
+        if len(data) != length:
+            raise CannotCheck(f"{self.path} could not be written: what was written cannot be read back")
+        return data
+
+    def commit(self, length: int) -> None:
+        """Check the length, bring the file to the medium and give it its name."""
+        try:
+            if os.fstat(self._fd).st_size != length:
+                raise CannotCheck(f"{self.path} could not be written: its length is not what was written")
+            os.fsync(self._fd)
+            os.close(self._fd)
+            self._fd = -1
+            self._place()
+            sync_folder(self.path.parent)
+        except OSError as error:
+            raise CannotCheck(f"{self.path} could not be written: {reason(error)}") from None
+
+    def _place(self) -> None:
+        """Rename; where nothing may be replaced, `link` makes sure that nothing came in between."""
+        if self._overwrite:
+            os.replace(self._temporary, self.path)
+            return
+        try:
+            os.link(self._temporary, self.path, follow_symlinks=False)
+        except FileExistsError:
+            raise UsageError(f"{self.path} exists already; choose another name or give --overwrite") from None
+        except OSError:  # A file system without hard links.
+            if os.path.lexists(self.path):
+                raise UsageError(f"{self.path} exists already; choose another name or give --overwrite") from None
+            os.rename(self._temporary, self.path)
+            return
+        os.unlink(self._temporary)
+
+    def __enter__(self) -> NewFile:
+        return self
+
+    def __exit__(
+        self, kind: type[BaseException] | None, value: BaseException | None, trace: TracebackType | None
+    ) -> None:
+        if self._fd >= 0:
+            os.close(self._fd)
+        try:
+            os.unlink(self._temporary)
+        except FileNotFoundError:
+            pass
+
+
+def sync_folder(folder: Path) -> None:
+    """Bring a folder's own entries to the medium."""
+    fd = os.open(folder, os.O_RDONLY | os.O_DIRECTORY)
+    try:
+        os.fsync(fd)
+    finally:
+        os.close(fd)
+
+
+def reason(error: OSError) -> str:
+    """The system's reason for an error in plain words, without a number."""
+    text = os.strerror(error.errno) if error.errno else str(error)
+    return text[:1].lower() + text[1:]

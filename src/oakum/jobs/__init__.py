@@ -1,0 +1,1 @@
+"""One file a command: what the commands do, without any of how they look."""

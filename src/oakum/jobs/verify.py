@@ -1,0 +1,141 @@
+"""verify: read everything, say what is damaged and whether it can be put right; write nothing."""
+
+from __future__ import annotations
+
+import time
+from dataclasses import dataclass
+from pathlib import Path
+from typing import TYPE_CHECKING
+
+from oakum.algebra.concatenated import ConcatenatedCode
+from oakum.errors import UsageError
+from oakum.jobs.checking import ProtectedSet, WindowCheck, open_set
+from oakum.jobs.common import DEFAULT_MEMORY, find_sidecar, summarise
+from oakum.jobs.unreadable import read_unreadable
+from oakum.members import MemberHasher
+from oakum.pools import Pools
+from oakum.progress import Progress, Silent
+from oakum.results import BlockReport, CheckResult, MemberState, Outcome
+from oakum.sidecar.table import Kind
+
+if TYPE_CHECKING:
+    from oakum.decoding.block import Decoders
+    from oakum.jobs.tally import Tally
+
+
+def verify(
+    target: Path,
+    *,
+    sidecar: Path | None = None,
+    root: Path | None = None,
+    digests_only: bool = False,
+    unreadable: Path | None = None,
+    memory: int = DEFAULT_MEMORY,
+    jobs: int | None = None,
+    progress: Progress = Silent(),
+) -> CheckResult:
+    """Check a protected set against its sidecar and say what could be corrected.
+
+    `digests_only` leaves out the members' SHA-256. `unreadable` names a CSV of `path,offset,length` that
+    must not be read. Raises CannotCheck where nothing can be said at all.
+    """
+    begin = time.monotonic()
+    opened = open_set(find_sidecar(target, sidecar), root, read_unreadable(unreadable))
+    try:
+        with Pools(jobs) as pools:
+            check = SetCheck(opened, pools, progress)
+            tally = check.run(hashing=not digests_only)
+        return result_of("verify", target, check, tally, time.monotonic() - begin)
+    finally:
+        opened.close()
+
+
+@dataclass
+class SetCheck:
+    """The check of a whole set: scan every window, then decode what is dirty in it."""
+
+    opened: ProtectedSet
+    pools: Pools
+    progress: Progress
+
+    def __post_init__(self) -> None:
+        self.code: ConcatenatedCode = self.opened.sections[0].bootstrap.code.code()
+        if any(s.bootstrap.code != self.opened.sections[0].bootstrap.code for s in self.opened.sections):
+            raise UsageError("the sections of this sidecar use different codes; it was pieced together")
+        self._decoders: Decoders | None = None
+        self.windows: list[WindowCheck] = []
+
+    def decoders(self) -> Decoders:
+        """The compiled decoders, made when first needed: intact sets never wait for them."""
+        if self._decoders is None:
+            from oakum.decoding.block import Decoders
+
+            self._decoders = Decoders.of(self.code)
+        return self._decoders
+
+    def scan(self, *, hashing: bool) -> None:
+        """Read everything in order, and note what is not right."""
+        opened = self.opened
+        self.progress.phase("reading", sum(s.geometry.length + s.geometry.body for s in opened.sections))
+        hasher = MemberHasher() if hashing else None
+        for number in range(len(opened.sections)):
+            window = WindowCheck(opened, number, self.progress, self.pools)
+            self.windows.append(window)
+            window.scan(hasher)
+        self._settle_members(hashing=hashing)
+
+    def _settle_members(self, *, hashing: bool) -> None:
+        """Without SHA-256, members are right when all their cells are and nothing else speaks against it."""
+        damaged: set[bytes] = set()
+        for window in self.windows:
+            place = 0
+            for piece in window.pieces:
+                if piece.length and window.has_damage(place, place + piece.length):
+                    damaged.add(piece.path)
+                place += piece.length
+        for member in self.opened.members.values():
+            if member.piece.kind is not Kind.FILE:
+                continue
+            if not hashing:
+                member.right = not member.absent and member.piece.path not in damaged
+            elif not member.right and member.sha256 is None:  # Its last window is lost: what is there may be right.
+                member.right = not member.absent and member.piece.path not in damaged
+            member.checked = member.right or member.absent or member.piece.path in damaged
+
+    def run(self, *, hashing: bool) -> Tally:
+        """Scan, decode, add up."""
+        from oakum.jobs.tally import Tally
+
+        self.scan(hashing=hashing)
+        tally = Tally(self.opened)
+        dirty = sum(len(w.dirty_blocks()) for w in self.windows)
+        if dirty:
+            self.progress.phase("decoding", sum(len(w.dirty_blocks()) * w.block_bytes for w in self.windows))
+        for window in self.windows:
+            tally.add_window(window)
+            for finding in window.findings(self.decoders, keep=False):
+                tally.add(finding)
+                self.progress.advance(window.block_bytes)
+            window.close()
+        return tally
+
+
+def result_of(command: str, target: Path, check: SetCheck, tally: Tally, seconds: float) -> CheckResult:
+    """The record of a finished check."""
+    members = tuple(tally.members())
+    sidecar = tally.sidecar(check.opened.path)
+    if any(m.state is MemberState.UNCORRECTABLE for m in members):
+        outcome = Outcome.UNCORRECTABLE
+    elif all(m.state is MemberState.INTACT for m in members):
+        # A sidecar that is beyond repair while all files are whole can be made anew: nothing is lost.
+        outcome = Outcome.INTACT if sidecar.state is Outcome.INTACT else Outcome.CORRECTABLE
+    else:
+        outcome = Outcome.CORRECTABLE
+    return CheckResult(
+        command, target, outcome, summarise(check.code), tally.totals, tuple(sorted(tally.blocks, key=_order)),
+        members, sidecar, seconds, tuple(check.opened.notes),
+    )  # fmt: skip
+
+
+def _order(block: BlockReport) -> tuple[int, int]:
+    return block.window, block.block

@@ -1,0 +1,274 @@
+"""Arithmetic in GF(2^8) on 256 columns at once, bit-sliced.
+
+A *lane block* holds one field element for each of 256 columns (lanes) as eight planes of 256 bits: bit l of
+plane b is bit b of lane l's element. Blocks are the rows of arrays uint64[rows, 32]; plane b is words 4b to
+4b + 3, and lane l is bit l % 64 of word l // 64. In this form adding is one XOR a plane, and multiplying is
+the schoolbook product of two polynomials over GF(2), an AND for each pair of planes: any CPU does both on its
+widest registers, without tables and without branches (Biham 1997, for the idea).
+
+The field is that of 0x11D. The other fields of 256 elements are isomorphic to it: see `field_map`.
+
+All functions but that are for use in numba's subset of Python. A block is given by two arguments, its array
+and its row, and the result comes first.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Sequence
+from typing import Any
+
+import numba
+import numpy as np
+from llvmlite import ir
+from numba import types
+from numba.core import cgutils
+from numba.extending import intrinsic
+
+from oakum.algebra.field import ORDER, Bytes, Field
+from oakum.kernels import planes
+from oakum.kernels.planes import BLOCK_WORDS, FIELD, LANES, PLANE_WORDS, Builder, Rows, Value, number
+
+__all__ = ["ALL", "BLOCK_WORDS", "FIELD", "LANES", "NONE", "ONE", "PLANE_WORDS", "field_map", "subroutine"]
+
+NONE, ONE, ALL = np.uint64(0), np.uint64(1), np.uint64(0xFFFF_FFFF_FFFF_FFFF)
+"""Words of sets of lanes: no lane, the first, all."""
+
+Decorator = Callable[[Callable[..., Any]], Callable[..., Any]]
+subroutine: Decorator = numba.njit(no_cpython_wrapper=True, no_cfunc_wrapper=True)
+"""Marks a function that only a kernel calls. Entries for Python would cost time to compile."""
+
+
+def field_map(poly: int) -> Bytes:
+    """uint8[256]: an isomorphism from GF(2^8) with field polynomial `poly` to the field of the lanes.
+
+    alpha goes to a root g of `poly` in the lanes' field, and alpha^i to g^i (Lidl and Niederreiter, Finite
+    Fields, chapter 2). Sums and products of images are the images of sums and products.
+    """
+    powers_of_x = [i for i in range(9) if poly >> i & 1]
+    for log_g in range(1, ORDER):
+        powers_of_g = FIELD.exp[log_g * np.arange(ORDER) % ORDER]
+        if np.bitwise_xor.reduce(powers_of_g[powers_of_x]) == 0:
+            image = np.zeros(256, dtype=np.uint8)
+            image[Field(poly).exp[:ORDER]] = powers_of_g
+            return image
+    raise ValueError(f"the polynomial {poly:#x} has no root in a field of 256 elements")
+
+
+# -- how intrinsics are made --------------------------------------------------------------------------------
+
+
+class _Code:
+    """What an intrinsic's code works with: the builder and the arguments, arrays as `Rows`."""
+
+    def __init__(self, context: Any, builder: Builder, signature: Any, arguments: Sequence[Value]) -> None:
+        self.builder = builder
+        self.arguments = [
+            Rows(context, builder, kind, value) if isinstance(kind, types.Array) else value
+            for kind, value in zip(signature.args, arguments, strict=True)
+        ]
+
+
+def _void(emit: Callable[..., None], *kinds: Any) -> tuple[Any, Callable[..., Value]]:
+    """An intrinsic without result: numba's types of its arguments (None for a number) and its code.
+
+    `emit` is called with the builder and the arguments.
+    """
+
+    def codegen(context: Any, builder: Builder, signature: Any, arguments: Sequence[Value]) -> Value:
+        emit(builder, *_Code(context, builder, signature, arguments).arguments)
+        return context.get_dummy_value()
+
+    return types.void(*(types.int64 if kind is None else kind for kind in kinds)), codegen
+
+
+# -- arithmetic ---------------------------------------------------------------------------------------------
+
+
+@intrinsic
+def copy(typing: Any, out: Any, i: Any, a: Any, j: Any) -> Any:
+    """out[i] = a[j]"""
+
+    def emit(builder: Builder, out: Rows, i: Value, a: Rows, j: Value) -> None:
+        out.store_block(a.load_block(j), i)
+
+    return _void(emit, out, None, a, None)
+
+
+@intrinsic
+def add(typing: Any, out: Any, i: Any, a: Any, j: Any) -> Any:
+    """out[i] += a[j]"""
+
+    def emit(builder: Builder, out: Rows, i: Value, a: Rows, j: Value) -> None:
+        out.store_block(planes.add(builder, out.load_block(i), a.load_block(j)), i)
+
+    return _void(emit, out, None, a, None)
+
+
+@intrinsic
+def multiply(typing: Any, out: Any, i: Any, a: Any, j: Any, b: Any, k: Any) -> Any:
+    """out[i] = a[j] * b[k]"""
+
+    def emit(builder: Builder, out: Rows, i: Value, a: Rows, j: Value, b: Rows, k: Value) -> None:
+        out.store_block(planes.multiply(builder, a.load_block(j), b.load_block(k)), i)
+
+    return _void(emit, out, None, a, None, b, None)
+
+
+@intrinsic
+def multiply_add(typing: Any, out: Any, i: Any, a: Any, j: Any, b: Any, k: Any, c: Any, m: Any) -> Any:
+    """out[i] = a[j] * b[k] + c[m]"""
+
+    def emit(
+        builder: Builder, out: Rows, i: Value, a: Rows, j: Value, b: Rows, k: Value, c: Rows, m: Value
+    ) -> None:
+        product = planes.multiply(builder, a.load_block(j), b.load_block(k))
+        out.store_block(planes.add(builder, product, c.load_block(m)), i)
+
+    return _void(emit, out, None, a, None, b, None, c, None)
+
+
+@intrinsic
+def square(typing: Any, out: Any, i: Any, a: Any, j: Any) -> Any:
+    """out[i] = a[j]^2"""
+
+    def emit(builder: Builder, out: Rows, i: Value, a: Rows, j: Value) -> None:
+        out.store_block(planes.square(builder, a.load_block(j)), i)
+
+    return _void(emit, out, None, a, None)
+
+
+@intrinsic
+def inner_product(typing: Any, out: Any, i: Any, a: Any, j: Any, b: Any, k: Any, count: Any) -> Any:
+    """out[i] = a[j] * b[k] + a[j+1] * b[k-1] + ..., `count` terms: a coefficient of a product"""
+
+    def emit(
+        builder: Builder, out: Rows, i: Value, a: Rows, j: Value, b: Rows, k: Value, count: Value
+    ) -> None:
+        totals = []
+        for part in range(3):  # in three passes, so that the sums of each stay in registers
+            sums = [cgutils.alloca_once_value(builder, planes.NO_LANES) for _ in range(7)]
+            with cgutils.for_range(builder, count) as loop:
+                x = planes.halves(builder, a.load_block(builder.add(j, loop.index)))[part]
+                y = planes.halves(builder, b.load_block(builder.sub(k, loop.index)))[part]
+                for total, term in zip(sums, planes.schoolbook(builder, x, y), strict=True):
+                    builder.store(builder.xor(builder.load(total), term), total)
+            totals.append([builder.load(total) for total in sums])
+        out.store_block(planes.reduce(builder, planes.join(builder, totals)), i)
+
+    return _void(emit, out, None, a, None, b, None, None)
+
+
+@intrinsic
+def advance(typing: Any, a: Any, i: Any, b: Any, j: Any, k: Any, control: Any, g: Any, d: Any, s: Any) -> Any:
+    """One coefficient of a step of Berlekamp and Massey's algorithm.
+
+    a[i] = control[g] * a[i] + control[d] * b[k], and b[j] = the former a[i] in the lanes of plane 0 of
+    control[s], b[k] in the others
+    """
+
+    def emit(
+        builder: Builder, a: Rows, i: Value, b: Rows, j: Value, k: Value, control: Rows, g: Value, d: Value, s: Value
+    ) -> None:  # fmt: skip
+        old, shifted = a.load_block(i), b.load_block(k)
+        first = planes.products(builder, control.load_block(g), old)
+        second = planes.products(builder, control.load_block(d), shifted)
+        sums = [planes.add(builder, x, y) for x, y in zip(first, second, strict=True)]
+        a.store_block(planes.reduce(builder, planes.join(builder, sums)), i)
+        swapped = control.load(s, number(0), planes.PLANE)
+        difference = [builder.and_(swapped, plane) for plane in planes.add(builder, old, shifted)]
+        b.store_block(planes.add(builder, shifted, difference), j)
+
+    return _void(emit, a, None, b, None, None, control, None, None, None)
+
+
+@intrinsic
+def butterfly(typing: Any, a: Any, i: Any, j: Any, factors: Any, k: Any) -> Any:
+    """a[i] += f * a[j], then a[j] += a[i], where f is the same in all lanes
+
+    factors[k, b] is the word of which plane b of f consists.
+    """
+
+    def emit(builder: Builder, a: Rows, i: Value, j: Value, factors: Rows, k: Value) -> None:
+        words = [factors.load(k, number(b), planes.WORD) for b in range(8)]
+        factor = [planes.all_words(builder, word) for word in words]
+        second = a.load_block(j)
+        first = planes.add(builder, a.load_block(i), planes.multiply(builder, factor, second))
+        a.store_block(first, i)
+        a.store_block(planes.add(builder, second, first), j)
+
+    return _void(emit, a, None, None, factors, None)
+
+
+# -- sets of lanes ------------------------------------------------------------------------------------------
+
+
+@intrinsic
+def nonzero(typing: Any, out: Any, i: Any, a: Any, j: Any) -> Any:
+    """Words out[i, 0..3] = the lanes in which a[j] is not zero"""
+
+    def emit(builder: Builder, out: Rows, i: Value, a: Rows, j: Value) -> None:
+        found = planes.NO_LANES
+        for plane in a.load_block(j):
+            found = builder.or_(found, plane)
+        out.store(found, i, number(0))
+
+    return _void(emit, out, None, a, None)
+
+
+@intrinsic
+def nonzero_bytes(typing: Any, out: Any, i: Any, a: Any, j: Any, first: Any) -> Any:
+    """Words out[i, 0..3] = the lanes in which the bytes a[j, first..first+255] are not zero"""
+
+    def emit(builder: Builder, out: Rows, i: Value, a: Rows, j: Value, first: Value) -> None:
+        for word in range(PLANE_WORDS):
+            some = a.load(j, builder.add(first, number(64 * word)), planes.BYTES)
+            flags = builder.icmp_unsigned("!=", some, planes.all_bytes(0))
+            out.store(builder.bitcast(flags, planes.WORD), i, number(word))
+
+    return _void(emit, out, None, a, None, None)
+
+
+@intrinsic
+def lowest_bit(typing: Any, word: Any) -> Any:
+    """The number of the lowest bit that is set in `word`, which is not zero"""
+
+    def codegen(context: Any, builder: Builder, signature: Any, arguments: Sequence[Value]) -> Value:
+        return builder.cttz(arguments[0], ir.Constant(planes.BIT, 1))
+
+    return types.int64(types.uint64), codegen
+
+
+# -- bytes to planes and back -------------------------------------------------------------------------------
+
+
+@intrinsic
+def from_bytes(typing: Any, out: Any, i: Any, a: Any, j: Any, first: Any) -> Any:
+    """out[i] = the elements that are the bytes a[j, first..first+255]"""
+
+    def emit(builder: Builder, out: Rows, i: Value, a: Rows, j: Value, first: Value) -> None:
+        for word in range(PLANE_WORDS):
+            elements = a.load(j, builder.add(first, number(64 * word)), planes.BYTES)
+            for plane in range(8):
+                # CPUs with byte vectors can collect the bytes' signs in a word
+                at_sign = builder.shl(elements, planes.all_bytes(7 - plane))
+                flags = builder.icmp_signed("<", at_sign, planes.all_bytes(0))
+                out.store(builder.bitcast(flags, planes.WORD), i, number(PLANE_WORDS * plane + word))
+
+    return _void(emit, out, None, a, None, None)
+
+
+@intrinsic
+def to_bytes(typing: Any, out: Any, i: Any, a: Any, j: Any) -> Any:
+    """The bytes out[i, 0..255] = the elements of a[j]"""
+
+    def emit(builder: Builder, out: Rows, i: Value, a: Rows, j: Value) -> None:
+        for word in range(PLANE_WORDS):
+            elements = planes.all_bytes(0)
+            for plane in range(8):
+                lanes = a.load(j, number(PLANE_WORDS * plane + word), planes.WORD)
+                flags = builder.bitcast(lanes, planes.FLAGS)
+                power = builder.select(flags, planes.all_bytes(1 << plane), planes.all_bytes(0))
+                elements = builder.or_(elements, power)
+            out.store(elements, i, number(64 * word))
+
+    return _void(emit, out, None, a, None)

@@ -1,0 +1,1 @@
+"""Results turned into text and JSON: pure functions of one result record, no printing."""

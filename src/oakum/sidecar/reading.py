@@ -1,0 +1,323 @@
+"""Reading a sidecar: find its sections by their markers, and take out of each what can be read.
+
+Bytes come from a `ByteSource` and what it could not read counts as erased. Nothing that is read here is
+trusted: a `Layout` only comes from a checked `Geometry`, and every size is held against the source.
+"""
+
+from __future__ import annotations
+
+import threading
+from collections import Counter, OrderedDict
+from collections.abc import Iterator
+from dataclasses import dataclass, replace
+from typing import Protocol
+
+import numpy as np
+from numpy.typing import NDArray
+
+from oakum.errors import FormatError
+from oakum.geometry import Geometry
+from oakum.sidecar.bootstrap import CODED_BYTES, HEAD_BYTES, MARKER, MARKER_ERRORS, Bootstrap, decode, encode
+from oakum.sidecar.frames import FRAME_ROWS, PAYLOAD_ROWS, Content, Rows, check_rows, correct, payload, read_plain, seal
+from oakum.sidecar.layout import DIGEST_BYTES, FRAME_CONTENT, TEXT_BYTES, Frame, Layout, Track
+from oakum.sidecar.table import Piece, unpack_table
+from oakum.sidecar.text import page
+
+Fault = tuple[int, int]
+"""A range (start, stop), relative to what was asked for, that could not be read and was filled with zeros."""
+
+SCAN_STEP = 1 << 20
+FRAMES_KEPT = 64
+
+
+class ByteSource(Protocol):
+    """Random access to bytes that may be missing. Any offset may be asked for, also negative ones."""
+
+    @property
+    def size(self) -> int:
+        """Length in bytes."""
+
+    def read(self, offset: int, length: int) -> tuple[Rows, list[Fault]]:
+        """uint8[length] from `offset`, zeros where nothing could be read, and those places."""
+
+
+@dataclass(frozen=True)
+class Head:
+    """A bootstrap record that was found, where its stretch begins, and its number of wrong bits."""
+
+    place: int
+    bootstrap: Bootstrap
+    layout: Layout
+    wrong_bits: int
+
+    @property
+    def base(self) -> int:
+        """Offset of the section's first byte in the source (negative where its front is missing)."""
+        return self.place - self.layout.stretch_start(self.bootstrap.stretch)
+
+
+class Section:
+    """One section that was found. Frames are read when asked for and a few are kept."""
+
+    def __init__(self, source: ByteSource, head: Head) -> None:
+        self.source = source
+        self.base = head.base
+        self.bootstrap = replace(head.bootstrap, stretch=0)
+        self.layout = head.layout
+        self._kept: OrderedDict[tuple[Track, int], Content] = OrderedDict()
+        self._lock = threading.Lock()
+
+    @property
+    def geometry(self) -> Geometry:
+        """The window's geometry."""
+        return self.layout.geometry
+
+    @property
+    def end(self) -> int:
+        """Offset in the source of the first byte after the section."""
+        return self.base + self.layout.size
+
+    def read(self, offset: int, length: int) -> tuple[Rows, list[Fault]]:
+        """Bytes of the section by their offset in it."""
+        return self.source.read(self.base + offset, length)
+
+    def body(self, offset: int, length: int) -> tuple[Rows, list[Fault]]:
+        """`length` bytes of the body from `offset`."""
+        extents = list(self.layout.body_extents(offset, length))
+        if len(extents) == 1:
+            return self.read(extents[0][0], length)
+        out = np.empty(length, np.uint8)
+        faults = []
+        for place, done, size in extents:
+            out[done : done + size], missing = self.read(place, size)
+            faults += [(done + a, done + b) for a, b in missing]
+        return out, faults
+
+    def rows(self, frame: Frame, first: int = 0, last: int = FRAME_ROWS) -> tuple[Rows, Rows | None]:
+        """Rows first..last-1 of a frame, and where they could not be read (None: everywhere)."""
+        count = self.layout.rows
+        rows = np.empty((FRAME_ROWS, frame.width), np.uint8)
+        erased: Rows | None = None
+        for place, row in self.layout.slice_extents(frame):
+            if not first <= row < last:
+                continue
+            data, faults = self.read(place, count * frame.width)
+            rows[row : row + count] = data.reshape(count, frame.width)
+            if faults:
+                erased = np.zeros_like(rows) if erased is None else erased
+                flat = erased[row : row + count].reshape(-1)
+                for start, stop in faults:
+                    flat[start:stop] = 1
+        return rows[first:last], None if erased is None else erased[first:last]
+
+    def frame(self, track: Track, number: int) -> Content:
+        """The content of a frame, corrected where that was necessary."""
+        key = (track, number)
+        with self._lock:
+            if key not in self._kept:
+                self._kept[key] = self._read_frame(self.layout.frame(track, number))
+                if len(self._kept) > FRAMES_KEPT:
+                    self._kept.popitem(last=False)
+            self._kept.move_to_end(key)
+            return self._kept[key]
+
+    def _read_frame(self, frame: Frame) -> Content:
+        rows, _ = self.rows(frame, 0, PAYLOAD_ROWS)
+        content = read_plain(frame, rows, self.bootstrap.identity)
+        if content is None:
+            rows, erased = self.rows(frame)
+            content = correct(frame, rows, erased, self.bootstrap.identity)
+        return content
+
+    def digests(self, track: Track, first: int, count: int) -> tuple[NDArray[np.uint64], NDArray[np.bool_] | None]:
+        """`count` digests of a track from number `first`, and which of them are known (None: all)."""
+        values = np.empty(count, "<u8")
+        known: NDArray[np.bool_] | None = None
+        per_frame = FRAME_CONTENT // DIGEST_BYTES
+        done = 0
+        while done < count:
+            number, inside = divmod(first + done, per_frame)
+            content = self.frame(track, number)
+            size = min(count - done, per_frame - inside)
+            values[done : done + size] = np.frombuffer(content.data, "<u8", size, inside * DIGEST_BYTES)
+            if content.known is not None:
+                known = np.ones(count, bool) if known is None else known
+                whole = content.known.reshape(-1, DIGEST_BYTES).all(axis=1)
+                known[done : done + size] = whole[inside : inside + size]
+            done += size
+        return values, known
+
+    def table(self) -> tuple[Piece, ...]:
+        """The member table. Raises FormatError where it is lost or not the one of this section."""
+        data = self.table_bytes()
+        return unpack_table(data, self.bootstrap.entries, self.bootstrap.length)
+
+    def table_bytes(self) -> bytes:
+        """The member table as it was written. Raises FormatError where it is lost."""
+        frames = [self.frame(Track.TABLE, i) for i in range(self.layout.frame_count(Track.TABLE))]
+        if any(f.known is not None and not f.known.all() for f in frames):
+            raise FormatError(
+                "the sidecar's list of members is damaged beyond correction; without it nothing can be checked"
+            )
+        data = b"".join(f.data for f in frames)
+        if self.bootstrap.identified(data).identity != self.bootstrap.identity:
+            raise FormatError("the sidecar's records do not belong together; it may have been pieced together")
+        return data
+
+
+# -- finding sections -------------------------------------------------------------------------------
+
+
+def find_sections(source: ByteSource) -> list[Section]:
+    """All sections of the sidecar in `source`, in order of their windows.
+
+    Sections are looked for where the one before ends; where no head is found there, the source is
+    searched for markers from there on. Raises FormatError where nothing is found at all.
+    """
+    sections: dict[int, Section] = {}
+    place = 0
+    while place < source.size:
+        head = _head_at(source, place + TEXT_BYTES) or next(_scan(source, place), None)
+        if head is None:
+            break
+        section = Section(source, head)
+        sections.setdefault(section.bootstrap.window, section)
+        place = max(section.end, place + 1)
+        if section.bootstrap.last:
+            break
+    if not sections:
+        raise FormatError("this is not an oakum sidecar, or nothing of it can be recognised any more")
+    owner, _ = Counter(s.bootstrap.set_identity for s in sections.values()).most_common(1)[0]
+    return [s for _, s in sorted(sections.items()) if s.bootstrap.set_identity == owner]
+
+
+def _head_at(source: ByteSource, place: int) -> Head | None:
+    """The head at `place`, if a marker is there and its bootstrap record can be read."""
+    data, _ = source.read(place, HEAD_BYTES)
+    marker = np.frombuffer(MARKER, np.uint8)
+    if int(np.bitwise_count(data[: len(MARKER)] ^ marker).sum()) > MARKER_ERRORS:
+        return None
+    found = decode(data[len(MARKER) :].tobytes())
+    if found is None:
+        return None
+    bootstrap, wrong = found
+    layout = Layout(bootstrap.geometry, bootstrap.table_length)
+    _check(bootstrap, layout, source.size)
+    wrong += int(np.bitwise_count(data[: len(MARKER)] ^ marker).sum())
+    return Head(place, bootstrap, layout, wrong)
+
+
+def _check(bootstrap: Bootstrap, layout: Layout, size: int) -> None:
+    """Refuse a record that promises more than the sidecar at hand can hold (cut short by less than 3/4)."""
+    plausible = (
+        bootstrap.stretches == layout.stretches
+        and layout.size <= 4 * size + (1 << 20)
+        and bootstrap.entries * 74 <= bootstrap.table_length
+        and bootstrap.start + bootstrap.length <= bootstrap.stream_length
+    )
+    if not plausible:
+        raise FormatError("the sidecar's bootstrap record promises more than the sidecar can hold")
+
+
+def _scan(source: ByteSource, start: int) -> Iterator[Head]:
+    """All heads from `start` on, found by their markers."""
+    for place in range(max(0, start), source.size, SCAN_STEP):
+        data, _ = source.read(place, min(SCAN_STEP + len(MARKER) - 1, source.size - place))
+        for offset in find_marker(data):
+            head = _head_at(source, place + int(offset))
+            if head is not None:
+                yield head
+
+
+def find_marker(data: Rows) -> NDArray[np.intp]:
+    """Offsets at which the marker stands in uint8[L] with at most MARKER_ERRORS wrong bits."""
+    count = len(data) - len(MARKER) + 1
+    if count <= 0:
+        return np.empty(0, np.intp)
+    distance = np.zeros(count, np.uint8)
+    for i, value in enumerate(MARKER):
+        distance += np.bitwise_count(data[i : i + count] ^ np.uint8(value))
+    return np.flatnonzero(distance <= MARKER_ERRORS)
+
+
+# -- the condition of the records themselves ------------------------------------------------------------
+
+
+@dataclass
+class Wear:
+    """What was found wrong in a sidecar's own bytes."""
+
+    bits: int = 0
+    symbols: int = 0
+    unreadable: int = 0
+    lost: int = 0
+    """Bytes of which nothing is known any more."""
+
+    def __bool__(self) -> bool:
+        return bool(self.bits or self.symbols or self.unreadable or self.lost)
+
+    def add(self, received: Rows, right: Rows, faults: list[Fault]) -> None:
+        """Count the difference between received bytes and the right ones of the same places."""
+        difference = received.reshape(-1) ^ right.reshape(-1)
+        for start, stop in faults:
+            difference[start:stop] = 0
+            self.unreadable += stop - start
+        self.bits += int(np.bitwise_count(difference).sum())
+        self.symbols += int(np.count_nonzero(difference))
+
+
+def examine_records(section: Section) -> Wear:
+    """Hold text, heads, padding and frames of a section against what they should be."""
+    wear = Wear()
+    for offset, right in _plain_parts(section):
+        received, faults = section.read(offset, len(right))
+        wear.add(received, np.frombuffer(right, np.uint8), faults)
+    seals, known = _seals(section)
+    for number, frame in enumerate(section.layout.frames()):
+        _examine_frame(section, frame, seals[number] if known[number] else None, wear)
+    return wear
+
+
+def _plain_parts(section: Section) -> Iterator[tuple[int, bytes]]:
+    """All parts of a section that follow from its bootstrap record: (offset, right bytes)."""
+    layout = section.layout
+    yield 0, page(section.bootstrap, layout)
+    end = 0
+    for stretch in range(layout.stretches):
+        start = layout.stretch_start(stretch)
+        yield start, MARKER + encode(replace(section.bootstrap, stretch=stretch).pack())
+        slice_end = start + HEAD_BYTES + layout.slice_bytes
+        yield slice_end, bytes(start + layout.prefix - slice_end)
+        end = start + layout.prefix + layout.piece_length(stretch)
+    yield end, bytes(layout.size - end)
+
+
+def _seals(section: Section) -> tuple[list[int | None], list[bool]]:
+    """The digest of the check rows of every frame, and whether it is known. The seals' own have none."""
+    own = section.layout.frame_count(Track.SEALS)
+    count = section.layout.content(Track.SEALS) // DIGEST_BYTES
+    values, known = section.digests(Track.SEALS, 0, count)
+    flags = [True] * count if known is None else [bool(x) for x in known]
+    return [int(v) for v in values] + [None] * own, flags + [False] * own
+
+
+def _examine_frame(section: Section, frame: Frame, expected: int | None, wear: Wear) -> None:
+    identity = section.bootstrap.identity
+    rows, erased = section.rows(frame)
+    whole = erased is None and read_plain(frame, rows[:PAYLOAD_ROWS], identity) is not None
+    if whole and expected is not None and seal(rows[PAYLOAD_ROWS:]) == expected:
+        return
+    content = section.frame(frame.track, frame.number)
+    if content.known is not None and not content.known.all():
+        wear.lost += FRAME_ROWS * frame.width
+        return
+    right = np.empty_like(rows)
+    right[:PAYLOAD_ROWS] = payload(frame, content.data, identity)
+    right[PAYLOAD_ROWS:] = check_rows(right[:PAYLOAD_ROWS])
+    if erased is not None:
+        wear.unreadable += int(np.count_nonzero(erased))
+        right = np.where(erased, rows, right)
+    wear.add(rows, right, [])
+
+
+__all__ = ["CODED_BYTES", "ByteSource", "Fault", "Head", "Section", "Wear", "examine_records", "find_sections"]
