@@ -1,10 +1,13 @@
 """Does to a copy of the sample ledgers what forty years on a shelf might do, and tells what it did.
 
+Decay does not ask the file system: the files keep their modification times.
+
     python samples/damage.py FOLDER
 
 The seed is fixed: every run does the same. Never point it at files that you want to keep.
 """
 
+import os
 import random
 import sys
 from pathlib import Path
@@ -31,7 +34,7 @@ def flip_bits(path: Path, number: int, chance: random.Random) -> None:
     content = bytearray(path.read_bytes())
     for bit in chance.sample(range(8 * len(content)), number):
         content[bit // 8] ^= 1 << bit % 8
-    path.write_bytes(content)
+    put(path, content)
     print(f"  {number} bits flipped here and there in {path.name}")
 
 
@@ -39,15 +42,22 @@ def overwrite(path: Path, offset: int, length: int, chance: random.Random) -> No
     """Writes rubbish over a run of bytes."""
     content = bytearray(path.read_bytes())
     content[offset : offset + length] = chance.randbytes(length)
-    path.write_bytes(content)
+    put(path, content)
     print(f"  {length:,} bytes in a row overwritten in {path.name}")
 
 
 def cut_short(path: Path, length: int) -> None:
     """Takes the last `length` bytes away."""
     content = path.read_bytes()
-    path.write_bytes(content[:-length])
+    put(path, content[:-length])
     print(f"  the last {length:,} bytes cut off {path.name}")
+
+
+def put(path: Path, content: bytes) -> None:
+    """Changes what is in the file and nothing else."""
+    times = path.stat()
+    path.write_bytes(content)
+    os.utime(path, ns=(times.st_atime_ns, times.st_mtime_ns))
 
 
 def lose(path: Path) -> None:

@@ -10,7 +10,7 @@ run of columns in, parity out), which share no state and may run on any thread i
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterator
+from collections.abc import Callable
 from concurrent.futures import Future
 from dataclasses import dataclass
 from typing import Any
@@ -56,7 +56,9 @@ class Kernels:
     @staticmethod
     def of(code: ConcatenatedCode) -> Kernels:
         """Prepare the kernels of a code."""
-        return Kernels(StripMap(code.outer.parity_matrix, field_poly=code.outer.field_poly), WordCodec(code.inner))
+        return Kernels(
+            StripMap(code.outer.parity_matrix, field_poly=code.outer.field_poly), WordCodec(code.inner)
+        )
 
 
 @dataclass(frozen=True)
@@ -96,7 +98,7 @@ class CellCutter:
 
     def push(self, data: Bytes) -> None:
         """The next bytes."""
-        self._rest += memoryview(data)
+        self._rest += data.data
         whole = len(self._rest) // CELL * CELL
         if whole:
             self._deliver(cell_digests(np.frombuffer(bytes(self._rest[:whole]), np.uint8)))
@@ -226,7 +228,7 @@ class WindowEncoder:
     # -- work units -------------------------------------------------------------------------------
 
     def _read(self, start: int, data: Bytes, length: int) -> None:
-        faults = self._stream.read_into(start, memoryview(data))
+        faults = self._stream.read_into(start, data.data)
         if faults:
             raise Unreadable(start + faults[0][0])
         self._advance(max(0, min(len(data), length - start)))
@@ -238,9 +240,11 @@ class WindowEncoder:
         survey = Survey(g, start, g.cell_at(start), start + real)
         for run in g.runs(start, survey.stop, 1 << 20):
             survey.futures.append(
-                self._pools.work.submit(survey.fill, self._kernels.words, run, data[run.start - start :][: run.length])
+                self._pools.work.submit(
+                    survey.fill, self._kernels.words, run, data[run.start - start :][: run.length]
+                )
             )
-        survey.futures.append(self._pools.ordered.submit(self._hasher.update, memoryview(data)[:real]))
+        survey.futures.append(self._pools.ordered.submit(self._hasher.update, data.data[:real]))
         return survey
 
     def _store(self, survey: Survey | None) -> None:
@@ -270,7 +274,9 @@ class WindowEncoder:
         blocks = -(-width // CELL)
         digests = np.empty((blocks, g.r), np.uint64)
         start = g.parity_inner_start(0, begin)
-        inner = np.empty(g.parity_inner_start(0, begin + blocks - 1) + g.r * g.group(begin + blocks - 1) - start, np.uint8)
+        inner = np.empty(
+            g.parity_inner_start(0, begin + blocks - 1) + g.r * g.group(begin + blocks - 1) - start, np.uint8
+        )
 
         def work(j: int) -> None:
             row = parity[j]

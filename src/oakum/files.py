@@ -9,8 +9,8 @@ from __future__ import annotations
 import errno
 import os
 import secrets
+from collections.abc import Callable
 from pathlib import Path
-from types import TracebackType
 
 import numpy as np
 from numpy.typing import NDArray
@@ -89,7 +89,7 @@ class FileBytes:
         before = min(max(0, -offset), length)
         faults = [(0, before)] if before else []
         if before < length:
-            for start, stop in read_into(self._fd, offset + before, memoryview(out)[before:]):
+            for start, stop in read_into(self._fd, offset + before, out.data[before:]):
                 _add(faults, before + start, before + stop)
         return out, faults
 
@@ -107,95 +107,150 @@ class FileBytes:
 class NewFile:
     """A file in the making: written under a temporary name, given its own by `commit`.
 
-    Used as a context manager; without `commit` nothing is left behind.
+    Used as a context manager; without `commit` nothing is left behind. A file that is not needed for a
+    while can be `park`ed, so that thousands can be in the making at a time.
     """
 
-    def __init__(self, path: Path, *, overwrite: bool = False) -> None:
-        """Begin a file that will be `path`. Raises UsageError when it exists and must not be replaced."""
+    def __init__(
+        self, path: Path, *, overwrite: bool = False, open_folder: Callable[[], int] | None = None
+    ) -> None:
+        """Begin a file that will be `path`. Raises UsageError when it exists and must not be replaced.
+
+        `open_folder` gives a descriptor of the folder that the file goes to; by default it is opened by name.
+        """
         self.path = path
         self._overwrite = overwrite
-        if not overwrite and os.path.lexists(path):
-            raise UsageError(f"{path} exists already; choose another name or give --overwrite")
-        self._temporary = path.with_name(f".{path.name[:200]}.{secrets.token_hex(6)}.part")
+        self._open_folder = open_folder or self._open_parent
+        name = os.fsencode(path.name)
+        self._name = name
+        self._temporary = b".%s.%s.part" % (name[:200], secrets.token_hex(6).encode())
+        self._folder = self._fd = -1
+        self._committed = False
         try:
+            self._folder = self._open_folder()
+            if not overwrite and self._exists():
+                raise self._taken()
             flags = os.O_RDWR | os.O_CREAT | os.O_EXCL | os.O_CLOEXEC | os.O_NOFOLLOW
-            self._fd = os.open(self._temporary, flags, 0o666)
+            self._fd = os.open(self._temporary, flags, 0o666, dir_fd=self._folder)
         except OSError as error:
+            self._close()
             raise CannotCheck(f"{path} cannot be written: {reason(error)}") from None
+        except BaseException:
+            self._close()
+            raise
+
+    def _open_parent(self) -> int:
+        return os.open(self.path.parent, os.O_RDONLY | os.O_DIRECTORY | os.O_CLOEXEC)
+
+    def _exists(self) -> bool:
+        try:
+            os.stat(self._name, dir_fd=self._folder, follow_symlinks=False)
+        except FileNotFoundError:
+            return False
+        return True
+
+    def _taken(self) -> UsageError:
+        return UsageError(
+            f"{self.path} exists already; move it away, choose another name or give --overwrite"
+        )
 
     @property
     def fd(self) -> int:
         """The open descriptor."""
+        if self._fd < 0:
+            if self._folder < 0:
+                self._folder = self._open_folder()
+            self._fd = os.open(self._temporary, os.O_RDWR | os.O_CLOEXEC | os.O_NOFOLLOW, dir_fd=self._folder)
         return self._fd
+
+    def park(self) -> None:
+        """Close all descriptors until the file is used again."""
+        self._close()
+
+    def _close(self) -> None:
+        for fd in (self._fd, self._folder):
+            if fd >= 0:
+                os.close(fd)
+        self._fd = self._folder = -1
 
     def write(self, offset: int, data: bytes | bytearray | memoryview) -> None:
         """Put all of `data` at `offset`."""
         view = memoryview(data)
         try:
             while view:
-                written = os.pwrite(self._fd, view, offset)
+                written = os.pwrite(self.fd, view, offset)
                 offset += written
                 view = view[written:]
         except OSError as error:
             raise CannotCheck(f"{self.path} could not be written: {reason(error)}") from None
 
+    def resize(self, length: int) -> None:
+        """Make the file `length` bytes long; what is new reads as zeros."""
+        try:
+            os.ftruncate(self.fd, length)
+        except OSError as error:
+            raise CannotCheck(f"{self.path} could not be written: {reason(error)}") from None
+
     def read(self, offset: int, length: int) -> bytes:
         """The bytes written at `offset`."""
-        data = os.pread(self._fd, length, offset)
+        data = os.pread(self.fd, length, offset)
         if len(data) != length:
             raise CannotCheck(f"{self.path} could not be written: what was written cannot be read back")
         return data
 
-    def commit(self, length: int) -> None:
-        """Check the length, bring the file to the medium and give it its name."""
+    def commit(self, length: int, *, mode: int | None = None, modified_ns: int | None = None) -> None:
+        """Check the length, set mode and time, bring the file to the medium and give it its name."""
         try:
-            if os.fstat(self._fd).st_size != length:
+            fd = self.fd
+            if os.fstat(fd).st_size != length:
                 raise CannotCheck(f"{self.path} could not be written: its length is not what was written")
-            os.fsync(self._fd)
-            os.close(self._fd)
+            if mode is not None:
+                os.fchmod(fd, mode)
+            if modified_ns is not None:
+                os.utime(fd, ns=(modified_ns, modified_ns))
+            os.fsync(fd)
+            os.close(fd)
             self._fd = -1
             self._place()
-            sync_folder(self.path.parent)
+            os.fsync(self._folder)
         except OSError as error:
             raise CannotCheck(f"{self.path} could not be written: {reason(error)}") from None
+        self._committed = True
+        self._close()
 
     def _place(self) -> None:
         """Rename; where nothing may be replaced, `link` makes sure that nothing came in between."""
-        if self._overwrite:
-            os.replace(self._temporary, self.path)
+        here = self._folder
+        if not self._overwrite:
+            try:
+                os.link(self._temporary, self._name, src_dir_fd=here, dst_dir_fd=here, follow_symlinks=False)
+            except FileExistsError:
+                raise self._taken() from None
+            except OSError:  # A file system without hard links.
+                if self._exists():
+                    raise self._taken() from None
+            else:
+                os.unlink(self._temporary, dir_fd=here)
+                return
+        os.rename(self._temporary, self._name, src_dir_fd=here, dst_dir_fd=here)
+
+    def discard(self) -> None:
+        """Take away what was written so far."""
+        if self._committed:
             return
         try:
-            os.link(self._temporary, self.path, follow_symlinks=False)
-        except FileExistsError:
-            raise UsageError(f"{self.path} exists already; choose another name or give --overwrite") from None
-        except OSError:  # A file system without hard links.
-            if os.path.lexists(self.path):
-                raise UsageError(f"{self.path} exists already; choose another name or give --overwrite") from None
-            os.rename(self._temporary, self.path)
-            return
-        os.unlink(self._temporary)
+            if self._folder < 0:
+                self._folder = self._open_folder()
+            os.unlink(self._temporary, dir_fd=self._folder)
+        except OSError:
+            pass  # It was never made, or its whole folder is gone.
+        self._close()
 
     def __enter__(self) -> NewFile:
         return self
 
-    def __exit__(
-        self, kind: type[BaseException] | None, value: BaseException | None, trace: TracebackType | None
-    ) -> None:
-        if self._fd >= 0:
-            os.close(self._fd)
-        try:
-            os.unlink(self._temporary)
-        except FileNotFoundError:
-            pass
-
-
-def sync_folder(folder: Path) -> None:
-    """Bring a folder's own entries to the medium."""
-    fd = os.open(folder, os.O_RDONLY | os.O_DIRECTORY)
-    try:
-        os.fsync(fd)
-    finally:
-        os.close(fd)
+    def __exit__(self, *_: object) -> None:
+        self.discard()
 
 
 def reason(error: OSError) -> str:

@@ -10,6 +10,7 @@ import threading
 from bisect import bisect_right
 from collections import OrderedDict
 from collections.abc import Iterator, Sequence
+from contextlib import suppress
 from dataclasses import dataclass
 from itertools import accumulate
 from pathlib import Path
@@ -35,7 +36,7 @@ class Member:
 
 
 def collect(paths: Sequence[Path], root: Path) -> tuple[list[Member], list[str]]:
-    """The members that `paths` (below `root`) stand for, in their fixed order, and notes on what was left out.
+    """The members that `paths` (below `root`) stand for, in order, and notes on what was left out.
 
     Folders come before what is in them, names in the order of their bytes; links are recorded and never
     followed. Raises UsageError for a path named twice, CannotCheck for one that cannot be read.
@@ -88,7 +89,9 @@ class Folder:
         """A descriptor for reading the file at `path`. Raises OSError (ELOOP where a link is in the way)."""
         parent, name = os.path.split(path)
         with self._lock:
-            return os.open(name, os.O_RDONLY | os.O_CLOEXEC | os.O_NOFOLLOW | os.O_NONBLOCK, dir_fd=self._enter(parent))
+            return os.open(
+                name, os.O_RDONLY | os.O_CLOEXEC | os.O_NOFOLLOW | os.O_NONBLOCK, dir_fd=self._enter(parent)
+            )
 
     def stat(self, path: bytes) -> os.stat_result:
         """What is at `path`, links not followed. Raises OSError."""
@@ -132,10 +135,8 @@ def open_folder(root: int, path: bytes, *, create: bool = False) -> int:
     try:
         for part in filter(None, path.split(b"/")):
             if create:
-                try:
+                with suppress(FileExistsError):
                     os.mkdir(part, dir_fd=fd)
-                except FileExistsError:
-                    pass
             below = os.open(part, flags, dir_fd=fd)
             os.close(fd)
             fd = below
@@ -154,6 +155,13 @@ class Span:
     length: int
 
 
+class Opener(Protocol):
+    """Opens members by their paths."""
+
+    def open(self, path: bytes) -> int:
+        """A descriptor for reading the member at `path`. Raises OSError."""
+
+
 class Stream(Protocol):
     """Bytes of a window by their offset in it."""
 
@@ -164,7 +172,9 @@ class Stream(Protocol):
 class MemberStream:
     """The spans of many members end to end. May be read from several threads."""
 
-    def __init__(self, folder: Folder, spans: Sequence[Span], known_bad: Sequence[tuple[int, int]] = ()) -> None:
+    def __init__(
+        self, folder: Opener, spans: Sequence[Span], known_bad: Sequence[tuple[int, int]] = ()
+    ) -> None:
         """`known_bad`: ranges (start, stop) of the stream that must not even be tried."""
         self._folder = folder
         self._spans = [s for s in spans if s.length]

@@ -60,7 +60,7 @@ def test_qr_code(tier: str) -> None:
 
 @pytest.mark.parametrize("tier", TIERS)
 def test_ccsds_code(tier: str) -> None:
-    """RS(255,223) of CCSDS 131.0-B, conventional basis, data 00..DE (a general FEC library's output; computed)."""
+    """RS(255,223) of CCSDS 131.0-B, conventional basis, data 00..DE (a FEC library's output; computed)."""
     code = OuterCode(255, 223, field_poly=0x187, first_root=112, root_spacing=11)
     out = np.empty((32, 1), np.uint8)
     StripMap(code.parity_matrix, field_poly=0x187, tier=tier).apply(

@@ -31,7 +31,7 @@ def random(seed: int, *shape: int) -> np.ndarray:
 def single_words(
     inner: InnerCode, tier: str, flipped: list[tuple[int, ...]]
 ) -> tuple[np.ndarray, np.ndarray]:
-    """Decode one word for each set of flips in the zero word: what is left of it (message, parity), status."""
+    """Decode one word for each set of flips in the zero word: what is left of it, and its status."""
     bits = np.zeros((len(flipped), inner.n), np.uint8)
     for row, places in zip(bits, flipped, strict=True):
         row[list(places)] = 1
@@ -121,7 +121,10 @@ def test_half_the_distance_is_flagged(inner: InnerCode, tier: str) -> None:
 
 @pytest.mark.parametrize(("inner", "share"), [(CODES[0], 0.504), (CODES[1], 0.126)], ids=["EH", "EB"])
 def test_share_of_random_words_that_are_accepted(inner: InnerCode, share: float) -> None:
-    """[128,120,4] 50.4 %, [128,112,6] with 16 check bits 12.6 % (computed): sum of C(128, e), e <= t, over 2^(8p)."""
+    """[128,120,4] 50.4 %, [128,112,6] with 16 check bits 12.6 % (computed).
+
+    That is the sum of C(128, e) for e <= t over 2^(8p).
+    """
     rows = 200_000
     status = np.empty((rows, 1), np.uint8)
     cells, parity = random(7, rows, inner.m), random(8, rows, inner.p)
@@ -142,7 +145,7 @@ def test_share_of_random_words_that_are_accepted(inner: InnerCode, share: float)
 def test_any_cells(
     inner: InnerCode, tier: str, width: int, rate: float, pinned_share: float | None, seed: int
 ) -> None:
-    """Cells of any width (shortened words, no stagger below 2m), random flips, with pinned bytes and without."""
+    """Cells of any width (shortened words, no stagger below 2m), random flips, pinned bytes or none."""
     rng = np.random.default_rng(seed)
     codec = WordCodec(inner, tier)
     rows, size = 3, codec.group_size(width)

@@ -12,7 +12,7 @@ from oakum.results import CheckResult, Description, MemberReport, MemberState, O
 def test_intact(intact: CheckResult) -> None:
     assert check_text(intact) == (
         "Nothing is damaged: all 2 members are as they were protected.\n\n"
-        "The sidecar itself is whole. Read at 10.0 MB/s in 0.5 s.\n"
+        "The sidecar itself is whole. It took 0.5 s.\n"
     )
 
 
@@ -46,18 +46,29 @@ def test_uncorrectable_says_what_is_lost(uncorrectable: CheckResult) -> None:
     assert "plates/a.tif      4,096    512" in text
     assert "At least 1,234 flipped bits in 3.00 MB read." in text
     assert "The sidecar itself is damaged, 12 flipped bits, and can be put right." in " ".join(text.split())
-    assert "edited, not decayed" in " ".join(text.split())
+    assert "1 altered member is newer than recorded" in " ".join(text.split())
     assert "below 0 %" in text
     assert "none, beyond correction" in text
 
 
 def test_repair_speaks_of_what_was_done(correctable: CheckResult) -> None:
     written = replace(correctable.members[0], mended=correctable.target / "a.mended.tif")
-    result = replace(correctable, command="repair", members=(written, correctable.members[1]))
+    whole = MemberReport("plates/c", 1, MemberState.INTACT, 0, mended=correctable.target / "c")
+    result = replace(correctable, command="repair", members=(written, correctable.members[1], whole))
     text = check_text(result)
     assert text.startswith("Every byte was put right;")
-    assert "Written, 1 file\n  plates/a.mended.tif" in text
+    assert "Written\n  plates/a.mended.tif\n  and 1 whole member copied with them\n" in text
     assert "oakum repair" not in text
+
+
+def test_one_block_has_no_distribution(correctable: CheckResult) -> None:
+    one = replace(correctable, totals=replace(correctable.totals, blocks=1))
+    assert "cumulative" not in check_text(one)
+
+
+def test_an_absent_member_has_no_count_of_flips(correctable: CheckResult) -> None:
+    line = next(line for line in check_text(correctable).splitlines() if "plates/b.tif" in line)
+    assert line.split()[-3:] == ["-", "not", "there"]
 
 
 def test_a_hostile_name_stays_on_its_line(correctable: CheckResult) -> None:

@@ -4,7 +4,7 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from oakum.report.units import counted, duration, exact_size, percent, size, speed
+from oakum.report.units import counted, duration, exact_size, percent, size, speed, took
 
 
 @pytest.mark.parametrize(
@@ -53,6 +53,8 @@ def test_duration_and_speed() -> None:
     assert shown == ["0.0 s", "9.9 s", "10 s", "59 s", "1 min 0 s", "59 min 59 s", "1 h 0 min", "2 h 14 min"]
     assert speed(10_000_000, 2) == "5.00 MB/s"
     assert speed(0, 2) == speed(5, 0) == ""
+    assert took(640_000_000, 2) == "It took 2.0 s, 320 MB/s."
+    assert took(1_000, 2) == "It took 2.0 s."
 
 
 def test_counts() -> None:

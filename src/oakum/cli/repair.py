@@ -25,12 +25,14 @@ def repair(
     ] = None,
     member: Annotated[
         list[str] | None,
-        typer.Option("--member", "-m", metavar="PATH", help="Repair only this member; may be repeated."),
+        typer.Option(
+            "--member", "-m", metavar="PATH", help="Write only this file or folder; may be repeated."
+        ),
     ] = None,
     accept_loss: Annotated[
         bool,
         typer.Option(
-            "--accept-loss", help="Also write members that are only partly right.", show_default=False
+            "--accept-loss", help="Also write files that are only partly right.", show_default=False
         ),
     ] = False,
     sidecar: Sidecar = None,

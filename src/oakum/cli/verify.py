@@ -18,7 +18,9 @@ def verify(
     digests_only: Annotated[
         bool,
         typer.Option(
-            "--digests-only", help="Only find damage, do not try to correct it.", show_default=False
+            "--digests-only",
+            help="Leave out SHA-256; the cells' digests alone find damage.",
+            show_default=False,
         ),
     ] = False,
     unreadable: Unreadable = None,

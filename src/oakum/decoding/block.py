@@ -195,7 +195,7 @@ class _Block:
                 self._finish(row, cell)
 
     def _agrees(self, row: int, cell: Bytes) -> bool:
-        return bool(xxhash.xxh3_64_intdigest(memoryview(cell)) == self.digests[row])
+        return bool(xxhash.xxh3_64_intdigest(cell.data) == self.digests[row])
 
     def _finish(self, row: int, cell: Bytes) -> None:
         """A cell is right: all its symbols are fixed from now on."""
@@ -235,7 +235,9 @@ class _Block:
         cells = self.value[rows] ^ magnitudes
         if not agree.all() or (self.given[rows] & (magnitudes != 0)).any():
             return False
-        if any(self.digested[row] and not self._agrees(row, cell) for row, cell in zip(rows, cells, strict=True)):
+        if any(
+            self.digested[row] and not self._agrees(row, cell) for row, cell in zip(rows, cells, strict=True)
+        ):
             return False
         for row, cell in zip(rows.tolist(), cells, strict=True):
             self._finish(row, cell)
@@ -275,8 +277,8 @@ class _Block:
             open_bytes = np.where(open_, self._open_bytes(open_), np.uint8(0))
         else:
             status, open_bytes = np.zeros(open_.shape, np.uint8), open_.astype(np.uint8)
-        dense = (status == DENSE) | (open_ & self._burst_rows()[:, np.newaxis])
-        return Reliability(self.erased & open_, dense, status, open_bytes)
+        burst_rows = open_ & self._burst_rows()[:, np.newaxis]
+        return Reliability(self.erased & open_, status == DENSE, burst_rows, status, open_bytes)
 
     def _open_bytes(self, open_: Mask) -> Bytes:
         """For each byte, how many bytes of its word are not known to be right."""
@@ -290,11 +292,12 @@ class _Block:
         return self._spread(counts)
 
     def _burst_rows(self) -> Mask:
-        """Rows that look like parts of a burst as a whole: neighbours, or wrong in many of the solved columns."""
+        """Rows that look like whole parts of a burst: neighbours, or wrong in many of the solved columns."""
         suspects = np.zeros(len(self.strips), bool)
-        rows = np.flatnonzero(~self.finished)
+        rows = np.flatnonzero(~self.finished & ~self.erased.all(axis=1))
         if len(rows) <= 3 * self.g.r:
-            suspects[rows] = neighbouring_rows(self.strips[rows], self.g.r)
+            room = self.g.r - int(self.erased.any(axis=1).sum())
+            suspects[rows] = neighbouring_rows(self.strips[rows], room)
         solved = np.setdiff1d(np.arange(self.width), self.open)
         if len(solved) >= 16:
             suspects |= (self.value[:, solved] != self.raw[:, solved]).mean(axis=1) > 0.25
@@ -389,7 +392,7 @@ class _Block:
 
 
 def burst_bytes(flips: Bytes) -> Mask:
-    """Which wrong bytes of each row of `flips` lie inside a burst (clusters are not followed into other cells)."""
+    """Which wrong bytes of each row of `flips` lie in a burst (clusters are not followed into other cells)."""
     inside = np.zeros(flips.shape, bool)
     rows, places = np.nonzero(flips)
     if not len(places):
@@ -399,6 +402,10 @@ def burst_bytes(flips: Bytes) -> Mask:
     found = cluster(line, np.zeros_like(line))
     bursts = found[found.burst]
     which = np.searchsorted(bursts.start, line, side="right") - 1
-    member = (which >= 0) & (line < bursts.stop[np.maximum(which, 0)]) if len(bursts) else np.zeros(len(line), bool)
+    member = (
+        (which >= 0) & (line < bursts.stop[np.maximum(which, 0)])
+        if len(bursts)
+        else np.zeros(len(line), bool)
+    )
     inside[rows[member], places[member]] = True
     return inside

@@ -57,7 +57,10 @@ def _join(parts: Clusters) -> Clusters:
     first = np.flatnonzero(opens)
     last = np.append(first[1:], len(parts)) - 1
     return Clusters(
-        parts.start[first], parts.stop[last], np.add.reduceat(parts.wrong, first), np.add.reduceat(parts.bits, first)
+        parts.start[first],
+        parts.stop[last],
+        np.add.reduceat(parts.wrong, first),
+        np.add.reduceat(parts.bits, first),
     )
 
 
@@ -92,7 +95,10 @@ class BurstCounter:
     def finish(self) -> None:
         """Join what was kept. Nothing may be added afterwards."""
         if self._edges:
-            parts = [np.concatenate([getattr(e, name) for e in self._edges]) for name in ("start", "stop", "wrong", "bits")]
+            parts = [
+                np.concatenate([getattr(e, name) for e in self._edges])
+                for name in ("start", "stop", "wrong", "bits")
+            ]
             order = np.argsort(parts[0], kind="stable")
             self._count(_join(Clusters(*(part[order] for part in parts))))
             self._edges.clear()

@@ -30,7 +30,7 @@ BELIEVED = float(np.log(1e-9))
 """Log of the chance below which a column that a random word could have passed for is believed."""
 
 USABLE = float(np.log(1e-4))
-"""Log of the chance below which such a column is used for the time being, until something speaks against it."""
+"""Log of the chance below which such a column is used until something speaks against it."""
 
 LIKELY = 3
 """A byte of a flagged word of so few unknown bytes is more likely wrong than right (two flips among them)."""
@@ -43,36 +43,43 @@ DENSE_RUN = 32
 class Reliability:
     """What is known of each symbol of the rows in question, arrays of shape [R, columns].
 
-    `erased`: known to be bad. `dense`: inside a burst, by the density of its words or by its row.
+    `erased`: known to be bad. `dense`: inside a burst, by the density of its words. `burst_rows`: in a row
+    that looks like part of a burst as a whole.
     `status`: that of the symbol's word (see `WordCodec.correct`). `open_bytes`: how many bytes of its word
     are not yet known to be right; 0 where the symbol itself is known, and then nothing else is set.
     """
 
     erased: Mask
     dense: Mask
+    burst_rows: Mask
     status: Bytes
     open_bytes: Bytes
 
     def take(self, columns: Places) -> Reliability:
         """The same for some of the columns."""
-        return Reliability(*(a[:, columns] for a in (self.erased, self.dense, self.status, self.open_bytes)))
+        return Reliability(
+            self.erased[:, columns],
+            self.dense[:, columns],
+            self.burst_rows[:, columns],
+            self.status[:, columns],
+            self.open_bytes[:, columns],
+        )
 
 
 def erasure_trials(known: Reliability, t: int) -> Iterator[Mask]:
     """The sets of symbols to erase, most promising first, each different from the one before."""
     flagged = known.status == FLAGGED
+    verdicts = [verdict for verdict in (known.dense, known.burst_rows) if verdict.any()]
     previous: Mask | None = None
-    for base in (known.erased | known.dense, known.erased):
+    for base in [*(known.erased | verdict for verdict in verdicts), known.erased]:
         for trial in _graded(base, flagged, known, t):
             if previous is None or not np.array_equal(trial, previous):
                 yield trial
             previous = trial
-        if not known.dense.any():
-            return
 
 
 def _graded(base: Mask, flagged: Mask, known: Reliability, t: int) -> Iterator[Mask]:
-    """Erase more and more on top of `base`: likely wrong, none, more of the flagged, all, then corrected words."""
+    """Erase on top of `base`: the likely wrong, none, more of the flagged, all of them, corrected words."""
     yield base | (flagged & (known.open_bytes <= LIKELY))
     yield base
     for most in (5, 8):
@@ -126,17 +133,16 @@ def dense_words(status: Bytes) -> Mask:
     return np.asarray(np.cumsum(covered, axis=1)[:, :words] > 0)
 
 
-def neighbouring_rows(strips: Places, r: int) -> Mask:
+def neighbouring_rows(strips: Places, room: int) -> Mask:
     """Which of the strips in question stand next to each other, as those of one long burst do.
 
-    Longest runs first, as many as r erasures allow; none where there is no such run.
+    Longest runs first, as many as there is `room` for in erasures; none where there is no such run.
     """
     chosen = np.zeros(len(strips), bool)
     if not len(strips):
         return chosen
     opens = np.flatnonzero(np.diff(strips, prepend=-2) != 1)
     lengths = np.diff(np.append(opens, len(strips)))
-    room = r
     for i in np.argsort(-lengths, kind="stable"):
         if lengths[i] < 2 or lengths[i] > room:
             continue

@@ -28,7 +28,7 @@ class GroupReader:
             start = self._first
             if strip < g.k:
                 data = np.empty(self._length, np.uint8)
-                faults = self.window.stream.read_into(strip * g.depth + start, memoryview(data))
+                faults = self.window.stream.read_into(strip * g.depth + start, data.data)
             else:
                 data, faults = self.window.section.body((strip - g.k) * g.depth + start, self._length)
             self._strips[strip] = data, faults

@@ -9,7 +9,7 @@ from __future__ import annotations
 
 import os
 import stat
-from bisect import bisect_right
+from bisect import bisect_left, bisect_right
 from collections.abc import Callable, Iterator, Sequence
 from concurrent.futures import Future
 from dataclasses import dataclass, field
@@ -82,13 +82,25 @@ class ProtectedSet:
     unreadable: dict[bytes, list[Range]] = field(default_factory=dict)
     notes: list[str] = field(default_factory=list)
 
+    def __post_init__(self) -> None:
+        files = (m for m in self.members.values() if m.piece.kind is Kind.FILE and m.size)
+        self._files = sorted(files, key=lambda m: m.stream_start)
+        self._starts = [m.stream_start for m in self._files]
+
+    def members_at(self, start: int, length: int) -> list[KnownMember]:
+        """The files that hold bytes of a range of the stream, in order."""
+        first = max(0, bisect_right(self._starts, start) - 1)
+        return self._files[first : bisect_left(self._starts, start + length)]
+
     def close(self) -> None:
         """Close everything."""
         self.source.close()
         self.folder.close()
 
 
-def open_set(path: Path, root: Path | None, unreadable: dict[bytes, list[Range]] | None = None) -> ProtectedSet:
+def open_set(
+    path: Path, root: Path | None, unreadable: dict[bytes, list[Range]] | None = None
+) -> ProtectedSet:
     """Open the sidecar at `path` and look for its members below `root` (None: beside it).
 
     Raises CannotCheck when the sidecar cannot be read or its members are not there at all.
@@ -101,7 +113,9 @@ def open_set(path: Path, root: Path | None, unreadable: dict[bytes, list[Range]]
     except BaseException:
         source.close()
         raise
-    opened = ProtectedSet(path, folder.root, source, folder, sections, tables, _put_together(sections, tables))
+    opened = ProtectedSet(
+        path, folder.root, source, folder, sections, tables, _put_together(sections, tables)
+    )
     opened.unreadable = unreadable or {}
     try:
         _look_at_sections(opened)
@@ -114,7 +128,9 @@ def open_set(path: Path, root: Path | None, unreadable: dict[bytes, list[Range]]
     return opened
 
 
-def _put_together(sections: Sequence[Section], tables: Sequence[tuple[Piece, ...]]) -> dict[bytes, KnownMember]:
+def _put_together(
+    sections: Sequence[Section], tables: Sequence[tuple[Piece, ...]]
+) -> dict[bytes, KnownMember]:
     members: dict[bytes, KnownMember] = {}
     for section, table in zip(sections, tables, strict=True):
         place = section.bootstrap.start
@@ -134,10 +150,14 @@ def _look_at_sections(opened: ProtectedSet) -> None:
     expected = 0
     for section in opened.sections:
         if section.bootstrap.window != expected:
-            opened.notes.append(f"the sidecar's sections for windows {expected} to {section.bootstrap.window - 1} are lost")
+            opened.notes.append(
+                f"the sidecar's sections for windows {expected} to {section.bootstrap.window - 1} are lost"
+            )
         expected = section.bootstrap.window + 1
     if not opened.sections[-1].bootstrap.last:
-        opened.notes.append(f"the sidecar ends after window {expected - 1}; what follows there cannot be checked")
+        opened.notes.append(
+            f"the sidecar ends after window {expected - 1}; what follows there cannot be checked"
+        )
 
 
 def _look_at(folder: Folder, member: KnownMember) -> None:
@@ -262,7 +282,10 @@ class WindowCheck:
             self._scan_parity()
             self._scan_inner(Track.INNER, self.g.parity_bytes, self.g.data_inner, self._suspect_data_inner)
             self._scan_inner(
-                Track.PARITY_INNER, self.g.parity_bytes + self.g.data_inner, self.g.parity_inner, self._suspect_parity_inner
+                Track.PARITY_INNER,
+                self.g.parity_bytes + self.g.data_inner,
+                self.g.parity_inner,
+                self._suspect_parity_inner,
             )
         else:
             self._scan_whole_body()
@@ -272,18 +295,20 @@ class WindowCheck:
         g = self.g
         if hasher is not None:
             hasher.expect(self.spans)
-        chunks = list(g.chunks(min(CHUNK, max(1, -(-g.length // max(g.depth, 1))) * g.depth))) if g.depth else []
+        chunks = (
+            list(g.chunks(min(CHUNK, max(1, -(-g.length // max(g.depth, 1))) * g.depth))) if g.depth else []
+        )
         buffers = [np.empty(max((b - a for a, b in chunks), default=0), np.uint8) for _ in range(3)]
         running: list[list[Future[None]]] = [[], [], []]
         for turn, (start, stop) in enumerate(chunks):
             slot = turn % 3
             wait_all(running[slot])
             data = buffers[slot][: stop - start]
-            faults = self.stream.read_into(start, memoryview(data))
+            faults = self.stream.read_into(start, data.data)
             real = min(stop, g.length) - start
             self.faulty += [(start + a, start + b) for a, b in faults]
             if hasher is not None:
-                running[slot] = [self._pools.ordered.submit(hasher.update, memoryview(data)[:real])]
+                running[slot] = [self._pools.ordered.submit(hasher.update, data.data[:real])]
             if g.digested:
                 running[slot] += self._compare_cells(start, stop, data)
             self._progress.advance(real)
@@ -361,18 +386,29 @@ class WindowCheck:
         for first in range(0, g.blocks, step):
             count = min(step, g.blocks - first)
             expected, known = self.section.digests(Track.PARITY, first * g.r, count * g.r)
-            width = sum(g.width(b) for b in (first, first + count - 1)[: min(count, 2)]) + max(0, count - 2) * CELL
+            width = (
+                sum(g.width(b) for b in (first, first + count - 1)[: min(count, 2)])
+                + max(0, count - 2) * CELL
+            )
             futures = []
             for j in range(g.r):
                 cells, faults = self.section.body(j * g.depth + first * CELL, width)
                 futures.append(
-                    self._pools.work.submit(self._compare_parity, first, j, cells, faults, expected[j :: g.r], known)
+                    self._pools.work.submit(
+                        self._compare_parity, first, j, cells, faults, expected[j :: g.r], known
+                    )
                 )
             wait_all(futures)
             self._progress.advance(g.r * width)
 
     def _compare_parity(
-        self, first: int, j: int, cells: Bytes, faults: list[Range], expected: NDArray[np.uint64], known: Mask | None
+        self,
+        first: int,
+        j: int,
+        cells: Bytes,
+        faults: list[Range],
+        expected: NDArray[np.uint64],
+        known: Mask | None,
     ) -> None:
         state = np.where(cell_digests(cells) == expected, np.uint8(RIGHT), np.uint8(WRONG))
         if known is not None:
@@ -382,7 +418,7 @@ class WindowCheck:
         self.parity[first : first + len(state), j] = state
 
     def _scan_inner(self, track: Track, start: int, length: int, suspect: Callable[[int, int], None]) -> None:
-        """One of the two areas of inner parity: cells whose digest does not agree are looked at closely later."""
+        """One of the two areas of inner parity: cells that disagree with their digest are looked at later."""
         for offset in range(0, length, CHUNK):
             size = min(CHUNK, length - offset)
             data, faults = self.section.body(start + offset, size)
@@ -419,7 +455,7 @@ class WindowCheck:
         """A small window: one digest speaks for the whole body."""
         g = self.g
         body, faults = self.section.body(0, g.body)
-        if not faults and xxhash.xxh3_64_intdigest(memoryview(body)) == self.section.bootstrap.body_digest:
+        if not faults and xxhash.xxh3_64_intdigest(body.data) == self.section.bootstrap.body_digest:
             self.parity[:] = RIGHT
         else:
             self.inner_suspects = {b: set(range(g.n)) for b in range(g.blocks)}
@@ -438,8 +474,12 @@ class WindowCheck:
 
     def dirty_blocks(self) -> list[int]:
         """Blocks with a cell that is not right, or with inner parity to be looked at."""
-        strips, blocks = np.divmod(np.flatnonzero(self.data != RIGHT), self.g.blocks) if self.g.blocks else ([], [])
-        dirty = set(np.unique(blocks).tolist()) | set(np.flatnonzero((self.parity != RIGHT).any(axis=1)).tolist())
+        strips, blocks = (
+            np.divmod(np.flatnonzero(self.data != RIGHT), self.g.blocks) if self.g.blocks else ([], [])
+        )
+        dirty = set(np.unique(blocks).tolist()) | set(
+            np.flatnonzero((self.parity != RIGHT).any(axis=1)).tolist()
+        )
         return sorted(dirty | set(self.inner_suspects))
 
     def findings(self, decoders: Callable[[], Decoders], *, keep: bool) -> Iterator[Finding]:
@@ -515,5 +555,3 @@ def _grouped(blocks: list[int]) -> list[list[int]]:
         else:
             groups.append([block])
     return groups
-
-

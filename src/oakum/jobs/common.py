@@ -34,19 +34,21 @@ def sidecar_path(paths: Sequence[Path], output: Path | None) -> Path:
         raise UsageError("several paths need --output to say where their sidecar goes")
     path = absolute(paths[0])
     if not path.name:
-        raise UsageError("a whole file system has no folder beside it; say with --output where the sidecar goes")
+        raise UsageError(
+            "a whole file system has no folder beside it; say with --output where the sidecar goes"
+        )
     return path.with_name(path.name + SUFFIX)
 
 
 def members_root(paths: Sequence[Path], sidecar: Path) -> Path:
-    """The folder that members' paths are relative to: the sidecar's where all are below it, else their own."""
+    """The folder that paths are relative to: the sidecar's where all members are below it, else their own."""
     parents = [path.parent for path in paths]
     common = Path(os.path.commonpath(parents))
     return sidecar.parent if common.is_relative_to(sidecar.parent) else common
 
 
 def find_sidecar(target: Path, sidecar: Path | None) -> Path:
-    """The sidecar that `target` means: itself, or the one beside it. Raises CannotCheck where there is none."""
+    """The sidecar that `target` means: itself, or the one beside it. Raises CannotCheck if there is none."""
     if sidecar is not None:
         if not sidecar.exists():
             raise CannotCheck(f"there is no sidecar {sidecar}")
@@ -58,5 +60,10 @@ def find_sidecar(target: Path, sidecar: Path | None) -> Path:
     if beside.is_file():
         return beside
     if not os.path.lexists(target):
-        raise CannotCheck(f"neither {target} nor a sidecar of it is there; check the path, or that the medium is mounted")
-    raise CannotCheck(f"{target} has no sidecar {beside.name} beside it; name one with --sidecar, or make one with oakum protect")
+        raise CannotCheck(
+            f"neither {target} nor a sidecar of it is there; check the path, or that the medium is mounted"
+        )
+    raise CannotCheck(
+        f"{target} has no sidecar {beside.name} beside it; "
+        "name one with --sidecar, or make one with oakum protect"
+    )

@@ -5,7 +5,7 @@ from __future__ import annotations
 import os
 import shutil
 import time
-from collections.abc import Sequence
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import BinaryIO
@@ -15,10 +15,10 @@ from numpy.typing import NDArray
 
 from oakum.algebra.concatenated import ConcatenatedCode
 from oakum.algebra.naming import resolve_code
-from oakum.encoding import Changed, Kernels, Unreadable, WindowEncoder, plan_reading
+from oakum.encoding import RESERVE, Changed, Kernels, ReadingPlan, Unreadable, WindowEncoder, plan_reading
 from oakum.errors import CannotCheck, OakumError, UsageError
 from oakum.files import Fault, NewFile
-from oakum.geometry import CELL, Geometry, Window, check_depth, plan_windows, window_depth
+from oakum.geometry import Geometry, Window, check_depth, plan_windows, window_depth
 from oakum.jobs.common import DEFAULT_MEMORY, absolute, members_root, sidecar_path, summarise
 from oakum.members import Folder, Member, MemberHasher, MemberStream, Span, collect
 from oakum.pools import Pools
@@ -26,8 +26,8 @@ from oakum.progress import Progress, Silent
 from oakum.results import ProtectResult
 from oakum.sidecar.bootstrap import FROM_PIPE, LAST_SECTION, UNKNOWN_LENGTH, Bootstrap, CodeParameters
 from oakum.sidecar.layout import Layout, stretches_for
-from oakum.sidecar.table import MAX_PATH, Kind, Piece, packed_length
-from oakum.sidecar.writing import Data, SectionWriter, Sink
+from oakum.sidecar.table import Kind, Piece, check_path, packed_length
+from oakum.sidecar.writing import Data, SectionWriter
 
 PIPE_DEPTH = 1 << 20
 _NOT_BESIDE = "the sidecar does not lie beside what it protects; give --root when verifying"
@@ -82,10 +82,65 @@ def protect(
     )  # fmt: skip
 
 
+def protect_pipe(
+    stream: BinaryIO,
+    *,
+    name: str,
+    output: Path | BinaryIO,
+    code: str = "shelf",
+    depth: int = PIPE_DEPTH,
+    overwrite: bool = False,
+    memory: int = DEFAULT_MEMORY,
+    jobs: int | None = None,
+    progress: Progress = Silent(),
+) -> ProtectResult:
+    """Protect what comes through a pipe, window by window, never seeking in `output`.
+
+    `name` is what the stream will be called when it is verified, relative to the sidecar's folder.
+    Errors as in `protect`.
+    """
+    begin = time.monotonic()
+    chosen = resolve_code(code)
+    path = _pipe_member(name)
+    job = _PipeJob(chosen, path, check_depth(depth), memory, progress)
+    with Pools(jobs) as pools:
+        progress.phase("reading", None)
+        if isinstance(output, Path):
+            target = absolute(output)
+            with NewFile(target, overwrite=overwrite) as file:
+                place = 0
+                for section in job.sections(stream, pools):
+                    file.write(place, section)
+                    place += len(section)
+                file.commit(place)
+        else:
+            target, place = Path("-"), 0
+            for section in job.sections(stream, pools):
+                output.write(section)
+                place += len(section)
+            output.flush()
+    return ProtectResult(
+        target, summarise(chosen), 1, job.length, place, job.last_depth if job.windows == 1 else depth,
+        job.windows, 1, job.burst, time.monotonic() - begin,
+    )  # fmt: skip
+
+
+def _pipe_member(name: str) -> bytes:
+    """The name of a pipe's stream as a member path. Raises UsageError for one that no file can have."""
+    path = os.fsencode(name)
+    try:
+        check_path(path)
+    except OakumError:
+        raise UsageError(f"{name!r} cannot be the name of a file; give --name another one") from None
+    return path
+
+
 def _refuse_inside(sidecar: Path, places: Sequence[Path]) -> None:
     for place in places:
         if place.is_dir() and not place.is_symlink() and sidecar.is_relative_to(place):
-            raise UsageError(f"the sidecar {sidecar.name} would lie inside {place}, which it protects; put it elsewhere")
+            raise UsageError(
+                f"the sidecar {sidecar.name} would lie inside {place}, which it protects; put it elsewhere"
+            )
         if sidecar == place:
             raise UsageError(f"{sidecar} cannot be both what is protected and the sidecar")
 
@@ -97,9 +152,13 @@ def _refuse_changed(folder: Folder, members: Sequence[Member]) -> None:
         try:
             now = folder.stat(member.path)
         except OSError:
-            raise CannotCheck(f"{name} went away while it was read; run protect again when nothing changes") from None
+            raise CannotCheck(
+                f"{name} went away while it was read; run protect again when nothing changes"
+            ) from None
         if member.kind is Kind.FILE and (now.st_size, now.st_mtime_ns) != (member.size, member.modified_ns):
-            raise CannotCheck(f"{name} changed while it was read; run protect again when nothing writes to it")
+            raise CannotCheck(
+                f"{name} changed while it was read; run protect again when nothing writes to it"
+            )
 
 
 def _read_back(sidecar: Path, root: Path, memory: int, jobs: int | None, progress: Progress) -> None:
@@ -108,7 +167,9 @@ def _read_back(sidecar: Path, root: Path, memory: int, jobs: int | None, progres
 
     result = verify(sidecar, root=root, memory=memory, jobs=jobs, progress=progress)
     if result.outcome is not Outcome.INTACT:
-        raise CannotCheck(f"what was read back from {sidecar} is not what was written; do not trust this medium")
+        raise CannotCheck(
+            f"what was read back from {sidecar} is not what was written; do not trust this medium"
+        )
 
 
 @dataclass
@@ -166,15 +227,22 @@ class _Job:
                 self._code, layout, window, self._set_depth, self._total, place, len(pieces),
                 LAST_SECTION if window is self._windows[-1] else 0, parent, first,
             )  # fmt: skip
-            writer = SectionWriter(bootstrap, layout, _Placed(file, place))
-            spans = [Span(p.path, p.offset, p.length) for p in pieces if p.kind is Kind.FILE]
-            done = self._encode(folder, writer, window, geometry, plan, spans, pieces)
+            writer = SectionWriter(bootstrap, layout, Placed(file, place))
+            done = self._encode(folder, writer, geometry, plan, pieces)
             parent = done.identity
             first = first if window.index else done.identity
             place += layout.size
         return place
 
-    def _encode(self, folder, writer, window, geometry, plan, spans, pieces):  # type: ignore[no-untyped-def]
+    def _encode(
+        self,
+        folder: Folder,
+        writer: SectionWriter,
+        geometry: Geometry,
+        plan: ReadingPlan,
+        pieces: Sequence[Piece],
+    ) -> Bootstrap:
+        spans = [Span(p.path, p.offset, p.length) for p in pieces if p.kind is Kind.FILE]
         stream = MemberStream(folder, spans)
         try:
             self._hasher.expect(spans)
@@ -184,7 +252,11 @@ class _Job:
             encoder.run(plan)
         except (Unreadable, Changed) as error:
             name = os.fsdecode(stream.path_at(error.offset))
-            what = "could not be read to its end" if isinstance(error, Unreadable) else "changed while it was read"
+            what = (
+                "could not be read to its end"
+                if isinstance(error, Unreadable)
+                else "changed while it was read"
+            )
             raise CannotCheck(f"{name} {what}; run protect again when nothing writes to it") from None
         finally:
             stream.close()
@@ -203,7 +275,17 @@ class _Job:
             offset = max(0, window.start - extent.start)
             length = max(0, min(stop, end) - extent.start - offset)
             pieces.append(
-                Piece(m.kind, m.path, m.mode, m.modified_ns, m.size, offset, length, stop <= end, target=m.target)
+                Piece(
+                    m.kind,
+                    m.path,
+                    m.mode,
+                    m.modified_ns,
+                    m.size,
+                    offset,
+                    length,
+                    stop <= end,
+                    target=m.target,
+                )
             )
             if stop > end:
                 break
@@ -215,10 +297,127 @@ class _Job:
         need = sum(g.body for g in self._geometries)
         free = shutil.disk_usage(file.path.parent).free
         if need > free:
-            raise CannotCheck(f"{file.path.parent} has room for {free:,} bytes and the sidecar needs about {need:,}; free some, or choose another --output")
+            raise CannotCheck(
+                f"{file.path.parent} has room for {free:,} bytes and the sidecar "
+                f"needs about {need:,}; free some, or choose another --output"
+            )
 
 
-class _Placed:
+class _PipeJob:
+    """Makes the sections of a stream of unknown length, each from a window that is held in memory."""
+
+    def __init__(
+        self, code: ConcatenatedCode, path: bytes, depth: int, memory: int, progress: Progress
+    ) -> None:
+        self._code = code
+        self._path = path
+        self._depth = depth
+        self._progress = progress
+        step = code.outer.k * depth
+        section = Layout(_geometry(code, Window(0, 0, step, depth)), packed_length(path)).size
+        self._memory = memory - step - section
+        self.length = self.windows = self.burst = self.last_depth = 0
+        try:
+            plan_reading(_geometry(code, Window(0, 0, step, depth)), self._memory)
+        except CannotCheck:
+            need = (memory - self._memory + (code.outer.r + 32) * depth + RESERVE) >> 20
+            raise UsageError(
+                f"windows of a depth of {depth} bytes need --memory {need}MiB or more; "
+                "give that, or a smaller --depth"
+            ) from None
+        self._buffer = np.empty(step, np.uint8)
+
+    def sections(self, stream: BinaryIO, pools: Pools) -> Iterator[bytearray]:
+        """The sections of the sidecar in order."""
+        kernels, hasher = Kernels.of(self._code), MemberHasher()
+        parent = first = bytes(16)
+        place = 0
+        filled = self._fill(stream, 0)
+        while True:
+            ahead = stream.read(1) if filled == len(self._buffer) else b""
+            window = Window(
+                self.windows, self.length, filled, window_depth(filled, self._code.outer.k, self._depth)
+            )
+            section, done = self._section(window, not ahead, place, parent, first, kernels, hasher, pools)
+            parent, first = done.identity, done.set_identity
+            place += len(section)
+            self.length += filled
+            self.windows += 1
+            self.last_depth = window.depth
+            yield section
+            if not ahead:
+                return
+            self._buffer[0] = ahead[0]
+            filled = self._fill(stream, 1)
+
+    def _fill(self, stream: BinaryIO, filled: int) -> int:
+        view = self._buffer.data
+        while filled < len(view):
+            data = stream.read(min(len(view) - filled, 1 << 20))
+            if not data:
+                break
+            view[filled : filled + len(data)] = data
+            filled += len(data)
+            self._progress.advance(len(data))
+        return filled
+
+    def _section(
+        self,
+        window: Window,
+        last: bool,
+        place: int,
+        parent: bytes,
+        first: bytes,
+        kernels: Kernels,
+        hasher: MemberHasher,
+        pools: Pools,
+    ) -> tuple[bytearray, Bootstrap]:
+        geometry = _geometry(self._code, window)
+        layout = Layout(geometry, packed_length(self._path))
+        end = window.start + window.length
+        bootstrap = make_bootstrap(
+            self._code, layout, window, self._depth, end if last else UNKNOWN_LENGTH, place, 1,
+            FROM_PIPE | (LAST_SECTION if last else 0), parent, first,
+        )  # fmt: skip
+        sink = InMemory(layout.size)
+        writer = SectionWriter(bootstrap, layout, sink)
+        piece = Piece(Kind.FILE, self._path, 0o644, 0, end, window.start, window.length, last)
+        hasher.expect([Span(self._path, window.start, window.length)])
+        stream = HeldStream(self._buffer[: window.length])
+        encoder = WindowEncoder(geometry, kernels, writer, stream, hasher, pools, lambda _: None)
+        encoder.run(plan_reading(geometry, self._memory))
+        self.burst = max(self.burst, geometry.guaranteed_burst)
+        return sink.data, writer.finish(pack_table([piece], hasher.digests))
+
+
+class HeldStream:
+    """A window that is in memory already."""
+
+    def __init__(self, data: NDArray[np.uint8]) -> None:
+        self._data = data.data
+
+    def read_into(self, offset: int, buffer: memoryview) -> list[Fault]:
+        """See `oakum.members.Stream`; what lies past the end is virtual zeros."""
+        part = self._data[offset : offset + len(buffer)]
+        buffer[: len(part)] = part
+        buffer[len(part) :] = bytes(len(buffer) - len(part))
+        return []
+
+
+class InMemory:
+    """A sink in memory."""
+
+    def __init__(self, size: int) -> None:
+        self.data = bytearray(size)
+
+    def write(self, offset: int, data: Data) -> None:
+        self.data[offset : offset + len(data)] = data
+
+    def read(self, offset: int, length: int) -> bytes:
+        return bytes(self.data[offset : offset + length])
+
+
+class Placed:
     """A file as the sink of a section that begins at `base`."""
 
     def __init__(self, file: NewFile, base: int) -> None:
@@ -259,6 +458,4 @@ def make_bootstrap(
 def pack_table(pieces: Sequence[Piece], digests: Sequence[bytes]) -> bytes:
     """The member table, with one digest for every file among the pieces."""
     remaining = iter(digests)
-    return b"".join(
-        (replace(p, digest=next(remaining)) if p.kind is Kind.FILE else p).pack() for p in pieces
-    )
+    return b"".join((replace(p, digest=next(remaining)) if p.kind is Kind.FILE else p).pack() for p in pieces)

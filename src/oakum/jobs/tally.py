@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import os
-from bisect import bisect_right
 from pathlib import Path
 
 import numpy as np
@@ -19,12 +18,14 @@ class Tally:
 
     def __init__(self, opened: ProtectedSet) -> None:
         self._opened = opened
-        self._files = sorted(
-            (m for m in opened.members.values() if m.piece.kind is Kind.FILE and m.size), key=lambda m: m.stream_start
+        files = sorted(
+            (m for m in opened.members.values() if m.piece.kind is Kind.FILE and m.size),
+            key=lambda m: m.stream_start,
         )
-        self._starts = np.array([m.stream_start for m in self._files], np.int64)
-        self._bits = np.zeros(len(self._files), np.int64)
-        self._lost: dict[int, list[tuple[int, int]]] = {}
+        self._number = {m.piece.path: i for i, m in enumerate(files)}
+        self._starts = np.array([m.stream_start for m in files], np.int64)
+        self._bits = np.zeros(len(files), np.int64)
+        self._lost: dict[bytes, list[tuple[int, int]]] = {}
         self._bursts = BurstCounter()
         self.blocks: list[BlockReport] = []
         self._block_count = 0
@@ -64,25 +65,23 @@ class Tally:
         state = Outcome.CORRECTABLE if finding.correctable else Outcome.UNCORRECTABLE
         self.blocks.append(
             BlockReport(
-                finding.window, finding.block, state, bits, len(finding.places), finding.erased,
+                finding.window,
+                finding.block,
+                state,
+                bits,
+                len(finding.places),
+                finding.erased,
                 finding.margin if finding.correctable else None,
-            )  # fmt: skip
+            )
         )
 
     def _add_lost(self, start: int, stop: int) -> None:
         """Give a lost range of the stream to the members it touches."""
-        at = max(0, bisect_right(self._starts, start) - 1)
-        while at < len(self._files) and self._files[at].stream_start < stop:
-            member = self._files[at]
+        for member in self._opened.members_at(start, stop - start):
             a = max(start, member.stream_start) - member.stream_start
             b = min(stop, member.stream_start + member.size) - member.stream_start
             if a < b and not member.right:
-                ranges = self._lost.setdefault(at, [])
-                if ranges and ranges[-1][1] == a:
-                    ranges[-1] = (ranges[-1][0], b)
-                else:
-                    ranges.append((a, b))
-            at += 1
+                self._lost.setdefault(member.piece.path, []).append((a, b))
 
     @property
     def totals(self) -> Totals:
@@ -93,21 +92,25 @@ class Tally:
             bits_read=self._read, bits_flipped=self._bursts.burst + self._bursts.scattered,
             bits_flipped_scattered=self._bursts.scattered, bits_flipped_burst=self._bursts.burst,
             symbols_wrong=self._symbols, words_corrected=self._corrected, words_flagged=self._flagged,
-            bytes_erased=self._erased, blocks=self._block_count, blocks_clean=self._block_count - len(self.blocks),
+            bytes_erased=self._erased, blocks=self._block_count,
+            blocks_clean=self._block_count - len(self.blocks),
             blocks_correctable=len(self.blocks) - lost, blocks_uncorrectable=lost,
         )  # fmt: skip
 
     def lost_of(self, member: KnownMember) -> list[tuple[int, int]]:
-        """Ranges (offset, end) of a member that could not be put right, in order."""
-        at = int(np.searchsorted(self._starts, member.stream_start, side="right")) - 1
-        if not member.size or at < 0 or self._files[at] is not member:
-            return []
-        return sorted(self._lost.get(at, ()))
+        """Ranges (offset, end) of a member that could not be put right, in order, joined where they touch."""
+        joined: list[tuple[int, int]] = []
+        for a, b in sorted(self._lost.get(member.piece.path, ())):
+            if joined and joined[-1][1] == a:
+                joined[-1] = (joined[-1][0], b)
+            else:
+                joined.append((a, b))
+        return joined
 
     def bits_of(self, member: KnownMember) -> int:
         """Flipped bits of a member."""
-        at = int(np.searchsorted(self._starts, member.stream_start, side="right")) - 1
-        return int(self._bits[at]) if member.size and at >= 0 and self._files[at] is member else 0
+        number = self._number.get(member.piece.path)
+        return 0 if number is None else int(self._bits[number])
 
     def members(self) -> list[MemberReport]:
         """One report a member, in the order of the table."""
@@ -132,23 +135,26 @@ class Tally:
             member.edited and state is not MemberState.INTACT, tuple((a, b - a) for a, b in lost),
         )  # fmt: skip
 
-    def sidecar(self, path: Path) -> SidecarReport:
-        """The condition of the sidecar itself."""
-        incomplete = not self._opened.sections[-1].bootstrap.last or len(self._opened.sections) <= (
-            self._opened.sections[-1].bootstrap.window
-        )
+    def sidecar(self, path: Path, *, members_correctable: bool) -> SidecarReport:
+        """The condition of the sidecar itself.
+
+        When every member can be had, so can all of the sidecar whose sections are there: it is written anew.
+        """
+        sections = self._opened.sections
+        incomplete = not sections[-1].bootstrap.last or len(sections) <= sections[-1].bootstrap.window
         details = []
         if self._sidecar_unreadable:
             details.append(f"{self._sidecar_unreadable:,} bytes of it could not be read")
         if incomplete:
             details.append("whole sections of it are lost")
-        if self._sidecar_lost or incomplete:
+        damaged = bool(
+            self._sidecar_bits or self._sidecar_symbols or self._sidecar_unreadable or self._sidecar_lost
+        )
+        if incomplete or (self._sidecar_lost and not members_correctable):
             state = Outcome.UNCORRECTABLE
-        elif self._sidecar_bits or self._sidecar_symbols or self._sidecar_unreadable:
-            state = Outcome.CORRECTABLE
         else:
-            state = Outcome.INTACT
-        unknown = state is Outcome.UNCORRECTABLE
+            state = Outcome.CORRECTABLE if damaged else Outcome.INTACT
+        unknown = incomplete or self._sidecar_lost
         return SidecarReport(
             path, state, None if unknown else self._sidecar_bits, None if unknown else self._sidecar_symbols,
             "; ".join(details),

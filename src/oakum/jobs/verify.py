@@ -44,7 +44,10 @@ def verify(
     try:
         with Pools(jobs) as pools:
             check = SetCheck(opened, pools, progress)
-            tally = check.run(hashing=not digests_only)
+            try:
+                tally = check.run(hashing=not digests_only)
+            finally:
+                check.close()
         return result_of("verify", target, check, tally, time.monotonic() - begin)
     finally:
         opened.close()
@@ -98,7 +101,9 @@ class SetCheck:
                 continue
             if not hashing:
                 member.right = not member.absent and member.piece.path not in damaged
-            elif not member.right and member.sha256 is None:  # Its last window is lost: what is there may be right.
+            elif (
+                not member.right and member.sha256 is None
+            ):  # Its last window is lost: what is there may be right.
                 member.right = not member.absent and member.piece.path not in damaged
             member.checked = member.right or member.absent or member.piece.path in damaged
 
@@ -116,24 +121,28 @@ class SetCheck:
             for finding in window.findings(self.decoders, keep=False):
                 tally.add(finding)
                 self.progress.advance(window.block_bytes)
-            window.close()
         return tally
+
+    def close(self) -> None:
+        """Close the members of all windows."""
+        for window in self.windows:
+            window.close()
 
 
 def result_of(command: str, target: Path, check: SetCheck, tally: Tally, seconds: float) -> CheckResult:
     """The record of a finished check."""
     members = tuple(tally.members())
-    sidecar = tally.sidecar(check.opened.path)
-    if any(m.state is MemberState.UNCORRECTABLE for m in members):
+    correctable = all(m.state is not MemberState.UNCORRECTABLE for m in members)
+    sidecar = tally.sidecar(check.opened.path, members_correctable=correctable)
+    if not correctable or sidecar.state is Outcome.UNCORRECTABLE:
         outcome = Outcome.UNCORRECTABLE
-    elif all(m.state is MemberState.INTACT for m in members):
-        # A sidecar that is beyond repair while all files are whole can be made anew: nothing is lost.
-        outcome = Outcome.INTACT if sidecar.state is Outcome.INTACT else Outcome.CORRECTABLE
+    elif all(m.state is MemberState.INTACT for m in members) and sidecar.state is Outcome.INTACT:
+        outcome = Outcome.INTACT
     else:
         outcome = Outcome.CORRECTABLE
     return CheckResult(
-        command, target, outcome, summarise(check.code), tally.totals, tuple(sorted(tally.blocks, key=_order)),
-        members, sidecar, seconds, tuple(check.opened.notes),
+        command, target, outcome, summarise(check.code), tally.totals,
+        tuple(sorted(tally.blocks, key=_order)), members, sidecar, seconds, tuple(check.opened.notes),
     )  # fmt: skip
 
 

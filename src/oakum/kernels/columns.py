@@ -15,7 +15,9 @@ from numpy.typing import NDArray
 
 from oakum.algebra.field import Bytes
 from oakum.algebra.outer import OuterCode
-from oakum.kernels.columns_kernels import FAILED, FIELD_POLY, Tables, decode_columns, factors
+from oakum.kernels.columns_kernels import FAILED, Tables, decode_columns
+from oakum.kernels.lanes import FIELD
+from oakum.kernels.roots import factors
 from oakum.kernels.stripmap import StripMap
 
 __all__ = ["FAILED", "ColumnDecoder", "ErasureSolver"]
@@ -24,8 +26,8 @@ __all__ = ["FAILED", "ColumnDecoder", "ErasureSolver"]
 class ColumnDecoder:
     """Bounded-distance decoding of columns of `outer`.
 
-    `tier` is that of the strip maps (see `oakum.kernels.tiers`). All methods may be called from several threads at
-    once and release the GIL while they compute.
+    `tier` is that of the strip maps (see `oakum.kernels.tiers`). All methods may be called from several
+    threads at once and release the GIL while they compute.
     """
 
     def __init__(self, outer: OuterCode, tier: str | None = None) -> None:
@@ -33,11 +35,11 @@ class ColumnDecoder:
         self._tier = tier
         self._checks = StripMap(outer.check_matrix, field_poly=outer.field_poly, tier=tier)
         self._tables = Tables(outer)
-        self._foreign = outer.field_poly != FIELD_POLY
+        self._foreign = outer.field_poly != FIELD.poly
         self._solver = lru_cache(maxsize=64)(self._build_solver)
 
     def syndromes(self, received: Bytes) -> Bytes:
-        """uint8[r, L]: the syndromes of the columns of `received`, uint8[n, L]. ValueError on other shapes."""
+        """The syndromes uint8[r, L] of the columns of `received`, uint8[n, L]. ValueError on other shapes."""
         _check_rows(received, "received", self.outer.n)
         out = np.empty((self.outer.r, received.shape[1]), dtype=np.uint8)
         self._checks.apply(received, out)
@@ -105,8 +107,8 @@ class ErasureSolver:
     def solve(self, syndromes: Bytes) -> tuple[Bytes, NDArray[np.bool_]]:
         """The magnitudes uint8[s, L] of the erased rows, and bool[L]: whether the other r - s checks agree.
 
-        `syndromes` is uint8[r, L]. Where the checks do not agree, other symbols are wrong and the magnitudes mean
-        nothing; with s = r no check is left and all columns agree. Raises ValueError on other shapes.
+        `syndromes` is uint8[r, L]. Where the checks do not agree, other symbols are wrong and the magnitudes
+        mean nothing; with s = r no check is left and all columns agree. Raises ValueError on other shapes.
         """
         _check_rows(syndromes, "syndromes", self._shape)
         out = np.empty_like(syndromes, order="C")

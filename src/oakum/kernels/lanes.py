@@ -22,20 +22,21 @@ import numpy as np
 from llvmlite import ir
 from numba import types
 from numba.core import cgutils
-from numba.extending import intrinsic
 
 from oakum.algebra.field import ORDER, Bytes, Field
 from oakum.kernels import planes
-from oakum.kernels.planes import BLOCK_WORDS, FIELD, LANES, PLANE_WORDS, Builder, Rows, Value, number
+from oakum.kernels.planes import BLOCK_WORDS, FIELD, LANES, PLANE_WORDS, Rows, number
+from oakum.kernels.simd import I1, I64, Builder, Value, intrinsic, variable
 
 __all__ = ["ALL", "BLOCK_WORDS", "FIELD", "LANES", "NONE", "ONE", "PLANE_WORDS", "field_map", "subroutine"]
 
 NONE, ONE, ALL = np.uint64(0), np.uint64(1), np.uint64(0xFFFF_FFFF_FFFF_FFFF)
 """Words of sets of lanes: no lane, the first, all."""
 
-Decorator = Callable[[Callable[..., Any]], Callable[..., Any]]
-subroutine: Decorator = numba.njit(no_cpython_wrapper=True, no_cfunc_wrapper=True)
-"""Marks a function that only a kernel calls. Entries for Python would cost time to compile."""
+
+def subroutine(function: Callable[..., Any]) -> Callable[..., Any]:
+    """Marks a function that only kernels call: without the entries for Python, it compiles faster."""
+    return numba.njit(no_cpython_wrapper=True, no_cfunc_wrapper=True)(function)  # type: ignore[no-any-return, call-overload]
 
 
 def field_map(poly: int) -> Bytes:
@@ -57,25 +58,16 @@ def field_map(poly: int) -> Bytes:
 # -- how intrinsics are made --------------------------------------------------------------------------------
 
 
-class _Code:
-    """What an intrinsic's code works with: the builder and the arguments, arrays as `Rows`."""
-
-    def __init__(self, context: Any, builder: Builder, signature: Any, arguments: Sequence[Value]) -> None:
-        self.builder = builder
-        self.arguments = [
-            Rows(context, builder, kind, value) if isinstance(kind, types.Array) else value
-            for kind, value in zip(signature.args, arguments, strict=True)
-        ]
-
-
 def _void(emit: Callable[..., None], *kinds: Any) -> tuple[Any, Callable[..., Value]]:
     """An intrinsic without result: numba's types of its arguments (None for a number) and its code.
 
-    `emit` is called with the builder and the arguments.
+    `emit` is called with the builder and the arguments, arrays as `Rows`.
     """
 
     def codegen(context: Any, builder: Builder, signature: Any, arguments: Sequence[Value]) -> Value:
-        emit(builder, *_Code(context, builder, signature, arguments).arguments)
+        pairs = zip(signature.args, arguments, strict=True)
+        arrays = types.Array
+        emit(builder, *(Rows(context, builder, t, x) if isinstance(t, arrays) else x for t, x in pairs))
         return context.get_dummy_value()
 
     return types.void(*(types.int64 if kind is None else kind for kind in kinds)), codegen
@@ -146,7 +138,7 @@ def inner_product(typing: Any, out: Any, i: Any, a: Any, j: Any, b: Any, k: Any,
     ) -> None:
         totals = []
         for part in range(3):  # in three passes, so that the sums of each stay in registers
-            sums = [cgutils.alloca_once_value(builder, planes.NO_LANES) for _ in range(7)]
+            sums = [variable(builder, planes.NO_LANES) for _ in range(7)]
             with cgutils.for_range(builder, count) as loop:
                 x = planes.halves(builder, a.load_block(builder.add(j, loop.index)))[part]
                 y = planes.halves(builder, b.load_block(builder.sub(k, loop.index)))[part]
@@ -167,7 +159,8 @@ def advance(typing: Any, a: Any, i: Any, b: Any, j: Any, k: Any, control: Any, g
     """
 
     def emit(
-        builder: Builder, a: Rows, i: Value, b: Rows, j: Value, k: Value, control: Rows, g: Value, d: Value, s: Value
+        builder: Builder, a: Rows, i: Value, b: Rows, j: Value, k: Value, control: Rows, g: Value, d: Value,
+        s: Value,
     ) -> None:  # fmt: skip
         old, shifted = a.load_block(i), b.load_block(k)
         first = planes.products(builder, control.load_block(g), old)
@@ -189,7 +182,7 @@ def butterfly(typing: Any, a: Any, i: Any, j: Any, factors: Any, k: Any) -> Any:
     """
 
     def emit(builder: Builder, a: Rows, i: Value, j: Value, factors: Rows, k: Value) -> None:
-        words = [factors.load(k, number(b), planes.WORD) for b in range(8)]
+        words = [factors.load(k, number(b), I64) for b in range(8)]
         factor = [planes.all_words(builder, word) for word in words]
         second = a.load_block(j)
         first = planes.add(builder, a.load_block(i), planes.multiply(builder, factor, second))
@@ -223,7 +216,7 @@ def nonzero_bytes(typing: Any, out: Any, i: Any, a: Any, j: Any, first: Any) -> 
         for word in range(PLANE_WORDS):
             some = a.load(j, builder.add(first, number(64 * word)), planes.BYTES)
             flags = builder.icmp_unsigned("!=", some, planes.all_bytes(0))
-            out.store(builder.bitcast(flags, planes.WORD), i, number(word))
+            out.store(builder.bitcast(flags, I64), i, number(word))
 
     return _void(emit, out, None, a, None, None)
 
@@ -233,7 +226,7 @@ def lowest_bit(typing: Any, word: Any) -> Any:
     """The number of the lowest bit that is set in `word`, which is not zero"""
 
     def codegen(context: Any, builder: Builder, signature: Any, arguments: Sequence[Value]) -> Value:
-        return builder.cttz(arguments[0], ir.Constant(planes.BIT, 1))
+        return builder.cttz(arguments[0], ir.Constant(I1, 1))
 
     return types.int64(types.uint64), codegen
 
@@ -252,7 +245,7 @@ def from_bytes(typing: Any, out: Any, i: Any, a: Any, j: Any, first: Any) -> Any
                 # CPUs with byte vectors can collect the bytes' signs in a word
                 at_sign = builder.shl(elements, planes.all_bytes(7 - plane))
                 flags = builder.icmp_signed("<", at_sign, planes.all_bytes(0))
-                out.store(builder.bitcast(flags, planes.WORD), i, number(PLANE_WORDS * plane + word))
+                out.store(builder.bitcast(flags, I64), i, number(PLANE_WORDS * plane + word))
 
     return _void(emit, out, None, a, None, None)
 
@@ -265,7 +258,7 @@ def to_bytes(typing: Any, out: Any, i: Any, a: Any, j: Any) -> Any:
         for word in range(PLANE_WORDS):
             elements = planes.all_bytes(0)
             for plane in range(8):
-                lanes = a.load(j, number(PLANE_WORDS * plane + word), planes.WORD)
+                lanes = a.load(j, number(PLANE_WORDS * plane + word), I64)
                 flags = builder.bitcast(lanes, planes.FLAGS)
                 power = builder.select(flags, planes.all_bytes(1 << plane), planes.all_bytes(0))
                 elements = builder.or_(elements, power)

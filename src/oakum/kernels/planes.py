@@ -12,25 +12,23 @@ from llvmlite import ir
 from numba import types
 
 from oakum.algebra.field import Field
+from oakum.kernels.simd import I1, I8, I32, I64, Builder, Value
 
 FIELD = Field(0x11D)
 LANES = 256
 PLANE_WORDS = LANES // 64
 BLOCK_WORDS = 8 * PLANE_WORDS
 
-Builder = ir.IRBuilder
-Value = ir.Value
 Planes = list[Value]
 
-BIT, BYTE, WORD = ir.IntType(1), ir.IntType(8), ir.IntType(64)
-PLANE = ir.VectorType(WORD, PLANE_WORDS)
-BYTES = ir.VectorType(BYTE, 64)
-FLAGS = ir.VectorType(BIT, 64)
+PLANE = ir.VectorType(I64, PLANE_WORDS)
+BYTES = ir.VectorType(I8, 64)
+FLAGS = ir.VectorType(I1, 64)
 NO_LANES = ir.Constant(PLANE, [0] * PLANE_WORDS)
 
 
 def number(value: int) -> Value:
-    return ir.Constant(WORD, value)
+    return ir.Constant(I64, value)
 
 
 def all_bytes(byte: int) -> Value:
@@ -39,29 +37,28 @@ def all_bytes(byte: int) -> Value:
 
 def all_words(builder: Builder, word: Value) -> Value:
     """The plane of which every word is `word`."""
-    index = ir.IntType(32)
-    vector = builder.insert_element(ir.Constant(PLANE, ir.Undefined), word, ir.Constant(index, 0))
-    zeros = ir.Constant(ir.VectorType(index, PLANE_WORDS), [0] * PLANE_WORDS)
+    vector = builder.insert_element(ir.Constant(PLANE, ir.Undefined), word, ir.Constant(I32, 0))
+    zeros = ir.Constant(ir.VectorType(I32, PLANE_WORDS), [0] * PLANE_WORDS)
     return builder.shuffle_vector(vector, ir.Constant(PLANE, ir.Undefined), zeros)
 
 
 class Rows:
-    """An array argument of an intrinsic: a C-ordered matrix of bytes or words, of whose rows addresses are wanted."""
+    """An array argument of an intrinsic: a matrix of bytes or words in C order."""
 
     def __init__(self, context: Any, builder: Builder, kind: types.Array, array: Value) -> None:
         view = context.make_array(kind)(context, builder, value=array)
         self._builder = builder
-        self._element = BYTE if kind.dtype == types.uint8 else WORD
+        self._element = I8 if kind.dtype == types.uint8 else I64
         self._data = view.data
         self._width = builder.extract_value(view.shape, 1)
 
-    def address(self, row: Value, column: Value, pointed: ir.Type) -> Value:
+    def address(self, row: Value, column: Value, pointed: Any) -> Value:
         """The address of [row, column], to load or store a value of the type `pointed` there."""
         index = self._builder.add(self._builder.mul(row, self._width), column)
         element = self._builder.gep(self._data, [index], source_etype=self._element)
         return self._builder.bitcast(element, pointed.as_pointer())
 
-    def load(self, row: Value, column: Value, pointed: ir.Type) -> Value:
+    def load(self, row: Value, column: Value, pointed: Any) -> Value:
         return self._builder.load(self.address(row, column, pointed), align=self._align, typ=pointed)
 
     def store(self, value: Value, row: Value, column: Value) -> None:

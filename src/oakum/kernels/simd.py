@@ -8,7 +8,7 @@ sizes that were validated in Python may reach a kernel. Every load and store is 
 from __future__ import annotations
 
 from collections.abc import Callable, Sequence
-from typing import Any
+from typing import Any, TypeAlias
 
 from llvmlite import ir
 from numba.core import cgutils, types
@@ -23,8 +23,8 @@ I16 = ir.IntType(16)
 I32 = ir.IntType(32)
 I64 = ir.IntType(64)
 
-Builder = ir.IRBuilder
-Value = ir.Value
+Builder: TypeAlias = ir.IRBuilder
+Value: TypeAlias = ir.Value
 
 
 def intrinsic(function: Callable[..., Any]) -> Callable[..., Any]:

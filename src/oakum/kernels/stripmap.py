@@ -44,9 +44,9 @@ class StripMap:
         """Set `out` (or XOR onto it, with `accumulate`) to the matrix times `source`.
 
         `source` is uint8[K', L] and stands for inputs first..first+K'-1 of the matrix, as if all others were
-        zero; `out` is uint8[R, L]. Rows may be at any distance from each other and at any address; the
-        bytes of a row are contiguous. L may be 0. The two must not overlap. Bytes outside the rows are neither
-        read nor written. Releases the GIL; may be called from several threads at once.
+        zero; `out` is uint8[R, L]. Rows may be at any distance from each other and at any address; the bytes
+        of a row are contiguous. L may be 0. The two must not overlap. Bytes outside the rows are neither read
+        nor written. Releases the GIL; may be called from several threads at once.
 
         Raises ValueError for arrays that are not as described.
         """

@@ -19,15 +19,14 @@ from __future__ import annotations
 from collections.abc import Callable, Sequence
 from typing import Any
 
-import numpy as np
 from llvmlite import ir
 from numba.core import cgutils
 
 from oakum.kernels.compiling import kernel
 from oakum.kernels.simd import (
+    I8,
     I16,
     I64,
-    I8,
     Builder,
     Value,
     byte_vector,

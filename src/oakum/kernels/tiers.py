@@ -65,6 +65,6 @@ def check_tier(tier: str) -> str:
 
 
 def current_tier() -> str:
-    """The tier that OAKUM_KERNEL_TIER names, else the best available one. Raises UsageError as `check_tier`."""
+    """The tier that OAKUM_KERNEL_TIER names, else the best one. Raises UsageError as `check_tier` does."""
     forced = os.environ.get(ENVIRONMENT_VARIABLE, "").strip()
     return check_tier(forced) if forced else available_tiers()[0]

@@ -1,8 +1,8 @@
 """The word codec: inner parity of cells, and inner decoding.
 
-A cell of a strip is cut into words of m bytes; the strip's number staggers them (the words of strip i begin at byte
-i mod m of the cell and wrap round inside it; cells shorter than 2m are not staggered). The last word is
-shortened: the bytes that it lacks are zero. The parity of word w is bytes w*p .. (w+1)*p - 1 of the cell's
+A cell of a strip is cut into words of m bytes. The strip's number staggers them: the words of strip i begin
+at byte i mod m of the cell and wrap round inside it; cells shorter than 2m are not staggered. The last word
+is shortened: the bytes that it lacks are zero. The parity of word w is bytes w*p .. (w+1)*p - 1 of the cell's
 group of parity.
 """
 
@@ -96,10 +96,11 @@ class WordCodec:
     ) -> None:
         """Correct up to t = (d - 1) // 2 flips in every word, in place.
 
-        `cells` is uint8[R, W], one cell a row; `parity` is uint8[R, group_size(W)] as received; `staggers` int[R].
-        `status` is uint8[R, words(W)] and becomes 0 for a clean word, 1..t for flips that were corrected (in
-        parity too) and 255 for a flagged one, whose bytes stay as they are. Bytes where `pinned` (uint8[R, W])
-        is not 0 are known to be right: a correction that would touch one is refused, its word flagged.
+        `cells` is uint8[R, W], one cell a row; `parity` is uint8[R, group_size(W)] as received; `staggers`
+        are the strips' numbers, int[R]. `status` is uint8[R, words(W)] and becomes 0 for a clean word, 1..t
+        for flips that were corrected (in parity too) and 255 for a flagged word, whose bytes stay as they
+        are. Bytes where `pinned` (uint8[R, W]) is not 0 are known to be right: a correction that would touch
+        one is refused, and its word flagged.
 
         Releases the GIL. Raises ValueError for arrays that are not as described.
         """
@@ -124,7 +125,7 @@ class WordCodec:
         run_correct(kernels.correct.prepare(), self.inner, cells, parity, syndromes, in_rows, status, pinned)
 
     def spread(self, status: Bytes, staggers: Staggers, width: int) -> Bytes:
-        """uint8[R, width]: for each byte of the cells the status of its word. `status` is uint8[R, words(width)]."""
+        """For each byte of the cells the status of its word: uint8[R, width] from uint8[R, words(width)]."""
         m = self.inner.m
         rows = len(status)
         if not m:
@@ -179,7 +180,7 @@ def leaders(inner: InnerCode) -> Leaders:
 def parity_tables(inner: InnerCode, tier: str) -> NDArray[Any]:
     """What a tier's parity kernel looks up; rows for bytes m.. of the 16 are zero.
 
-    portable: uint32[16, 256]. Otherwise uint8[p, 16, 2, 16]: parity byte j of byte t by its low or high nibble.
+    portable: uint32[16, 256]. Otherwise uint8[p, 16, 2, 16]: parity byte j of byte t by low or high nibble.
     """
     full = np.zeros((kernels.WORD, 256), np.uint32)
     full[: inner.m] = inner.parity_tables
@@ -239,7 +240,7 @@ def run_correct(
 
 
 def gives_known_parity(compiled: Callable[..., Any], tier: str) -> bool:
-    """Whether a parity kernel agrees with the codes' check columns, for single bits and for all bytes alike."""
+    """Whether a parity kernel agrees with the codes' tables, for every single bit and for mixed bytes."""
     for inner in InnerCode.known():
         m, p = inner.m, inner.p
         data = np.zeros((2, 8 * m * m + 3), np.uint8)
@@ -260,7 +261,7 @@ def gives_known_parity(compiled: Callable[..., Any], tier: str) -> bool:
 
 
 def corrects_known_flips(compiled: Callable[..., Any]) -> bool:
-    """Whether the zero word with any t flips comes out as the zero word, and t + 1 neighbours do not pass for fewer."""
+    """Whether the zero word comes out again after t flips, for sets of flips that touch every bit."""
     for inner in InnerCode.known():
         m, p, t = inner.m, inner.p, inner.t
         flipped = [np.arange(start, start + t) * 41 % inner.n for start in range(inner.n)]

@@ -21,7 +21,6 @@ from numpy.typing import NDArray
 
 from oakum.kernels.compiling import kernel
 from oakum.kernels.simd import (
-    I8,
     I32,
     I64,
     Builder,
@@ -34,7 +33,6 @@ from oakum.kernels.simd import (
     intrinsic,
     load,
     nothing,
-    plus,
     shuffle,
     shuffle_lanes,
     signature,
@@ -220,8 +218,8 @@ def self_test(name: str) -> Callable[[Callable[..., Any]], bool]:
 
 
 PARITY_SIGNATURE = "void(intp, intp, intp, intp, int64[::1], intp, intp, intp, intp, intp, intp, intp)"
-"""Data, distance of its rows, their length, cell size, stagger of each row, out, distance of its rows and of the
-parities of cells in a row, m, p, the tier's tables, scratch memory."""
+"""Data, distance of its rows, their length, cell size, stagger of each row, out, distance of its rows,
+distance of the cells' parities in a row, m, p, the tier's tables, scratch memory."""
 
 
 @kernel(PARITY_SIGNATURE, self_test=self_test("shuffle"), purpose="the inner code")
@@ -281,12 +279,12 @@ def parity_portable(
 def leader(syndrome: int, starts: NDArray[Any], known: NDArray[Any], places: NDArray[Any]) -> int:
     """The places of the one or two flips that give `syndrome`, packed; 0 if there are none such.
 
-    Entries are sorted by the low bits of their syndromes; those with low bits b are starts[b] .. starts[b+1]-1.
+    Entries are sorted by the low bits of their syndromes: low bits b have starts[b] .. starts[b + 1] - 1.
     """
     low_bits = syndrome & (len(starts) - 2)
     for entry in range(starts[low_bits], starts[low_bits + 1]):
         if known[entry] == syndrome:
-            return places[entry]
+            return int(places[entry])
     return 0
 
 
@@ -299,17 +297,17 @@ def flips(
     known: NDArray[Any],
     places: NDArray[Any],
 ) -> int:
-    """The places of the at most t flips that give `syndrome`: bit number + 1 in each of 3 bytes; 0 if none do.
+    """The places of the at most t flips that give `syndrome`, bit number + 1 in a byte each; 0 if none do.
 
-    Three flips are found by guessing one of them. At most one set of t flips fits (d > 2t), so the first is it.
+    Three flips are found by guessing one. At most one set of t flips fits (d > 2t), so the first is it.
     """
     found = leader(syndrome, starts, known, places)
     if found or t < 3:
-        return found
+        return int(found)
     for bit in range(len(columns)):
         found = leader(syndrome ^ columns[bit], starts, known, places)
         if found:
-            return found << 8 | (bit + 1)
+            return int(found << 8 | (bit + 1))
     return 0
 
 

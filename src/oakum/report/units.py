@@ -1,5 +1,7 @@
 """Numbers as people read them."""
 
+RATE_FROM = 64_000_000
+
 _PREFIXES = ("", "k", "M", "G", "T", "P", "E")
 
 
@@ -53,3 +55,9 @@ def duration(seconds: float) -> str:
 def speed(nbytes: float, seconds: float) -> str:
     """`812 MB/s`; empty where there is nothing to divide."""
     return f"{size(nbytes / seconds)}/s" if nbytes > 0 and seconds > 0 else ""
+
+
+def took(nbytes: float, seconds: float) -> str:
+    """`It took 12 s, 812 MB/s.` Small work has no rate: most of its time is not spent on bytes."""
+    rate = f", {speed(nbytes, seconds)}" if nbytes >= RATE_FROM and seconds > 0 else ""
+    return f"It took {duration(seconds)}{rate}."

@@ -64,7 +64,6 @@ class CodeParameters:
     d: int
     matrix_digest: int
 
-
     @staticmethod
     def of(code: ConcatenatedCode) -> CodeParameters:
         """The parameters of a code."""
@@ -149,7 +148,9 @@ class Bootstrap:
         """
         plain = replace(self, stretch=0, identity=bytes(16), set_identity=bytes(16)).pack()
         identity = hashlib.sha256(b"oakum section\0" + plain[: _FIELDS.size - 32] + table).digest()[:16]
-        return replace(self, identity=identity, set_identity=identity if self.window == 0 else self.set_identity)
+        return replace(
+            self, identity=identity, set_identity=identity if self.window == 0 else self.set_identity
+        )
 
 
 def unpack(record: bytes) -> Bootstrap | None:
@@ -177,8 +178,10 @@ def unpack(record: bytes) -> Bootstrap | None:
     except UnicodeDecodeError:
         raise FormatError("the sidecar's bootstrap record names its code in no readable way") from None
     code = CodeParameters(text, n, k, poly, first_root, spacing, _FAMILIES[family], m, p, d, digest)
-    return Bootstrap(code, stretches, window, start, length, depth, set_depth, stream_length, section_offset,
-                     table_length, body_digest, entries, flags, parent, set_identity, identity, stretch, version)  # fmt: skip
+    return Bootstrap(
+        code, stretches, window, start, length, depth, set_depth, stream_length, section_offset, table_length,
+        body_digest, entries, flags, parent, set_identity, identity, stretch, version,
+    )  # fmt: skip
 
 
 def encode(record: bytes) -> bytes:

@@ -18,7 +18,17 @@ from numpy.typing import NDArray
 from oakum.errors import FormatError
 from oakum.geometry import Geometry
 from oakum.sidecar.bootstrap import CODED_BYTES, HEAD_BYTES, MARKER, MARKER_ERRORS, Bootstrap, decode, encode
-from oakum.sidecar.frames import FRAME_ROWS, PAYLOAD_ROWS, Content, Rows, check_rows, correct, payload, read_plain, seal
+from oakum.sidecar.frames import (
+    FRAME_ROWS,
+    PAYLOAD_ROWS,
+    Content,
+    Rows,
+    check_rows,
+    correct,
+    payload,
+    read_plain,
+    seal,
+)
 from oakum.sidecar.layout import DIGEST_BYTES, FRAME_CONTENT, TEXT_BYTES, Frame, Layout, Track
 from oakum.sidecar.table import Piece, unpack_table
 from oakum.sidecar.text import page
@@ -129,7 +139,9 @@ class Section:
             content = correct(frame, rows, erased, self.bootstrap.identity)
         return content
 
-    def digests(self, track: Track, first: int, count: int) -> tuple[NDArray[np.uint64], NDArray[np.bool_] | None]:
+    def digests(
+        self, track: Track, first: int, count: int
+    ) -> tuple[NDArray[np.uint64], NDArray[np.bool_] | None]:
         """`count` digests of a track from number `first`, and which of them are known (None: all)."""
         values = np.empty(count, "<u8")
         known: NDArray[np.bool_] | None = None
@@ -157,11 +169,14 @@ class Section:
         frames = [self.frame(Track.TABLE, i) for i in range(self.layout.frame_count(Track.TABLE))]
         if any(f.known is not None and not f.known.all() for f in frames):
             raise FormatError(
-                "the sidecar's list of members is damaged beyond correction; without it nothing can be checked"
+                "the sidecar's list of members is damaged beyond correction; "
+                "without it nothing can be checked"
             )
         data = b"".join(f.data for f in frames)
         if self.bootstrap.identified(data).identity != self.bootstrap.identity:
-            raise FormatError("the sidecar's records do not belong together; it may have been pieced together")
+            raise FormatError(
+                "the sidecar's records do not belong together; it may have been pieced together"
+            )
         return data
 
 
@@ -320,4 +335,13 @@ def _examine_frame(section: Section, frame: Frame, expected: int | None, wear: W
     wear.add(rows, right, [])
 
 
-__all__ = ["CODED_BYTES", "ByteSource", "Fault", "Head", "Section", "Wear", "examine_records", "find_sections"]
+__all__ = [
+    "CODED_BYTES",
+    "ByteSource",
+    "Fault",
+    "Head",
+    "Section",
+    "Wear",
+    "examine_records",
+    "find_sections",
+]

@@ -96,5 +96,12 @@ def _unpack_entry(table: bytes, place: int) -> tuple[Piece, int]:
 def check_path(path: bytes) -> None:
     """Refuse, with FormatError, a path that could leave the folder it belongs to or cannot be a name."""
     parts = path.split(b"/")
-    if not path or len(path) > MAX_PATH or b"\0" in path or any(p in (b"", b".", b"..") or len(p) > 255 for p in parts):
-        raise FormatError("the sidecar names a member in a way that no file can be named; nothing was written")
+    if (
+        not path
+        or len(path) > MAX_PATH
+        or b"\0" in path
+        or any(p in (b"", b".", b"..") or len(p) > 255 for p in parts)
+    ):
+        raise FormatError(
+            "the sidecar names a member in a way that no file can be named; nothing was written"
+        )

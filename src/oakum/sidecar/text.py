@@ -60,7 +60,11 @@ _PLAIN = "There is no inner code."
 def page(bootstrap: Bootstrap, layout: Layout) -> bytes:
     """The 4,096 bytes at the top of a section: text, then blanks, lines ended by a newline."""
     c, g = bootstrap.code, layout.geometry
-    inner = _INNER.format(m=c.m, twice=2 * c.m, p=c.p, bits=8 * (c.m + c.p), data=8 * c.m, d=c.d) if c.p else _PLAIN
+    inner = (
+        _INNER.format(m=c.m, twice=2 * c.m, p=c.p, bits=8 * (c.m + c.p), data=8 * c.m, d=c.d)
+        if c.p
+        else _PLAIN
+    )
     text = _PAGE.format(
         version=bootstrap.version, start=bootstrap.start, end=bootstrap.start + bootstrap.length,
         k=c.k, r=c.n - c.k, n=c.n, depth=bootstrap.depth, poly=c.field_poly, rlast=c.n - c.k - 1,

@@ -14,7 +14,6 @@ from oakum.sidecar.frames import check_rows, payload, seal
 from oakum.sidecar.layout import DIGEST_BYTES, FRAME_CONTENT, FRAME_HEADER, PAYLOAD_ROWS, Frame, Layout, Track
 from oakum.sidecar.text import page
 
-
 Data = bytes | bytearray | memoryview
 
 
@@ -58,14 +57,16 @@ class SectionWriter:
             number, inside = divmod(first, per_frame)
             size = min(count, per_frame - inside)
             frame = self._layout.frame(track, number)
-            extents = self._layout.payload_extents(frame, FRAME_HEADER + inside * DIGEST_BYTES, size * DIGEST_BYTES)
+            extents = self._layout.payload_extents(
+                frame, FRAME_HEADER + inside * DIGEST_BYTES, size * DIGEST_BYTES
+            )
             data += b"".join(self._sink.read(place, length) for place, _, length in extents)
             first, count = first + size, count - size
         return np.frombuffer(data, "<u8")
 
     def write_body(self, offset: int, data: NDArray[np.uint8]) -> None:
         """Put contiguous bytes at `offset` of the body."""
-        view = memoryview(data)
+        view = data.data
         for place, done, size in self._layout.body_extents(offset, len(view)):
             self._sink.write(place, view[done : done + size])
 
@@ -79,7 +80,11 @@ class SectionWriter:
         self._append(Track.TABLE, table)
         for track in Track:
             self._lay(track)
-        seals = [self._seal(frame, bootstrap.identity) for frame in self._layout.frames() if frame.track != Track.SEALS]
+        seals = [
+            self._seal(frame, bootstrap.identity)
+            for frame in self._layout.frames()
+            if frame.track != Track.SEALS
+        ]
         self._append(Track.SEALS, np.array(seals, "<u8").tobytes())
         self._lay(Track.SEALS)
         for number in range(self._layout.frame_count(Track.SEALS)):
@@ -123,5 +128,9 @@ class SectionWriter:
             self._sink.write(start, head)
             padding = layout.prefix - len(head) - layout.slice_bytes
             self._sink.write(start + len(head) + layout.slice_bytes, bytes(padding))
-        end = layout.stretch_start(layout.stretches - 1) + layout.prefix + layout.piece_length(layout.stretches - 1)
+        end = (
+            layout.stretch_start(layout.stretches - 1)
+            + layout.prefix
+            + layout.piece_length(layout.stretches - 1)
+        )
         self._sink.write(end, bytes(layout.size - end))

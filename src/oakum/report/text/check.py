@@ -5,7 +5,7 @@ from collections.abc import Iterable, Sequence
 
 from oakum.report.terminal import safe
 from oakum.report.text.layout import Section, and_more, joined, pairs, paragraph, table
-from oakum.report.units import counted, duration, exact_size, percent, size, speed
+from oakum.report.units import counted, exact_size, percent, size, took
 from oakum.results import BlockReport, CheckResult, MemberReport, MemberState, Outcome, SidecarReport
 
 WEAKEST_SHOWN = 10
@@ -17,12 +17,10 @@ def check_text(result: CheckResult) -> str:
     """What `verify` or `repair` found and did, for a person to read."""
     sections: list[Section] = [paragraph(_verdict(result)), paragraph(_facts(result))]
     sections += [paragraph(safe(note)) for note in result.notes]
-    sections.append(_advice(result))
+    sections += [_written(result), _advice(result)]
     if result.outcome is not Outcome.INTACT:
         sections += [_counts(result), _margins(result), _weakest(result.blocks)]
         sections += [_members(result.members), _lost(result.members)]
-    if result.command == "repair":
-        sections.append(_written(result))
     return joined(sections)
 
 
@@ -68,9 +66,7 @@ def _facts(result: CheckResult) -> str:
     if totals.bytes_erased:
         sentences.append(f"{exact_size(totals.bytes_erased)} could not be read, were cut off or were absent.")
     sentences.append(_sidecar_sentence(result.sidecar))
-    rate = speed(totals.bits_read / 8, result.seconds)
-    if rate:
-        sentences.append(f"Read at {rate} in {duration(result.seconds)}.")
+    sentences.append(took(totals.bits_read / 8, result.seconds))
     return " ".join(sentences)
 
 
@@ -94,15 +90,19 @@ def _advice(result: CheckResult) -> Section:
     edited = [member for member in result.members if member.edited]
     lines: list[str] = []
     if edited:
+        number = counted(len(edited), "altered member is", "altered members are")
         lines += paragraph(
-            f"{counted(len(edited), 'member is', 'members are')} newer than recorded and differ: that looks "
-            "edited, not decayed. If the new content is wanted, protect it anew instead of repairing it."
+            f"{number} newer than recorded, which looks edited rather than decayed. If the new content is "
+            "wanted, protect it anew instead of repairing it."
         )
     if result.command == "verify" and result.outcome is Outcome.CORRECTABLE:
         lines += ["To write the corrected files beside the damaged ones:", command]
     if result.command == "verify" and result.outcome is Outcome.UNCORRECTABLE:
-        lines += paragraph("Look for another copy of what is lost. To write what can be put right:")
-        lines.append(command)
+        lines += paragraph(
+            "Look for another copy of what is lost. To get what can be had, name whole members with --member, "
+            "or take the others as far as they go:"
+        )
+        lines.append(f"{command} --accept-loss")
     return lines
 
 
@@ -128,7 +128,7 @@ def _counts(result: CheckResult) -> Section:
 def _margins(result: CheckResult) -> Section:
     """The margins of all blocks as a cumulative distribution; steps where nothing changes are left out."""
     totals = result.totals
-    if not result.blocks or not totals.blocks:
+    if not result.blocks or totals.blocks < 2:
         return []
     margins = [block.margin for block in result.blocks if block.margin is not None]
     beyond = sum(block.margin is None for block in result.blocks)
@@ -177,8 +177,8 @@ def _members(members: Sequence[MemberReport]) -> Section:
         (
             safe(member.path),
             size(member.size) if member.kind == "file" else safe(member.kind),
-            _member_state(member),
-            "unknown" if member.bits_flipped is None else f"{member.bits_flipped:,}",
+            str(member.state),
+            _member_flips(member),
             safe(member.detail),
         )
         for member in damaged[:MEMBERS_SHOWN]
@@ -188,8 +188,10 @@ def _members(members: Sequence[MemberReport]) -> Section:
     return lines + and_more(len(damaged) - len(rows))
 
 
-def _member_state(member: MemberReport) -> str:
-    return f"{member.state}, edited" if member.edited else str(member.state)
+def _member_flips(member: MemberReport) -> str:
+    if member.state is MemberState.ABSENT:  # nothing was read in which a bit could be flipped
+        return "-"
+    return "unknown" if member.bits_flipped is None else f"{member.bits_flipped:,}"
 
 
 def _lost(members: Iterable[MemberReport]) -> Section:
@@ -205,10 +207,13 @@ def _lost(members: Iterable[MemberReport]) -> Section:
 
 
 def _written(result: CheckResult) -> Section:
-    files = [member.mended for member in result.members if member.mended is not None]
-    if result.sidecar.mended is not None:
-        files.append(result.sidecar.mended)
-    if not files:
-        return []
+    """Where the corrected files are; whole members, which an output folder gets too, are only counted."""
+    mended = [member for member in result.members if member.mended is not None]
+    corrected = [member.mended for member in mended if member.state is not MemberState.INTACT]
+    files = [*corrected, result.sidecar.mended] if result.sidecar.mended else corrected
     shown = [f"  {safe(str(path))}" for path in files[:MEMBERS_SHOWN]]
-    return [f"Written, {counted(len(files), 'file')}", *shown, *and_more(len(files) - len(shown))]
+    lines = ["Written", *shown, *and_more(len(files) - len(shown))]
+    if len(mended) > len(corrected):
+        others = counted(len(mended) - len(corrected), "whole member")
+        lines.append(f"  and {others} copied with them" if files else f"  {others} copied")
+    return lines if len(lines) > 1 else []

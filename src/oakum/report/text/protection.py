@@ -3,7 +3,7 @@
 from oakum.report.terminal import safe
 from oakum.report.text.layout import joined, paragraph
 from oakum.report.text.strength import strength
-from oakum.report.units import counted, duration, exact_size, percent, speed
+from oakum.report.units import counted, exact_size, percent, took
 from oakum.results import ProtectResult
 
 
@@ -14,13 +14,11 @@ def protect_text(result: ProtectResult) -> str:
     if share is not None:
         cost += f", {percent(share, 1)} of what it protects"
     times = {1: "once", 2: "twice"}.get(result.reads, f"{result.reads} times")
-    rate = speed(result.stream_bytes, result.seconds)
-    pace = f" at {rate}" if rate else ""
     written = (
         f"{safe(str(result.sidecar))} now protects {counted(result.members, 'member')}, "
         f"{exact_size(result.stream_bytes)}. It takes {cost}."
     )
-    done = f"The source was read {times}; all of it took {duration(result.seconds)}{pace}."
+    done = f"The source was read {times}. {took(result.stream_bytes, result.seconds)}"
     strength_sentences = strength(result.code, result.guaranteed_burst, result.windows)
     sections = [paragraph(written), paragraph(strength_sentences)]
     sections += [paragraph(safe(note)) for note in result.notes]

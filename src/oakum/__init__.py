@@ -1,0 +1,40 @@
+"""Oakum keeps archived files whole: parity beside them finds flipped bits years later and puts them right.
+
+The functions here are the commands without their looks: they return records (`oakum.results`), report
+progress to an object that the caller gives, print nothing, and raise `OakumError` with one plain sentence.
+They are imported when first used, so that importing the package costs nothing.
+"""
+
+from __future__ import annotations
+
+from importlib import import_module
+from typing import TYPE_CHECKING, Any
+
+from oakum.errors import CannotCheck, FormatError, OakumError, UsageError
+
+if TYPE_CHECKING:
+    from oakum.jobs.describe import describe
+    from oakum.jobs.protect import protect, protect_pipe
+    from oakum.jobs.repair import repair
+    from oakum.jobs.verify import verify
+
+__version__ = "0.1.0"
+
+_LAZY = {
+    "describe": "oakum.jobs.describe",
+    "protect": "oakum.jobs.protect",
+    "protect_pipe": "oakum.jobs.protect",
+    "repair": "oakum.jobs.repair",
+    "verify": "oakum.jobs.verify",
+}
+
+__all__ = [
+    "CannotCheck", "FormatError", "OakumError", "UsageError", "__version__", "describe", "protect",
+    "protect_pipe", "repair", "verify",
+]  # fmt: skip
+
+
+def __getattr__(name: str) -> Any:
+    if name in _LAZY:
+        return getattr(import_module(_LAZY[name]), name)
+    raise AttributeError(f"module 'oakum' has no attribute {name!r}")

@@ -1,0 +1,62 @@
+"""Writing a damaged sidecar anew from members that are right: the same bytes as when it was first written."""
+
+from __future__ import annotations
+
+from pathlib import Path
+
+from oakum.encoding import Kernels, Unreadable, WindowEncoder, plan_reading
+from oakum.files import NewFile
+from oakum.jobs.checking import ProtectedSet
+from oakum.jobs.protect import Placed, pack_table
+from oakum.jobs.verify import SetCheck
+from oakum.members import MemberHasher, MemberStream, Opener, Span
+from oakum.sidecar.reading import Section
+from oakum.sidecar.table import Kind, Piece
+from oakum.sidecar.writing import SectionWriter
+
+
+def rebuild_sidecar(opened: ProtectedSet, check: SetCheck, members: Opener, path: Path, memory: int) -> bool:
+    """Write the sidecar of `opened` to `path`, reading members through `members`.
+
+    True when every section came out with the identity it had; otherwise nothing is written. A sidecar of
+    which whole sections are lost is not written anew: protect makes a new one.
+    """
+    sections = opened.sections
+    if not sections[-1].bootstrap.last or len(sections) != sections[-1].bootstrap.window + 1:
+        return False
+    kernels = Kernels.of(check.code)
+    hasher = MemberHasher()
+    check.progress.phase("writing the sidecar anew", sum(s.geometry.length for s in sections))
+    with NewFile(path) as file:
+        for section, table in zip(sections, opened.tables, strict=True):
+            if not _write_section(section, table, check, members, file, kernels, hasher, memory):
+                return False
+        last = sections[-1]
+        file.commit(last.bootstrap.section_offset + last.layout.size)
+    return True
+
+
+def _write_section(
+    section: Section,
+    table: tuple[Piece, ...],
+    check: SetCheck,
+    members: Opener,
+    file: NewFile,
+    kernels: Kernels,
+    hasher: MemberHasher,
+    memory: int,
+) -> bool:
+    spans = [Span(p.path, p.offset, p.length) for p in table if p.kind is Kind.FILE]
+    writer = SectionWriter(section.bootstrap, section.layout, Placed(file, section.bootstrap.section_offset))
+    stream = MemberStream(members, spans)
+    try:
+        hasher.expect(spans)
+        encoder = WindowEncoder(
+            section.geometry, kernels, writer, stream, hasher, check.pools, check.progress.advance
+        )
+        encoder.run(plan_reading(section.geometry, memory))
+    except Unreadable:
+        return False
+    finally:
+        stream.close()
+    return writer.finish(pack_table(table, hasher.digests)).identity == section.bootstrap.identity

@@ -1,0 +1,320 @@
+"""repair: write the corrected files, beside the altered ones or to a folder of their own.
+
+Nothing gets its final name before everything is decoded and every member's SHA-256 agrees; what was there
+before stays as it was.
+"""
+
+from __future__ import annotations
+
+import hashlib
+import os
+import time
+from collections import OrderedDict
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
+from pathlib import Path
+
+from oakum.errors import CannotCheck, UsageError
+from oakum.files import NewFile, reason
+from oakum.jobs.checking import Finding, KnownMember, ProtectedSet, open_set
+from oakum.jobs.common import DEFAULT_MEMORY, find_sidecar
+from oakum.jobs.rebuild import rebuild_sidecar
+from oakum.jobs.tally import Tally
+from oakum.jobs.unreadable import read_unreadable
+from oakum.jobs.verify import SetCheck, result_of
+from oakum.members import Folder, open_folder
+from oakum.pools import Pools
+from oakum.progress import Progress, Silent
+from oakum.results import CheckResult, MemberState, Outcome
+from oakum.sidecar.table import Kind
+
+COPY_STEP = 4 << 20
+OPEN_AT_A_TIME = 64
+
+
+def repair(
+    target: Path,
+    *,
+    sidecar: Path | None = None,
+    root: Path | None = None,
+    output: Path | None = None,
+    members: Sequence[str] = (),
+    accept_loss: bool = False,
+    unreadable: Path | None = None,
+    memory: int = DEFAULT_MEMORY,
+    jobs: int | None = None,
+    progress: Progress = Silent(),
+) -> CheckResult:
+    """Correct a protected set and its sidecar.
+
+    Altered members are written beside themselves (`x.mended.tar`), absent ones to their own place; with
+    `output` every member (or those named by `members`) is written below that folder. When something
+    cannot be corrected nothing is written, unless `accept_loss`. Raises CannotCheck where nothing can be
+    done at all, UsageError for members that the sidecar does not have.
+    """
+    begin = time.monotonic()
+    opened = open_set(find_sidecar(target, sidecar), root, read_unreadable(unreadable))
+    try:
+        wanted = _chosen(opened, members)
+        with Pools(jobs) as pools, Mending(opened, output, accept_loss) as mending:
+            check = SetCheck(opened, pools, progress)
+            try:
+                check.scan(hashing=True)
+                tally = mending.run(check, wanted)
+            finally:
+                check.close()
+            result = mending.finish(result_of("repair", target, check, tally, 0.0), check, memory)
+        return replace(result, seconds=time.monotonic() - begin)
+    finally:
+        opened.close()
+
+
+def _chosen(opened: ProtectedSet, names: Sequence[str]) -> list[KnownMember]:
+    """The members named, folders standing for what is in them; all when none are named."""
+    if not names:
+        return list(opened.members.values())
+    chosen: dict[bytes, KnownMember] = {}
+    for name in names:
+        path = os.fsencode(name.rstrip("/"))
+        found = {p: m for p, m in opened.members.items() if p == path or p.startswith(path + b"/")}
+        if not found:
+            raise UsageError(f"the sidecar has no member {name}; oakum describe lists them")
+        chosen |= found
+    return list(chosen.values())
+
+
+@dataclass
+class Copy:
+    """A member that is being written: where to, and the file in the making."""
+
+    member: KnownMember
+    path: bytes
+    shown: Path
+    file: NewFile | None = None
+    right: bool = False
+
+
+class Mending:
+    """All files that a repair writes. As a context manager it leaves no temporary file behind."""
+
+    def __init__(self, opened: ProtectedSet, output: Path | None, accept_loss: bool) -> None:
+        self._opened = opened
+        self._accept_loss = accept_loss
+        files = [m for m in opened.members.values() if m.piece.kind is Kind.FILE]
+        one = len(opened.members) == 1 and len(files) == 1
+        self._as_file = output if output is not None and one and not output.is_dir() else None
+        self.output = output if self._as_file is None else None
+        base = output if self.output is not None else self._as_file.parent if self._as_file else opened.root
+        self._base = Path(os.path.abspath(base)) if base is not None else opened.root
+        self._base_fd = -1
+        self._copies: dict[bytes, Copy] = {}
+        self._awake: OrderedDict[bytes, Copy] = OrderedDict()
+
+    # -- decoding and writing -------------------------------------------------------------------------
+
+    def run(self, check: SetCheck, wanted: Sequence[KnownMember]) -> Tally:
+        """Copy what was received, correct it, and count."""
+        self._open_base()
+        for member in wanted:
+            if self.output is not None or self._as_file is not None or not member.right or member.fault:
+                self._begin(member)
+        check.progress.phase("writing", sum(c.member.size for c in self._copies.values()))
+        tally = Tally(self._opened)
+        for window in check.windows:
+            self._copy_received(check, window.section.bootstrap.start)
+            tally.add_window(window)
+            for finding in window.findings(check.decoders, keep=True):
+                tally.add(finding)
+                self._correct(finding)
+        return tally
+
+    def _open_base(self) -> None:
+        try:
+            self._base.mkdir(parents=True, exist_ok=True)
+            self._base_fd = os.open(self._base, os.O_RDONLY | os.O_DIRECTORY | os.O_CLOEXEC)
+        except OSError as error:
+            raise CannotCheck(
+                f"{self._base} cannot be used as the place to write to: {reason(error)}"
+            ) from None
+
+    def _begin(self, member: KnownMember) -> None:
+        path = member.piece.path
+        if self._as_file is not None:
+            path = os.fsencode(self._as_file.name)
+        elif self.output is None and not member.absent:
+            path = mended_name(path)
+        copy = Copy(member, path, self._base / os.fsdecode(path))
+        if member.piece.kind is Kind.FILE:
+            copy.file = NewFile(copy.shown, open_folder=lambda: self._parent_of(path))
+            copy.file.resize(member.size)
+            self._wake(copy)
+        self._copies[member.piece.path] = copy
+
+    def _parent_of(self, path: bytes) -> int:
+        return open_folder(self._base_fd, os.path.dirname(path), create=True)
+
+    def _wake(self, copy: Copy) -> NewFile:
+        """The copy's file, ready for use; the one that was not used for longest is put aside."""
+        assert copy.file is not None
+        self._awake[copy.path] = copy
+        self._awake.move_to_end(copy.path)
+        if len(self._awake) > OPEN_AT_A_TIME:
+            _, oldest = self._awake.popitem(last=False)
+            if oldest.file is not None:
+                oldest.file.park()
+        return copy.file
+
+    def _copy_received(self, check: SetCheck, start: int) -> None:
+        """Write the members' bytes as they were received in the window that begins at `start`."""
+        window = next(w for w in check.windows if w.section.bootstrap.start == start)
+        buffer = bytearray(COPY_STEP)
+        place = 0
+        for piece in window.pieces:
+            copy = self._copies.get(piece.path)
+            for done in range(0, piece.length, COPY_STEP) if copy is not None else ():
+                view = memoryview(buffer)[: min(COPY_STEP, piece.length - done)]
+                window.stream.read_into(place + done, view)
+                self._wake(copy).write(piece.offset + done, view)  # type: ignore[arg-type]
+                check.progress.advance(len(view))
+            place += piece.length
+
+    def _correct(self, finding: Finding) -> None:
+        """Put corrected bytes into the copies that they belong to."""
+        for start, data in finding.corrected:
+            for copy, inside, part in self._owners(start, len(data)):
+                self._wake(copy).write(inside, data[part].data)
+
+    def _owners(self, start: int, length: int) -> list[tuple[Copy, int, slice]]:
+        """Copies that hold bytes of a range of the stream: (copy, offset in it, which of the bytes)."""
+        owners = []
+        for member in self._opened.members_at(start, length):
+            copy = self._copies.get(member.piece.path)
+            a = max(start, member.stream_start)
+            b = min(start + length, member.stream_start + member.size)
+            if copy is not None and a < b:
+                owners.append((copy, a - member.stream_start, slice(a - start, b - start)))
+        return owners
+
+    # -- judging and naming -----------------------------------------------------------------------------
+
+    def finish(self, result: CheckResult, check: SetCheck, memory: int) -> CheckResult:
+        """Ask the SHA-256 of every copy, then name them all or none, then mend the sidecar."""
+        check.progress.phase("checking what was written", sum(c.member.size for c in self._copies.values()))
+        for copy in self._copies.values():
+            copy.right = self._is_right(copy, check.progress)
+        wrong = [c for c in self._copies.values() if not c.right]
+        reports = {m.path: m for m in result.members}
+        for copy in wrong:
+            report = reports[os.fsdecode(copy.member.piece.path)]
+            reports[report.path] = replace(report, state=MemberState.UNCORRECTABLE, bits_flipped=None)
+        if wrong and not self._accept_loss:
+            notes = (
+                "nothing was written, since not everything can be corrected; "
+                "--accept-loss writes what can be had",
+            )
+            return replace(
+                result,
+                outcome=Outcome.UNCORRECTABLE,
+                members=tuple(reports.values()),
+                notes=result.notes + notes,
+            )
+        for copy in self._copies.values():
+            self._name(copy)
+            report = reports[os.fsdecode(copy.member.piece.path)]
+            reports[report.path] = replace(report, mended=copy.shown)
+        self._restore_folders()
+        result = replace(result, members=tuple(reports.values()))
+        if wrong:
+            notes = ("what was written holds bytes as they were received where they could not be corrected",)
+            return replace(result, outcome=Outcome.UNCORRECTABLE, notes=result.notes + notes)
+        return self._mend_sidecar(result, check, memory)
+
+    def _is_right(self, copy: Copy, progress: Progress) -> bool:
+        if copy.file is None:
+            return True
+        if copy.member.sha256 is None:
+            return False
+        digest = hashlib.sha256()
+        for start in range(0, copy.member.size, COPY_STEP):
+            data = self._wake(copy).read(start, min(COPY_STEP, copy.member.size - start))
+            digest.update(data)
+            progress.advance(len(data))
+        return digest.digest() == copy.member.sha256
+
+    def _name(self, copy: Copy) -> None:
+        piece = copy.member.piece
+        if copy.file is not None:
+            modified = piece.modified_ns if piece.modified_ns > 0 else None
+            self._wake(copy).commit(copy.member.size, mode=piece.mode & 0o777, modified_ns=modified)
+            self._awake.pop(copy.path, None)
+            return
+        parent = self._parent_of(copy.path)
+        try:
+            name = os.path.basename(copy.path)
+            if piece.kind is Kind.LINK:
+                os.symlink(piece.target, name, dir_fd=parent)
+            else:
+                os.mkdir(name, dir_fd=parent)
+        except FileExistsError:
+            pass
+        except OSError as error:
+            raise CannotCheck(f"{copy.shown} could not be made: {reason(error)}") from None
+        finally:
+            os.close(parent)
+
+    def _restore_folders(self) -> None:
+        """Permission bits and times of folders, the innermost first, when everything is in them."""
+        folders = [c for c in self._copies.values() if c.member.piece.kind is Kind.FOLDER]
+        for copy in sorted(folders, key=lambda c: -c.path.count(b"/")):
+            fd = open_folder(self._base_fd, copy.path)
+            try:
+                os.fchmod(fd, copy.member.piece.mode & 0o777)
+                os.utime(fd, ns=(copy.member.piece.modified_ns,) * 2)
+            finally:
+                os.close(fd)
+
+    def _mend_sidecar(self, result: CheckResult, check: SetCheck, memory: int) -> CheckResult:
+        """Write the sidecar anew when it is damaged and every member is at hand as it was."""
+        state = result.sidecar.state
+        mended = {path: copy.shown for path, copy in self._copies.items() if copy.file is not None}
+        whole = all(m.right or m.piece.path in self._copies for m in self._opened.members.values())
+        if state is Outcome.INTACT or not whole:
+            return result
+        name = os.fsencode(self._opened.path.name)
+        if self.output is None:
+            name = mended_name(name)
+        path = (self._base if self.output is not None else self._opened.path.parent) / os.fsdecode(name)
+        reader = MendedFolder(self._opened.folder, mended)
+        if not rebuild_sidecar(self._opened, check, reader, path, memory):
+            return result
+        return replace(result, sidecar=replace(result.sidecar, mended=path))
+
+    def __enter__(self) -> Mending:
+        return self
+
+    def __exit__(self, *_: object) -> None:
+        for copy in self._copies.values():
+            if copy.file is not None:
+                copy.file.discard()
+        if self._base_fd >= 0:
+            os.close(self._base_fd)
+
+
+class MendedFolder:
+    """Opens members where they now are: the mended ones where they were written, others in their place."""
+
+    def __init__(self, folder: Folder, mended: dict[bytes, Path]) -> None:
+        self._folder = folder
+        self._mended = mended
+
+    def open(self, path: bytes) -> int:
+        """A descriptor for reading the member at `path`. Raises OSError."""
+        if path in self._mended:
+            return os.open(self._mended[path], os.O_RDONLY | os.O_CLOEXEC | os.O_NOFOLLOW)
+        return self._folder.open(path)
+
+
+def mended_name(path: bytes) -> bytes:
+    """The name for a corrected copy beside the altered file: `x.tar` gives `x.mended.tar`."""
+    stem, suffix = os.path.splitext(path)
+    return stem + b".mended" + suffix
