@@ -221,7 +221,7 @@ class WindowEncoder:
         """Hold a piece of a strip against the digests of the first read."""
         g = self._g
         number = g.cell_number(strip, first // CELL)
-        digests = cell_digests(row)[: g.data_cells - number]
+        digests = cell_digests(row)[: max(0, g.data_cells - number)]  # What follows is virtual.
         if g.digested and not np.array_equal(digests, self._writer.laid(Track.DATA, number, len(digests))):
             raise Changed(strip * g.depth + first)
 

@@ -9,6 +9,7 @@ from __future__ import annotations
 import errno
 import os
 import secrets
+import stat
 from collections.abc import Callable
 from pathlib import Path
 
@@ -77,11 +78,15 @@ class FileBytes:
     def __init__(self, path: Path) -> None:
         """Open `path` for reading. Raises CannotCheck with a plain sentence when that is not possible."""
         try:
-            self._fd = os.open(path, os.O_RDONLY | os.O_CLOEXEC)
+            self._fd = os.open(path, os.O_RDONLY | os.O_CLOEXEC | os.O_NONBLOCK)
         except OSError as error:
             raise CannotCheck(f"{path} cannot be opened: {reason(error)}") from None
+        found = os.fstat(self._fd)
+        if not stat.S_ISREG(found.st_mode):
+            os.close(self._fd)
+            raise CannotCheck(f"{path} is not a file; name the sidecar itself")
         self.path = path
-        self.size = os.fstat(self._fd).st_size
+        self.size = found.st_size
 
     def read(self, offset: int, length: int) -> tuple[NDArray[np.uint8], list[Fault]]:
         """uint8[length] from `offset` (which may be negative or past the end), and what is missing."""
@@ -112,14 +117,21 @@ class NewFile:
     """
 
     def __init__(
-        self, path: Path, *, overwrite: bool = False, open_folder: Callable[[], int] | None = None
+        self,
+        path: Path,
+        *,
+        overwrite: bool = False,
+        open_folder: Callable[[], int] | None = None,
+        advice: str = "move it away, choose another name or give --overwrite",
     ) -> None:
         """Begin a file that will be `path`. Raises UsageError when it exists and must not be replaced.
 
         `open_folder` gives a descriptor of the folder that the file goes to; by default it is opened by name.
+        `advice` says what to do about a file that exists.
         """
         self.path = path
         self._overwrite = overwrite
+        self._advice = advice
         self._open_folder = open_folder or self._open_parent
         name = os.fsencode(path.name)
         self._name = name
@@ -150,9 +162,7 @@ class NewFile:
         return True
 
     def _taken(self) -> UsageError:
-        return UsageError(
-            f"{self.path} exists already; move it away, choose another name or give --overwrite"
-        )
+        return UsageError(f"{self.path} exists already; {self._advice}")
 
     @property
     def fd(self) -> int:

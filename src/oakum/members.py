@@ -125,18 +125,21 @@ class Folder:
         os.close(self._fd)
 
 
-def open_folder(root: int, path: bytes, *, create: bool = False) -> int:
+def open_folder(root: int, path: bytes, *, made: list[bytes] | None = None) -> int:
     """A descriptor of the folder at `path` below the open folder `root`, part by part, links not followed.
 
-    With `create`, parts that are missing are made. Raises OSError.
+    With `made`, parts that are missing are made, and their paths appended to it. Raises OSError.
     """
     flags = os.O_RDONLY | os.O_DIRECTORY | os.O_CLOEXEC | os.O_NOFOLLOW
     fd = os.dup(root)
     try:
+        so_far = b""
         for part in filter(None, path.split(b"/")):
-            if create:
+            so_far = os.path.join(so_far, part)
+            if made is not None:
                 with suppress(FileExistsError):
                     os.mkdir(part, dir_fd=fd)
+                    made.append(so_far)
             below = os.open(part, flags, dir_fd=fd)
             os.close(fd)
             fd = below
@@ -179,7 +182,7 @@ class MemberStream:
         self._folder = folder
         self._spans = [s for s in spans if s.length]
         self._starts = list(accumulate((s.length for s in self._spans), initial=0))
-        self._known_bad = sorted(known_bad)
+        self._known_bad = _joined(known_bad)
         self._open: OrderedDict[bytes, int | None] = OrderedDict()
         self._lock = threading.RLock()
 
@@ -192,6 +195,23 @@ class MemberStream:
         """See `Stream`. Bytes past the end of the stream are zeros and no fault: they are virtual."""
         faults: list[Fault] = []
         done = 0
+        for start, stop in self._known_bad:
+            a, b = max(start - offset, 0), min(stop - offset, len(buffer))
+            if a < b:
+                faults += self._try(offset, buffer, done, a)
+                faults.append((a, b))
+                buffer[a:b] = bytes(b - a)
+                done = b
+        return faults + self._try(offset, buffer, done, len(buffer))
+
+    def _try(self, offset: int, buffer: memoryview, start: int, stop: int) -> list[Fault]:
+        """Read the bytes start..stop-1 of `buffer`, none of which is known to be bad."""
+        faults = self._read_spans(offset + start, buffer[start:stop])
+        return [(start + a, start + b) for a, b in faults]
+
+    def _read_spans(self, offset: int, buffer: memoryview) -> list[Fault]:
+        faults: list[Fault] = []
+        done = 0
         number = bisect_right(self._starts, offset) - 1
         while done < len(buffer) and number < len(self._spans):
             span = self._spans[number]
@@ -202,16 +222,6 @@ class MemberStream:
             done += size
             number += 1
         buffer[done:] = bytes(len(buffer) - done)
-        return faults + self._blank(offset, buffer[:done]) if self._known_bad else faults
-
-    def _blank(self, offset: int, buffer: memoryview) -> list[Fault]:
-        """Take out of `buffer` what is known to be bad."""
-        faults = []
-        for start, stop in self._known_bad:
-            a, b = max(start - offset, 0), min(stop - offset, len(buffer))
-            if a < b:
-                buffer[a:b] = bytes(b - a)
-                faults.append((a, b))
         return faults
 
     def _read_member(self, path: bytes, offset: int, buffer: memoryview) -> list[Fault]:
@@ -259,6 +269,17 @@ class MemberStream:
             if fd is not None:
                 os.close(fd)
         self._open.clear()
+
+
+def _joined(ranges: Sequence[tuple[int, int]]) -> list[tuple[int, int]]:
+    """Ranges in order, those that overlap or touch made one."""
+    joined: list[tuple[int, int]] = []
+    for start, stop in sorted(ranges):
+        if joined and start <= joined[-1][1]:
+            joined[-1] = (joined[-1][0], max(stop, joined[-1][1]))
+        else:
+            joined.append((start, stop))
+    return joined
 
 
 class MemberHasher:

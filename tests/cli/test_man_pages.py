@@ -10,6 +10,8 @@ from pathlib import Path
 import pytest
 from faked_jobs import Oakum
 
+from oakum import __version__
+
 ROOT = Path(__file__).parents[2]
 PAGES = sorted((ROOT / "man").glob("*.[15]"))
 COMMANDS = ("protect", "verify", "repair", "describe")
@@ -55,7 +57,6 @@ def test_the_pages_are_installed() -> None:
 
 
 def test_pages_and_package_agree_on_the_version() -> None:
-    version = tomllib.loads((ROOT / "pyproject.toml").read_text())["project"]["version"]
     for page in PAGES:
         if page.suffix == ".1":
-            assert f'"oakum {version}"' in page.read_text()
+            assert f'"oakum {__version__}"' in page.read_text()

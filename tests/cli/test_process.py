@@ -5,6 +5,7 @@ import signal
 import subprocess
 import sys
 import textwrap
+from importlib import metadata
 from pathlib import Path
 
 import pytest
@@ -35,7 +36,7 @@ def test_help_and_version_load_nothing_heavy() -> None:
 
 def test_version() -> None:
     done = subprocess.run([*OAKUM, "--version"], capture_output=True, text=True, check=True)
-    assert done.stdout.startswith("oakum ")
+    assert done.stdout == f"oakum {metadata.version('oakum')}\n"
 
 
 @pytest.mark.skipif(not Path("/dev/full").exists(), reason="needs /dev/full")
@@ -43,7 +44,7 @@ def test_a_full_disk_under_the_report_is_said() -> None:
     with Path("/dev/full").open("w") as full:
         done = subprocess.run([*OAKUM, "--help"], stdout=full, stderr=subprocess.PIPE, text=True)
     assert done.returncode == 30
-    assert done.stderr == "oakum: no space left on device\n"
+    assert done.stderr == "oakum: reading or writing failed: no space left on device\n"
 
 
 def test_a_reader_that_has_gone_ends_it_quietly() -> None:

@@ -20,7 +20,7 @@ class ReferenceDecoder:
         self.checks = outer.check_matrix.tolist()
 
     def decode(self, syndromes: list[int], erased: list[int]) -> dict[int, int] | None:
-        """Place to magnitude, zero magnitudes left out; None if no codeword has 2 * errors + erasures <= r."""
+        """Place to magnitude, without zeros; None if no codeword has 2 * errors + erasures <= r."""
         r = self.outer.r
         if len(erased) > r:
             return None

@@ -6,12 +6,14 @@ import os
 import subprocess
 import sys
 from pathlib import Path
+from types import SimpleNamespace
 
 import pytest
+from llvmlite import binding, ir
 from tier_runs import ON_X86, gfni_environment, run_tests
 
 from oakum.errors import UsageError
-from oakum.kernels import tiers
+from oakum.kernels import stripmap_kernels, tiers
 
 KERNEL_TESTS = ("test_stripmap.py", "test_words.py")
 WHERE_SLOW = "not galois and not share"
@@ -123,3 +125,24 @@ def test_gfni_tier_is_made_of_gfni_instructions(tmp_path: Path) -> None:
     assert len(affine) >= 8 and all("%ymm" in line for line in affine)
     if "LD_PRELOAD" in environment:
         assert "%zmm" not in run.stdout and "%ymm16" not in run.stdout
+
+
+def test_shuffle_tier_on_arm64_is_made_of_table_lookups(monkeypatch: pytest.MonkeyPatch) -> None:
+    """What LLVM makes of the shuffle tile: 2 lookups for each of 4 rows and 4 vectors. It is not executed."""
+    monkeypatch.setattr(tiers, "target", lambda: ("aarch64-unknown-linux-gnu", "generic", "+neon"))
+    module = ir.Module()
+    module.triple = "aarch64-unknown-linux-gnu"
+    integers = [ir.IntType(64)] * 5
+    function = ir.Function(module, ir.FunctionType(ir.VoidType(), integers), "tile")
+    builder = ir.IRBuilder(function.append_basic_block())
+    _, generate = stripmap_kernels.shuffle_tile._defn(None, *integers)
+    generate(SimpleNamespace(get_dummy_value=lambda: None), builder, None, function.args)
+    builder.ret_void()
+    binding.initialize_all_targets()
+    binding.initialize_all_asmprinters()
+    try:
+        machine = binding.Target.from_triple(module.triple).create_target_machine()
+    except RuntimeError:
+        pytest.skip("this llvmlite was built without arm64")
+    assembly = machine.emit_assembly(binding.parse_assembly(str(module)))
+    assert sum("\ttbl\t" in line for line in assembly.splitlines()) == 2 * 4 * 4

@@ -48,6 +48,8 @@ def test_uncorrectable_says_what_is_lost(uncorrectable: CheckResult) -> None:
     assert "The sidecar itself is damaged, 12 flipped bits, and can be put right." in " ".join(text.split())
     assert "1 altered member is newer than recorded" in " ".join(text.split())
     assert "below 0 %" in text
+    unknown = replace(uncorrectable, totals=replace(uncorrectable.totals, bits_flipped=0))
+    assert "How many bits are flipped in 3.00 MB read is not known." in check_text(unknown)
     assert "none, beyond correction" in text
 
 

@@ -4,6 +4,7 @@ from typing import Annotated
 
 import typer
 
+from oakum import __version__
 from oakum.cli import describe, protect, repair, verify
 
 app = typer.Typer(
@@ -24,9 +25,7 @@ app = typer.Typer(
 
 def _show_version(wanted: bool) -> None:
     if wanted:
-        from importlib.metadata import version
-
-        typer.echo(f"oakum {version('oakum')}")
+        typer.echo(f"oakum {__version__}")
         raise typer.Exit
 
 

@@ -82,7 +82,7 @@ def _usage_sentence(error: typer.TyperException) -> str:
 def _system_sentence(error: OSError) -> str:
     reason = (error.strerror or str(error)).lower()
     if error.filename is None:
-        return reason
+        return f"reading or writing failed: {reason}"
     return f"{os.fsdecode(error.filename)}: {reason}"
 
 

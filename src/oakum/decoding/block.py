@@ -10,7 +10,9 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from dataclasses import dataclass
+from functools import cached_property
 from typing import Protocol
 
 import numpy as np
@@ -21,19 +23,23 @@ from oakum.algebra.concatenated import ConcatenatedCode
 from oakum.decoding.bursts import cluster
 from oakum.decoding.trials import (
     BELIEVED,
+    CHASE_COLUMNS,
     DENSE,
     UNUSABLE,
     USABLE,
     Mask,
     Reliability,
     chance_of_acceptance,
+    chase_sets,
     dense_words,
     erasure_trials,
     generalised_distance,
+    hopeful,
     neighbouring_rows,
 )
 from oakum.geometry import Geometry
 from oakum.kernels.columns import ColumnDecoder
+from oakum.kernels.doubts import doubts
 from oakum.kernels.words import FLAGGED, WordCodec
 
 Bytes = NDArray[np.uint8]
@@ -42,8 +48,12 @@ Strips = NDArray[np.intp]
 RIGHT, WRONG, UNKNOWN = 0, 1, 2
 """What the digest says of a cell: it agrees, it does not, or there is none to ask."""
 
-ROUNDS = 60
+ROUNDS = 200
 """More rounds of feedback than any block was ever seen to need; a bound, not a tuning."""
+
+
+PATIENCE = 4
+"""Times in a row that random trials may fail before the block is left as it is."""
 
 
 class BlockSource(Protocol):
@@ -211,15 +221,24 @@ class _Block:
         others = np.flatnonzero(self.source.states == RIGHT)
         self.symbols = np.empty((self.g.n, self.width), np.uint8)
         self.symbols[others], lost = self.source.rows(others)
-        self.fixed = np.ones(self.symbols.shape, bool)
+        self.others_right = np.ones(self.symbols.shape, bool)
         self.late_erasures = np.zeros(self.symbols.shape, np.uint8)
         if lost is not None:  # It could be read a moment ago and now cannot.
-            self.fixed[others] = ~lost
+            self.others_right[others] = ~lost
             self.late_erasures[others] = lost
         self.open = np.arange(self.width)
         self.provisional = np.zeros(self.width, bool)
         self.strict = np.zeros(self.width, bool)
-        self.last_tried: tuple[Bytes, Bytes, Bytes] | None = None
+        self.tried_as_received, self.tried_erasures = _Seen(), _Seen()
+        self.flip_rate = self._estimate_flip_rate()
+        self.random = np.random.default_rng(self.source.number)  # Decoding twice gives the same twice.
+
+    def _estimate_flip_rate(self) -> float:
+        """The rate of scattered flips, by the share of words without any among those outside bursts."""
+        words = self.status[self.status < UNUSABLE - 1]
+        words = np.concatenate([words, self.status[self.status == FLAGGED]])
+        clean = max(np.count_nonzero(words == 0), 1) / max(len(words), 1)
+        return float(1 - clean ** (1 / max(self.d.code.inner.n, 8)))
 
     def _erase_all(self) -> bool:
         """Solve all columns at once by erasing every cell that is not right, where there are few enough.
@@ -243,53 +262,102 @@ class _Block:
             self._finish(row, cell)
         return True
 
-    def _solve_columns(self) -> int:
-        """One round of trials on the unsolved columns. Returns how many were solved."""
-        self.symbols[self.strips] = self.value
-        self.fixed[self.strips] = self.pinned
-        known = self._reliability()
-        places = self._worth_trying(known)
-        known = known.take(places)
-        syndromes = self.d.columns.syndromes(np.take(self.symbols, places, axis=1))
-        left = np.arange(len(places))
-        for number, trial in enumerate(erasure_trials(known, self.d.code.inner.t)):
-            if not len(left) or (number and not self.d.later_trials):
-                break
-            erased = np.take(self.late_erasures, places[left], axis=1)
-            erased[self.strips] |= trial[:, left]
-            magnitudes, errors = self.d.columns.decode(np.take(syndromes, left, axis=1), erased)
-            accepted = (errors >= 0) & ~((magnitudes != 0) & self.fixed[:, places[left]]).any(axis=0)
-            accepted[accepted] = self._weigh(
-                places[left[accepted]], known.take(left[accepted]), errors[accepted], erased[:, accepted],
-                magnitudes[:, accepted],
-            )  # fmt: skip
-            self._pin(places[left[accepted]], magnitudes[:, accepted])
-            left = left[~accepted]
-        solved = np.setdiff1d(places, places[left])
-        self.open = np.setdiff1d(self.open, solved)
-        return len(solved)
+    def _posed(self, places: Strips, known: Reliability) -> _Posed:
+        """The columns `places` as a problem for the outer decoder."""
+        symbols = np.take(self.symbols, places, axis=1)
+        symbols[self.strips] = np.take(self.value, places, axis=1)
+        fixed = np.take(self.others_right, places, axis=1)
+        fixed[self.strips] = ~known.open
+        late = np.take(self.late_erasures, places, axis=1)
+        return _Posed(places, known, symbols, fixed, late, self.d.columns.syndromes(symbols))
 
-    def _reliability(self) -> Reliability:
-        """What is known of the symbols of all rows."""
+    def _try_as_received(self) -> int:
+        """Decode the unsolved columns with nothing erased but what is known to be bad. Returns how many are solved.
+
+        Most columns that can be solved at all are solved so, and what they pin makes all further trials
+        better: those wait until this does little.
+        """
+        known = self._reliability(weighed=False)
+        places = self.tried_as_received.changed(self.open, self.value)
+        if not len(places):
+            return 0
+        posed = self._posed(places, known if len(places) == self.width else known.take(places))
+        trial = posed.known.erased | posed.known.dense
+        return self._try(posed, iter([trial, posed.known.erased] if posed.known.dense.any() else [trial]))
+
+    def _try_erasures(self) -> int:
+        """All trials of a round on the unsolved columns. Returns how many were solved."""
+        known = self._reliability()
+        places = self.tried_erasures.changed(self.open, self.value, known.doubts)
+        if not len(places) or not self.d.later_trials:
+            return 0
+        posed = self._posed(places, known.take(places))
+        return self._try(posed, erasure_trials(posed.known, self.d.code.inner.t))
+
+    def _try(self, posed: _Posed, trials: Iterator[Mask]) -> int:
+        """Make trial after trial on what is left of a problem; pin what is solved."""
+        left = np.arange(len(posed.places))
+        solved = np.zeros(len(left), bool)
+        sizes = np.full(len(left), -1, np.intp)
+        for trial in trials:
+            size = np.count_nonzero(trial, axis=0)
+            # The sets of a family are nested: one of the same size is the same.
+            now = left[(size != sizes)[left] & (size <= self.g.r)[left]]
+            sizes = size
+            if not len(now):
+                continue
+            erased = posed.late.copy()
+            erased[self.strips] |= trial
+            magnitudes, errors = self.d.columns.decode(posed.syndromes, erased, only=now)
+            good = np.zeros(len(solved), bool)
+            good[now] = errors[now] >= 0
+            good &= ~((magnitudes != 0) & posed.fixed).any(axis=0)
+            self._weigh(posed, errors, erased, magnitudes, good)
+            self._pin(posed, magnitudes, good)
+            solved |= good
+            left = left[~good[left]]
+            if not len(left):
+                break
+        self.open = np.setdiff1d(self.open, posed.places[solved], assume_unique=True)
+        return int(solved.sum())
+
+    def _chase(self) -> int:
+        """Random trial erasures on columns that are just beyond reach. Returns how many were solved."""
+        known = self._reliability().take(self.open)
+        near = np.flatnonzero(hopeful(known, self.g.r))
+        if not len(near):
+            return 0
+        posed = self._posed(self.open[near], known.take(near))
+        count = max(8, min(256, CHASE_COLUMNS // len(near)))
+        sets = chase_sets(posed.known, count, self.random)
+        erased = np.repeat(posed.late, count, axis=1)
+        erased[self.strips] |= sets.reshape(len(self.strips), -1)
+        magnitudes, errors = self.d.columns.decode(np.repeat(posed.syndromes, count, axis=1), erased)
+        fine = (errors >= 0) & ~((magnitudes != 0) & np.repeat(posed.fixed, count, axis=1)).any(axis=0)
+        chance = self._chances(np.repeat(posed.doubtful, count), errors, erased)
+        # Any of the trials could have been the one that a wrong word passes.
+        chance = np.where(fine, chance + np.log(count), np.inf).reshape(len(near), count)
+        best, least = chance.argmin(axis=1), chance.min(axis=1)
+        good = (least < BELIEVED) | ((least < USABLE) & ~self.strict[posed.places])
+        self.provisional[posed.places[good & (least >= BELIEVED)]] = True
+        self._pin(posed, np.take(magnitudes, best + np.arange(len(near)) * count, axis=1), good)
+        self.open = np.setdiff1d(self.open, posed.places[good], assume_unique=True)
+        return int(good.sum())
+
+    def _reliability(self, *, weighed: bool = True) -> Reliability:
+        """What is known of the symbols of all rows; the chances of being wrong only if `weighed`."""
         open_ = ~self.pinned
+        status = weights = np.zeros(open_.shape, np.uint8)
         if self.g.p:
             status = np.where(open_, self._spread(self.status), np.uint8(0))
-            open_bytes = np.where(open_, self._open_bytes(open_), np.uint8(0))
-        else:
-            status, open_bytes = np.zeros(open_.shape, np.uint8), open_.astype(np.uint8)
+        if self.g.p and weighed:
+            kept = np.where(self.pinned, self.value, self.raw)
+            weights = doubts(
+                self.d.words, kept, self.value, self.parity, self.staggers, self.status,
+                self.pinned.view(np.uint8), self.flip_rate,
+            )  # fmt: skip
         burst_rows = open_ & self._burst_rows()[:, np.newaxis]
-        return Reliability(self.erased & open_, status == DENSE, burst_rows, status, open_bytes)
-
-    def _open_bytes(self, open_: Mask) -> Bytes:
-        """For each byte, how many bytes of its word are not known to be right."""
-        m, (rows, words) = self.g.m, self.status.shape
-        counts = np.zeros((rows, words), np.uint8)
-        for stagger in np.unique(self.staggers):
-            chosen = self.staggers == stagger
-            rolled = np.zeros((int(chosen.sum()), words * m), np.uint8)
-            rolled[:, : self.width] = np.roll(open_[chosen], -int(stagger), axis=1)
-            counts[chosen] = rolled.reshape(-1, words, m).sum(axis=2)
-        return self._spread(counts)
+        return Reliability(self.erased & open_, status == DENSE, burst_rows, status, weights, open_)
 
     def _burst_rows(self) -> Mask:
         """Rows that look like whole parts of a burst: neighbours, or wrong in many of the solved columns."""
@@ -298,48 +366,53 @@ class _Block:
         if len(rows) <= 3 * self.g.r:
             room = self.g.r - int(self.erased.any(axis=1).sum())
             suspects[rows] = neighbouring_rows(self.strips[rows], room)
-        solved = np.setdiff1d(np.arange(self.width), self.open)
-        if len(solved) >= 16:
-            suspects |= (self.value[:, solved] != self.raw[:, solved]).mean(axis=1) > 0.25
+        solved = np.ones(self.width, bool)
+        solved[self.open] = False
+        if np.count_nonzero(solved) >= 16:
+            wrong = np.count_nonzero((self.value != self.raw) & solved, axis=1)
+            suspects |= 4 * wrong > np.count_nonzero(solved)
         return suspects
 
-    def _worth_trying(self, known: Reliability) -> Strips:
-        """The unsolved columns of which something is known that was not when they were tried last."""
-        now = (self.value.copy(), known.status, known.open_bytes)
-        before, self.last_tried = self.last_tried, now
-        if before is None:
-            return self.open
-        changed = np.zeros(self.width, bool)
-        for a, b in zip(before, now, strict=True):
-            changed |= (a != b).any(axis=0)
-        return self.open[changed[self.open]]
+    def _chances(self, doubtful: Strips, errors: NDArray[np.int16], erased: Bytes) -> NDArray[np.float64]:
+        """Log of the chance that random words pass for what was found, for columns with `doubtful` open symbols."""
+        erasures = np.count_nonzero(erased, axis=0)
+        wrong = np.maximum(errors, 0).astype(np.intp)
+        return chance_of_acceptance(np.maximum(doubtful - erasures, 0), wrong, self.g.r - erasures)
 
     def _weigh(
-        self, places: Strips, known: Reliability, errors: NDArray[np.int16], erased: Bytes, magnitudes: Bytes
-    ) -> Mask:
-        """Which solutions may be used: the sure ones, and for the time being some that are not."""
-        erasures = (erased != 0).sum(axis=0)
-        doubtful = np.maximum((~self.fixed[:, places]).sum(axis=0) - erasures, 0)
-        chance = chance_of_acceptance(doubtful, errors.astype(np.intp), self.g.r - erasures)
-        sure = chance < BELIEVED
-        near = generalised_distance(known, magnitudes[self.strips] != 0, self.d.code.inner.d) <= self.g.r
-        usable = ((chance < USABLE) | near) & ~self.strict[places]
-        self.provisional[places[usable & ~sure]] = True
-        return np.asarray(sure | usable)
+        self, posed: _Posed, errors: NDArray[np.int16], erased: Bytes, magnitudes: Bytes, good: Mask
+    ) -> None:
+        """Keep `good` for the sure solutions, and for the time being for some that are not."""
+        chance = self._chances(posed.doubtful, errors, erased)
+        unsure = np.flatnonzero(good & (chance >= BELIEVED))
+        if not len(unsure):
+            return
+        wrong = np.take(magnitudes, unsure, axis=1)[self.strips] != 0
+        near = generalised_distance(posed.known.take(unsure), wrong, self.d.code.inner.d) <= self.g.r
+        usable = ((chance[unsure] < USABLE) | near) & ~self.strict[posed.places[unsure]]
+        self.provisional[posed.places[unsure[usable]]] = True
+        good[unsure[~usable]] = False
 
-    def _pin(self, places: Strips, magnitudes: Bytes) -> None:
+    def _pin(self, posed: _Posed, magnitudes: Bytes, good: Mask) -> None:
         """The bytes of solved columns are known from now on."""
-        self.symbols[:, places] ^= magnitudes
-        self.value[:, places] = self.symbols[np.ix_(self.strips, places)]
-        self.pinned[:, places] = True
+        if not good.any():
+            return
+        if len(good) == self.width:
+            np.copyto(self.value, posed.symbols[self.strips] ^ magnitudes[self.strips], where=good)
+            self.pinned |= good
+            return
+        which = np.flatnonzero(good)
+        solved = np.take(posed.symbols, which, axis=1) ^ np.take(magnitudes, which, axis=1)
+        self.value[:, posed.places[which]] = solved[self.strips]
+        self.pinned[:, posed.places[which]] = True
 
     # -- step 4: feedback -----------------------------------------------------------------------------
 
     def _feedback(self) -> int:
         """Columns, words, columns ... until nothing changes. Returns the number of rounds."""
         for number in range(1, ROUNDS + 1):
-            solved = self._solve_columns()
             finished = int(self.finished.sum())
+            solved = self._one_round()
             if self.d.feedback or not len(self.open):
                 self._decode_words()
             if self.finished.all():
@@ -349,6 +422,16 @@ class _Block:
             if not self.d.feedback or (not solved and int(self.finished.sum()) == finished):
                 return number
         return ROUNDS
+
+    def _one_round(self) -> int:
+        """Solve some columns: the costlier trials only when the cheaper ones do little. Returns how many."""
+        many = max(1, len(self.open) // 8)
+        solved = self._try_as_received()
+        if solved < many:
+            solved += self._try_erasures()
+        for _ in range(PATIENCE if self.d.feedback and self.d.later_trials else 0):
+            solved = solved or self._chase()
+        return solved
 
     def _contradicted(self) -> bool:
         """Whether a cell all of whose bytes are known disagrees with its digest."""
@@ -364,7 +447,7 @@ class _Block:
         self.open = np.union1d(self.open, places)
         self.provisional[places] = False
         self.strict[places] = True
-        self.last_tried = None
+        self.tried_as_received, self.tried_erasures = _Seen(), _Seen()
         self._decode_words()
         return True
 
@@ -389,6 +472,40 @@ class _Block:
         wrong = (first_value != self.value) & ~bad
         load = 2 * wrong.sum(axis=0) + bad.sum(axis=0)
         return 1.0 - float(load.max(initial=0)) / self.g.r
+
+
+@dataclass(frozen=True)
+class _Posed:
+    """Unsolved columns as a problem: their numbers, what is known, symbols of all n strips, which are fixed."""
+
+    places: Strips
+    known: Reliability
+    symbols: Bytes
+    fixed: Mask
+    late: Bytes
+    syndromes: Bytes
+
+    @cached_property
+    def doubtful(self) -> Strips:
+        """How many symbols of each column may be wrong."""
+        return np.count_nonzero(~self.fixed, axis=0)
+
+
+class _Seen:
+    """What was known of all columns when they were tried last."""
+
+    def __init__(self) -> None:
+        self._before: list[Bytes] = []
+
+    def changed(self, places: Strips, *now: Bytes) -> Strips:
+        """Those of the columns `places` of which something in the arrays `now` is new."""
+        before, self._before = self._before, [array.copy() for array in now]
+        if not before:
+            return places
+        new = np.zeros(now[0].shape[1], bool)
+        for a, b in zip(before, now, strict=True):
+            new |= (a != b).any(axis=0)
+        return places[new[places]]
 
 
 def burst_bytes(flips: Bytes) -> Mask:

@@ -1,9 +1,11 @@
 """Which symbols a trial erases, and which solutions may be believed.
 
-The trials of one round are those of generalised minimum distance decoding (Forney, IEEE Trans. Inform.
-Theory 12, 1966) on the reliabilities that a bounded-distance inner decoder leaves: nothing erased beyond
-what is known to be bad, then the flagged words, then also the words in which most flips were corrected.
-Verdicts about density add trials before and between; they never take one away.
+Two families of trials make a round. The first erases the symbols that are likeliest to be wrong, one
+threshold after the other, by the chances of `oakum.kernels.doubts`. The second is generalised minimum
+distance decoding on the reliabilities that a bounded-distance inner decoder leaves (Forney, IEEE Trans.
+Inform. Theory 12, 1966): nothing erased beyond what is known to be bad, then the flagged words, then also
+the words in which most flips were corrected; the guarantee rests on it. Verdicts about bursts add trials
+before these; they never take one away.
 """
 
 from __future__ import annotations
@@ -32,8 +34,14 @@ BELIEVED = float(np.log(1e-9))
 USABLE = float(np.log(1e-4))
 """Log of the chance below which such a column is used until something speaks against it."""
 
-LIKELY = 3
-"""A byte of a flagged word of so few unknown bytes is more likely wrong than right (two flips among them)."""
+THRESHOLDS = (0.5, 0.4, 0.32, 0.25, 0.2, 0.15, 0.1)
+"""Chances of being wrong from which symbols are erased. Above a half, erasing is the better choice on average."""
+
+CHASE_COLUMNS = 4096
+"""Trials of random erasures made at a time, shared out among the columns."""
+
+REACH = 5.0
+"""How far beyond the code's reach a column may be expected to be for such trials to be made."""
 
 DENSE_RUN = 32
 """So many words in a row without a clean one are a burst in the data or in its inner parity."""
@@ -44,49 +52,77 @@ class Reliability:
     """What is known of each symbol of the rows in question, arrays of shape [R, columns].
 
     `erased`: known to be bad. `dense`: inside a burst, by the density of its words. `burst_rows`: in a row
-    that looks like part of a burst as a whole.
-    `status`: that of the symbol's word (see `WordCodec.correct`). `open_bytes`: how many bytes of its word
-    are not yet known to be right; 0 where the symbol itself is known, and then nothing else is set.
+    that looks like part of a burst as a whole. `status`: that of the symbol's word (see
+    `WordCodec.correct`). `doubts`: the chance, times 255, that the symbol is wrong. `open`: not known to
+    be right; elsewhere nothing else is set.
     """
 
     erased: Mask
     dense: Mask
     burst_rows: Mask
     status: Bytes
-    open_bytes: Bytes
+    doubts: Bytes
+    open: Mask
 
     def take(self, columns: Places) -> Reliability:
         """The same for some of the columns."""
         return Reliability(
-            self.erased[:, columns],
-            self.dense[:, columns],
-            self.burst_rows[:, columns],
-            self.status[:, columns],
-            self.open_bytes[:, columns],
+            np.take(self.erased, columns, axis=1),
+            np.take(self.dense, columns, axis=1),
+            np.take(self.burst_rows, columns, axis=1),
+            np.take(self.status, columns, axis=1),
+            np.take(self.doubts, columns, axis=1),
+            np.take(self.open, columns, axis=1),
         )
 
 
 def erasure_trials(known: Reliability, t: int) -> Iterator[Mask]:
-    """The sets of symbols to erase, most promising first, each different from the one before."""
-    flagged = known.status == FLAGGED
+    """The sets of symbols to erase, bool[R, columns], most promising first."""
     verdicts = [verdict for verdict in (known.dense, known.burst_rows) if verdict.any()]
-    previous: Mask | None = None
     for base in [*(known.erased | verdict for verdict in verdicts), known.erased]:
-        for trial in _graded(base, flagged, known, t):
-            if previous is None or not np.array_equal(trial, previous):
-                yield trial
-            previous = trial
+        yield base
+        for threshold in THRESHOLDS:
+            yield base | (known.doubts >= 255 * threshold)
+        flagged = known.status == FLAGGED
+        yield base | flagged
+        for least in range(t, 0, -1):
+            yield base | flagged | ((known.status >= least) & (known.status <= t))
 
 
-def _graded(base: Mask, flagged: Mask, known: Reliability, t: int) -> Iterator[Mask]:
-    """Erase on top of `base`: the likely wrong, none, more of the flagged, all of them, corrected words."""
-    yield base | (flagged & (known.open_bytes <= LIKELY))
-    yield base
-    for most in (5, 8):
-        yield base | (flagged & (known.open_bytes <= most))
-    yield base | flagged
-    for least in range(t, 0, -1):
-        yield base | flagged | ((known.status >= least) & (known.status <= t))
+def hopeful(known: Reliability, r: int) -> Mask:
+    """Columns, bool[columns], for which a few well chosen erasures more may be enough.
+
+    Each symbol costs twice its chance of being wrong, or 1 when it is erased; a column that is expected to
+    cost more than r + REACH is left for later.
+    """
+    cost = np.minimum(known.doubts.astype(np.float32) / 127.5, 1.0).sum(axis=0)
+    return np.asarray(cost <= r + REACH)
+
+
+def chase_sets(known: Reliability, count: int, random: np.random.Generator) -> Mask:
+    """`count` sets of symbols to erase for each column, bool[R, columns, count].
+
+    In the manner of Chase (IEEE Trans. Inform. Theory 18, 1972), but drawn at random: on top of what is
+    likelier wrong than right, one to four others, each the likelier the more doubtful it is. Erasing one
+    wrong symbol gains one, erasing two wrong ones gains two, a right one loses one.
+    """
+    base = known.erased | (known.doubts >= 255 * THRESHOLDS[0])
+    weights = np.where(base | ~known.open, np.float32(1e-9), known.doubts.astype(np.float32) + np.float32(0.01))
+    rows, columns = base.shape
+    # The greatest of log weight + Gumbel noise are a sample without replacement (Efraimidis and Spirakis).
+    noise = np.maximum(random.standard_exponential((rows, columns, count), np.float32), np.float32(1e-30))
+    keys = np.log(weights)[:, :, np.newaxis] - np.log(noise)
+    most = min(4, rows)
+    chosen = np.argpartition(keys, rows - most, axis=0)[rows - most :]
+    sets = np.repeat(base[:, :, np.newaxis], count, axis=2)
+    for rank in range(most):
+        now = np.arange(count) % most >= rank
+        sets[:, :, now] |= _one_hot(chosen[rank][:, now], rows)
+    return sets
+
+
+def _one_hot(rows: Places, count: int) -> Mask:
+    return np.asarray(np.arange(count)[:, np.newaxis, np.newaxis] == rows[np.newaxis])
 
 
 _LOG_FACTORIAL = np.concatenate([[0.0], np.cumsum(np.log(np.arange(1, 256)))])
@@ -114,7 +150,7 @@ def generalised_distance(known: Reliability, wrong: Mask, d: int) -> NDArray[np.
     reliability = np.maximum(1.0 - 2.0 * flips / d, 0.0)
     reliability[known.erased | (known.status == FLAGGED)] = 0.0
     terms = np.where(wrong, 1.0 + reliability, 1.0 - reliability)
-    return np.asarray(np.where(known.open_bytes > 0, terms, 0.0).sum(axis=0))
+    return np.asarray(np.where(known.open, terms, 0.0).sum(axis=0))
 
 
 def dense_words(status: Bytes) -> Mask:

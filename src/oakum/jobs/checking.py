@@ -24,6 +24,7 @@ from oakum.digests import cell_digests
 from oakum.errors import CannotCheck
 from oakum.files import FileBytes
 from oakum.geometry import CELL, Geometry
+from oakum.jobs.common import absolute
 from oakum.members import Folder, MemberHasher, MemberStream, Span
 from oakum.pools import Pools, wait_all
 from oakum.progress import Progress
@@ -63,9 +64,26 @@ class KnownMember:
     """What is wrong with it that is not a matter of its bytes, such as its absence."""
 
     absent: bool = False
+    in_the_way: bool = False
+    """Something else stands in its place."""
+
     longer: int = 0
     edited: bool = False
     checked: bool = True
+    presumed: bool = False
+    """Its SHA-256 was not asked for, and no digest of a cell speaks against it."""
+
+    def read(
+        self, folder: Folder, known_bad: Sequence[Range] = ()
+    ) -> Iterator[tuple[int, Bytes, list[Range]]]:
+        """All its bytes as they are, piece by piece: where, which, and what could not be read."""
+        stream = MemberStream(folder, [Span(self.piece.path, 0, self.size)], known_bad)
+        try:
+            for start in range(0, self.size, CHUNK):
+                data = np.empty(min(CHUNK, self.size - start), np.uint8)
+                yield start, data, stream.read_into(start, data.data)
+        finally:
+            stream.close()
 
 
 @dataclass
@@ -87,6 +105,10 @@ class ProtectedSet:
         self._files = sorted(files, key=lambda m: m.stream_start)
         self._starts = [m.stream_start for m in self._files]
 
+    def read(self, member: KnownMember) -> Iterator[tuple[int, Bytes, list[Range]]]:
+        """A member's bytes as they are (see `KnownMember.read`), known bad ranges left out."""
+        return member.read(self.folder, self.unreadable.get(member.piece.path, ()))
+
     def members_at(self, start: int, length: int) -> list[KnownMember]:
         """The files that hold bytes of a range of the stream, in order."""
         first = max(0, bisect_right(self._starts, start) - 1)
@@ -99,11 +121,15 @@ class ProtectedSet:
 
 
 def open_set(
-    path: Path, root: Path | None, unreadable: dict[bytes, list[Range]] | None = None
+    path: Path,
+    root: Path | None,
+    unreadable: dict[bytes, list[Range]] | None = None,
+    target: Path | None = None,
 ) -> ProtectedSet:
     """Open the sidecar at `path` and look for its members below `root` (None: beside it).
 
-    Raises CannotCheck when the sidecar cannot be read or its members are not there at all.
+    Raises CannotCheck when the sidecar cannot be read, protects something else than `target`, or its members
+    are not there at all.
     """
     source = FileBytes(path)
     try:
@@ -118,6 +144,8 @@ def open_set(
     )
     opened.unreadable = unreadable or {}
     try:
+        if target is not None:
+            _refuse_other(opened, absolute(target))
         _look_at_sections(opened)
         for member in opened.members.values():
             _look_at(folder, member)
@@ -175,7 +203,8 @@ def _look_at(folder: Folder, member: KnownMember) -> None:
         return
     kinds = {Kind.FILE: stat.S_ISREG, Kind.FOLDER: stat.S_ISDIR, Kind.LINK: stat.S_ISLNK}
     if not kinds[piece.kind](found.st_mode):
-        member.absent, member.fault = True, f"is no {piece.kind.name.lower()} any more"
+        member.absent, member.in_the_way = True, True
+        member.fault = f"is no {piece.kind.name.lower()} any more"
     elif piece.kind is Kind.LINK:
         member.right = folder.readlink(piece.path) == piece.target
         member.fault = "" if member.right else "points elsewhere"
@@ -188,6 +217,21 @@ def _look_at(folder: Folder, member: KnownMember) -> None:
             member.fault = f"is {member.size - found.st_size:,} bytes short"
         elif member.longer:
             member.fault = f"has {member.longer:,} bytes added at its end"
+
+
+def _refuse_other(opened: ProtectedSet, target: Path) -> None:
+    """A target that is not the sidecar itself must be a member, a folder of members, or hold them all."""
+    root = Path(os.path.realpath(opened.root))
+    if target == absolute(opened.path) or root.is_relative_to(target):
+        return
+    if not target.is_relative_to(root):
+        raise CannotCheck(
+            f"{opened.path} looks for its files in {root}, and {target} is not there; "
+            f"say with --root {target.parent} where they are"
+        )
+    name = os.fsencode(target.relative_to(root))
+    if not any(path == name or path.startswith(name + b"/") for path in opened.members):
+        raise CannotCheck(f"{opened.path} does not protect {target}; oakum describe lists what it protects")
 
 
 def _refuse_missing_medium(opened: ProtectedSet) -> None:
@@ -468,9 +512,10 @@ class WindowCheck:
         """Bytes of a whole block, for the progress of decoding."""
         return self.g.n * self.g.width(0) if self.g.blocks else 0
 
-    def has_damage(self, start: int, stop: int) -> bool:
-        """Whether a cell that holds any of the window's bytes start..stop-1 is not right."""
-        return bool((self.data[self.g.cell_at(start) : self.g.cell_at(stop - 1) + 1] != RIGHT).any())
+    def has_damage(self, start: int, stop: int, *, unknown: bool) -> bool:
+        """Whether a cell that holds any of the window's bytes start..stop-1 is wrong (or `unknown`)."""
+        cells = self.data[self.g.cell_at(start) : self.g.cell_at(stop - 1) + 1]
+        return bool((cells != RIGHT).any() if unknown else (cells == WRONG).any())
 
     def dirty_blocks(self) -> list[int]:
         """Blocks with a cell that is not right, or with inner parity to be looked at."""

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from pathlib import Path
 
-from oakum.encoding import Kernels, Unreadable, WindowEncoder, plan_reading
+from oakum.encoding import Changed, Kernels, Unreadable, WindowEncoder, plan_reading
 from oakum.files import NewFile
 from oakum.jobs.checking import ProtectedSet
 from oakum.jobs.protect import Placed, pack_table
@@ -55,7 +55,7 @@ def _write_section(
             section.geometry, kernels, writer, stream, hasher, check.pools, check.progress.advance
         )
         encoder.run(plan_reading(section.geometry, memory))
-    except Unreadable:
+    except (Unreadable, Changed):
         return False
     finally:
         stream.close()

@@ -11,6 +11,7 @@ import os
 import time
 from collections import OrderedDict
 from collections.abc import Sequence
+from contextlib import suppress
 from dataclasses import dataclass, replace
 from pathlib import Path
 
@@ -30,6 +31,7 @@ from oakum.sidecar.table import Kind
 
 COPY_STEP = 4 << 20
 OPEN_AT_A_TIME = 64
+ADVICE = "move it away, or say with --output where to write"
 
 
 def repair(
@@ -53,7 +55,7 @@ def repair(
     done at all, UsageError for members that the sidecar does not have.
     """
     begin = time.monotonic()
-    opened = open_set(find_sidecar(target, sidecar), root, read_unreadable(unreadable))
+    opened = open_set(find_sidecar(target, sidecar), root, read_unreadable(unreadable), target)
     try:
         wanted = _chosen(opened, members)
         with Pools(jobs) as pools, Mending(opened, output, accept_loss) as mending:
@@ -107,6 +109,9 @@ class Mending:
         base = output if self.output is not None else self._as_file.parent if self._as_file else opened.root
         self._base = Path(os.path.abspath(base)) if base is not None else opened.root
         self._base_fd = -1
+        self._made_above: list[Path] = []
+        self._made: list[bytes] = []
+        """Folders made on the way, above the base and below it; they go again unless something is written."""
         self._copies: dict[bytes, Copy] = {}
         self._awake: OrderedDict[bytes, Copy] = OrderedDict()
 
@@ -119,6 +124,8 @@ class Mending:
             if self.output is not None or self._as_file is not None or not member.right or member.fault:
                 self._begin(member)
         check.progress.phase("writing", sum(c.member.size for c in self._copies.values()))
+        if check.incomplete:
+            self._copy_whole()
         tally = Tally(self._opened)
         for window in check.windows:
             self._copy_received(check, window.section.bootstrap.start)
@@ -130,6 +137,7 @@ class Mending:
 
     def _open_base(self) -> None:
         try:
+            self._made_above = [p for p in (self._base, *self._base.parents) if not os.path.lexists(p)]
             self._base.mkdir(parents=True, exist_ok=True)
             self._base_fd = os.open(self._base, os.O_RDONLY | os.O_DIRECTORY | os.O_CLOEXEC)
         except OSError as error:
@@ -141,17 +149,17 @@ class Mending:
         path = member.piece.path
         if self._as_file is not None:
             path = os.fsencode(self._as_file.name)
-        elif self.output is None and not member.absent:
+        elif self.output is None and (not member.absent or member.in_the_way):
             path = mended_name(path)
         copy = Copy(member, path, self._base / os.fsdecode(path))
         if member.piece.kind is Kind.FILE:
-            copy.file = NewFile(copy.shown, open_folder=lambda: self._parent_of(path))
+            copy.file = NewFile(copy.shown, open_folder=lambda: self._parent_of(path), advice=ADVICE)
             copy.file.resize(member.size)
             self._wake(copy)
         self._copies[member.piece.path] = copy
 
     def _parent_of(self, path: bytes) -> int:
-        return open_folder(self._base_fd, os.path.dirname(path), create=True)
+        return open_folder(self._base_fd, os.path.dirname(path), made=self._made)
 
     def _wake(self, copy: Copy) -> NewFile:
         """The copy's file, ready for use; the one that was not used for longest is put aside."""
@@ -163,6 +171,13 @@ class Mending:
             if oldest.file is not None:
                 oldest.file.park()
         return copy.file
+
+    def _copy_whole(self) -> None:
+        """Write what there is of the members that lie in windows whose sections are lost."""
+        for copy in self._copies.values():
+            if copy.file is not None and not copy.member.absent:
+                for start, data, _ in self._opened.read(copy.member):
+                    self._wake(copy).write(start, data.data)
 
     def _copy_received(self, check: SetCheck, start: int) -> None:
         """Write the members' bytes as they were received in the window that begins at `start`."""
@@ -218,6 +233,7 @@ class Mending:
                 members=tuple(reports.values()),
                 notes=result.notes + notes,
             )
+        self._made, self._made_above = [], []
         for copy in self._copies.values():
             self._name(copy)
             report = reports[os.fsdecode(copy.member.piece.path)]
@@ -297,7 +313,13 @@ class Mending:
             if copy.file is not None:
                 copy.file.discard()
         if self._base_fd >= 0:
+            for path in reversed(self._made):
+                with suppress(OSError):
+                    os.rmdir(path, dir_fd=self._base_fd)
             os.close(self._base_fd)
+        for above in self._made_above:
+            with suppress(OSError):
+                above.rmdir()
 
 
 class MendedFolder:

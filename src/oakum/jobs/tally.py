@@ -62,6 +62,8 @@ class Tally:
             np.add.at(self._bits, owners, finding.bits)
         for start, stop in finding.lost:
             self._add_lost(start, stop)
+        if not (len(finding.places) or finding.erased or finding.sidecar_bits) and finding.correctable:
+            return  # A digest was lost and the bytes that it spoke for are right.
         state = Outcome.CORRECTABLE if finding.correctable else Outcome.UNCORRECTABLE
         self.blocks.append(
             BlockReport(
@@ -124,9 +126,9 @@ class Tally:
             state, bits = MemberState.UNCORRECTABLE, None
         elif member.absent:
             state = MemberState.ABSENT
-        elif member.right and not member.fault:
+        elif (member.right or member.presumed) and not (member.fault or bits):
             state = MemberState.INTACT
-        elif bits or member.fault or not member.right:
+        else:
             state = MemberState.ALTERED
         if member.edited and state is not MemberState.INTACT and not member.absent:
             detail = (detail + "; " if detail else "") + "is newer than recorded: edited rather than decayed"

@@ -2,14 +2,15 @@
 
 from __future__ import annotations
 
+import hashlib
 import time
 from dataclasses import dataclass
 from pathlib import Path
 from typing import TYPE_CHECKING
 
 from oakum.algebra.concatenated import ConcatenatedCode
-from oakum.errors import UsageError
-from oakum.jobs.checking import ProtectedSet, WindowCheck, open_set
+from oakum.errors import FormatError
+from oakum.jobs.checking import KnownMember, ProtectedSet, WindowCheck, open_set
 from oakum.jobs.common import DEFAULT_MEMORY, find_sidecar, summarise
 from oakum.jobs.unreadable import read_unreadable
 from oakum.members import MemberHasher
@@ -40,7 +41,7 @@ def verify(
     must not be read. Raises CannotCheck where nothing can be said at all.
     """
     begin = time.monotonic()
-    opened = open_set(find_sidecar(target, sidecar), root, read_unreadable(unreadable))
+    opened = open_set(find_sidecar(target, sidecar), root, read_unreadable(unreadable), target)
     try:
         with Pools(jobs) as pools:
             check = SetCheck(opened, pools, progress)
@@ -64,7 +65,7 @@ class SetCheck:
     def __post_init__(self) -> None:
         self.code: ConcatenatedCode = self.opened.sections[0].bootstrap.code.code()
         if any(s.bootstrap.code != self.opened.sections[0].bootstrap.code for s in self.opened.sections):
-            raise UsageError("the sections of this sidecar use different codes; it was pieced together")
+            raise FormatError("the sections of this sidecar use different codes; it was pieced together")
         self._decoders: Decoders | None = None
         self.windows: list[WindowCheck] = []
 
@@ -93,19 +94,33 @@ class SetCheck:
         for window in self.windows:
             place = 0
             for piece in window.pieces:
-                if piece.length and window.has_damage(place, place + piece.length):
+                if piece.length and window.has_damage(place, place + piece.length, unknown=hashing):
                     damaged.add(piece.path)
                 place += piece.length
         for member in self.opened.members.values():
             if member.piece.kind is not Kind.FILE:
                 continue
+            sound = not member.absent and member.piece.path not in damaged
             if not hashing:
-                member.right = not member.absent and member.piece.path not in damaged
-            elif (
-                not member.right and member.sha256 is None
-            ):  # Its last window is lost: what is there may be right.
-                member.right = not member.absent and member.piece.path not in damaged
-            member.checked = member.right or member.absent or member.piece.path in damaged
+                member.presumed = sound
+            elif sound and not member.right and member.sha256 is None:  # Its last window is lost.
+                member.right = True
+            elif sound and not member.right and self.incomplete:  # An earlier one is.
+                member.right = self._has_its_sha256(member)
+            member.checked = member.right or member.presumed or not sound
+
+    @property
+    def incomplete(self) -> bool:
+        """Whether sections between others are lost."""
+        return [s.bootstrap.window for s in self.opened.sections] != list(range(len(self.opened.sections)))
+
+    def _has_its_sha256(self, member: KnownMember) -> bool:
+        digest = hashlib.sha256()
+        for _, data, faults in self.opened.read(member):
+            if faults:
+                return False
+            digest.update(data.data)
+        return digest.digest() == member.sha256
 
     def run(self, *, hashing: bool) -> Tally:
         """Scan, decode, add up."""

@@ -45,13 +45,16 @@ class ColumnDecoder:
         self._checks.apply(received, out)
         return out
 
-    def decode(self, syndromes: Bytes, erased: Bytes | None = None) -> tuple[Bytes, NDArray[np.int16]]:
+    def decode(
+        self, syndromes: Bytes, erased: Bytes | None = None, *, only: NDArray[np.intp] | None = None
+    ) -> tuple[Bytes, NDArray[np.int16]]:
         """The error magnitudes and a status for every column.
 
         `syndromes` is uint8[r, L]; `erased`, uint8[n, L], is nonzero where a symbol is erased. Gives the
         magnitudes uint8[n, L], to be XORed onto what was received, and the status int16[L]: the number of
         wrong symbols outside the erased places, or `FAILED` where the column could not be decoded, and
-        then its magnitudes are zero. A column is decoded if and only if a codeword can be had with
+        then its magnitudes are zero. With `only`, ascending numbers of columns, all others are passed over
+        (magnitudes and status zero). A column is decoded if and only if a codeword can be had with
         2 * errors + erasures <= r. Raises ValueError on other shapes.
         """
         _check_rows(syndromes, "syndromes", self.outer.r)
@@ -66,7 +69,7 @@ class ColumnDecoder:
             suspect = suspect | np.bitwise_or.reduce(erased, axis=0)
         magnitudes = _unaliased(self.outer.n, columns)
         status = np.zeros(columns, dtype=np.int16)
-        chosen = np.flatnonzero(suspect)
+        chosen = np.flatnonzero(suspect) if only is None else only[suspect[only] != 0]
         if chosen.size == 0:
             return magnitudes, status
         tables = self._tables
@@ -145,5 +148,3 @@ def _solution(outer: OuterCode, rows: tuple[int, ...]) -> Bytes:
         others[pivot] = 0
         table ^= field.multiply(others[:, None], table[pivot][None, :])
     return np.ascontiguousarray(table[:, len(rows) :])
-
-

@@ -87,6 +87,7 @@ def _are_neighbours(columns: Integers) -> bool:
 
 @subroutine
 def _load_syndromes(syndromes: Bytes, columns: Integers, gathered: Bytes, blocks: Words) -> None:
+    """blocks = the syndromes of the group's columns, zeros in lanes without a column."""
     neighbours = _are_neighbours(columns)
     gathered[0, :] = 0
     for j in range(blocks.shape[0]):
@@ -144,14 +145,17 @@ def _store(
     columns: Integers, erased: Bytes, roots: Bytes, found: Integers, staged: Bytes,
     magnitudes: Bytes, status: NDArray[np.int16],
 ) -> None:  # fmt: skip
-    """Write out the magnitudes and count the errors outside the erased places."""
+    """Write out the magnitudes and count the errors outside the erased places.
+
+    Magnitudes there are never zero: a shorter locator would have done, and the algorithm finds the shortest.
+    """
     for lane in range(columns.size):
         column = columns[lane]
         errors = min(found[lane], 0)  # FAILED or 0
         for e in range(found[lane]):
-            place, magnitude = roots[e, lane], staged[e, lane]
-            magnitudes[place, column] = magnitude
-            if magnitude and not (erased.shape[0] and erased[place, column]):
+            place = roots[e, lane]
+            magnitudes[place, column] = staged[e, lane]
+            if not (erased.shape[0] and erased[place, column]):
                 errors += 1
         status[column] = errors
 

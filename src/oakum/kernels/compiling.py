@@ -44,7 +44,7 @@ _lock = threading.RLock()
 
 
 class Kernel:
-    """A function compiled on first use. Call it like the function itself, with ints and floats.
+    """A function compiled on first use. Call it like the function itself.
 
     `self_test` is given the compiled function and says whether its answers are right.
     """

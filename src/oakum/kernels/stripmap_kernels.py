@@ -57,13 +57,19 @@ STRIDE = STRIP + 64
 TILE_ROWS = 4
 TILE_COLUMNS = 64
 
-TABLES_BLOCK = 8
-"""Inputs whose multiples the portable kernel holds at a time: 8 * 2 KiB fit the first-level cache."""
+NIBBLES_SIZE = 2 * TILE_COLUMNS
+NIBBLES_BLOCK = 128
+"""Inputs that the shuffle kernel holds at a time, split into nibbles: 16 KiB of the first-level cache."""
+
+MULTIPLES_SIZE = 32 * TILE_COLUMNS
+MULTIPLES_BLOCK = 8
+"""Inputs whose multiples the portable kernel holds at a time: 16 KiB of the first-level cache."""
 
 
 def scratch_size(rows: int, inputs: int) -> int:
-    """Bytes of scratch memory that a kernel needs for `rows` outputs and `inputs` inputs."""
-    return (inputs + -(-rows // TILE_ROWS) * TILE_ROWS) * STRIDE + TABLES_BLOCK * 32 * TILE_COLUMNS
+    """Bytes of scratch memory that any of the kernels needs for `rows` outputs and `inputs` inputs."""
+    packed = inputs + -(-rows // TILE_ROWS) * TILE_ROWS
+    return packed * STRIDE + max(NIBBLES_BLOCK * NIBBLES_SIZE, MULTIPLES_BLOCK * MULTIPLES_SIZE)
 
 
 @inlined
@@ -89,72 +95,26 @@ def begin(packed: int, out: int, stride: int, rows: int, width: int, accumulate:
 def emit_tile(
     builder: Builder,
     out: Value,
-    source: Value,
     inputs: Value,
     lanes: int,
-    vectors: int,
-    products: Callable[[Value, int, list[Value]], list[Value]],
-    prepare: Callable[[Value], Any],
+    products: Callable[[Value], Sequence[Sequence[Value]]],
 ) -> None:
-    """A register tile: 4 outputs x `vectors` vectors stay in registers while all inputs pass by.
+    """A register tile: 4 outputs x 2 vectors stay in registers while all inputs pass by.
 
-    `prepare` makes of a vector of input what `products(i, row, prepared vectors)` needs.
+    `products(i)` emits what input i adds to each of the 4 outputs: two vectors of `lanes` bytes.
     """
     kind = byte_vector(lanes)
-    places = [(row, v) for row in range(TILE_ROWS) for v in range(vectors)]
+    places = [(row, v) for row in range(TILE_ROWS) for v in range(2)]
     sums = {
-        place: variable(builder, load(builder, out, kind, place[0] * STRIDE + place[1] * lanes))
-        for place in places
+        (row, v): variable(builder, load(builder, out, kind, row * STRIDE + v * lanes)) for row, v in places
     }
     with cgutils.for_range(builder, inputs, intp=I64) as loop:
-        address = builder.add(source, builder.mul(loop.index, I64(STRIDE)))
-        prepared = [prepare(load(builder, address, kind, v * lanes)) for v in range(vectors)]
-        for row in range(TILE_ROWS):
-            for v, product in enumerate(products(loop.index, row, prepared)):
-                total = builder.load(sums[row, v], typ=kind)
-                builder.store(builder.xor(total, product), sums[row, v])
+        added = products(loop.index)
+        for row, v in places:
+            total = builder.load(sums[row, v], typ=kind)
+            builder.store(builder.xor(total, added[row][v]), sums[row, v])
     for row, v in places:
         store(builder, builder.load(sums[row, v], typ=kind), out, row * STRIDE + v * lanes)
-
-
-@intrinsic
-def shuffle_tile(typingctx: Any, out: Any, source: Any, offsets: Any, inputs: Any, tables: Any) -> Any:
-    """4 outputs x 64 columns by nibble tables.
-
-    `offsets` has 4 uint16 for each input: where in `tables` the coefficient's two tables of 16 bytes begin.
-    """
-
-    def generate(context: Any, builder: Builder, sig: Any, arguments: Sequence[Value]) -> Value:
-        out, source, offsets, inputs, tables = arguments
-        lanes = shuffle_lanes()
-        low_bits, four = constant_bytes(15, lanes), constant_bytes(4, lanes)
-
-        def nibbles(x: Value) -> tuple[Value, Value]:
-            return builder.and_(x, low_bits), builder.lshr(x, four)
-
-        def products(i: Value, row: int, prepared: list[Any]) -> list[Value]:
-            place = builder.add(offsets, builder.mul(i, I64(2 * TILE_ROWS)))
-            table = builder.add(tables, builder.zext(load(builder, place, I16, 2 * row), I64))
-            low, high = (load(builder, table, byte_vector(16), at) for at in (0, 16))
-            return [
-                builder.xor(shuffle(builder, low, bits), shuffle(builder, high, more_bits))
-                for bits, more_bits in prepared
-            ]
-
-        for column in range(0, TILE_COLUMNS, 2 * lanes):
-            emit_tile(
-                builder,
-                plus(builder, out, column),
-                plus(builder, source, column),
-                inputs,
-                lanes,
-                2,
-                products,
-                nibbles,
-            )
-        return nothing(context)
-
-    return signature(5), generate
 
 
 @intrinsic
@@ -163,19 +123,74 @@ def gfni_tile(typingctx: Any, out: Any, source: Any, matrices: Any, inputs: Any)
 
     def generate(context: Any, builder: Builder, sig: Any, arguments: Sequence[Value]) -> Value:
         out, source, matrices, inputs = arguments
-        lanes = 32
+        kind = byte_vector(32)
 
-        def products(i: Value, row: int, prepared: list[Value]) -> list[Value]:
-            place = builder.add(matrices, builder.mul(i, I64(8 * TILE_ROWS)))
-            matrix = splat(builder, load(builder, place, I64, 8 * row), lanes // 8)
-            matrix = builder.bitcast(matrix, byte_vector(lanes))
-            name = "llvm.x86.vgf2p8affineqb.256"
-            return [call(builder, name, x.type, [x, matrix, I8(0)]) for x in prepared]
+        def multiplied(x: Value, matrix: Value) -> Value:
+            return call(builder, "llvm.x86.vgf2p8affineqb.256", kind, [x, matrix, I8(0)])
 
-        emit_tile(builder, out, source, inputs, lanes, 2, products, lambda x: x)
+        def products(i: Value) -> list[list[Value]]:
+            address = builder.add(source, builder.mul(i, I64(STRIDE)))
+            both = [load(builder, address, kind, at) for at in (0, 32)]
+            address = builder.add(matrices, builder.mul(i, I64(8 * TILE_ROWS)))
+            each = [splat(builder, load(builder, address, I64, 8 * row), 4) for row in range(TILE_ROWS)]
+            return [[multiplied(x, builder.bitcast(matrix, kind)) for x in both] for matrix in each]
+
+        emit_tile(builder, out, inputs, 32, products)
         return nothing(context)
 
     return signature(4), generate
+
+
+@intrinsic
+def split_nibbles(typingctx: Any, target: Any, source: Any) -> Any:
+    """64 columns as vectors of low and of high nibbles in turn."""
+
+    def generate(context: Any, builder: Builder, sig: Any, arguments: Sequence[Value]) -> Value:
+        target, source = arguments
+        lanes = shuffle_lanes()
+        for column in range(0, TILE_COLUMNS, lanes):
+            x = load(builder, source, byte_vector(lanes), column)
+            store(builder, builder.and_(x, constant_bytes(15, lanes)), target, 2 * column)
+            store(builder, builder.lshr(x, constant_bytes(4, lanes)), target, 2 * column + lanes)
+        return nothing(context)
+
+    return signature(2), generate
+
+
+@intrinsic
+def shuffle_tile(typingctx: Any, out: Any, nibbles: Any, offsets: Any, inputs: Any, tables: Any) -> Any:
+    """4 outputs x 64 columns by nibble tables.
+
+    `offsets` has 4 uint16 for each input: where in `tables` the coefficient's two tables of 16 bytes begin.
+    """
+
+    def generate(context: Any, builder: Builder, sig: Any, arguments: Sequence[Value]) -> Value:
+        out, nibbles, offsets, inputs, tables = arguments
+        lanes = shuffle_lanes()
+        kind = byte_vector(lanes)
+
+        def emit_half(column: int) -> None:
+            def products(i: Value) -> list[list[Value]]:
+                address = plus(builder, builder.add(nibbles, builder.mul(i, I64(NIBBLES_SIZE))), 2 * column)
+                split = [[load(builder, address, kind, (2 * v + h) * lanes) for h in (0, 1)] for v in (0, 1)]
+                address = builder.add(offsets, builder.mul(i, I64(2 * TILE_ROWS)))
+                return [multiplied(split, load(builder, address, I16, 2 * row)) for row in range(TILE_ROWS)]
+
+            emit_tile(builder, plus(builder, out, column), inputs, lanes, products)
+
+        def multiplied(split: list[list[Value]], offset: Value) -> list[Value]:
+            table = builder.add(tables, builder.zext(offset, I64))
+            by_low, by_high = (load(builder, table, byte_vector(16), at) for at in (0, 16))
+            return [
+                builder.xor(shuffle(builder, by_low, low), shuffle(builder, by_high, high))
+                for low, high in split
+            ]
+
+        for column in range(0, TILE_COLUMNS, 2 * lanes):
+            emit_half(column)
+        return nothing(context)
+
+    return signature(5), generate
 
 
 @intrinsic
@@ -212,7 +227,7 @@ def add_multiples(typingctx: Any, out: Any, tables: Any, offsets: Any, inputs: A
         kind = byte_vector(TILE_COLUMNS)
         total = variable(builder, load(builder, out, kind))
         with cgutils.for_range(builder, inputs, intp=I64) as loop:
-            table = builder.add(tables, builder.mul(loop.index, I64(32 * TILE_COLUMNS)))
+            table = builder.add(tables, builder.mul(loop.index, I64(MULTIPLES_SIZE)))
             place = builder.add(offsets, builder.mul(loop.index, I64(4)))
             for nibble in range(2):
                 offset = builder.zext(load(builder, place, I16, 2 * nibble), I64)
@@ -283,15 +298,22 @@ def map_shuffle(
     scratch: int,
     tables: int,
 ) -> None:
+    groups = (rows + TILE_ROWS - 1) // TILE_ROWS
     packed = scratch + inputs * STRIDE
+    nibbles = packed + groups * TILE_ROWS * STRIDE
     for start in range(0, length, STRIP):
         width = min(STRIP, length - start)
         pack(scratch, source + start, source_stride, inputs, width)
         begin(packed, out + start, out_stride, rows, width, accumulate)
-        for group in range((rows + TILE_ROWS - 1) // TILE_ROWS):
-            for column in range(0, width, TILE_COLUMNS):
-                target = packed + group * TILE_ROWS * STRIDE + column
-                shuffle_tile(target, scratch + column, offsets + group * group_size, inputs, tables)
+        for column in range(0, width, TILE_COLUMNS):
+            for block in range(0, inputs, NIBBLES_BLOCK):
+                here = min(NIBBLES_BLOCK, inputs - block)
+                for i in range(here):
+                    split_nibbles(nibbles + i * NIBBLES_SIZE, scratch + (block + i) * STRIDE + column)
+                for group in range(groups):
+                    target = packed + group * TILE_ROWS * STRIDE + column
+                    coefficients = offsets + group * group_size + block * 2 * TILE_ROWS
+                    shuffle_tile(target, nibbles, coefficients, here, tables)
         unpack(out + start, out_stride, packed, rows, width)
 
 
@@ -317,11 +339,11 @@ def map_portable(
         pack(scratch, source + start, source_stride, inputs, width)
         begin(packed, out + start, out_stride, rows, width, accumulate)
         for column in range(0, width, TILE_COLUMNS):
-            for block in range(0, inputs, TABLES_BLOCK):
-                here = min(TABLES_BLOCK, inputs - block)
+            for block in range(0, inputs, MULTIPLES_BLOCK):
+                here = min(MULTIPLES_BLOCK, inputs - block)
                 for i in range(here):
                     x = scratch + (block + i) * STRIDE + column
-                    build_multiples(tables + i * 32 * TILE_COLUMNS, x, reduction)
+                    build_multiples(tables + i * MULTIPLES_SIZE, x, reduction)
                 for row in range(rows):
                     coefficients = offsets + row * row_size + block * 4
                     add_multiples(packed + row * STRIDE + column, tables, coefficients, here)

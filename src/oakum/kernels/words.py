@@ -11,7 +11,6 @@ from __future__ import annotations
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 from functools import cache
-from itertools import combinations
 from typing import Any
 
 import numpy as np
@@ -164,11 +163,12 @@ class Leaders:
 @cache
 def leaders(inner: InnerCode) -> Leaders:
     columns = np.array(inner.check_columns, np.uint32).ravel()
-    sets = [
-        flipped for size in range(1, min(inner.t, 2) + 1) for flipped in combinations(range(inner.n), size)
-    ]
-    syndromes = np.array([np.bitwise_xor.reduce(columns[list(flipped)]) for flipped in sets], np.uint32)
-    places = np.array([sum((b + 1) << 8 * i for i, b in enumerate(flipped)) for flipped in sets], np.uint32)
+    numbers = np.arange(1, inner.n + 1, dtype=np.uint32)
+    syndromes, places = columns, numbers
+    if inner.t > 1:
+        i, j = np.triu_indices(inner.n, 1)
+        syndromes = np.concatenate([syndromes, columns[i] ^ columns[j]])
+        places = np.concatenate([places, numbers[i] | numbers[j] << 8])
     buckets = 1 << min(16, 8 * inner.p)
     low_bits = syndromes & np.uint32(buckets - 1)
     order = np.argsort(low_bits, kind="stable")

@@ -21,6 +21,9 @@ Rows = NDArray[np.uint8]
 
 _HEADER = struct.Struct("<Q16sIHH")
 
+SPARE = 4
+"""Check symbols that must be left over for a column to be believed when its frame's checksum disagrees."""
+
 
 @lru_cache(maxsize=1)
 def frame_code() -> OuterCode:
@@ -75,7 +78,7 @@ def correct(frame: Frame, rows: Rows, erased: Rows | None, identity: bytes) -> C
     """Correct a frame from all its rows uint8[240, width] and read what can be read.
 
     Where columns are beyond help, the bytes of the others are still known: each column is a codeword
-    of its own, and with 120 check symbols a wrong one is not accepted by chance.
+    of its own, and with SPARE check symbols left over a wrong one is not accepted by chance.
     """
     from oakum.kernels.columns import ColumnDecoder
 
@@ -85,7 +88,9 @@ def correct(frame: Frame, rows: Rows, erased: Rows | None, identity: bytes) -> C
     whole = read_plain(frame, corrected, identity)
     if whole is not None:
         return whole
-    solved = np.broadcast_to(errors >= 0, (PAYLOAD_ROWS, frame.width)).reshape(-1)
+    lost = np.zeros(frame.width, np.intp) if erased is None else np.count_nonzero(erased, axis=0)
+    sure = (errors >= 0) & (2 * errors.astype(np.intp) + lost <= PAYLOAD_ROWS - SPARE)
+    solved = np.broadcast_to(sure, (PAYLOAD_ROWS, frame.width)).reshape(-1)
     content = slice(FRAME_HEADER, FRAME_HEADER + frame.content)
     flat = corrected.reshape(-1)
     owner = flat[8:24].tobytes()

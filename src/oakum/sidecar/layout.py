@@ -163,6 +163,16 @@ class Layout:
         end = max(self.stretch_start(t) + self.prefix + self.piece_length(t) for t in range(self.stretches))
         return round_up(end, alignment(self.geometry.length))
 
+    def paddings(self) -> Iterator[tuple[int, int]]:
+        """The stretches' bytes that hold nothing and are zeros: (place in the section, bytes)."""
+        for stretch in range(self.stretches):
+            start = self.stretch_start(stretch)
+            before = start + HEAD_BYTES + self.slice_bytes
+            yield before, start + self.prefix - before
+            after = start + self.prefix + self.piece_length(stretch)
+            last = stretch == self.stretches - 1
+            yield after, (self.size if last else start + self.stretch_bytes) - after
+
     def body_extents(self, offset: int, length: int) -> Iterator[tuple[int, int, int]]:
         """Where `length` bytes of the body from `offset` stand: (place in the section, done, bytes)."""
         done = 0

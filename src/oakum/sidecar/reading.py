@@ -10,13 +10,14 @@ import threading
 from collections import Counter, OrderedDict
 from collections.abc import Iterator
 from dataclasses import dataclass, replace
+from functools import cached_property
 from typing import Protocol
 
 import numpy as np
 from numpy.typing import NDArray
 
 from oakum.errors import FormatError
-from oakum.geometry import Geometry
+from oakum.geometry import MAX_LENGTH, Geometry
 from oakum.sidecar.bootstrap import CODED_BYTES, HEAD_BYTES, MARKER, MARKER_ERRORS, Bootstrap, decode, encode
 from oakum.sidecar.frames import (
     FRAME_ROWS,
@@ -30,7 +31,7 @@ from oakum.sidecar.frames import (
     seal,
 )
 from oakum.sidecar.layout import DIGEST_BYTES, FRAME_CONTENT, TEXT_BYTES, Frame, Layout, Track
-from oakum.sidecar.table import Piece, unpack_table
+from oakum.sidecar.table import Piece, packed_length, unpack_table
 from oakum.sidecar.text import page
 
 Fault = tuple[int, int]
@@ -53,12 +54,11 @@ class ByteSource(Protocol):
 
 @dataclass(frozen=True)
 class Head:
-    """A bootstrap record that was found, where its stretch begins, and its number of wrong bits."""
+    """A bootstrap record that was found, and where its stretch begins."""
 
     place: int
     bootstrap: Bootstrap
     layout: Layout
-    wrong_bits: int
 
     @property
     def base(self) -> int:
@@ -137,7 +137,19 @@ class Section:
         if content is None:
             rows, erased = self.rows(frame)
             content = correct(frame, rows, erased, self.bootstrap.identity)
+        if content.known is not None and self._torn.any():
+            torn = np.broadcast_to(np.repeat(self._torn, self.layout.rows)[:, np.newaxis], rows.shape)
+            more = torn.astype(np.uint8) if erased is None else torn | erased
+            second = correct(frame, rows, more, self.bootstrap.identity)
+            if second.known is None or second.known.sum() > content.known.sum():
+                content = second
         return content
+
+    @cached_property
+    def _torn(self) -> NDArray[np.bool_]:
+        """Which stretches have a head that cannot be read: what follows it is likely to be lost too."""
+        starts = [self.base + self.layout.stretch_start(t) for t in range(self.layout.stretches)]
+        return np.array([_read_head(self.source, start) is None for start in starts])
 
     def digests(
         self, track: Track, first: int, count: int
@@ -208,18 +220,22 @@ def find_sections(source: ByteSource) -> list[Section]:
 
 def _head_at(source: ByteSource, place: int) -> Head | None:
     """The head at `place`, if a marker is there and its bootstrap record can be read."""
-    data, _ = source.read(place, HEAD_BYTES)
-    marker = np.frombuffer(MARKER, np.uint8)
-    if int(np.bitwise_count(data[: len(MARKER)] ^ marker).sum()) > MARKER_ERRORS:
+    bootstrap = _read_head(source, place)
+    if bootstrap is None:
         return None
-    found = decode(data[len(MARKER) :].tobytes())
-    if found is None:
-        return None
-    bootstrap, wrong = found
     layout = Layout(bootstrap.geometry, bootstrap.table_length)
     _check(bootstrap, layout, source.size)
-    wrong += int(np.bitwise_count(data[: len(MARKER)] ^ marker).sum())
-    return Head(place, bootstrap, layout, wrong)
+    return Head(place, bootstrap, layout)
+
+
+def _read_head(source: ByteSource, place: int) -> Bootstrap | None:
+    """The bootstrap record of the head at `place`; None where there is no marker or no record."""
+    data, _ = source.read(place, HEAD_BYTES)
+    difference = data[: len(MARKER)] ^ np.frombuffer(MARKER, np.uint8)
+    if int(np.bitwise_count(difference).sum()) > MARKER_ERRORS:
+        return None
+    found = decode(data[len(MARKER) :].tobytes())
+    return None if found is None else found[0]
 
 
 def _check(bootstrap: Bootstrap, layout: Layout, size: int) -> None:
@@ -227,8 +243,9 @@ def _check(bootstrap: Bootstrap, layout: Layout, size: int) -> None:
     plausible = (
         bootstrap.stretches == layout.stretches
         and layout.size <= 4 * size + (1 << 20)
-        and bootstrap.entries * 74 <= bootstrap.table_length
+        and packed_length(b"") * bootstrap.entries <= bootstrap.table_length
         and bootstrap.start + bootstrap.length <= bootstrap.stream_length
+        and max(bootstrap.start, bootstrap.section_offset) <= MAX_LENGTH
     )
     if not plausible:
         raise FormatError("the sidecar's bootstrap record promises more than the sidecar can hold")
@@ -297,14 +314,11 @@ def _plain_parts(section: Section) -> Iterator[tuple[int, bytes]]:
     """All parts of a section that follow from its bootstrap record: (offset, right bytes)."""
     layout = section.layout
     yield 0, page(section.bootstrap, layout)
-    end = 0
     for stretch in range(layout.stretches):
-        start = layout.stretch_start(stretch)
-        yield start, MARKER + encode(replace(section.bootstrap, stretch=stretch).pack())
-        slice_end = start + HEAD_BYTES + layout.slice_bytes
-        yield slice_end, bytes(start + layout.prefix - slice_end)
-        end = start + layout.prefix + layout.piece_length(stretch)
-    yield end, bytes(layout.size - end)
+        head = MARKER + encode(replace(section.bootstrap, stretch=stretch).pack())
+        yield layout.stretch_start(stretch), head
+    for place, length in layout.paddings():
+        yield place, bytes(length)
 
 
 def _seals(section: Section) -> tuple[list[int | None], list[bool]]:

@@ -64,7 +64,8 @@ def packed_length(path: bytes, target: bytes = b"") -> int:
 
 def unpack_table(table: bytes, entries: int, window_length: int) -> tuple[Piece, ...]:
     """Read a whole table. Raises FormatError for whatever a writer would not have written."""
-    pieces, place, covered = [], 0, 0
+    pieces: list[Piece] = []
+    place = covered = 0
     for _ in range(entries):
         if place + _ENTRY.size > len(table):
             raise FormatError("the sidecar's member table ends too early")
@@ -72,8 +73,12 @@ def unpack_table(table: bytes, entries: int, window_length: int) -> tuple[Piece,
         place += size
         covered += piece.length
         pieces.append(piece)
-    if place != len(table) or covered != window_length:
+    # Only the first member may have begun in an earlier window, only the last may go on in the next one.
+    in_order = not any(p.offset for p in pieces[1:]) and all(p.ends for p in pieces[:-1])
+    if place != len(table) or covered != window_length or not in_order:
         raise FormatError("the sidecar's member table does not fit its stream")
+    if len({p.path for p in pieces}) != len(pieces):
+        raise FormatError("the sidecar's member table names a member twice")
     return tuple(pieces)
 
 
@@ -87,10 +92,17 @@ def _unpack_entry(table: bytes, place: int) -> tuple[Piece, int]:
     path = table[at : at + path_size]
     target = table[at + path_size : place + total]
     check_path(path)
-    if size > MAX_LENGTH or offset + length > size or (kind != Kind.FILE and length):
+    ends = bool(flags & PIECE_ENDS)
+    if (
+        size > MAX_LENGTH
+        or offset + length > size
+        or (ends and offset + length != size)
+        or (kind != Kind.FILE and (length or not ends))
+    ):
         raise FormatError("the sidecar's member table gives a member an impossible size")
-    return Piece(Kind(kind), path, mode & 0o7777, modified, size, offset, length, bool(flags & PIECE_ENDS),
-                 digest, target), total  # fmt: skip
+    return Piece(
+        Kind(kind), path, mode & 0o7777, modified, size, offset, length, ends, digest, target
+    ), total
 
 
 def check_path(path: bytes) -> None:

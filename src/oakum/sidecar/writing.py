@@ -124,13 +124,6 @@ class SectionWriter:
         self._sink.write(0, page(bootstrap, layout))
         for stretch in range(layout.stretches):
             head = MARKER + encode(replace(bootstrap, stretch=stretch).pack())
-            start = layout.stretch_start(stretch)
-            self._sink.write(start, head)
-            padding = layout.prefix - len(head) - layout.slice_bytes
-            self._sink.write(start + len(head) + layout.slice_bytes, bytes(padding))
-        end = (
-            layout.stretch_start(layout.stretches - 1)
-            + layout.prefix
-            + layout.piece_length(layout.stretches - 1)
-        )
-        self._sink.write(end, bytes(layout.size - end))
+            self._sink.write(layout.stretch_start(stretch), head)
+        for place, length in layout.paddings():
+            self._sink.write(place, bytes(length))

@@ -4,7 +4,7 @@ from collections.abc import Sequence
 from datetime import UTC, datetime
 
 from oakum.report.terminal import safe
-from oakum.report.text.layout import Section, joined, pairs, paragraph, table
+from oakum.report.text.layout import Section, joined, notes, pairs, paragraph, table
 from oakum.report.text.strength import strength
 from oakum.report.units import counted, exact_size, percent
 from oakum.results import Description, MemberDescription
@@ -29,8 +29,7 @@ def description_text(description: Description) -> str:
             ("blocks", f"{d.blocks:,}"),
         ]
     )
-    notes = [paragraph(safe(note)) for note in d.notes]
-    return joined([paragraph(lead), *notes, facts, _member_table(d.members)])
+    return joined([paragraph(lead), *notes(d.notes), facts, _member_table(d.members)])
 
 
 def _member_table(members: Sequence[MemberDescription]) -> Section:

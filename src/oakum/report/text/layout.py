@@ -4,7 +4,10 @@ import textwrap
 import unicodedata
 from collections.abc import Iterable, Sequence
 
+from oakum.report.terminal import safe
+
 LINE_WIDTH = 79
+FILES_SHOWN = 40
 
 Section = Sequence[str]
 
@@ -12,6 +15,11 @@ Section = Sequence[str]
 def paragraph(text: str) -> list[str]:
     """`text` wrapped into lines; words, and with them paths without blanks, are never broken."""
     return textwrap.wrap(text, LINE_WIDTH, break_long_words=False, break_on_hyphens=False)
+
+
+def notes(texts: Iterable[str]) -> list[list[str]]:
+    """A paragraph for each of a result's notes."""
+    return [paragraph(f"Note: {safe(text)}.") for text in texts]
 
 
 def table(head: Sequence[str], rows: Sequence[Sequence[str]], *, left: Sequence[int] = ()) -> list[str]:
