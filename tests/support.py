@@ -36,7 +36,9 @@ def snapshot(folder: Path) -> dict[str, bytes | str | None]:
     found: dict[str, bytes | str | None] = {}
     for path in sorted(folder.rglob("*")):
         name = path.relative_to(folder).as_posix()
-        found[name] = os.readlink(path) if path.is_symlink() else path.read_bytes() if path.is_file() else None
+        found[name] = (
+            os.readlink(path) if path.is_symlink() else path.read_bytes() if path.is_file() else None
+        )
     return found
 
 
@@ -104,3 +106,28 @@ class BadSectors:
         """Put it in place until the test ends."""
         monkeypatch.setattr(os, "preadv", self)
         return self
+
+
+class Memory:
+    """Bytes in memory as a sidecar reader's source; ranges in `lost` cannot be read."""
+
+    def __init__(self, data: bytes, lost: Iterable[Range] = ()) -> None:
+        self.data = data
+        self.lost = list(lost)
+        self.size = len(data)
+
+    def read(self, offset: int, length: int) -> tuple[np.ndarray, list[Range]]:
+        """uint8[length] from `offset`, zeros where there is nothing, and those places, in order."""
+        out = np.zeros(length, np.uint8)
+        a, b = min(max(0, -offset), length), max(0, min(length, self.size - offset))
+        faults = [(0, a)] if a else []
+        if a < b:
+            out[a:b] = np.frombuffer(self.data[offset + a : offset + b], np.uint8)
+        for start, stop in self.lost:
+            start, stop = max(start - offset, a), min(stop - offset, b)
+            if start < stop:
+                out[start:stop] = 0
+                faults.append((start, stop))
+        if b < length:
+            faults.append((max(a, b), length))
+        return out, faults

@@ -20,7 +20,7 @@ from numpy.typing import NDArray
 
 from oakum.algebra.concatenated import ConcatenatedCode
 from oakum.digests import cell_digests
-from oakum.errors import CannotCheck
+from oakum.errors import UsageError
 from oakum.geometry import CELL, Geometry, Run, round_up
 from oakum.kernels.stripmap import StripMap
 from oakum.kernels.words import WordCodec
@@ -73,7 +73,7 @@ class ReadingPlan:
 def plan_reading(geometry: Geometry, memory: int) -> ReadingPlan:
     """Choose one read or two so that all buffers fit into `memory` bytes.
 
-    Raises CannotCheck when not even the smallest buffers fit.
+    Raises UsageError when not even the smallest buffers fit.
     """
     depth = max(geometry.depth, 1)
     free = memory - RESERVE
@@ -85,7 +85,7 @@ def plan_reading(geometry: Geometry, memory: int) -> ReadingPlan:
         columns = round_up(columns // 2, CELL)
     strips = (free - geometry.r * columns) // (2 * columns)
     if strips < 1:
-        raise CannotCheck(f"--memory {memory} is too little for this code; give at least 64 MiB")
+        raise UsageError(f"--memory {memory} is too little for this code; give at least 64 MiB")
     return ReadingPlan(2, min(strips, BATCH, geometry.k), columns)
 
 

@@ -179,7 +179,7 @@ class Geometry:
         return strip * self.depth + block * CELL + self.width(block)
 
     def chunks(self, size: int) -> Iterator[tuple[int, int]]:
-        """Ranges (start, stop) of at most `size` bytes, all ends of cells, that make up the window's cells."""
+        """Ranges (start, stop) of at most `size` bytes, all ends of cells, that make up the window."""
         start, end = 0, self.cells_end
         while start < end:
             stop = min(end, start + size)

@@ -44,6 +44,10 @@ def collect(paths: Sequence[Path], root: Path) -> tuple[list[Member], list[str]]
     members: list[Member] = []
     notes: list[str] = []
     for path in paths:
+        if path.exists() and not (path.is_file() or path.is_dir() or path.is_symlink()):
+            raise UsageError(
+                f"{path} is neither a file, a folder nor a link; name something that can be kept"
+            )
         members += _walk(os.fsencode(path), os.fsencode(root), notes)
     if len({m.path for m in members}) != len(members):
         raise UsageError("a path was given twice, or a folder and something inside it; name each file once")

@@ -56,13 +56,13 @@ class Totals:
 
 @dataclass(frozen=True)
 class BlockReport:
-    """One damaged block. `margin` is a fraction of r; None when the block is uncorrectable."""
+    """One damaged block. `margin` is a fraction of r; it and the counts are None when it is uncorrectable."""
 
     window: int
     block: int
     state: Outcome
-    bits_flipped: int
-    symbols_wrong: int
+    bits_flipped: int | None
+    symbols_wrong: int | None
     bytes_erased: int
     margin: float | None
 

@@ -60,9 +60,7 @@ def test_one_read_and_two_give_the_same(tmp_path: Path, code: str, length: int) 
 @pytest.mark.parametrize("length", [0, 1, 100, 160 << 10, (160 << 10) + 1, 700_000])
 def test_a_pipe_and_a_file_are_repaired_alike(tmp_path: Path, length: int) -> None:
     data = content(length)
-    result = protect_pipe(
-        io.BytesIO(data), name="f", output=tmp_path / "f.oakum", code=SMALL, depth=4096
-    )
+    result = protect_pipe(io.BytesIO(data), name="f", output=tmp_path / "f.oakum", code=SMALL, depth=4096)
     assert (result.stream_bytes, result.windows) == (length, max(1, -(-length // (160 << 10))))
     (tmp_path / "f").write_bytes(data)
     assert verify(tmp_path / "f").outcome is Outcome.INTACT

@@ -304,7 +304,7 @@ def test_same_as_reedsolo(outer: OuterCode) -> None:
         assert bytes(whole) == (received ^ magnitudes)[:, c].tobytes()
 
 
-@pytest.mark.parametrize("outer", [CCSDS, OuterCode(100, 84)], ids=str)
+@pytest.mark.parametrize("outer", [SHELF, OuterCode(100, 84)], ids=str)
 def test_same_as_galois(outer: OuterCode) -> None:
     """Up to t errors the same words; with t + 1 both refuse. Its counts are not looked at."""
     galois = pytest.importorskip("galois")

@@ -102,7 +102,9 @@ def mended(record: bytes) -> bytes:
 def test_a_newer_version_is_named() -> None:
     packed = bytearray(bootstrap().pack())
     packed[6] = 2
-    with pytest.raises(FormatError, match="format version 2, this program reads up to 1; use a newer release"):
+    with pytest.raises(
+        FormatError, match="format version 2, this program reads up to 1; use a newer release"
+    ):
         unpack(mended(bytes(packed)))
     with pytest.raises(FormatError, match="version 2"):
         decode(encode(mended(bytes(packed))))

@@ -40,6 +40,7 @@ from oakum.decoding.trials import (
 from oakum.geometry import Geometry
 from oakum.kernels.columns import ColumnDecoder
 from oakum.kernels.doubts import doubts
+from oakum.kernels.doubts_kernels import weigh_words
 from oakum.kernels.words import FLAGGED, WordCodec
 
 Bytes = NDArray[np.uint8]
@@ -54,6 +55,9 @@ ROUNDS = 200
 
 PATIENCE = 4
 """Times in a row that random trials may fail before the block is left as it is."""
+
+MOST_CHASES = 100
+"""Times that random trials are made on one block at the most, which bounds its time to some seconds."""
 
 
 class BlockSource(Protocol):
@@ -89,8 +93,12 @@ class Decoders:
 
     @staticmethod
     def of(code: ConcatenatedCode) -> Decoders:
-        """Prepare the decoders of a code."""
-        return Decoders(code, WordCodec(code.inner), ColumnDecoder(code.outer))
+        """Prepare the decoders of a code; what has to be compiled is compiled now."""
+        words, columns = WordCodec(code.inner), ColumnDecoder(code.outer)
+        for codec in (words, columns):
+            codec.prepare()
+        weigh_words.prepare()
+        return Decoders(code, words, columns)
 
 
 @dataclass
@@ -231,13 +239,14 @@ class _Block:
         self.strict = np.zeros(self.width, bool)
         self.tried_as_received, self.tried_erasures = _Seen(), _Seen()
         self.flip_rate = self._estimate_flip_rate()
+        self.chases = MOST_CHASES
         self.random = np.random.default_rng(self.source.number)  # Decoding twice gives the same twice.
 
     def _estimate_flip_rate(self) -> float:
         """The rate of scattered flips, by the share of words without any among those outside bursts."""
         words = self.status[self.status < UNUSABLE - 1]
         words = np.concatenate([words, self.status[self.status == FLAGGED]])
-        clean = max(np.count_nonzero(words == 0), 1) / max(len(words), 1)
+        clean = (np.count_nonzero(words == 0) or 1) / (len(words) or 1)
         return float(1 - clean ** (1 / max(self.d.code.inner.n, 8)))
 
     def _erase_all(self) -> bool:
@@ -255,7 +264,8 @@ class _Block:
         if not agree.all() or (self.given[rows] & (magnitudes != 0)).any():
             return False
         if any(
-            self.digested[row] and not self._agrees(row, cell) for row, cell in zip(rows, cells, strict=True)
+            self.digested[row] and not self._agrees(row, cell)
+            for row, cell in zip(rows.tolist(), cells, strict=True)
         ):
             return False
         for row, cell in zip(rows.tolist(), cells, strict=True):
@@ -272,7 +282,7 @@ class _Block:
         return _Posed(places, known, symbols, fixed, late, self.d.columns.syndromes(symbols))
 
     def _try_as_received(self) -> int:
-        """Decode the unsolved columns with nothing erased but what is known to be bad. Returns how many are solved.
+        """Decode the unsolved columns, erasing only what is known to be bad. Returns how many are solved.
 
         Most columns that can be solved at all are solved so, and what they pin makes all further trials
         better: those wait until this does little.
@@ -374,7 +384,7 @@ class _Block:
         return suspects
 
     def _chances(self, doubtful: Strips, errors: NDArray[np.int16], erased: Bytes) -> NDArray[np.float64]:
-        """Log of the chance that random words pass for what was found, for columns with `doubtful` open symbols."""
+        """Log of the chance that random words pass for what was found; `doubtful` counts open symbols."""
         erasures = np.count_nonzero(erased, axis=0)
         wrong = np.maximum(errors, 0).astype(np.intp)
         return chance_of_acceptance(np.maximum(doubtful - erasures, 0), wrong, self.g.r - erasures)
@@ -429,8 +439,11 @@ class _Block:
         solved = self._try_as_received()
         if solved < many:
             solved += self._try_erasures()
-        for _ in range(PATIENCE if self.d.feedback and self.d.later_trials else 0):
-            solved = solved or self._chase()
+        for _ in range(PATIENCE):
+            if solved or not self.chases or not (self.d.feedback and self.d.later_trials):
+                break
+            self.chases -= 1
+            solved = self._chase()
         return solved
 
     def _contradicted(self) -> bool:
@@ -476,7 +489,7 @@ class _Block:
 
 @dataclass(frozen=True)
 class _Posed:
-    """Unsolved columns as a problem: their numbers, what is known, symbols of all n strips, which are fixed."""
+    """Unsolved columns as a problem: their numbers, what is known, the symbols of all n strips."""
 
     places: Strips
     known: Reliability
@@ -488,7 +501,7 @@ class _Posed:
     @cached_property
     def doubtful(self) -> Strips:
         """How many symbols of each column may be wrong."""
-        return np.count_nonzero(~self.fixed, axis=0)
+        return np.asarray(np.count_nonzero(~self.fixed, axis=0))
 
 
 class _Seen:
@@ -509,7 +522,7 @@ class _Seen:
 
 
 def burst_bytes(flips: Bytes) -> Mask:
-    """Which wrong bytes of each row of `flips` lie in a burst (clusters are not followed into other cells)."""
+    """Which wrong bytes of each row of `flips` lie in a burst (seen within the cell alone)."""
     inside = np.zeros(flips.shape, bool)
     rows, places = np.nonzero(flips)
     if not len(places):

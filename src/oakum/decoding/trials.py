@@ -35,7 +35,7 @@ USABLE = float(np.log(1e-4))
 """Log of the chance below which such a column is used until something speaks against it."""
 
 THRESHOLDS = (0.5, 0.4, 0.32, 0.25, 0.2, 0.15, 0.1)
-"""Chances of being wrong from which symbols are erased. Above a half, erasing is the better choice on average."""
+"""Chances of being wrong from which symbols are erased. Above a half, erasing is better on average."""
 
 CHASE_COLUMNS = 4096
 """Trials of random erasures made at a time, shared out among the columns."""
@@ -107,7 +107,8 @@ def chase_sets(known: Reliability, count: int, random: np.random.Generator) -> M
     wrong symbol gains one, erasing two wrong ones gains two, a right one loses one.
     """
     base = known.erased | (known.doubts >= 255 * THRESHOLDS[0])
-    weights = np.where(base | ~known.open, np.float32(1e-9), known.doubts.astype(np.float32) + np.float32(0.01))
+    weights = known.doubts.astype(np.float32) + np.float32(0.01)
+    weights[base | ~known.open] = 1e-9
     rows, columns = base.shape
     # The greatest of log weight + Gumbel noise are a sample without replacement (Efraimidis and Spirakis).
     noise = np.maximum(random.standard_exponential((rows, columns, count), np.float32), np.float32(1e-30))

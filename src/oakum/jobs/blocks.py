@@ -130,7 +130,7 @@ def _data_finding(window: WindowCheck, outcome: BlockOutcome, *, keep: bool) -> 
 
 def _best(outcome: BlockOutcome, row: int) -> Bytes:
     """A cell as far as it is known: corrected where that is sure, as received elsewhere."""
-    return np.where(outcome.known[row], outcome.right[row], outcome.received[row])
+    return np.asarray(np.where(outcome.known[row], outcome.right[row], outcome.received[row]))
 
 
 def _add_parity_strips(g: Geometry, outcome: BlockOutcome, finding: Finding) -> None:
@@ -151,7 +151,9 @@ def _add_inner_parity(
         return
     cells, lost = block.rows(suspects)
     rows_of = {int(strip): row for row, strip in enumerate(outcome.strips)}
-    sure = np.ones(len(suspects), bool) if lost is None else ~lost.any(axis=1)
+    sure = np.ones(len(suspects), bool)
+    if lost is not None:
+        sure[lost.any(axis=1)] = False
     for i, strip in enumerate(suspects.tolist()):
         if block.states[strip] != RIGHT:
             cells[i], sure[i] = outcome.right[rows_of[strip]], outcome.finished[rows_of[strip]]

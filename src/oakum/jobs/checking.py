@@ -519,10 +519,9 @@ class WindowCheck:
 
     def dirty_blocks(self) -> list[int]:
         """Blocks with a cell that is not right, or with inner parity to be looked at."""
-        strips, blocks = (
-            np.divmod(np.flatnonzero(self.data != RIGHT), self.g.blocks) if self.g.blocks else ([], [])
-        )
-        dirty = set(np.unique(blocks).tolist()) | set(
+        if not self.g.blocks:
+            return []
+        dirty = set(np.unique(np.flatnonzero(self.data != RIGHT) % self.g.blocks).tolist()) | set(
             np.flatnonzero((self.parity != RIGHT).any(axis=1)).tolist()
         )
         return sorted(dirty | set(self.inner_suspects))

@@ -8,10 +8,18 @@ from pathlib import Path
 
 from oakum.algebra.concatenated import ConcatenatedCode
 from oakum.errors import CannotCheck, UsageError
+from oakum.progress import Progress
 from oakum.results import CodeSummary
 
 SUFFIX = ".oakum"
 DEFAULT_MEMORY = 512 << 20
+
+
+def announce_compiling(progress: Progress) -> None:
+    """Let the user know when the compiled loops have to be made first, which takes some seconds."""
+    from oakum.kernels import compiling
+
+    compiling.on_compile = progress.note
 
 
 def summarise(code: ConcatenatedCode) -> CodeSummary:

@@ -23,8 +23,9 @@ def describe(sidecar: Path) -> Description:
         full = sections[:-1] or sections
         return Description(
             path, first.version, first.set_identity.hex(), summarise(first.code.code()),
-            last.start + last.length, source.size, first.depth, len(sections), sum(s.geometry.blocks for s in sections),
-            min(s.geometry.guaranteed_burst for s in full), tuple(members), tuple(notes),
+            last.start + last.length, source.size, first.depth, len(sections),
+            sum(s.geometry.blocks for s in sections), min(s.geometry.guaranteed_burst for s in full),
+            tuple(members), tuple(notes),
         )  # fmt: skip
 
 

@@ -19,7 +19,14 @@ from oakum.encoding import RESERVE, Changed, Kernels, ReadingPlan, Unreadable, W
 from oakum.errors import CannotCheck, OakumError, UsageError
 from oakum.files import Fault, NewFile
 from oakum.geometry import Geometry, Window, check_depth, plan_windows, window_depth
-from oakum.jobs.common import DEFAULT_MEMORY, absolute, members_root, sidecar_path, summarise
+from oakum.jobs.common import (
+    DEFAULT_MEMORY,
+    absolute,
+    announce_compiling,
+    members_root,
+    sidecar_path,
+    summarise,
+)
 from oakum.members import Folder, Member, MemberHasher, MemberStream, Span, collect
 from oakum.pools import Pools
 from oakum.progress import Progress, Silent
@@ -52,6 +59,7 @@ def protect(
     written; in both cases nothing is left behind and an older sidecar is untouched.
     """
     begin = time.monotonic()
+    announce_compiling(progress)
     chosen = resolve_code(code)
     if not paths:
         raise UsageError("name at least one file or folder to protect")
@@ -100,6 +108,7 @@ def protect_pipe(
     Errors as in `protect`.
     """
     begin = time.monotonic()
+    announce_compiling(progress)
     chosen = resolve_code(code)
     path = _pipe_member(name)
     job = _PipeJob(chosen, path, check_depth(depth), memory, progress)
@@ -319,7 +328,7 @@ class _PipeJob:
         self.length = self.windows = self.burst = self.last_depth = 0
         try:
             plan_reading(_geometry(code, Window(0, 0, step, depth)), self._memory)
-        except CannotCheck:
+        except UsageError:
             need = (memory - self._memory + (code.outer.r + 32) * depth + RESERVE) >> 20
             raise UsageError(
                 f"windows of a depth of {depth} bytes need --memory {need}MiB or more; "

@@ -70,8 +70,8 @@ class Tally:
                 finding.window,
                 finding.block,
                 state,
-                bits,
-                len(finding.places),
+                bits if finding.correctable else None,
+                len(finding.places) if finding.correctable else None,
                 finding.erased,
                 finding.margin if finding.correctable else None,
             )

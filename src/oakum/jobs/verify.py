@@ -11,7 +11,7 @@ from typing import TYPE_CHECKING
 from oakum.algebra.concatenated import ConcatenatedCode
 from oakum.errors import FormatError
 from oakum.jobs.checking import KnownMember, ProtectedSet, WindowCheck, open_set
-from oakum.jobs.common import DEFAULT_MEMORY, find_sidecar, summarise
+from oakum.jobs.common import DEFAULT_MEMORY, announce_compiling, find_sidecar, summarise
 from oakum.jobs.unreadable import read_unreadable
 from oakum.members import MemberHasher
 from oakum.pools import Pools
@@ -74,6 +74,7 @@ class SetCheck:
         if self._decoders is None:
             from oakum.decoding.block import Decoders
 
+            announce_compiling(self.progress)
             self._decoders = Decoders.of(self.code)
         return self._decoders
 

@@ -38,6 +38,10 @@ class ColumnDecoder:
         self._foreign = outer.field_poly != FIELD.poly
         self._solver = lru_cache(maxsize=64)(self._build_solver)
 
+    def prepare(self) -> None:
+        """Compile, or load, everything that the methods need, in the calling thread."""
+        decode_columns.prepare()
+
     def syndromes(self, received: Bytes) -> Bytes:
         """The syndromes uint8[r, L] of the columns of `received`, uint8[n, L]. ValueError on other shapes."""
         _check_rows(received, "received", self.outer.n)

@@ -97,7 +97,7 @@ def tables(inner: InnerCode, rate: float) -> Floats:
 
 
 def gives_known_doubts(compiled: Callable[..., Any]) -> bool:
-    """Whether a word with two flips in its only open byte, and one with a corrected flip, are weighed right."""
+    """Whether two flips in the only open byte of a word, and a corrected flip, are weighed right."""
     inner = InnerCode("EH", 15, 1)
     columns, bit_of = _columns(inner)
     received = np.zeros((2, 15), np.uint8)

@@ -37,9 +37,9 @@ def count_pairs(
     syndrome: int, first: int, size: int, width: int, pinned: Bytes, columns: NDArray[np.uint32],
     bit_of: NDArray[np.int16], touched: Floats,
 ) -> float:  # fmt: skip
-    """The number of pairs of flips that explain a syndrome and touch only open bytes, and how many touch each.
+    """The number of pairs of flips in open bytes that explain a syndrome, and how many touch each byte.
 
-    -1 for a syndrome of odd weight, which no pair explains. Parity bits, behind the message's, are always open.
+    -1 for a syndrome of odd weight, which no pair explains. Parity bits, the last eight, are always open.
     """
     parity_first = len(columns) - 8
     weight = 0
@@ -72,13 +72,14 @@ def count_pairs(
     purpose="the inner code",
 )
 def weigh_words(
-    received: Bytes, corrected: Bytes, pinned: Bytes, status: Bytes, syndromes: Bytes, staggers: NDArray[np.int64],
-    m: int, p: int, columns: NDArray[np.uint32], bit_of: NDArray[np.int16], tables: Floats, doubts: Bytes,
+    received: Bytes, corrected: Bytes, pinned: Bytes, status: Bytes, syndromes: Bytes,
+    staggers: NDArray[np.int64], m: int, p: int, columns: NDArray[np.uint32],
+    bit_of: NDArray[np.int16], tables: Floats, doubts: Bytes,
 ) -> None:  # fmt: skip
     """Write the chance, times 255, that each byte of `corrected` is wrong into doubts[R, W].
 
-    `tables` as from `doubts.tables`; `bit_of` gives the bit of a word whose check column is a value (-1: none)
-    and has entries only for p = 1, where pairs of flips are counted one by one.
+    `tables` as from `doubts.tables`; `bit_of` gives the bit whose check column is a value (-1: none) and has
+    entries only for p = 1, where pairs of flips are counted one by one.
     """
     touched = np.zeros(16, np.float32)
     rows, width = received.shape
@@ -115,4 +116,6 @@ def weigh_words(
                     chance = (touched[t] + others * tables[-1, open_bytes]) / (pairs + others)
                 elif received[row, place] != corrected[row, place]:
                     chance = at_flip
-                doubts[row, place] = np.uint8(min(255.0, chance * 255.0 + 0.5))
+                doubts[row, place] = np.uint8(
+                    min(np.float32(255), chance * np.float32(255) + np.float32(0.5))
+                )

@@ -3,8 +3,8 @@
 A *lane block* holds one field element for each of 256 columns (lanes) as eight planes of 256 bits: bit l of
 plane b is bit b of lane l's element. Blocks are the rows of arrays uint64[rows, 32]; plane b is words 4b to
 4b + 3, and lane l is bit l % 64 of word l // 64. In this form adding is one XOR a plane, and multiplying is
-the schoolbook product of two polynomials over GF(2), an AND for each pair of planes: any CPU does both on its
-widest registers, without tables and without branches (Biham 1997, for the idea).
+the product of two polynomials over GF(2), made of ANDs and XORs of planes: any CPU does both on its widest
+registers, without tables and without branches (Biham 1997, for the idea).
 
 The field is that of 0x11D. The other fields of 256 elements are isomorphic to it: see `field_map`.
 
@@ -36,7 +36,7 @@ NONE, ONE, ALL = np.uint64(0), np.uint64(1), np.uint64(0xFFFF_FFFF_FFFF_FFFF)
 
 def subroutine(function: Callable[..., Any]) -> Callable[..., Any]:
     """Marks a function that only kernels call: without the entries for Python, it compiles faster."""
-    return numba.njit(no_cpython_wrapper=True, no_cfunc_wrapper=True)(function)  # type: ignore[no-any-return, call-overload]
+    return numba.njit(no_cpython_wrapper=True, no_cfunc_wrapper=True)(function)  # type: ignore[no-any-return]
 
 
 def field_map(poly: int) -> Bytes:

@@ -52,7 +52,7 @@ def check_rows(rows: Rows) -> Rows:
 
 def seal(check: Rows) -> int:
     """The digest that stands among the seals for a frame's check rows."""
-    return int(xxhash.xxh3_64_intdigest(np.ascontiguousarray(check)))
+    return int(xxhash.xxh3_64_intdigest(np.ascontiguousarray(check).data))
 
 
 @dataclass(frozen=True)

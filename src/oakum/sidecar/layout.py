@@ -13,7 +13,7 @@ from dataclasses import dataclass
 from enum import IntEnum
 from functools import cached_property
 
-from oakum.geometry import CELL, LARGE, SMALL, Geometry, alignment, round_up
+from oakum.geometry import CELL, SMALL, Geometry, alignment, round_up
 from oakum.sidecar.bootstrap import HEAD_BYTES
 
 TEXT_BYTES = 4096
@@ -23,6 +23,8 @@ FRAME_WIDTH = 4096
 FRAME_HEADER = 32
 FRAME_CONTENT = PAYLOAD_ROWS * FRAME_WIDTH - FRAME_HEADER
 DIGEST_BYTES = 8
+MANY = 128 << 20
+"""From this window length on a section has 48 stretches; below, rounding so many would cost too much."""
 
 
 class Track(IntEnum):
@@ -45,7 +47,7 @@ CELL_TRACKS = (Track.DATA, Track.INNER, Track.PARITY, Track.PARITY_INNER)
 
 def stretches_for(length: int) -> int:
     """How many stretches the section of a window of `length` bytes has."""
-    return 4 if length < SMALL else 16 if length < LARGE else 48
+    return 4 if length < SMALL else 16 if length < MANY else 48
 
 
 @dataclass(frozen=True)

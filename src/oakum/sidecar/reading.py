@@ -19,18 +19,17 @@ from numpy.typing import NDArray
 from oakum.errors import FormatError
 from oakum.geometry import MAX_LENGTH, Geometry
 from oakum.sidecar.bootstrap import CODED_BYTES, HEAD_BYTES, MARKER, MARKER_ERRORS, Bootstrap, decode, encode
-from oakum.sidecar.frames import (
+from oakum.sidecar.frames import Content, Rows, check_rows, correct, payload, read_plain, seal
+from oakum.sidecar.layout import (
+    DIGEST_BYTES,
+    FRAME_CONTENT,
     FRAME_ROWS,
     PAYLOAD_ROWS,
-    Content,
-    Rows,
-    check_rows,
-    correct,
-    payload,
-    read_plain,
-    seal,
+    TEXT_BYTES,
+    Frame,
+    Layout,
+    Track,
 )
-from oakum.sidecar.layout import DIGEST_BYTES, FRAME_CONTENT, TEXT_BYTES, Frame, Layout, Track
 from oakum.sidecar.table import Piece, packed_length, unpack_table
 from oakum.sidecar.text import page
 
@@ -166,7 +165,7 @@ class Section:
             values[done : done + size] = np.frombuffer(content.data, "<u8", size, inside * DIGEST_BYTES)
             if content.known is not None:
                 known = np.ones(count, bool) if known is None else known
-                whole = content.known.reshape(-1, DIGEST_BYTES).all(axis=1)
+                whole = np.asarray(content.known.reshape(-1, DIGEST_BYTES).all(axis=1))
                 known[done : done + size] = whole[inside : inside + size]
             done += size
         return values, known

@@ -100,9 +100,7 @@ def _unpack_entry(table: bytes, place: int) -> tuple[Piece, int]:
         or (kind != Kind.FILE and (length or not ends))
     ):
         raise FormatError("the sidecar's member table gives a member an impossible size")
-    return Piece(
-        Kind(kind), path, mode & 0o7777, modified, size, offset, length, ends, digest, target
-    ), total
+    return Piece(Kind(kind), path, mode & 0o7777, modified, size, offset, length, ends, digest, target), total
 
 
 def check_path(path: bytes) -> None:

@@ -116,7 +116,7 @@ class SectionWriter:
         rows[:PAYLOAD_ROWS] = payload(frame, content, identity)
         rows[PAYLOAD_ROWS:] = check_rows(rows[:PAYLOAD_ROWS])
         for place, first in self._layout.slice_extents(frame):
-            self._sink.write(place, memoryview(rows[first : first + self._layout.rows]).cast("B"))
+            self._sink.write(place, rows[first : first + self._layout.rows].data.cast("B"))
         return seal(rows[PAYLOAD_ROWS:])
 
     def _write_heads(self, bootstrap: Bootstrap) -> None:

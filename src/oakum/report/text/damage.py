@@ -68,17 +68,15 @@ def _block_row(block: BlockReport) -> Sequence[str]:
         f"{block.window:,}",
         f"{block.block:,}",
         "none" if block.margin is None else percent(block.margin),
-        _known(block.bits_flipped, block),
-        _known(block.symbols_wrong, block),
+        _known(block.bits_flipped),
+        _known(block.symbols_wrong),
         f"{block.bytes_erased:,}",
     )
 
 
-def _known(count: int, block: BlockReport) -> str:
-    """Of a block beyond correction only that is known which the earlier steps brought out."""
-    if block.margin is not None:
-        return f"{count:,}"
-    return f"at least {count:,}" if count else "unknown"
+def _known(count: int | None) -> str:
+    """A count, where there is one."""
+    return "unknown" if count is None else f"{count:,}"
 
 
 def members(all_members: Sequence[MemberReport]) -> Section:

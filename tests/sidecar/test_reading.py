@@ -1,0 +1,322 @@
+"""Finding sections and reading records, whole, damaged and hostile. Sidecars here are bytes in memory."""
+
+from __future__ import annotations
+
+import io
+import struct
+from collections.abc import Iterable
+from dataclasses import fields, replace
+
+import numpy as np
+import pytest
+import xxhash
+from hypothesis import given, settings
+from hypothesis import strategies as st
+from support import Memory, Range, content, overwritten, with_flips
+
+from oakum import FormatError, protect_pipe
+from oakum.sidecar.bootstrap import MARKER, RECORD_BYTES, Bootstrap, CodeParameters, encode, unpack
+from oakum.sidecar.layout import HEAD_BYTES, TEXT_BYTES, Track
+from oakum.sidecar.reading import Section, examine_records, find_marker, find_sections
+
+CODE = "RS(60,40)+EH(128,120)"
+WINDOW = 40 * 4096
+
+
+def pipe(data: bytes, code: str = CODE) -> bytes:
+    out = io.BytesIO()
+    protect_pipe(io.BytesIO(data), name="f", output=out, code=code, depth=4096)
+    return out.getvalue()
+
+
+ONE = pipe(content(WINDOW))
+"""One section of 16 stretches."""
+
+FIVE = pipe(content(4 * WINDOW + 1000))
+"""Four sections of 16 stretches and a last one of 4."""
+
+
+def windows(data: bytes, lost: Iterable[Range] = ()) -> list[int]:
+    return [s.bootstrap.window for s in find_sections(Memory(data, lost))]
+
+
+def only(data: bytes, lost: Iterable[Range] = ()) -> Section:
+    (section,) = find_sections(Memory(data, lost))
+    return section
+
+
+FIRST = only(ONE)
+BASES = [s.base for s in find_sections(Memory(FIVE))]
+
+
+# -- finding --------------------------------------------------------------------------------------------------
+
+
+def test_whole_sidecars() -> None:
+    assert windows(ONE) == [0]
+    assert windows(FIVE) == [0, 1, 2, 3, 4]
+    sections = find_sections(Memory(FIVE))
+    assert [s.base for s in sections[1:]] == [s.end for s in sections[:-1]]
+    assert sections[-1].end == len(FIVE)
+    assert [s.bootstrap.section_offset for s in sections] == BASES
+    assert [s.bootstrap.last for s in sections] == [False] * 4 + [True]
+    assert all(not examine_records(s) for s in sections)
+
+
+def test_sections_form_a_chain() -> None:
+    sections = find_sections(Memory(FIVE))
+    assert [s.bootstrap.parent for s in sections] == [bytes(16)] + [
+        s.bootstrap.identity for s in sections[:-1]
+    ]
+    assert {s.bootstrap.set_identity for s in sections} == {sections[0].bootstrap.identity}
+
+
+@pytest.mark.parametrize("kept", range(16))
+def test_one_head_of_sixteen_is_enough(kept: int) -> None:
+    hurt = bytearray(ONE)
+    for t in range(16):
+        if t != kept:
+            start = FIRST.layout.stretch_start(t)
+            hurt[start : start + HEAD_BYTES] = content(HEAD_BYTES, t)
+    section = only(bytes(hurt))
+    assert (section.base, section.bootstrap) == (0, FIRST.bootstrap)
+    assert section.table() == FIRST.table()
+
+
+@pytest.mark.parametrize("size", [1, 100, TEXT_BYTES, 5000, len(ONE) // 2])
+def test_the_front_is_missing(size: int) -> None:
+    section = only(ONE[size:])
+    assert (section.base, section.bootstrap) == (-size, FIRST.bootstrap)
+
+
+@pytest.mark.parametrize("size", [1, 4095, 100_000, (1 << 20) - 3, (1 << 20) + 5])
+def test_bytes_inserted_before(size: int) -> None:
+    section = only(content(size) + ONE)
+    assert (section.base, section.bootstrap) == (size, FIRST.bootstrap)
+    assert section.table() == FIRST.table()
+    assert windows(content(size) + FIVE) == [0, 1, 2, 3, 4]
+
+
+@pytest.mark.parametrize("end", [BASES[1], BASES[1] + 5000, BASES[4], len(FIVE) - 1])
+def test_the_end_is_cut(end: int) -> None:
+    expected = [w for w, base in enumerate(BASES) if base + TEXT_BYTES + HEAD_BYTES <= end]
+    assert windows(FIVE[:end]) == expected
+
+
+@pytest.mark.parametrize("gone", [0, 1, 2, 3])
+def test_a_section_that_is_lost_takes_no_other_with_it(gone: int) -> None:
+    start, length = BASES[gone], BASES[gone + 1] - BASES[gone]
+    rest = [w for w in range(5) if w != gone]
+    assert windows(overwritten(FIVE, start, length)) == rest
+    assert windows(FIVE[:start] + bytes(length) + FIVE[start + length :]) == rest
+    assert windows(FIVE, [(start, start + length)]) == rest
+    assert windows(FIVE[:start] + FIVE[start + length :]) == rest
+
+
+@given(st.integers(0, 1000))
+@settings(max_examples=20)
+def test_flips_everywhere(seed: int) -> None:
+    """One bit in two hundred is wrong: all sections and the table are still there."""
+    hurt = with_flips(FIVE, len(FIVE) * 8 // 200, seed)
+    sections = find_sections(Memory(hurt))
+    assert [s.bootstrap.window for s in sections] == [0, 1, 2, 3, 4]
+    assert [s.table() for s in sections] == [s.table() for s in find_sections(Memory(FIVE))]
+
+
+def test_sections_of_another_set_are_left_out() -> None:
+    other = pipe(content(3 * WINDOW, 9))
+    start, stop = BASES[1], BASES[2]
+    foreign = find_sections(Memory(other))[1]
+    mixed = FIVE[:start] + other[foreign.base : foreign.end] + FIVE[stop:]
+    assert windows(mixed) == [0, 2, 3, 4]
+
+
+@pytest.mark.parametrize(
+    "data", [b"", b"x", content(3_000_000), bytes(100_000), MARKER * 5000, b"\xff" * 9999]
+)
+def test_nothing_to_be_found(data: bytes) -> None:
+    with pytest.raises(FormatError, match="not an oakum sidecar"):
+        find_sections(Memory(data))
+
+
+def test_false_positives_of_the_marker_are_passed_over() -> None:
+    """Markers that no record follows, and a record that a marker does not begin, mislead nobody."""
+    fakes = b"".join(MARKER + content(600, i) for i in range(50))
+    assert only(fakes + ONE).base == len(fakes)
+
+
+# -- the marker -------------------------------------------------------------------------------------------------
+
+
+def test_marker_is_found_with_up_to_ten_wrong_bits() -> None:
+    rng = np.random.default_rng(7)
+    for count in (0, 1, 10, 11, 12):
+        data = np.zeros(500, np.uint8)
+        data[200:208] = np.frombuffer(with_flips(MARKER, count, int(rng.integers(1000))), np.uint8)
+        assert (200 in find_marker(data)) == (count <= 10)
+
+
+def test_marker_at_both_ends_and_in_too_little() -> None:
+    mark = np.frombuffer(MARKER, np.uint8)
+    assert find_marker(mark).tolist() == [0]
+    assert find_marker(np.concatenate([mark, mark])).tolist() == [0, 8]
+    for length in range(8):
+        assert len(find_marker(mark[:length])) == 0
+
+
+def test_false_matches_are_as_rare_as_published() -> None:
+    """Check values: 1.0e-8 per position; in 8 million positions of noise more than two is a chance of 1e-4."""
+    data = np.random.default_rng(11).integers(0, 256, 8_000_000, np.uint8)
+    assert len(find_marker(data)) <= 2
+
+
+# -- records ------------------------------------------------------------------------------------------------------
+
+
+@pytest.mark.parametrize("third", range(0, 11))
+@pytest.mark.parametrize("how", ["lost", "zeros", "noise"])
+def test_any_third_may_go(third: int, how: str) -> None:
+    """Design, section 5: member table and digests survive the loss of any third of the sidecar."""
+    length = len(ONE) // 3
+    start = third * (len(ONE) - length) // 10
+    gone = (start, start + length)
+    if how == "lost":
+        section = only(ONE, [gone])
+    else:
+        section = only(ONE[:start] + (bytes(length) if how == "zeros" else content(length)) + ONE[gone[1] :])
+    assert section.table() == FIRST.table()
+    for track in (Track.DATA, Track.INNER, Track.PARITY, Track.PARITY_INNER):
+        count = section.layout.content(track) // 8
+        values, known = section.digests(track, 0, count)
+        assert known is None
+        assert np.array_equal(values, FIRST.digests(track, 0, count)[0])
+
+
+def test_digests_are_those_of_the_bytes() -> None:
+    data = content(WINDOW)
+    g = FIRST.geometry
+    values, _ = FIRST.digests(Track.DATA, 0, g.data_cells)
+    assert values.tolist() == [xxhash.xxh3_64_intdigest(data[i : i + 4096]) for i in range(0, WINDOW, 4096)]
+    body, _ = FIRST.body(0, g.body)
+    parity, _ = FIRST.digests(Track.PARITY, 0, g.r)
+    assert parity.tolist() == [xxhash.xxh3_64_intdigest(body[j * g.depth :][: g.depth]) for j in range(g.r)]
+    some, _ = FIRST.digests(Track.DATA, 3, 5)
+    assert np.array_equal(some, values[3:8])
+
+
+def test_tables_beyond_correction_are_said_to_be() -> None:
+    hurt = bytearray(ONE)
+    for t in range(0, 16):
+        start = FIRST.layout.stretch_start(t) + HEAD_BYTES
+        if t % 8:
+            hurt[start : start + FIRST.layout.slice_bytes] = content(FIRST.layout.slice_bytes, t)
+    with pytest.raises(FormatError, match="list of members is damaged beyond correction"):
+        only(bytes(hurt)).table()
+
+
+@given(st.integers(0, len(ONE) - 1), st.integers(0, 7))
+def test_wear_counts_every_flip_outside_the_body(place: int, bit: int) -> None:
+    hurt = bytearray(ONE)
+    hurt[place] ^= 1 << bit
+    wear = examine_records(only(bytes(hurt)))
+    layout = FIRST.layout
+    in_body = any(
+        start <= place < start + size for start, _, size in layout.body_extents(0, layout.geometry.body)
+    )
+    assert (wear.bits, wear.symbols, wear.lost) == ((0, 0, 0) if in_body else (1, 1, 0))
+
+
+def test_wear_counts_what_could_not_be_read() -> None:
+    """A head, a page and a slice of every frame are unreadable; padding and body are not counted twice."""
+    layout = FIRST.layout
+    start = layout.stretch_start(3)
+    wear = examine_records(only(ONE, [(100, 700), (start, start + layout.prefix)]))
+    assert (wear.unreadable, wear.bits, wear.lost) == (600 + layout.prefix, 0, 0)
+
+
+# -- hostile records ---------------------------------------------------------------------------------------------
+
+
+def with_record(**changes: object) -> bytes:
+    """The sidecar ONE with other fields in all sixteen copies of its record, checksums mended."""
+    out = bytearray(ONE)
+    for t in range(16):
+        raw = replace(FIRST.bootstrap, stretch=t, **changes).pack()  # type: ignore[arg-type]
+        start = FIRST.layout.stretch_start(t)
+        out[start : start + HEAD_BYTES] = MARKER + encode(raw)
+    return bytes(out)
+
+
+def consume(data: bytes) -> None:
+    """Do with a sidecar all that a reader does before it touches a member."""
+    for section in find_sections(Memory(data)):
+        section.bootstrap.code.code()
+        section.table()
+        examine_records(section)
+
+
+NUMBERS = {f.name: 64 for f in fields(Bootstrap) if f.type == "int"} | {
+    "stretches": 16, "entries": 32, "flags": 32}  # fmt: skip
+EXTREMES = [0, 1, 2, 63, 64, 255, 4096, (1 << 16) - 1, (1 << 31) - 1, (1 << 32) - 1, 1 << 40, 1 << 60,
+            (1 << 60) + 1, (1 << 63) - 1, 1 << 63, (1 << 64) - 4096, (1 << 64) - 1]  # fmt: skip
+
+
+@pytest.mark.parametrize("name", sorted(set(NUMBERS) - {"stretch", "version", "cell"}))
+def test_extreme_figures_in_a_record(name: str) -> None:
+    for value in EXTREMES:
+        if value < 1 << NUMBERS[name]:
+            try:
+                consume(with_record(**{name: value}))
+            except FormatError:
+                pass
+
+
+@pytest.mark.parametrize("name", [f.name for f in fields(CodeParameters) if f.type == "int"])
+def test_extreme_figures_in_the_code(name: str) -> None:
+    width = {"field_poly": 16, "matrix_digest": 64}.get(name, 8)
+    for value in (0, 1, 2, 31, 32, 33, 128, 254, 255, 0x11D, 0x12D, 0xFFFF, (1 << 64) - 1):
+        if value < 1 << width:
+            try:
+                consume(with_record(code=replace(FIRST.bootstrap.code, **{name: value})))
+            except FormatError:
+                pass
+
+
+@given(st.lists(st.tuples(st.integers(6, RECORD_BYTES - 9), st.integers(0, 255)), min_size=1, max_size=4))
+@settings(max_examples=150)
+def test_fuzzed_records_with_mended_checksums(changes: list[tuple[int, int]]) -> None:
+    raw = bytearray(FIRST.bootstrap.pack())
+    for place, value in changes:
+        raw[place] = value
+    raw[-8:] = struct.pack("<Q", xxhash.xxh3_64_intdigest(bytes(raw[:-8])))
+    out = bytearray(ONE)
+    for t in range(16):
+        start = FIRST.layout.stretch_start(t)
+        out[start : start + HEAD_BYTES] = MARKER + encode(bytes(raw))
+    try:
+        consume(bytes(out))
+    except FormatError:
+        pass
+
+
+def test_a_table_that_was_exchanged_is_refused() -> None:
+    """Content with a checksum that fits, but not what the identity was made from."""
+    from oakum.sidecar.frames import check_rows, payload
+
+    frame = FIRST.layout.frame(Track.TABLE, 0)
+    table = bytearray(FIRST.table_bytes())
+    table[8] ^= 1  # A mode that lets others write.
+    rows = payload(frame, bytes(table), FIRST.bootstrap.identity)
+    rows = np.concatenate([rows, check_rows(rows)])
+    out = bytearray(ONE)
+    for place, row in FIRST.layout.slice_extents(frame):
+        part = rows[row : row + FIRST.layout.rows].tobytes()
+        out[place : place + len(part)] = part
+    with pytest.raises(FormatError, match="do not belong together"):
+        only(bytes(out)).table()
+
+
+def test_a_newer_version_is_named() -> None:
+    with pytest.raises(FormatError, match="format version 2"):
+        find_sections(Memory(with_record(version=2)))
+    assert unpack(FIRST.bootstrap.pack()) is not None
