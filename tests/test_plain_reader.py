@@ -14,9 +14,11 @@ from pathlib import Path
 import pytest
 
 from oakum import plain_reader, protect, protect_pipe, repair
-from oakum.algebra.naming import NAMED
+from oakum.algebra.naming import NAMED, resolve_code
 from oakum.errors import FormatError
+from oakum.geometry import LARGE, SMALL, Geometry, whole_depth
 from oakum.results import MemberState
+from oakum.sidecar.layout import MANY, Layout
 
 READER = Path(plain_reader.__file__)
 
@@ -156,6 +158,39 @@ def test_reed_solomon_up_to_capacity(n: int, k: int, polynomial: int, first: int
             for i, value in (added or {}).items():
                 received[i] ^= value
             assert (bytes(received) == codeword) == (2 * e + s <= code.r)
+
+
+@pytest.mark.parametrize("name", [*NAMED, "RS(40,30)+EB(128,104)"])
+def test_layouts_agree(name: str) -> None:
+    """Both find the same places in sections of every size, those too large to be decoded here included."""
+    code = resolve_code(name)
+    parameters = (code.outer.n, code.outer.k, code.inner.m, code.inner.p)
+    k = code.outer.k
+    steps = [step + more for step in (0, 64 * k, SMALL, 4096 * k, LARGE, MANY) for more in (0, 1, 12_345)]
+    for length in [*steps, SMALL - 1, LARGE - 1, MANY - 1, 400_000_000]:
+        right = Geometry(*parameters, length, whole_depth(length, k))
+        mine = plain_reader.Geometry(*parameters, length, right.depth)
+        assert mine.sound
+        assert not mine._replace(depth=right.depth + unit_of(length)).sound
+        assert (mine.blocks, mine.data_cells, mine.body) == (right.blocks, right.data_cells, right.body)
+        for block in {0, right.blocks // 2, right.blocks - 1} if right.blocks else ():
+            assert mine.group(block) == right.group(block)
+            for j in (0, right.r - 1):
+                place = right.parity_bytes + right.data_inner + right.parity_inner_start(j, block)
+                assert mine.group_place(k + j, block) == place
+            for strip in (0, k - 1):
+                assert mine.group_place(strip, block) == right.parity_bytes + right.inner_start(strip, block)
+        for table_length in (0, 84, 1_000_000):
+            ours, other = plain_reader.Layout(mine, table_length), Layout(right, table_length)
+            assert [ours.stretches, ours.places[-1], ours.prefix, ours.piece, ours.size] == [
+                other.stretches, other.slice_bytes, other.prefix, other.piece, other.size,
+            ]  # fmt: skip
+            frames = [tuple(frame) for track in range(1, 7) for frame in ours.frames(track)]
+            assert frames == [(f.track, f.number, f.content, f.width, f.place) for f in other.frames()]
+
+
+def unit_of(length: int) -> int:
+    return 4096 if length >= LARGE else 64
 
 
 # -- small sets: no digests of cells ---------------------------------------------------------------------

@@ -43,6 +43,7 @@ CELL = 4096
 TEXT = 4096
 SMALL = 64 << 10
 LARGE = 64 << 20
+MANY = 128 << 20
 LONGEST = 1 << 60
 
 
@@ -547,10 +548,10 @@ FULL_CONTENT = PAYLOAD_ROWS * FULL_WIDTH - FRAME_HEADER
 TABLE, DATA, INNER, PARITY, PARITY_INNER, SEALS = range(1, 7)
 
 
-# > A section has 4 stretches when its window is shorter than 65536 bytes, 48 when it has at least 67108864,
+# > A section has 4 stretches when its window is shorter than 65536 bytes, 48 when it has at least 134217728,
 # > and 16 otherwise.
 def stretches_of(length: int) -> int:
-    return 4 if length < SMALL else 16 if length < LARGE else 48
+    return 4 if length < SMALL else 16 if length < MANY else 48
 
 
 class Layout:

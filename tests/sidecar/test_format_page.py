@@ -72,7 +72,8 @@ def test_constants() -> None:
         "MARKER_ERRORS": bootstrap.MARKER_ERRORS, "CELL": CELL, "TEXT": layout.TEXT_BYTES,
         "HEAD": bootstrap.HEAD_BYTES, "ROWS": layout.FRAME_ROWS, "PAYLOAD_ROWS": layout.PAYLOAD_ROWS,
         "FULL_WIDTH": layout.FRAME_WIDTH, "FRAME_HEADER": layout.FRAME_HEADER,
-        "FULL_CONTENT": layout.FRAME_CONTENT, "SMALL": SMALL, "LARGE": LARGE, "LONGEST": MAX_LENGTH,
+        "FULL_CONTENT": layout.FRAME_CONTENT, "SMALL": SMALL, "LARGE": LARGE,
+        "MANY": layout.MANY, "LONGEST": MAX_LENGTH,
     }  # fmt: skip
     assert {name: int(value) for name, value in values.items()} == code
     assert {name: getattr(plain_reader, name) for name in code} == code

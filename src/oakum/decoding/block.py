@@ -56,6 +56,9 @@ ROUNDS = 200
 PATIENCE = 4
 """Times in a row that random trials may fail before the block is left as it is."""
 
+NEIGHBOURS = (6, 3, 2)
+"""Lengths from which a run of neighbouring strips, none of them right, is taken for a burst."""
+
 MOST_CHASES = 100
 """Times that random trials are made on one block at the most, which bounds its time to some seconds."""
 
@@ -298,7 +301,7 @@ class _Block:
     def _try_erasures(self) -> int:
         """All trials of a round on the unsolved columns. Returns how many were solved."""
         known = self._reliability()
-        places = self.tried_erasures.changed(self.open, self.value, known.doubts)
+        places = self.tried_erasures.changed(self.open, self.value, known.doubts, known.verdicts)
         if not len(places) or not self.d.later_trials:
             return 0
         posed = self._posed(places, known.take(places))
@@ -366,22 +369,27 @@ class _Block:
                 self.d.words, kept, self.value, self.parity, self.staggers, self.status,
                 self.pinned.view(np.uint8), self.flip_rate,
             )  # fmt: skip
-        burst_rows = open_ & self._burst_rows()[:, np.newaxis]
-        return Reliability(self.erased & open_, status == DENSE, burst_rows, status, weights, open_)
+        verdicts = np.where(open_, self._verdicts()[:, np.newaxis], np.uint8(0))
+        return Reliability(self.erased & open_, status == DENSE, verdicts, status, weights, open_)
 
-    def _burst_rows(self) -> Mask:
-        """Rows that look like whole parts of a burst: neighbours, or wrong in many of the solved columns."""
-        suspects = np.zeros(len(self.strips), bool)
-        rows = np.flatnonzero(~self.finished & ~self.erased.all(axis=1))
-        if len(rows) <= 3 * self.g.r:
-            room = self.g.r - int(self.erased.any(axis=1).sum())
-            suspects[rows] = neighbouring_rows(self.strips[rows], room)
+    def _verdicts(self) -> Bytes:
+        """Opinions on which rows are parts of bursts as a whole, uint8[R].
+
+        Bit 0: those that are wrong in many of the solved columns. The others: neighbouring strips, in long
+        runs only, then in shorter ones too.
+        """
+        verdicts = np.zeros(len(self.strips), np.uint8)
         solved = np.ones(self.width, bool)
         solved[self.open] = False
         if np.count_nonzero(solved) >= 16:
             wrong = np.count_nonzero((self.value != self.raw) & solved, axis=1)
-            suspects |= 4 * wrong > np.count_nonzero(solved)
-        return suspects
+            verdicts[4 * wrong > np.count_nonzero(solved)] = 1
+        rows = np.flatnonzero(~self.finished & ~self.erased.all(axis=1))
+        if len(rows) <= 3 * self.g.r:
+            room = self.g.r - int(self.erased.any(axis=1).sum())
+            for bit, least in enumerate(NEIGHBOURS, 1):
+                verdicts[rows[neighbouring_rows(self.strips[rows], room, least)]] |= np.uint8(1 << bit)
+        return verdicts
 
     def _chances(self, doubtful: Strips, errors: NDArray[np.int16], erased: Bytes) -> NDArray[np.float64]:
         """Log of the chance that random words pass for what was found; `doubtful` counts open symbols."""

@@ -51,15 +51,15 @@ DENSE_RUN = 32
 class Reliability:
     """What is known of each symbol of the rows in question, arrays of shape [R, columns].
 
-    `erased`: known to be bad. `dense`: inside a burst, by the density of its words. `burst_rows`: in a row
-    that looks like part of a burst as a whole. `status`: that of the symbol's word (see
-    `WordCodec.correct`). `doubts`: the chance, times 255, that the symbol is wrong. `open`: not known to
-    be right; elsewhere nothing else is set.
+    `erased`: known to be bad. `dense`: inside a burst, by the density of its words. `verdicts`: several
+    opinions on which rows are parts of bursts as a whole, uint8 with one bit for each. `status`: that of the
+    symbol's word (see `WordCodec.correct`). `doubts`: the chance, times 255, that the symbol is wrong.
+    `open`: not known to be right; elsewhere nothing else is set.
     """
 
     erased: Mask
     dense: Mask
-    burst_rows: Mask
+    verdicts: Bytes
     status: Bytes
     doubts: Bytes
     open: Mask
@@ -69,7 +69,7 @@ class Reliability:
         return Reliability(
             np.take(self.erased, columns, axis=1),
             np.take(self.dense, columns, axis=1),
-            np.take(self.burst_rows, columns, axis=1),
+            np.take(self.verdicts, columns, axis=1),
             np.take(self.status, columns, axis=1),
             np.take(self.doubts, columns, axis=1),
             np.take(self.open, columns, axis=1),
@@ -78,8 +78,12 @@ class Reliability:
 
 def erasure_trials(known: Reliability, t: int) -> Iterator[Mask]:
     """The sets of symbols to erase, bool[R, columns], most promising first."""
-    verdicts = [verdict for verdict in (known.dense, known.burst_rows) if verdict.any()]
-    for base in [*(known.erased | verdict for verdict in verdicts), known.erased]:
+    opinions = [
+        known.verdicts & np.uint8(1 << bit) != 0
+        for bit in range(int(known.verdicts.max(initial=0)).bit_length())
+    ]
+    bases = [known.erased | opinion for opinion in (known.dense, *opinions) if opinion.any()]
+    for base in [*bases, known.erased]:
         yield base
         for threshold in THRESHOLDS:
             yield base | (known.doubts >= 255 * threshold)
@@ -170,10 +174,11 @@ def dense_words(status: Bytes) -> Mask:
     return np.asarray(np.cumsum(covered, axis=1)[:, :words] > 0)
 
 
-def neighbouring_rows(strips: Places, room: int) -> Mask:
+def neighbouring_rows(strips: Places, room: int, least: int) -> Mask:
     """Which of the strips in question stand next to each other, as those of one long burst do.
 
-    Longest runs first, as many as there is `room` for in erasures; none where there is no such run.
+    Runs of at least `least`, the longest first, as many as there is `room` for in erasures; none where there
+    is no such run.
     """
     chosen = np.zeros(len(strips), bool)
     if not len(strips):
@@ -181,7 +186,7 @@ def neighbouring_rows(strips: Places, room: int) -> Mask:
     opens = np.flatnonzero(np.diff(strips, prepend=-2) != 1)
     lengths = np.diff(np.append(opens, len(strips)))
     for i in np.argsort(-lengths, kind="stable"):
-        if lengths[i] < 2 or lengths[i] > room:
+        if lengths[i] < least or lengths[i] > room:
             continue
         chosen[opens[i] : opens[i] + lengths[i]] = True
         room -= int(lengths[i])

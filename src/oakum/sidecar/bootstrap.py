@@ -9,6 +9,7 @@ import hashlib
 import struct
 from dataclasses import dataclass, field, replace
 from functools import lru_cache
+from typing import TYPE_CHECKING
 
 import numpy as np
 import xxhash
@@ -18,6 +19,9 @@ from oakum.algebra.inner import InnerCode
 from oakum.algebra.outer import OuterCode
 from oakum.errors import FormatError, UsageError
 from oakum.geometry import Geometry
+
+if TYPE_CHECKING:
+    from oakum.kernels.columns import ColumnDecoder
 
 FORMAT_VERSION = 1
 MAGIC = b"OAKUM\0"
@@ -190,6 +194,14 @@ def encode(record: bytes) -> bytes:
     return record + bootstrap_code().encode(data).T.tobytes()
 
 
+@lru_cache(maxsize=1)
+def _decoder() -> ColumnDecoder:
+    """The compiled decoder, made when the first damaged copy is met."""
+    from oakum.kernels.columns import ColumnDecoder
+
+    return ColumnDecoder(bootstrap_code())
+
+
 def decode(coded: bytes) -> tuple[Bootstrap, int] | None:
     """Correct and read one coded copy. Returns the record and the number of bits that were wrong.
 
@@ -198,10 +210,8 @@ def decode(coded: bytes) -> tuple[Bootstrap, int] | None:
     """
     found = unpack(coded)
     if found is None:
-        from oakum.kernels.columns import ColumnDecoder
-
+        decoder = _decoder()
         received = np.frombuffer(coded, np.uint8).reshape(-1, CODEWORDS)
-        decoder = ColumnDecoder(bootstrap_code())
         magnitudes, errors = decoder.decode(decoder.syndromes(np.ascontiguousarray(received)))
         if (errors < 0).any():
             return None
