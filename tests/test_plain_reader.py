@@ -160,6 +160,42 @@ def test_reed_solomon_up_to_capacity(n: int, k: int, polynomial: int, first: int
             assert (bytes(received) == codeword) == (2 * e + s <= code.r)
 
 
+@pytest.mark.parametrize("name", NAMED)
+@pytest.mark.parametrize("each", [1, 2, 3, 4])
+def test_the_guaranteed_number_of_flips(name: str, each: int) -> None:
+    """floor((D*d - 1)/2) flips in the words through one column, `each` in a word, in the zero codeword.
+
+    Forney 1966 (common practice). Three flips in a word of distance 4 are always corrected wrongly.
+    """
+    rng = random.Random(14)
+    parameters = NAMED[name]
+    inner = plain_reader.InnerCode(("none", "EH", "EB").index(parameters.inner.family), *inner_bytes(name))
+    outer = plain_reader.ReedSolomon(parameters.outer.n, parameters.outer.k)
+    flips = (parameters.outer.distance * parameters.inner.d - 1) // 2
+    column, width = 20, 64
+    cells = []
+    for strip in range(outer.n):
+        received, places = bytearray(width), [column]
+        if inner.m:
+            first = (column - strip % inner.m) % width // inner.m * inner.m
+            places = [(strip % inner.m + first + c) % width for c in range(min(inner.m, width - first))]
+        size = min(each, flips)
+        flips -= size
+        for bit in rng.sample(range(8 * len(places)), size):
+            received[places[bit // 8]] ^= 1 << bit % 8
+        group = bytes(inner.p * -(-width // inner.m)) if inner.m else b""
+        cell = plain_reader.Cell(strip, bytes(received), bytes(width), bytearray(width))
+        cell.group = plain_reader.Received(group, bytes(len(group)))
+        cells.append(cell)
+    assert flips == 0
+    plain_reader.decode_block(plain_reader.ConcatenatedCode(outer, inner), cells)
+    assert all(cell.finished and not any(cell.value) for cell in cells)
+
+
+def inner_bytes(name: str) -> tuple[int, int]:
+    return NAMED[name].inner.m, NAMED[name].inner.p
+
+
 @pytest.mark.parametrize("name", [*NAMED, "RS(40,30)+EB(128,104)"])
 def test_layouts_agree(name: str) -> None:
     """Both find the same places in sections of every size, those too large to be decoded here included."""
@@ -386,6 +422,24 @@ def test_hostile_records_are_refused_by_both(offset: int, size: int, value: int,
 
     def patch(record: bytearray) -> None:
         record[offset : offset + size] = value.to_bytes(size, "little")
+
+    patched(sidecar, patch)
+    assert plain_reader.main([str(sidecar)]) == 30
+    with pytest.raises(FormatError):
+        repair(sidecar, output=tmp_path / "fast")
+
+
+def test_an_endless_window_costs_nothing(tmp_path: Path) -> None:
+    """A record that is sound in itself and promises 2^60 bytes is refused before anything is made for it."""
+    path = make_file(tmp_path, 3_000, random.Random(12))
+    sidecar = protect([path]).sidecar
+    length = 1 << 60
+    depth = whole_depth(length, NAMED["shelf"].outer.k)
+
+    def patch(record: bytearray) -> None:
+        record[10:12] = (48).to_bytes(2, "little")
+        record[80:88] = record[104:112] = length.to_bytes(8, "little")
+        record[88:96] = depth.to_bytes(8, "little")
 
     patched(sidecar, patch)
     assert plain_reader.main([str(sidecar)]) == 30

@@ -147,8 +147,11 @@ class WindowEncoder:
         else:
             self._survey_window()
             self._writer.lay_down(Track.DATA)
+            buffers = [_rows(plan.strips, plan.columns) for _ in range(2)]
+            parity = _rows(g.r, plan.columns)
             for first in range(0, g.depth, plan.columns):
-                self._encode_columns(first, min(plan.columns, g.depth - first), plan.strips)
+                width = min(plan.columns, g.depth - first)
+                self._encode_columns(first, [b[:, :width] for b in buffers], parity[:, :width])
         self._inner_cells.flush()
         self._parity_inner_cells.flush()
 
@@ -196,11 +199,10 @@ class WindowEncoder:
         for i in range(len(buffers)):
             self._store(surveys[(turn + 1 + i) % len(buffers)])
 
-    def _encode_columns(self, first: int, width: int, strips: int) -> None:
-        """The second read: columns first..first+width-1 of all strips, `strips` at a time."""
+    def _encode_columns(self, first: int, buffers: list[Bytes], parity: Bytes) -> None:
+        """The second read: as many columns from `first` on as the buffers hold, of all strips, batch by batch."""
         g = self._g
-        parity = _rows(g.r, width)
-        buffers = [_rows(strips, width) for _ in range(2)]
+        strips = len(buffers[0])
         checks: list[list[Future[None]]] = [[], []]
         products: list[Future[None]] = []
         for turn, strip in enumerate(range(0, self._used_strips, strips)):

@@ -7,13 +7,16 @@ Writing goes to a temporary file in the same folder, which takes the final name 
 from __future__ import annotations
 
 import errno
+import fcntl
 import os
-import secrets
 import stat
+import struct
 from collections.abc import Callable
+from contextlib import suppress
 from pathlib import Path
 
 import numpy as np
+import xxhash
 from numpy.typing import NDArray
 
 from oakum.errors import CannotCheck, UsageError
@@ -109,11 +112,88 @@ class FileBytes:
         self.close()
 
 
+class Lock:
+    """The right to be the only one that works on a file, held until `release` or the end of the process.
+
+    The lock belongs to the open file description (Linux: OFD locks), so that it does not vanish when some
+    other descriptor of the file is closed. Where the file may not be written to it is a shared lock.
+    """
+
+    def __init__(self, path: Path, advice: str = "wait until it has finished") -> None:
+        """Lock the file at `path`. Raises CannotCheck when another run holds it or it cannot be opened."""
+        self.path = path
+        self._advice = advice
+        self._fd = -1
+        self._take()
+
+    def _take(self) -> None:
+        try:
+            while self._fd < 0:
+                fd, alone = _open_to_lock(self.path)
+                try:
+                    if not try_lock(fd, alone=alone):
+                        raise CannotCheck(f"another run is at work on {self.path}; {self._advice}")
+                    # It may have been replaced while we opened it: then this is a lock on nothing.
+                    if os.path.samestat(os.fstat(fd), os.stat(self.path)):
+                        self._fd, fd = fd, -1
+                finally:
+                    if fd >= 0:
+                        os.close(fd)
+        except OSError as error:
+            raise CannotCheck(f"{self.path} cannot be opened: {reason(error)}") from None
+
+    def renew(self) -> None:
+        """Lock the file that now has the name, after it was replaced."""
+        self.release()
+        self._take()
+
+    def release(self) -> None:
+        """Give up the lock."""
+        if self._fd >= 0:
+            os.close(self._fd)
+            self._fd = -1
+
+    def __enter__(self) -> Lock:
+        return self
+
+    def __exit__(self, *_: object) -> None:
+        self.release()
+
+
+def _open_to_lock(path: Path) -> tuple[int, bool]:
+    """A descriptor to lock, and whether it can hold a lock that excludes all others."""
+    try:
+        return os.open(path, os.O_RDWR | os.O_CLOEXEC | os.O_NONBLOCK), True
+    except OSError as error:
+        if error.errno not in (errno.EACCES, errno.EPERM, errno.EROFS):
+            raise
+        return os.open(path, os.O_RDONLY | os.O_CLOEXEC | os.O_NONBLOCK), False
+
+
+def try_lock(fd: int, *, alone: bool = True) -> bool:
+    """Lock a whole file, without waiting. False when somebody else holds it; True where locks are unknown."""
+    # struct flock of Linux: type, whence, start, length (0: all of it), process (0: none, as OFD demands).
+    request = struct.pack("hhqqi0q", fcntl.F_WRLCK if alone else fcntl.F_RDLCK, os.SEEK_SET, 0, 0, 0)
+    try:
+        fcntl.fcntl(fd, fcntl.F_OFD_SETLK, request)
+    except OSError as error:
+        return error.errno not in (errno.EAGAIN, errno.EACCES)
+    return True
+
+
+def room_in(folder: Path) -> int:
+    """Bytes that an ordinary user can still write to the file system that `folder` is on."""
+    found = os.statvfs(folder)
+    return found.f_bavail * found.f_frsize
+
+
 class NewFile:
     """A file in the making: written under a temporary name, given its own by `commit`.
 
-    Used as a context manager; without `commit` nothing is left behind. A file that is not needed for a
-    while can be `park`ed, so that thousands can be in the making at a time.
+    Used as a context manager; without `commit` nothing is left behind. What a killed run left behind is
+    taken away by the next one that makes the same file: the temporary name follows from the file's own,
+    and a lock tells whether its maker is still alive. A file that is not needed for a while can be
+    `park`ed, so that thousands can be in the making at a time.
     """
 
     def __init__(
@@ -133,26 +213,58 @@ class NewFile:
         self._overwrite = overwrite
         self._advice = advice
         self._open_folder = open_folder or self._open_parent
-        name = os.fsencode(path.name)
-        self._name = name
-        self._temporary = b".%s.%s.part" % (name[:200], secrets.token_hex(6).encode())
+        self._name = os.fsencode(path.name)
+        self._temporary = temporary_name(self._name)
         self._folder = self._fd = -1
-        self._committed = False
+        self._identity = (-1, -1)
+        """Device and number of the temporary file, once it is ours."""
+
         try:
             self._folder = self._open_folder()
             if not overwrite and self._exists():
                 raise self._taken()
-            flags = os.O_RDWR | os.O_CREAT | os.O_EXCL | os.O_CLOEXEC | os.O_NOFOLLOW
-            self._fd = os.open(self._temporary, flags, 0o666, dir_fd=self._folder)
+            self._create()
         except OSError as error:
-            self._close()
+            self.discard()
             raise CannotCheck(f"{path} cannot be written: {reason(error)}") from None
         except BaseException:
-            self._close()
+            self.discard()
             raise
 
     def _open_parent(self) -> int:
         return os.open(self.path.parent, os.O_RDONLY | os.O_DIRECTORY | os.O_CLOEXEC)
+
+    def _create(self) -> None:
+        """Make the temporary file; one that a dead run left behind goes first."""
+        flags = os.O_RDWR | os.O_CREAT | os.O_EXCL | os.O_CLOEXEC | os.O_NOFOLLOW
+        try:
+            self._fd = os.open(self._temporary, flags, 0o666, dir_fd=self._folder)
+        except FileExistsError:
+            self._take_away_leftover()
+            self._fd = os.open(self._temporary, flags, 0o666, dir_fd=self._folder)
+        try:
+            self._identity = _identity(self._fd)
+        except OSError:
+            os.unlink(self._temporary, dir_fd=self._folder)
+            raise
+        self._lock()
+
+    def _take_away_leftover(self) -> None:
+        flags = os.O_RDWR | os.O_CLOEXEC | os.O_NOFOLLOW | os.O_NONBLOCK
+        fd = os.open(self._temporary, flags, dir_fd=self._folder)
+        try:
+            if not try_lock(fd):
+                raise self._in_use()
+            os.unlink(self._temporary, dir_fd=self._folder)
+        finally:
+            os.close(fd)
+
+    def _lock(self) -> None:
+        if not try_lock(self._fd):
+            raise self._in_use()
+
+    def _in_use(self) -> CannotCheck:
+        return CannotCheck(f"another run is writing {self.path}; wait until it has finished")
 
     def _exists(self) -> bool:
         try:
@@ -171,6 +283,9 @@ class NewFile:
             if self._folder < 0:
                 self._folder = self._open_folder()
             self._fd = os.open(self._temporary, os.O_RDWR | os.O_CLOEXEC | os.O_NOFOLLOW, dir_fd=self._folder)
+            if _identity(self._fd) != self._identity:
+                raise self._in_use()
+            self._lock()
         return self._fd
 
     def park(self) -> None:
@@ -178,59 +293,69 @@ class NewFile:
         self._close()
 
     def _close(self) -> None:
-        for fd in (self._fd, self._folder):
+        """Close what is open; that a descriptor is closed is all that counts here, not what it says."""
+        fds, self._fd, self._folder = (self._fd, self._folder), -1, -1
+        for fd in fds:
             if fd >= 0:
-                os.close(fd)
-        self._fd = self._folder = -1
+                with suppress(OSError):
+                    os.close(fd)
 
     def write(self, offset: int, data: bytes | bytearray | memoryview) -> None:
         """Put all of `data` at `offset`."""
-        view = memoryview(data)
         try:
-            while view:
-                written = os.pwrite(self.fd, view, offset)
-                offset += written
-                view = view[written:]
+            write_all(self.fd, offset, data)
         except OSError as error:
-            raise CannotCheck(f"{self.path} could not be written: {reason(error)}") from None
+            raise self._failed(reason(error)) from None
 
     def resize(self, length: int) -> None:
         """Make the file `length` bytes long; what is new reads as zeros."""
         try:
             os.ftruncate(self.fd, length)
         except OSError as error:
-            raise CannotCheck(f"{self.path} could not be written: {reason(error)}") from None
+            raise self._failed(reason(error)) from None
 
     def read(self, offset: int, length: int) -> bytes:
         """The bytes written at `offset`."""
-        data = os.pread(self.fd, length, offset)
+        try:
+            data = read_all(self.fd, offset, length)
+        except OSError as error:
+            raise self._failed(reason(error)) from None
         if len(data) != length:
-            raise CannotCheck(f"{self.path} could not be written: what was written cannot be read back")
+            raise self._failed("what was written cannot be read back")
         return data
 
+    def _failed(self, why: str) -> CannotCheck:
+        return CannotCheck(f"{self.path} could not be written: {why}")
+
     def commit(self, length: int, *, mode: int | None = None, modified_ns: int | None = None) -> None:
-        """Check the length, set mode and time, bring the file to the medium and give it its name."""
+        """Check the length, set mode and time, bring the file to the medium and give it its name.
+
+        Raises CannotCheck where any of this fails: then the file that had the name still has it, except
+        when only the folder could not be brought to the medium.
+        """
         try:
             fd = self.fd
             if os.fstat(fd).st_size != length:
-                raise CannotCheck(f"{self.path} could not be written: its length is not what was written")
+                raise self._failed("its length is not what was written")
             if mode is not None:
                 os.fchmod(fd, mode)
             if modified_ns is not None:
                 os.utime(fd, ns=(modified_ns, modified_ns))
             os.fsync(fd)
+            # Closing can fail on network file systems. The second descriptor holds the lock meanwhile.
+            self._fd = os.dup(fd)
             os.close(fd)
-            self._fd = -1
             self._place()
             os.fsync(self._folder)
         except OSError as error:
-            raise CannotCheck(f"{self.path} could not be written: {reason(error)}") from None
-        self._committed = True
+            raise self._failed(reason(error)) from None
         self._close()
 
     def _place(self) -> None:
         """Rename; where nothing may be replaced, `link` makes sure that nothing came in between."""
         here = self._folder
+        if not self._is_ours():
+            raise self._in_use()
         if not self._overwrite:
             try:
                 os.link(self._temporary, self._name, src_dir_fd=here, dst_dir_fd=here, follow_symlinks=False)
@@ -241,19 +366,25 @@ class NewFile:
                     raise self._taken() from None
             else:
                 os.unlink(self._temporary, dir_fd=here)
+                self._identity = (-1, -1)
                 return
         os.rename(self._temporary, self._name, src_dir_fd=here, dst_dir_fd=here)
+        self._identity = (-1, -1)
+
+    def _is_ours(self) -> bool:
+        """Whether the temporary name still stands for the file that was made here."""
+        found = os.stat(self._temporary, dir_fd=self._folder, follow_symlinks=False)
+        return (found.st_dev, found.st_ino) == self._identity
 
     def discard(self) -> None:
-        """Take away what was written so far."""
-        if self._committed:
-            return
-        try:
-            if self._folder < 0:
-                self._folder = self._open_folder()
-            os.unlink(self._temporary, dir_fd=self._folder)
-        except OSError:
-            pass  # It was never made, or its whole folder is gone.
+        """Take away what was written so far; nothing happens after `commit`."""
+        if self._identity != (-1, -1):
+            with suppress(OSError):  # Its whole folder may be gone.
+                if self._folder < 0:
+                    self._folder = self._open_folder()
+                if self._is_ours():
+                    os.unlink(self._temporary, dir_fd=self._folder)
+            self._identity = (-1, -1)
         self._close()
 
     def __enter__(self) -> NewFile:
@@ -261,6 +392,40 @@ class NewFile:
 
     def __exit__(self, *_: object) -> None:
         self.discard()
+
+
+def temporary_name(name: bytes) -> bytes:
+    """The name under which a file is made that will be called `name`."""
+    if len(name) > 230:
+        name = name[:200] + b"-" + xxhash.xxh3_64_hexdigest(name).encode()
+    return b".%s.oakum-part" % name
+
+
+def _identity(fd: int) -> tuple[int, int]:
+    found = os.fstat(fd)
+    return found.st_dev, found.st_ino
+
+
+def write_all(fd: int, offset: int, data: bytes | bytearray | memoryview) -> None:
+    """Put all of `data` at `offset` of an open file. Raises OSError."""
+    view = memoryview(data)
+    while view:
+        written = os.pwrite(fd, view, offset)
+        offset += written
+        view = view[written:]
+
+
+def read_all(fd: int, offset: int, length: int) -> bytes:
+    """`length` bytes from `offset` of an open file, fewer where it ends before. Raises OSError."""
+    parts = []
+    while length:
+        part = os.pread(fd, length, offset)
+        if not part:
+            break
+        parts.append(part)
+        offset += len(part)
+        length -= len(part)
+    return b"".join(parts)
 
 
 def reason(error: OSError) -> str:

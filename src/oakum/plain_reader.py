@@ -140,7 +140,9 @@ class Geometry(NamedTuple):
     @property
     def strip_group(self) -> int:
         """Bytes of inner parity of all cells of one strip."""
-        return sum(self.group(block) for block in range(self.blocks))
+        if not self.depth:
+            return 0
+        return (self.blocks - 1) * self.group(0) + self.group(self.blocks - 1)
 
     def group_place(self, strip: int, block: int) -> int:
         """Where a cell's group begins in the body (see THE BODY)."""

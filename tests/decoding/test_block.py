@@ -70,7 +70,11 @@ def test_one_strip_more_than_r_is_too_many(code: str) -> None:
 
 @pytest.mark.parametrize("code", CODES)
 def test_different_erasures_in_every_column(code: str) -> None:
-    """r erasures in each column, all strips touched: no cell is right, and every column is solved alone."""
+    """Erasures in each column, all strips touched: no cell is right, and every column is solved alone.
+
+    Words that hold an unreadable byte must not be "corrected": what stands in its place was never received,
+    and half of all such words would spoil a byte that was.
+    """
     block = MemoryBlock(code)
     rng = np.random.default_rng(5)
     for column in range(128):
@@ -167,15 +171,16 @@ def test_t_wrong_symbols_in_a_column_are_corrected(code: str, digests: bool) -> 
 
 
 @pytest.mark.parametrize("code", ["plain", "RS(60,40)"])
-def test_more_than_t_without_digests_is_lost_and_said_to_be(code: str) -> None:
+def test_well_past_t_without_digests_is_lost_and_said_to_be(code: str) -> None:
+    """Six more than t, so that no lucky trial of a few erasures reaches it; the other columns are solved."""
     for seed in range(5):
         block = MemoryBlock(code, 512, seed)
         block.withheld[:] = True
-        scattered(block, 300, block.geometry.r // 2 + 1, seed)
+        scattered(block, 300, block.geometry.r // 2 + 6, seed)
         outcome = decode(block)
         assert not outcome.finished.any()
         assert not outcome.known[:, 300].any()
-        assert outcome.known[:, 299].all()
+        assert np.delete(outcome.known, 300, axis=1).all()
 
 
 @pytest.mark.parametrize("code", ["plain", "RS(60,40)", "RS(20,15)"])
@@ -274,7 +279,7 @@ def test_scattered_flips_everywhere(code: str, rate: float) -> None:
     for array in (block.strips, block.inner_received):
         bits = rng.random((*array.shape, 8)) < rate
         array ^= np.packbits(bits, axis=-1)[..., 0]
-    assert 0 <= is_back(block).margin < 1
+    assert is_back(block).margin < 1  # Below 0 where feedback saved a column.
 
 
 # -- margins by hand ----------------------------------------------------------------------------------------------------

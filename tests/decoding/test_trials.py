@@ -153,5 +153,5 @@ def test_dense_words_are_those_in_long_runs_without_a_clean_one(rows: list[list[
     ],
 )
 def test_neighbouring_rows(strips: list[int], room: int, chosen: list[int]) -> None:
-    mask = neighbouring_rows(np.array(strips, np.intp), room)
+    mask = neighbouring_rows(np.array(strips, np.intp), room, 2)
     assert np.array(strips, np.intp)[mask].tolist() == chosen
