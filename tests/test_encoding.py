@@ -53,16 +53,6 @@ def test_parity_strips_against_an_independent_encoder(tmp_path: Path, code: str,
         assert bytes(codec.encode(data[:, column].tobytes()))[g.k :] == parity[:, column].tobytes()
 
 
-def test_parity_strips_against_galois(tmp_path: Path) -> None:
-    import galois
-
-    section, data = window(tmp_path, "shelf", 3000)
-    field = galois.GF(2**8, irreducible_poly="x^8 + x^4 + x^3 + x^2 + 1", primitive_element="x")
-    code = galois.ReedSolomon(255, 223, field=field, c=0)
-    parity = np.asarray(code.encode(field(data[:, :8].T.copy()), output="parity"))
-    assert np.array_equal(parity.T, parity_strips(section)[:, :8])
-
-
 def inner_parity(inner: InnerCode, cell: np.ndarray, strip: int) -> bytes:
     """Bit by bit from the check columns: the XOR of the columns of a word's ones, the words as in the design."""
     m = inner.m

@@ -327,8 +327,15 @@ class NewFile:
     def _failed(self, why: str) -> CannotCheck:
         return CannotCheck(f"{self.path} could not be written: {why}")
 
-    def commit(self, length: int, *, mode: int | None = None, modified_ns: int | None = None) -> None:
-        """Check the length, set mode and time, bring the file to the medium and give it its name.
+    def commit(
+        self,
+        length: int,
+        *,
+        mode: int | None = None,
+        modified_ns: int | None = None,
+        owner: tuple[int, int] | None = None,
+    ) -> None:
+        """Check the length, set owner (where that is allowed), mode and time, bring the file to the medium and give it its name.
 
         Raises CannotCheck where any of this fails: then the file that had the name still has it, except
         when only the folder could not be brought to the medium.
@@ -337,6 +344,9 @@ class NewFile:
             fd = self.fd
             if os.fstat(fd).st_size != length:
                 raise self._failed("its length is not what was written")
+            if owner is not None:
+                with suppress(PermissionError):
+                    os.fchown(fd, *owner)
             if mode is not None:
                 os.fchmod(fd, mode)
             if modified_ns is not None:

@@ -287,8 +287,10 @@ def test_every_byte_of_a_sidecar_is_watched(tmp_path: Path, length: int) -> None
     assert sorted(os.listdir(tmp_path)) == ["f", "f.mended.oakum", "f.oakum"]
 
 
-@pytest.mark.parametrize("where", ["front", "middle", "end"])
-@pytest.mark.parametrize("how", ["cut", "zeroed", "overwritten"])
+@pytest.mark.parametrize(
+    ("how", "where"),
+    [("cut", "front"), ("cut", "end"), *((h, w) for h in ("zeroed", "overwritten") for w in ("front", "middle", "end"))],
+)
 def test_a_third_of_the_sidecar_is_lost(tree: Path, tmp_path: Path, where: str, how: str) -> None:
     """The records survive and the members are right, so that it can be written anew as it was."""
     sidecar = protect([tree]).sidecar
@@ -296,8 +298,6 @@ def test_a_third_of_the_sidecar_is_lost(tree: Path, tmp_path: Path, where: str, 
     third = len(whole) // 3
     start = {"front": 0, "middle": third, "end": len(whole) - third}[where]
     if how == "cut":
-        if where == "middle":
-            pytest.skip("a file has no hole")
         hurt = whole[third:] if where == "front" else whole[:-third]
     elif how == "zeroed":
         hurt = whole[:start] + bytes(third) + whole[start + third :]

@@ -67,13 +67,13 @@ def test_exact_figures(code: str) -> None:
     n, k, r = c.outer.n, c.outer.k, c.outer.n - c.outer.k
     cells = sum(-(-max(0, min(depth, length - i * depth)) // 4096) for i in range(k))
     for sentence in (
-        "OAKUM SIDECAR, format version 1.",
-        f"protects its bytes {start} up to {start + length} (a window)",
+        "OAKUM SIDECAR, format version 1:",
+        f"is for its bytes {start} up to {start + length} (window {record.window};",
         f"cut into {k} data strips of {depth} bytes",
-        f"{r} parity strips of that length follow",
+        f"{r} parity strips as long follow",
         f"all {n} strips are one codeword of the Reed-Solomon code RS({n},{k}) over GF(256)",
         "field polynomial 0x11d",
-        f"for j = 0 to {r - 1}, with a = x, s = 1, f = 0; strip i has the locator a^(s*({n - 1}-i))",
+        f"for j = 0 to {r - 1}, a = x, s = 1, f = 0; strip i has the locator a^(s*({n - 1}-i))",
         f"{layout.stretches} stretches, {layout.prefix + layout.piece} bytes apart",
         "the marker " + MARKER.hex(" ").upper(),
         f"the parity strips one after the other ({r * depth} bytes)",
@@ -84,7 +84,8 @@ def test_exact_figures(code: str) -> None:
     if c.inner.p:
         m, p = c.inner.m, c.inner.p
         assert f"begin at byte i mod {m} and wrap round" in text
-        assert f"(not in cells under {2 * m} bytes)" in text
+        columns = "".join(f"{v:0{2 * p}x}" for v in c.inner.check_columns[:m].ravel().tolist())
+        assert columns in text.replace(" ", "")
         assert f"A word is {m} bytes" in text
         assert f"the binary code [{8 * (m + p)},{8 * m},{c.inner.d}]" in text
         found = re.search(r"inner parity of the data cells in the order of the stream \((\d+) bytes\)", text)

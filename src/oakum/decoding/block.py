@@ -170,8 +170,7 @@ class _Block:
         rounds = 0
         if not self.finished.all():
             self._gather_columns()
-            if not self._erase_all():
-                rounds = self._feedback()
+            rounds = self._feedback()
         return self._outcome(first_value, first_status, rounds)
 
     # -- step 2: words and digests -----------------------------------------------------------------
@@ -243,6 +242,7 @@ class _Block:
         self.tried_as_received, self.tried_erasures = _Seen(), _Seen()
         self.flip_rate = self._estimate_flip_rate()
         self.chases = MOST_CHASES
+        self.erased_together = 0
         self.random = np.random.default_rng(self.source.number)  # Decoding twice gives the same twice.
 
     def _estimate_flip_rate(self) -> float:
@@ -258,8 +258,9 @@ class _Block:
         They share one set of erasures, so that one small matrix does it. True when all are finished.
         """
         rows = np.flatnonzero(~self.finished)
-        if len(rows) > self.g.r or self.late_erasures.any():
+        if len(rows) > self.g.r or len(rows) == self.erased_together or self.late_erasures.any():
             return False
+        self.erased_together = len(rows)
         self.symbols[self.strips] = self.value
         solver = self.d.columns.erasure_solver(self.strips[rows].tolist())
         magnitudes, agree = solver.solve(self.d.columns.syndromes(self.symbols))
@@ -428,17 +429,19 @@ class _Block:
 
     def _feedback(self) -> int:
         """Columns, words, columns ... until nothing changes. Returns the number of rounds."""
-        for number in range(1, ROUNDS + 1):
+        for number in range(ROUNDS):
+            if self._erase_all():
+                return number
             finished = int(self.finished.sum())
             solved = self._one_round()
             if self.d.feedback or not len(self.open):
                 self._decode_words()
             if self.finished.all():
-                return number
+                return number + 1
             if self._contradicted() and self._withdraw():
                 continue
             if not self.d.feedback or (not solved and int(self.finished.sum()) == finished):
-                return number
+                return number + 1
         return ROUNDS
 
     def _one_round(self) -> int:

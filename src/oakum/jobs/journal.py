@@ -11,7 +11,6 @@ later) that the repair was finished. Numbers are little endian.
 
 from __future__ import annotations
 
-import errno
 import os
 import stat
 import struct
@@ -34,7 +33,6 @@ _HEADER = struct.Struct("<4s B B H I Q I I I Q")
 _MAGIC = b"OakJ"
 _VERSION = 1
 _CONDITION = struct.Struct("<B I q Q 32s")
-_LONGEST = 64 << 10
 
 
 class _Kind(IntEnum):
@@ -139,9 +137,7 @@ class Draft:
         patch = Patch(entry, offset, len(old or b""), len(new), old is None, place)
         self.contents.patches[entry].append(patch)
 
-    def _write(
-        self, kind: _Kind, detail: int, entry: int, old: bytes, new: bytes, offset: int = 0
-    ) -> int:
+    def _write(self, kind: _Kind, detail: int, entry: int, old: bytes, new: bytes, offset: int = 0) -> int:
         """Append a record; returns where its old bytes begin."""
         self._file.write(self._end, _record(kind, detail, entry, old, new, offset))
         place = self._end + _HEADER.size
@@ -251,7 +247,7 @@ class Journal:
 
     def _records(self) -> Iterator[tuple[_Kind, int, Patch, bytes]]:
         """All records that are whole, up to the first one that is not."""
-        place = 0
+        self._end = place = 0
         while len(head := read_all(self._fd, place, _HEADER.size)) == _HEADER.size:
             magic, kind, detail, version, entry, offset, old, new, _, checksum = _HEADER.unpack(head)
             if (magic, version) != (_MAGIC, _VERSION) or max(old, new) > PATCH or kind not in list(_Kind):
@@ -260,8 +256,8 @@ class Journal:
             if checksum != _checksum(head[:-8], payload):
                 return
             patch = Patch(entry, offset, old, new, bool(detail), place + _HEADER.size)
+            self._end = place = patch.place + old + new
             yield _Kind(kind), detail, patch, payload
-            place += _HEADER.size + old + new
 
     def _entry(self, thing: int, packed: bytes) -> Entry:
         try:
@@ -288,7 +284,7 @@ class Journal:
     def finish(self) -> None:
         """Note, on the medium, that the repair came to its end. Raises OSError."""
         record = _record(_Kind.DONE, 0, 0, b"", b"", 0)
-        write_all(self._fd, os.fstat(self._fd).st_size, record)
+        write_all(self._fd, self._end, record)
         os.fsync(self._fd)
         self.contents.finished = True
 

@@ -219,9 +219,13 @@ class Mending:
             copy.right = self._is_right(copy, check.progress)
         wrong = [c for c in self._copies.values() if not c.right]
         reports = {m.path: m for m in result.members}
-        for copy in wrong:
+        for copy in self._copies.values():
             report = reports[os.fsdecode(copy.member.piece.path)]
-            reports[report.path] = replace(report, state=MemberState.UNCORRECTABLE, bits_flipped=None)
+            if not copy.right:
+                report = replace(report, state=MemberState.UNCORRECTABLE, bits_flipped=None)
+            elif report.state is MemberState.UNCORRECTABLE:  # Lost cells that it shares had nothing of it.
+                report = replace(report, state=MemberState.ALTERED, lost=())
+            reports[report.path] = report
         if wrong and not self._accept_loss:
             notes = (
                 "nothing was written, since not everything can be corrected; "

@@ -170,6 +170,8 @@ def unpack(record: bytes) -> Bootstrap | None:
     (_, version, stretch, stretches, n, k, poly, first_root, spacing, family, m, p, d, cell, digest, name,
      window, start, length, depth, set_depth, stream_length, section_offset, table_length, body_digest,
      entries, flags, parent, set_identity, identity) = _FIELDS.unpack(body)  # fmt: skip
+    if not version:
+        raise FormatError("the sidecar's bootstrap record contradicts itself")
     if version > FORMAT_VERSION:
         raise FormatError(
             f"the sidecar has format version {version}, this program reads up to {FORMAT_VERSION}; "
