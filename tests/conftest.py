@@ -1,5 +1,6 @@
 """Settings for every test: hypothesis draws the same examples in every run, and keeps no files."""
 
+import pytest
 from hypothesis import HealthCheck, settings
 
 settings.register_profile(
@@ -11,3 +12,14 @@ settings.register_profile(
     suppress_health_check=[HealthCheck.too_slow, HealthCheck.function_scoped_fixture],
 )
 settings.load_profile("oakum")
+
+
+def pytest_addoption(parser: pytest.Parser) -> None:
+    """`--long` runs the long versions of tests that have one, as for a nightly run."""
+    parser.addoption("--long", action="store_true", help="run the long versions of sweeps (hours)")
+
+
+@pytest.fixture(scope="session")
+def long(request: pytest.FixtureRequest) -> bool:
+    """Whether the long versions are wanted."""
+    return bool(request.config.getoption("--long"))

@@ -41,7 +41,7 @@ def parity_strips(section: Section) -> np.ndarray:
 @pytest.mark.parametrize("code", CODES)
 @pytest.mark.parametrize("length", [1, 5000, 300_001])
 def test_parity_strips_against_an_independent_encoder(tmp_path: Path, code: str, length: int) -> None:
-    """reedsolo with 0x11D and first root alpha^0, column by column of the first, last and some other places."""
+    """reedsolo with 0x11D and first root alpha^0, at the first, the last and some other columns."""
     import reedsolo
 
     section, data = window(tmp_path, code, length)
@@ -54,7 +54,7 @@ def test_parity_strips_against_an_independent_encoder(tmp_path: Path, code: str,
 
 
 def inner_parity(inner: InnerCode, cell: np.ndarray, strip: int) -> bytes:
-    """Bit by bit from the check columns: the XOR of the columns of a word's ones, the words as in the design."""
+    """Bit by bit from the check columns: the XOR of the columns of a word's ones."""
     m = inner.m
     turned = np.roll(cell, -(strip % m))
     out = b""
@@ -99,7 +99,11 @@ def test_every_digest_is_that_of_its_cell(tmp_path: Path, code: str, memory: int
         return [int(v) for v in values]
 
     def expected(*strips: np.ndarray) -> list[int]:
-        return [xxhash.xxh3_64_intdigest(s[i : i + CELL].tobytes()) for s in strips for i in range(0, len(s), CELL)]
+        return [
+            xxhash.xxh3_64_intdigest(s[i : i + CELL].tobytes())
+            for s in strips
+            for i in range(0, len(s), CELL)
+        ]
 
     assert digests(Track.DATA) == expected(*data)[: g.data_cells]
     parity = parity_strips(section)
@@ -124,7 +128,7 @@ def test_small_windows_have_one_digest_of_the_whole_body(tmp_path: Path) -> None
     assert section.bootstrap.body_digest == 0
 
 
-# -- how a window is read ------------------------------------------------------------------------------------------
+# -- how a window is read --------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize("code", CODES)

@@ -25,7 +25,7 @@ def read(path: Path, offset: int, length: int) -> tuple[bytes, list[tuple[int, i
     return bytes(buffer), faults
 
 
-# -- reading -----------------------------------------------------------------------------------------------------
+# -- reading ---------------------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize("code", [errno.EIO, errno.ENODATA, errno.EREMOTEIO])
@@ -108,7 +108,7 @@ def test_sources_that_are_none(tmp_path: Path) -> None:
             FileBytes(place)
 
 
-# -- writing -------------------------------------------------------------------------------------------------------
+# -- writing ---------------------------------------------------------------------------------------
 
 
 def test_a_new_file_appears_whole(tmp_path: Path) -> None:
@@ -214,11 +214,11 @@ def test_a_medium_that_does_not_take_it(tmp_path: Path, monkeypatch: pytest.Monk
     def fail(*_: object) -> None:
         raise OSError(errno.EIO, "Input/output error")
 
-    with pytest.raises(CannotCheck, match="could not be written: input/output error"):
-        with NewFile(tmp_path / "f") as file, monkeypatch.context() as patch:
-            patch.setattr(os, "fsync", fail)
-            file.write(0, b"1")
-            file.commit(1)
+    refused = pytest.raises(CannotCheck, match="could not be written: input/output error")
+    with refused, NewFile(tmp_path / "f") as file, monkeypatch.context() as patch:
+        patch.setattr(os, "fsync", fail)
+        file.write(0, b"1")
+        file.commit(1)
     assert os.listdir(tmp_path) == []
 
 

@@ -20,7 +20,10 @@ from oakum.geometry import (
     window_depth,
 )
 
-CODES = [*NAMED.values(), *map(resolve_code, ("RS(20,15)", "RS(12,5)+EB(128,104)", "RS(255,254)", "RS(2,1)+EH(128,120)"))]  # fmt: skip
+CODES = [
+    *NAMED.values(),
+    *map(resolve_code, ("RS(20,15)", "RS(12,5)+EB(128,104)", "RS(255,254)", "RS(2,1)+EH(128,120)")),
+]
 
 LENGTHS = st.one_of(
     st.integers(1, 300),
@@ -62,7 +65,7 @@ def test_a_byte_is_in_one_cell(g: Geometry, data: st.DataObject) -> None:
 def test_cells_tile_the_window(g: Geometry) -> None:
     step = max(1, g.data_cells // 500)
     for number in range(0, g.data_cells, step):
-        strip, block = g.cell_place(number)
+        _, block = g.cell_place(number)
         after = g.cell_start(number) + g.width(block)
         assert after == (g.cell_start(number + 1) if number + 1 < g.data_cells else g.cells_end)
     last = g.data_cells - 1

@@ -21,11 +21,11 @@ def paths(folder: Path, *given: str) -> list[bytes]:
     return [m.path for m in collect([folder / g for g in given], folder)[0]]
 
 
-# -- collecting ---------------------------------------------------------------------------------------------------
+# -- collecting ------------------------------------------------------------------------------------
 
 
 def test_order_is_that_of_the_bytes_and_folders_come_first(tmp_path: Path) -> None:
-    plant(tmp_path / "s", {"b": b"", "B": b"", "a/z": b"", "a/y/x": b"", "a.b": b"", "ä": b"", "empty/": b""})
+    plant(tmp_path / "s", dict.fromkeys(("b", "B", "a/z", "a/y/x", "a.b", "ä", "empty/"), b""))
     expected = [b"s", b"s/B", b"s/a", b"s/a/y", b"s/a/y/x", b"s/a/z", b"s/a.b", b"s/b", b"s/empty",
                 "s/ä".encode()]  # fmt: skip
     assert paths(tmp_path, "s") == expected
@@ -76,7 +76,7 @@ def test_nothing_twice(tmp_path: Path) -> None:
         paths(tmp_path, "nothing")
 
 
-# -- opening --------------------------------------------------------------------------------------------------------
+# -- opening ---------------------------------------------------------------------------------------
 
 
 def test_no_part_of_a_path_is_followed_as_a_link(tmp_path: Path) -> None:
@@ -127,7 +127,7 @@ def test_a_root_that_is_not_there(tmp_path: Path) -> None:
         Folder(tmp_path / "nothing")
 
 
-# -- streams ---------------------------------------------------------------------------------------------------------
+# -- streams ---------------------------------------------------------------------------------------
 
 
 class Case:
@@ -176,7 +176,9 @@ def test_known_bad_ranges_are_not_tried_and_reported_once(
     case.folder.close()
 
 
-def test_what_is_absent_short_or_unreadable_is_a_fault(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+def test_what_is_absent_short_or_unreadable_is_a_fault(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
     case = Case(tmp_path)
     (tmp_path / "a").unlink()
     os.truncate(tmp_path / "b", 19_000)
@@ -227,7 +229,7 @@ def test_no_permission_is_no_erasure(tmp_path: Path, monkeypatch: pytest.MonkeyP
     case.folder.close()
 
 
-# -- hashing ------------------------------------------------------------------------------------------------------------
+# -- hashing ---------------------------------------------------------------------------------------
 
 
 @given(st.lists(st.integers(0, 50), max_size=8), st.integers(1, 40))

@@ -15,7 +15,7 @@ from oakum.errors import CannotCheck, FormatError, OakumError, UsageError
 if TYPE_CHECKING:
     from oakum.jobs.describe import describe
     from oakum.jobs.protect import protect, protect_pipe
-    from oakum.jobs.repair import repair
+    from oakum.jobs.repair import repair, roll_back
     from oakum.jobs.verify import verify
 
 __version__ = "0.1.0"
@@ -25,12 +25,13 @@ _LAZY = {
     "protect": "oakum.jobs.protect",
     "protect_pipe": "oakum.jobs.protect",
     "repair": "oakum.jobs.repair",
+    "roll_back": "oakum.jobs.repair",
     "verify": "oakum.jobs.verify",
 }
 
 __all__ = [
     "CannotCheck", "FormatError", "OakumError", "UsageError", "__version__", "describe", "protect",
-    "protect_pipe", "repair", "verify",
+    "protect_pipe", "repair", "roll_back", "verify",
 ]  # fmt: skip
 
 

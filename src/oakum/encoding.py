@@ -1,10 +1,11 @@
 """From a window of the stream to a section of the sidecar.
 
-Two ways lead there, and both use the same work units (a run of cells in, digests and inner parity out; a
-run of columns in, parity out), which share no state and may run on any thread in any order:
+Three ways lead there, and all use the same work units (a run of cells in, digests and inner parity out; a
+range of columns in, parity out), which share no state and may run on any thread in any order:
 
-- one read: batches of whole strips in order, while the parity of the whole window is held in memory;
-- two reads: first everything in order for SHA-256, digests and inner parity, then piece by piece the
+- a window that fits into memory is read once and kept until its parity is known;
+- a larger one is read once in batches of whole strips, while the parity of all its columns is held;
+- the largest are read twice: first in order for SHA-256, digests and inner parity, then piece by piece the
   columns of all strips for the parity, with every digest of the first read checked again.
 """
 
@@ -13,7 +14,6 @@ from __future__ import annotations
 from collections.abc import Callable
 from concurrent.futures import Future
 from dataclasses import dataclass
-from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -32,7 +32,10 @@ from oakum.sidecar.writing import SectionWriter
 Bytes = NDArray[np.uint8]
 
 CHUNK = 8 << 20
-"""Bytes read at a time where a window is read in order and not kept."""
+"""Bytes read at a time where a window is read in order."""
+
+RUN = 512 << 10
+"""Bytes that one work unit reads and looks at, while they are still in the CPU's cache."""
 
 PIECE = 1 << 20
 """Columns taken at a time in the second of two reads; also the length of each single read."""
@@ -40,7 +43,10 @@ PIECE = 1 << 20
 BATCH = 64
 """Strips multiplied at a time, where memory allows; the parity is loaded and stored once a batch."""
 
-RESERVE = 48 << 20
+LEAST_BATCH = 16
+"""With fewer strips a batch, loading and storing the parity costs more than a second read."""
+
+RESERVE = 32 << 20
 """Memory set aside for all small buffers."""
 
 _PAD = 64  # Keeps rows of a power-of-two length from falling on the same cache sets.
@@ -63,7 +69,7 @@ class Kernels:
 
 @dataclass(frozen=True)
 class ReadingPlan:
-    """How a window is read: once in batches of strips, or twice with pieces of columns."""
+    """How a window is read: how often, and how many strips of how many columns are in memory at a time."""
 
     reads: int
     strips: int
@@ -75,18 +81,19 @@ def plan_reading(geometry: Geometry, memory: int) -> ReadingPlan:
 
     Raises UsageError when not even the smallest buffers fit.
     """
-    depth = max(geometry.depth, 1)
+    g = geometry
+    depth = max(g.depth, 1)
     free = memory - RESERVE
-    strips = (free - geometry.r * depth) // (2 * depth)
-    if strips >= min(16, geometry.k):
-        return ReadingPlan(1, min(strips, BATCH, geometry.k), depth)
-    columns = min(PIECE, round_up(depth, CELL))
-    while columns > CELL and (free - geometry.r * columns) // (2 * columns) < 16:
-        columns = round_up(columns // 2, CELL)
-    strips = (free - geometry.r * columns) // (2 * columns)
-    if strips < 1:
-        raise UsageError(f"--memory {memory} is too little for this code; give at least 64 MiB")
-    return ReadingPlan(2, min(strips, BATCH, geometry.k), columns)
+    if (g.k + g.r) * depth <= free:
+        return ReadingPlan(1, g.k, depth)
+    strips = (free - g.r * depth) // (2 * depth)
+    if strips >= LEAST_BATCH:
+        return ReadingPlan(1, min(strips, BATCH), depth)
+    columns = min(PIECE, free // (g.k + g.r)) // CELL * CELL
+    if columns < CELL:
+        need = ((g.k + g.r) * CELL + RESERVE) / (1 << 20)
+        raise UsageError(f"--memory {memory} is too little for this code; give at least {need:.0f}MiB")
+    return ReadingPlan(2, g.k, columns)
 
 
 class CellCutter:
@@ -137,134 +144,154 @@ class WindowEncoder:
     def run(self, plan: ReadingPlan) -> None:
         """Read the window as planned and write its body and digests.
 
-        Raises CannotCheck for bytes that cannot be read, or that changed between two reads.
+        Raises Unreadable for bytes that cannot be read, Changed for such as changed between two reads.
         """
-        g = self._g
-        if not g.depth:
+        if not self._g.depth:
             return
-        if plan.reads == 1:
-            self._read_once(plan)
-        else:
+        if plan.reads == 2:
             self._survey_window()
-            self._writer.lay_down(Track.DATA)
-            buffers = [_rows(plan.strips, plan.columns) for _ in range(2)]
-            parity = _rows(g.r, plan.columns)
-            for first in range(0, g.depth, plan.columns):
-                width = min(plan.columns, g.depth - first)
-                self._encode_columns(first, [b[:, :width] for b in buffers], parity[:, :width])
+            self._read_columns(plan)
+        elif plan.strips == self._g.k:
+            self._read_whole()
+        else:
+            self._read_batches(plan)
         self._inner_cells.flush()
         self._parity_inner_cells.flush()
-
-    # -- one read ---------------------------------------------------------------------------------
-
-    def _read_once(self, plan: ReadingPlan) -> None:
-        """Batches of whole strips in order; the next one is read while the last one is worked on."""
-        g = self._g
-        parity = _rows(g.r, g.depth)
-        buffers = [np.empty((plan.strips, g.depth), np.uint8) for _ in range(2 if plan.strips < g.k else 1)]
-        surveys: list[Survey | None] = [None] * len(buffers)
-        products: list[Future[None]] = []
-        for turn, first in enumerate(range(0, self._used_strips, plan.strips)):
-            slot = turn % len(buffers)
-            self._store(surveys[slot])
-            strips = buffers[slot][: min(plan.strips, self._used_strips - first)]
-            self._read(first * g.depth, strips.reshape(-1), g.length)
-            surveys[slot] = self._survey(first * g.depth, strips.reshape(-1))
-            wait_all(products)  # One batch must be added to the parity before the next one is.
-            products = self._multiply(strips, first, parity, accumulate=first > 0)
-        wait_all(products)
-        for i in range(len(buffers)):  # The older one first: digests are stored in order.
-            self._store(surveys[(turn + 1 + i) % len(buffers)])
-        self._finish_columns(0, parity)
 
     @property
     def _used_strips(self) -> int:
         """Data strips that hold at least one byte of the stream."""
         return -(-self._g.length // self._g.depth)
 
+    # -- one read ---------------------------------------------------------------------------------
+
+    def _read_whole(self) -> None:
+        """Keep the whole window: chunks are surveyed as they come, the parity follows when all are there."""
+        g = self._g
+        strips = np.empty((self._used_strips, g.depth), np.uint8)
+        window = strips.reshape(-1)
+        surveys = [self._survey(start, window[start:stop]) for start, stop in g.chunks(max(CHUNK, g.depth))]
+        window[g.cells_end :] = 0
+        for survey in surveys:
+            wait_all(survey.filled)
+        parity = _rows(g.r, g.depth)
+        products = self._multiply(strips, 0, parity)
+        for survey in surveys:
+            self._store(survey)
+        wait_all(products)
+        self._finish_columns(0, parity)
+
+    def _read_batches(self, plan: ReadingPlan) -> None:
+        """Batches of whole strips in order; the next one is read while the last one is worked on."""
+        g = self._g
+        parity = _rows(g.r, g.depth)
+        buffers = [np.empty((plan.strips, g.depth), np.uint8) for _ in range(2)]
+        surveys: list[Survey | None] = [None, None]
+        products: list[Future[None]] = []
+        for turn, first in enumerate(range(0, self._used_strips, plan.strips)):
+            slot = turn % 2
+            self._store(surveys[slot])
+            strips = buffers[slot][: min(plan.strips, self._used_strips - first)]
+            surveys[slot] = survey = self._survey(first * g.depth, strips.reshape(-1))
+            wait_all([*survey.filled, *products])  # The parity of one batch is stored before the next one.
+            products = self._multiply(strips, first, parity)
+        wait_all(products)
+        for i in (1, 0):  # The older one first: digests are stored in order.
+            self._store(surveys[slot - i])
+        self._finish_columns(0, parity)
+
     # -- two reads --------------------------------------------------------------------------------
 
     def _survey_window(self) -> None:
         """The first read: in order, a chunk at a time, nothing kept."""
         g = self._g
-        size = min(CHUNK, self._used_strips * g.depth)
-        buffers = [np.empty(size, np.uint8) for _ in range(3)]
+        buffers = [np.empty(CHUNK, np.uint8) for _ in range(3)]
         surveys: list[Survey | None] = [None] * len(buffers)
-        for turn, (start, stop) in enumerate(g.chunks(size)):
+        for turn, (start, stop) in enumerate(g.chunks(CHUNK)):
             slot = turn % len(buffers)
             self._store(surveys[slot])
-            data = buffers[slot][: stop - start]
-            self._read(start, data, g.length)
-            surveys[slot] = self._survey(start, data)
+            surveys[slot] = self._survey(start, buffers[slot][: stop - start])
         for i in range(len(buffers)):
             self._store(surveys[(turn + 1 + i) % len(buffers)])
+        self._writer.lay_down(Track.DATA)
 
-    def _encode_columns(self, first: int, buffers: list[Bytes], parity: Bytes) -> None:
-        """The second read: as many columns from `first` on as the buffers hold, of all strips, batch by batch."""
-        g = self._g
-        strips = len(buffers[0])
-        checks: list[list[Future[None]]] = [[], []]
-        products: list[Future[None]] = []
-        for turn, strip in enumerate(range(0, self._used_strips, strips)):
-            slot = turn % 2
-            wait_all(checks[slot])
-            batch = buffers[slot][: min(strips, self._used_strips - strip)]
-            for i, row in enumerate(batch):
-                self._read((strip + i) * g.depth + first, row, g.length)
-            checks[slot] = [
-                self._pools.work.submit(self._check, strip + i, first, row) for i, row in enumerate(batch)
-            ]
-            wait_all(products)
-            products = self._multiply(batch, strip, parity, accumulate=strip > 0)
-        wait_all([*products, *checks[0], *checks[1]])
-        self._finish_columns(first, parity)
+    def _read_columns(self, plan: ReadingPlan) -> None:
+        """The second read: piece after piece of all strips.
 
-    def _check(self, strip: int, first: int, row: Bytes) -> None:
-        """Hold a piece of a strip against the digests of the first read."""
+        All threads read, then all multiply. The system is asked to fetch the next piece meanwhile, which
+        costs no memory of ours.
+        """
         g = self._g
+        parity = _rows(g.r, plan.columns)
+        buffer = _rows(self._used_strips, plan.columns)
+        for first in range(0, g.depth, plan.columns):
+            width = min(plan.columns, g.depth - first)
+            strips = buffer[:, :width]
+            reads = [self._pools.work.submit(self._reread, i, first, row) for i, row in enumerate(strips)]
+            for i, future in enumerate(reads):
+                future.result()
+                self._advance(max(0, min(width, g.length - i * g.depth - first)))
+                self._stream.fetch(i * g.depth + first + width, width)
+            wait_all(self._multiply(strips, 0, parity[:, :width]))
+            self._finish_columns(first, parity[:, :width])
+
+    def _reread(self, strip: int, first: int, row: Bytes) -> None:
+        """The work unit of the second read: a piece of a strip, held against the digests of the first."""
+        g = self._g
+        start = strip * g.depth + first
+        self._read(start, row)
+        if not g.digested:
+            return
         number = g.cell_number(strip, first // CELL)
         digests = cell_digests(row)[: max(0, g.data_cells - number)]  # What follows is virtual.
-        if g.digested and not np.array_equal(digests, self._writer.laid(Track.DATA, number, len(digests))):
-            raise Changed(strip * g.depth + first)
+        if not np.array_equal(digests, self._writer.laid(Track.DATA, number, len(digests))):
+            raise Changed(start)
 
     # -- work units -------------------------------------------------------------------------------
 
-    def _read(self, start: int, data: Bytes, length: int) -> None:
+    def _read(self, start: int, data: Bytes) -> None:
         faults = self._stream.read_into(start, data.data)
         if faults:
             raise Unreadable(start + faults[0][0])
-        self._advance(max(0, min(len(data), length - start)))
 
     def _survey(self, start: int, data: Bytes) -> Survey:
-        """Digests, inner parity and SHA-256 of the cells in `data`, which begins at byte `start`."""
+        """Read the cells of `data`, which begins at byte `start`; digests, inner parity and SHA-256."""
         g = self._g
         real = max(0, min(len(data), g.length - start))
-        survey = Survey(g, start, g.cell_at(start), start + real)
-        for run in g.runs(start, survey.stop, 1 << 20):
-            survey.futures.append(
-                self._pools.work.submit(
-                    survey.fill, self._kernels.words, run, data[run.start - start :][: run.length]
-                )
-            )
-        survey.futures.append(self._pools.ordered.submit(self._hasher.update, data.data[:real]))
+        survey = Survey(g, start, start + real)
+        for run in g.runs(start, survey.stop, RUN):
+            part = data[run.start - start :][: run.length]
+            survey.filled.append(self._pools.work.submit(self._fill, survey, run, part))
+        data[survey.stop - start :] = 0
+        survey.hashed = self._pools.ordered.submit(self._hash, survey, data.data[:real])
         return survey
+
+    def _fill(self, survey: Survey, run: Run, data: Bytes) -> None:
+        """The work unit of the first read: one run of cells of one strip."""
+        self._read(run.start, data)
+        survey.fill(self._kernels.words, run, data)
+
+    def _hash(self, survey: Survey, data: memoryview) -> None:
+        wait_all(survey.filled)
+        self._hasher.update(data)
 
     def _store(self, survey: Survey | None) -> None:
         """Wait for a survey and write what it gave."""
         if survey is None:
             return
-        wait_all(survey.futures)
-        survey.futures.clear()
+        wait_all(survey.filled)
+        survey.hashed.result()
+        self._advance(survey.real)
         self._add_digests(Track.DATA, survey.digests)
         self._write_inner(self._g.parity_bytes + survey.inner_start, survey.inner, self._inner_cells)
 
-    def _multiply(self, strips: Bytes, first: int, parity: Bytes, *, accumulate: bool) -> list[Future[None]]:
-        """Add the product of some strips to the parity, in ranges of columns."""
+    def _multiply(self, strips: Bytes, first: int, parity: Bytes) -> list[Future[None]]:
+        """Add the product of strips first, first + 1 ... to the parity (set it for the first ones)."""
         width = strips.shape[1]
         step = max(CELL, round_up(-(-width // (4 * self._pools.jobs)), CELL))
 
         def work(a: int, b: int) -> None:
-            self._kernels.parity.apply(strips[:, a:b], parity[:, a:b], first=first, accumulate=accumulate)
+            self._kernels.parity.apply(strips[:, a:b], parity[:, a:b], first=first, accumulate=first > 0)
 
         return [self._pools.work.submit(work, a, min(a + step, width)) for a in range(0, width, step)]
 
@@ -272,13 +299,11 @@ class WindowEncoder:
         """Write parity strips that are complete, with their digests and inner parity, block by block."""
         g = self._g
         width = parity.shape[1]
-        begin = first // CELL
-        blocks = -(-width // CELL)
-        digests = np.empty((blocks, g.r), np.uint64)
+        begin, blocks = first // CELL, -(-width // CELL)
+        last = begin + blocks - 1
         start = g.parity_inner_start(0, begin)
-        inner = np.empty(
-            g.parity_inner_start(0, begin + blocks - 1) + g.r * g.group(begin + blocks - 1) - start, np.uint8
-        )
+        digests = np.empty((blocks, g.r), np.uint64)
+        inner = np.empty(g.parity_inner_start(0, last) + g.r * g.group(last) - start, np.uint8)
 
         def work(j: int) -> None:
             row = parity[j]
@@ -288,12 +313,12 @@ class WindowEncoder:
             if g.p and full:
                 self._kernels.words.parity(row[:full], stagger, inner[j * g.full_group :], step=step)
             if g.p and full < width:
-                place = g.parity_inner_start(j, begin + blocks - 1) - start
-                self._kernels.words.parity(row[full:], stagger, inner[place:])
+                self._kernels.words.parity(
+                    row[full:], stagger, inner[g.parity_inner_start(j, last) - start :]
+                )
+            self._writer.write_body(j * g.depth + first, row)
 
         wait_all([self._pools.work.submit(work, j) for j in range(g.r)])
-        for j in range(g.r):
-            self._writer.write_body(j * g.depth + first, parity[j])
         self._add_digests(Track.PARITY, digests.reshape(-1))
         self._write_inner(g.parity_bytes + g.data_inner + start, inner, self._parity_inner_cells)
 
@@ -310,19 +335,21 @@ class WindowEncoder:
 class Survey:
     """What the first look at consecutive cells gives: digests and inner parity, filled by many threads."""
 
-    def __init__(self, geometry: Geometry, start: int, first_cell: int, real_stop: int) -> None:
+    def __init__(self, geometry: Geometry, start: int, real_stop: int) -> None:
         g = self._g = geometry
+        self.first_cell = g.cell_at(start)
         last = g.cell_at(real_stop - 1)
         strip, block = g.cell_place(last)
         self.stop = g.cell_start(last) + g.width(block)
-        self.first_cell = first_cell
-        self.digests = np.empty(last + 1 - first_cell, np.uint64)
-        self.inner_start = g.inner_start(*g.cell_place(first_cell))
+        self.real = real_stop - start
+        self.digests = np.empty(last + 1 - self.first_cell, np.uint64)
+        self.inner_start = g.inner_start(*g.cell_place(self.first_cell))
         self.inner = np.empty(g.inner_start(strip, block) + g.group(block) - self.inner_start, np.uint8)
-        self.futures: list[Future[Any]] = []
+        self.filled: list[Future[None]] = []
+        self.hashed: Future[None]
 
     def fill(self, words: WordCodec, run: Run, data: Bytes) -> None:
-        """The work unit: one run of cells of one strip."""
+        """Digests and inner parity of one run of cells of one strip."""
         g = self._g
         number = g.cell_number(run.strip, run.block) - self.first_cell
         digests = cell_digests(data)

@@ -335,7 +335,9 @@ class NewFile:
         modified_ns: int | None = None,
         owner: tuple[int, int] | None = None,
     ) -> None:
-        """Check the length, set owner (where that is allowed), mode and time, bring the file to the medium and give it its name.
+        """Check the length, bring the file to the medium and give it its name.
+
+        Mode, time and (where that is allowed) owner are set first, where they are given.
 
         Raises CannotCheck where any of this fails: then the file that had the name still has it, except
         when only the folder could not be brought to the medium.

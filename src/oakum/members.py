@@ -175,6 +175,9 @@ class Stream(Protocol):
     def read_into(self, offset: int, buffer: memoryview) -> list[Fault]:
         """Fill `buffer`; what could not be read is zero and its ranges (in `buffer`) are returned."""
 
+    def fetch(self, offset: int, length: int) -> None:
+        """Let the system know that these bytes will be asked for soon."""
+
 
 class MemberStream:
     """The spans of many members end to end. May be read from several threads."""
@@ -262,6 +265,18 @@ class MemberStream:
             if oldest is not None:
                 os.close(oldest)
         return fd
+
+    def fetch(self, offset: int, length: int) -> None:
+        """See `Stream`. Only of a member that is open already: opening others ahead would cost more."""
+        number = bisect_right(self._starts, offset) - 1
+        if not hasattr(os, "posix_fadvise") or not 0 <= number < len(self._spans):
+            return
+        span = self._spans[number]
+        with self._lock:
+            fd = self._open.get(span.path)
+            if fd is not None:
+                inside = span.offset + offset - self._starts[number]
+                os.posix_fadvise(fd, inside, length, os.POSIX_FADV_WILLNEED)
 
     def path_at(self, offset: int) -> bytes:
         """The member that holds byte `offset` of the stream."""

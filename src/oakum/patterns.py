@@ -1,14 +1,14 @@
 """The pattern of errors: what was received against what is right, reduced to what tells causes apart.
 
 Cells come in as they are decoded, in any order. Bytes that are wrong among right ones are kept one by one, up
-to a bound; dense stretches of them become *runs*, in the sense in which the design speaks of bursts. Offsets are
-those in the file, since memory, sectors and buffers are aligned to files and not to the protected stream.
+to a bound; dense stretches of them become *runs*, in the sense in which the design speaks of bursts. Offsets
+are those in the file: memory, sectors and buffers are aligned to files and not to the protected stream.
 """
 
 from __future__ import annotations
 
 from bisect import insort
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -86,12 +86,28 @@ class Pattern:
     received: Bytes
     right: Bytes
     runs: Runs
+    positions: Integers
+    """int64[2, 64]: all known flips by bit position, those from 0 to 1 and those from 1 to 0."""
+
     omitted: int = 0
+    unsteady: int = 0
+    """Cells that gave other bytes when they were read again."""
 
     @property
     def flips(self) -> Bytes:
         """received XOR right of the single wrong bytes."""
         return self.received ^ self.right
+
+    def with_file(self, path: str, size: int, found: int | None, converted: str = "") -> Pattern:
+        """The same with what else is known of a file: its length now, and line ends that were converted."""
+        members = list(self.members)
+        for number, member in enumerate(members):
+            if member.path == path:
+                members[number] = replace(member, found=found, converted=converted)
+                return replace(self, members=tuple(members))
+        nothing = np.zeros(256, np.int64)
+        members.append(MemberPattern(path, size, found, 0, 0, 0, nothing, 0, 0, (), converted))
+        return replace(self, members=tuple(members))
 
 
 @dataclass
@@ -120,6 +136,7 @@ class PatternCollector:
         self._runs: list[Integers] = []
         self._sums: list[Integers] = []
         self._pieces = 0
+        self._positions = np.zeros((2, POSITIONS), np.int64)
 
     def add(
         self, path: str, size: int, start: int, offset: int, received: Bytes, right: Bytes | None
@@ -144,6 +161,7 @@ class PatternCollector:
         member.ones += int(np.bitwise_count(right).sum())
         member.bits += 8 * len(right)
         bits = np.bitwise_count(flips[wrong]).astype(np.int64)
+        self._positions += [_by_position(offset, flips & ~right), _by_position(offset, flips & right)]
         clusters = cluster(wrong.astype(np.int64), bits)
         single = np.ones(len(wrong), bool)
         for begin, stop in zip(
@@ -221,7 +239,9 @@ class PatternCollector:
             )
             for m in self._order
         )  # fmt: skip
-        return Pattern(members, bytes_read, owner, places, values[0], values[1], runs, self._omitted)
+        return Pattern(
+            members, bytes_read, owner, places, values[0], values[1], runs, self._positions, self._omitted
+        )  # fmt: skip
 
     def _settle(
         self, places: Integers, values: Bytes, starts: Integers
@@ -289,10 +309,16 @@ def _sums(offset: int, received: Bytes, flips: Bytes) -> Integers:
     row[0, _ZEROS] = np.count_nonzero(wrong & (received == 0))
     row[0, _ONES] = np.count_nonzero(wrong & (received == 0xFF))
     row[0, _HIGH] = np.count_nonzero(flips == 0x80)
+    row[0, _FIRST:] = _by_position(offset, flips)
+    return row
+
+
+def _by_position(offset: int, flips: Bytes) -> Integers:
+    """int64[64]: set bits by position, of bytes from `offset` of the file on."""
     whole = np.zeros(-(-(offset % 8 + len(flips)) // 8) * 8, np.uint8)
     whole[offset % 8 :][: len(flips)] = flips
-    row[0, _FIRST:] = np.unpackbits(whole, bitorder="little").reshape(-1, POSITIONS).sum(axis=0)
-    return row
+    bits = np.unpackbits(whole, bitorder="little").reshape(-1, POSITIONS)
+    return np.asarray(bits.sum(axis=0, dtype=np.int64))
 
 
 def _lost(received: Bytes) -> Integers:

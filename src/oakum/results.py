@@ -167,3 +167,134 @@ class Description:
     guaranteed_burst: int
     members: tuple[MemberDescription, ...] = field(default=())
     notes: tuple[str, ...] = ()
+
+
+# -- plan and rehearse
+
+
+@dataclass(frozen=True)
+class Loss:
+    """The chance of loss at one reading, as natural logarithms (-inf: it cannot happen).
+
+    `column` is that of one outer codeword in one pass of the decoder. Columns that share words are lost
+    together rather than one by one; `block` and `stream` are therefore bounds, (at least, at most), in one
+    pass. `measured` is the most that the stream's chance can be with feedback, by the decoder's measured curve;
+    None where there is none.
+    """
+
+    column: float
+    block: tuple[float, float]
+    stream: tuple[float, float]
+    measured: float | None = None
+
+    @property
+    def at_most(self) -> float:
+        """The best upper bound known for the stream."""
+        return self.stream[1] if self.measured is None else min(self.stream[1], self.measured)
+
+
+@dataclass(frozen=True)
+class Candidate:
+    """A code against a medium. `year` is the loss after one year, `period` that after all of them.
+
+    `renewed` is the log chance of loss within the period when damage is looked for and repaired every year.
+    """
+
+    code: CodeSummary
+    notation: str
+    depth: int
+    guaranteed_burst: int
+    year: Loss
+    period: Loss
+    renewed: float
+
+
+@dataclass(frozen=True)
+class Curve:
+    """Log chance of loss of the stream (at most, one pass) against the flip rate, for one code."""
+
+    label: str
+    rates: tuple[float, ...]
+    losses: tuple[float, ...]
+
+
+@dataclass(frozen=True)
+class Assumption:
+    """One figure that a plan rests on, its source, and how well it is known."""
+
+    text: str
+    source: str
+    mark: str
+
+
+@dataclass(frozen=True)
+class PlanResult:
+    """The result of `plan`. The frontier runs from the least overhead to the least loss."""
+
+    path: Path | None
+    size: int
+    years: float
+    target: float
+    budget: float | None
+    assumptions: tuple[Assumption, ...]
+    frontier: tuple[Candidate, ...]
+    recommended: Candidate
+    reached: bool
+    """Whether the recommended code keeps the chance of loss below the target."""
+
+    command: str
+    curves: tuple[Curve, ...]
+    flip_rate: float
+    """The chance of a bit to differ at the end of the period."""
+
+    seconds: float = 0.0
+    notes: tuple[str, ...] = ()
+
+
+@dataclass(frozen=True)
+class Trial:
+    """One rehearsed history. `margin` is the weakest block's; it is None when something was lost."""
+
+    number: int
+    survived: bool
+    sidecar_survived: bool
+    bits_corrected: int
+    bytes_erased: int
+    blocks_damaged: int
+    blocks_lost: int
+    margin: float | None
+    reason: str = ""
+
+
+@dataclass(frozen=True)
+class Limit:
+    """How far damage was driven: the most that was survived and the least at which a block was lost."""
+
+    quantity: str
+    survived: float | None
+    lost: float | None
+    steps: int
+
+
+@dataclass(frozen=True)
+class RehearsalResult:
+    """The result of `rehearse`. `interval` is the exact one of the survival rate at `level`."""
+
+    target: Path
+    code: CodeSummary
+    stream_bytes: int
+    blocks: int
+    seed: int
+    assumptions: tuple[Assumption, ...]
+    trials: tuple[Trial, ...]
+    level: float
+    interval: tuple[float, float] | None
+    predicted: Loss | None
+    limit: Limit | None = None
+    seconds: float = 0.0
+    notes: tuple[str, ...] = ()
+
+    @property
+    def survived(self) -> int:
+        """How many trials came back in full."""
+        return sum(trial.survived for trial in self.trials)

@@ -139,6 +139,8 @@ def test_repair_hands_over_everything(oakum: Oakum) -> None:
     del call.options["progress"]
     assert call.options == {
         "output": Path("out"),
+        "in_place": False,
+        "even_newer": False,
         "members": ("p/a", "p/b"),
         "accept_loss": True,
         "sidecar": Path("s"),

@@ -12,7 +12,7 @@ RIGHT, WRONG, UNKNOWN = 0, 1, 2
 
 
 class MemoryBlock:
-    """A `BlockSource` of `width` columns (a multiple of 64) of random data. Damage `strips` and `inner` at will.
+    """A `BlockSource` of `width` columns (a multiple of 64) of random data. Damage it at will.
 
     `sent` and `sent_inner` keep what is right. `asked` lists the strips of each call of `rows`.
     """
@@ -32,7 +32,7 @@ class MemoryBlock:
         self.asked: list[list[int]] = []
 
     def _inner(self, strip: int, cell: np.ndarray) -> np.ndarray:
-        """Word by word as the design says: the cell turned by the stagger, the last word filled with zeros."""
+        """Word by word as the design says: the cell turned by the stagger, the last word filled up."""
         m, p = self.geometry.m, self.geometry.p
         if not p:
             return np.empty(0, np.uint8)

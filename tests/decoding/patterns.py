@@ -146,9 +146,7 @@ def _halves(inner: InnerCode) -> dict[int, list[tuple[int, ...]]]:
     return found
 
 
-def lightest_rival(
-    field_row: NDArray[np.uint8], count: int
-) -> NDArray[np.intp]:
+def lightest_rival(field_row: NDArray[np.uint8], count: int) -> NDArray[np.intp]:
     """Which `count` symbols of an outer codeword have the fewest ones: an adversary's choice."""
     ones = np.bitwise_count(field_row).astype(int)
     ones[ones == 0] = 99

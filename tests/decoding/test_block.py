@@ -39,13 +39,18 @@ def flip(block: MemoryBlock, strip: int, columns: np.ndarray | list[int], value:
     block.strips[strip, columns] ^= np.uint8(value)
 
 
-# -- step 1 -------------------------------------------------------------------------------------------------------
+# -- step 1 ----------------------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize("code", CODES)
 def test_a_clean_block(code: str) -> None:
     outcome = is_back(MemoryBlock(code))
-    assert (len(outcome.strips), outcome.margin, outcome.words_corrected, outcome.words_flagged) == (0, 1.0, 0, 0)
+    assert (len(outcome.strips), outcome.margin, outcome.words_corrected, outcome.words_flagged) == (
+        0,
+        1.0,
+        0,
+        0,
+    )
 
 
 @pytest.mark.parametrize("code", CODES)
@@ -93,7 +98,7 @@ def test_right_cells_are_never_altered() -> None:
         assert not outcome.finished.any()
 
 
-# -- step 2 -------------------------------------------------------------------------------------------------------
+# -- step 2 ----------------------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize("code", ["shelf", "stout", "RS(60,40)+EB(128,104)"])
@@ -143,7 +148,7 @@ def test_wrong_inner_parity_alone_harms_nothing() -> None:
     assert not outcome.flips().any()
 
 
-# -- step 3: t and t + 1 ------------------------------------------------------------------------------------------
+# -- step 3: t and t + 1 ---------------------------------------------------------------------------
 
 
 def scattered(block: MemoryBlock, column: int, count: int, seed: int) -> None:
@@ -211,7 +216,7 @@ def test_errors_and_erasures_share_r(code: str) -> None:
     assert decode(block).correctable
 
 
-# -- the guarantee --------------------------------------------------------------------------------------------------
+# -- the guarantee ---------------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize("code", ["slim", "shelf", "stout", "RS(60,40)+EB(128,104)"])
@@ -237,7 +242,7 @@ def test_the_guarantee_of_generalised_minimum_distance(code: str, data: st.DataO
         if not flips:
             break
         left -= flips
-        word, columns = block.word_of(strip, column)
+        _, columns = block.word_of(strip, column)
         bits = [(int(c), b) for c in columns for b in range(8)]
         here = [i for i, (c, _) in enumerate(bits) if c == column]
         first = rng.choice(here)
@@ -247,7 +252,7 @@ def test_the_guarantee_of_generalised_minimum_distance(code: str, data: st.DataO
     assert decode(block).known[:, column].all()
 
 
-# -- feedback and other helps ----------------------------------------------------------------------------------------
+# -- feedback and other helps ----------------------------------------------------------------------
 
 
 def test_what_other_members_vouch_for_is_never_altered() -> None:
@@ -271,9 +276,11 @@ def test_bursts_over_neighbouring_strips(digests: bool) -> None:
     assert outcome.margin == pytest.approx(1 - 24 / 32)
 
 
-@pytest.mark.parametrize(("code", "rate"), [("slim", 0.002), ("shelf", 0.005), ("stout", 0.012), ("plain", 0.002)])
+@pytest.mark.parametrize(
+    ("code", "rate"), [("slim", 0.002), ("shelf", 0.005), ("stout", 0.012), ("plain", 0.002)]
+)
 def test_scattered_flips_everywhere(code: str, rate: float) -> None:
-    """Rates at which the check values promise next to no loss; data, parity strips and inner parity are hit."""
+    """Rates at which the check values promise next to no loss; data and all parity are hit."""
     block = MemoryBlock(code, 4096)
     rng = np.random.default_rng(4)
     for array in (block.strips, block.inner_received):
@@ -282,7 +289,7 @@ def test_scattered_flips_everywhere(code: str, rate: float) -> None:
     assert is_back(block).margin < 1  # Below 0 where feedback saved a column.
 
 
-# -- margins by hand ----------------------------------------------------------------------------------------------------
+# -- margins by hand -------------------------------------------------------------------------------
 
 
 def test_margin_counts_twice_what_is_wrong_and_once_what_is_erased() -> None:

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from itertools import pairwise
+
 import numpy as np
 from hypothesis import given
 from hypothesis import strategies as st
@@ -13,8 +15,8 @@ from oakum.decoding.bursts import BurstCounter, cluster
 def classify(flips: bytes) -> tuple[int, int, list[int]]:
     """(bits in bursts, scattered bits, lengths of bursts) by the definition of design section 1.
 
-    A burst is a stretch of at least 32 bytes, more than a quarter of them wrong, with no run of 16 right bytes
-    inside; the stretches are the longest ones between wrong bytes that no run of 16 right bytes divides.
+    A burst is a stretch of at least 32 bytes, more than a quarter of them wrong, with no run of 16 right
+    bytes inside; the stretches are the longest ones between wrong bytes that no such run divides.
     """
     stretches: list[list[int]] = []
     run = 16
@@ -43,7 +45,7 @@ def counted(flips: bytes, cuts: list[int], order: int) -> tuple[int, int, list[i
     """The same by the counter, the line cut into cells that come in some order."""
     data = np.frombuffer(flips, np.uint8)
     edges = sorted({0, len(flips), *(c for c in cuts if 0 < c < len(flips))})
-    cells = list(zip(edges[:-1], edges[1:], strict=True))
+    cells = list(pairwise(edges))
     counter = BurstCounter()
     for i in np.random.default_rng(order).permutation(len(cells)).tolist():
         start, stop = cells[i]

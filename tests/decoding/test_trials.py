@@ -25,13 +25,20 @@ from oakum.kernels.words import FLAGGED
 def reliability(**given_fields: np.ndarray) -> Reliability:
     """What is known of some symbols; whatever is not given says nothing."""
     shape = given_fields["status"].shape
-    plain = {"status": np.zeros(shape, np.uint8), "doubts": np.zeros(shape, np.uint8), "open": np.ones(shape, bool)}
+    plain = {
+        "status": np.zeros(shape, np.uint8),
+        "doubts": np.zeros(shape, np.uint8),
+        "open": np.ones(shape, bool),
+    }
     return Reliability(
-        **{f.name: given_fields.get(f.name, plain.get(f.name, np.zeros(shape, bool))) for f in fields(Reliability)}
+        **{
+            f.name: given_fields.get(f.name, plain.get(f.name, np.zeros(shape, bool)))
+            for f in fields(Reliability)
+        }
     )
 
 
-# -- chances ---------------------------------------------------------------------------------------------------------
+# -- chances ---------------------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize(("n", "k"), [(3, 1), (4, 2)])
@@ -71,14 +78,14 @@ def test_chance_of_acceptance_counts_words(places: int, checks: int, data: st.Da
 
 
 def test_miscorrection_of_a_random_word() -> None:
-    """About 1/t!: exact 2.08533645e-5 for t = 8, 2.60888880e-14 for t = 16 (McEliece and Swanson; computed)."""
+    """About 1/t!: 2.08533645e-5 for t = 8, 2.60888880e-14 for t = 16 (McEliece and Swanson; computed)."""
     for t, published in ((8, 2.08533645e-5), (16, 2.60888880e-14)):
         errors = np.arange(t + 1)
         total = np.exp(chance_of_acceptance(np.full(t + 1, 255), errors, np.full(t + 1, 2 * t))).sum()
         assert total == pytest.approx(published, rel=1e-8)
 
 
-# -- Forney's distance --------------------------------------------------------------------------------------------------
+# -- Forney's distance -----------------------------------------------------------------------------
 
 
 @given(st.integers(0, 100_000), st.sampled_from([(4, 1), (6, 2), (8, 3)]))
@@ -115,11 +122,13 @@ def test_distance_by_hand() -> None:
     assert generalised_distance(known, both, 4).tolist() == [2 + 1.5 + 1 + 1]
 
 
-# -- verdicts ----------------------------------------------------------------------------------------------------------
+# -- verdicts --------------------------------------------------------------------------------------
 
 
-@given(st.lists(st.lists(st.tuples(st.integers(0, 3), st.integers(1, 50)), min_size=1, max_size=8), min_size=1,
-                max_size=3))  # fmt: skip
+ROWS = st.lists(st.tuples(st.integers(0, 3), st.integers(1, 50)), min_size=1, max_size=8)
+
+
+@given(st.lists(ROWS, min_size=1, max_size=3))
 def test_dense_words_are_those_in_long_runs_without_a_clean_one(rows: list[list[tuple[int, int]]]) -> None:
     width = max(sum(count for _, count in row) for row in rows)
     status = np.zeros((len(rows), width), np.uint8)

@@ -11,7 +11,7 @@ from pathlib import Path
 import numpy as np
 from hypothesis import given, settings
 from hypothesis import strategies as st
-from support import content, flipped_bits, plant, rewrite, snapshot
+from support import content, flipped_bits, plant, rewrite, snapshot, with_flips
 
 from oakum import CannotCheck, protect, repair, verify
 from oakum.algebra.naming import resolve_code
@@ -102,6 +102,31 @@ def test_inside_capacity_everything_comes_back_and_is_counted(case: Case) -> Non
             data, now = original[os.path.basename(member.path)], (Path(place) / member.path).read_bytes()
             assert isinstance(data, bytes)
             assert member.bits_flipped == flipped_bits(data, now)
+
+
+@settings(max_examples=40)
+@given(CASES, st.integers(0, 200))
+def test_sidecar_and_data_together(case: Case, flips: int) -> None:
+    """Strips of data and of parity share r; records have a code of their own. Both come back as they were."""
+    with tempfile.TemporaryDirectory() as place:
+        folder = plant(Path(place) / "set", case.files)
+        original = snapshot(folder)
+        sidecar = protect([folder], code=case.code, depth=case.depth).sidecar
+        stream, whole = b"".join(case.files.values()), sidecar.read_bytes()
+        damaged = hurt(case, stream, resolve_code(case.code).outer.r // 4)
+        # Flips within a cell of one parity strip at the most, and in the records.
+        at = 4096 + case.seed % (len(whole) - 4096)
+        broken = with_flips(whole, min(flips, 200), case.seed, (at, min(len(whole), at + 64)))
+        spread(case, damaged, folder)
+        sidecar.write_bytes(broken)
+        seen = verify(folder)
+        assert seen.sidecar.bits_flipped == flipped_bits(whole, broken)
+        assert seen.totals.bits_flipped == flipped_bits(stream, damaged)
+        result = repair(folder, output=Path(place) / "out")
+        assert snapshot(Path(place) / "out/set") == original
+        if broken != whole:
+            assert result.sidecar.mended is not None
+            assert result.sidecar.mended.read_bytes() == whole
 
 
 @settings(max_examples=25)

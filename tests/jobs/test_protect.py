@@ -30,10 +30,12 @@ def sidecar_of(path: Path, **options: object) -> bytes:
 
 @pytest.fixture
 def tree(tmp_path: Path) -> Path:
-    return plant(tmp_path / "set", {"a": content(70_000), "d/b": content(5), "d/e": b"", "z": content(900_000, 2)})  # fmt: skip
+    return plant(
+        tmp_path / "set", {"a": content(70_000), "d/b": content(5), "d/e": b"", "z": content(900_000, 2)}
+    )
 
 
-# -- the same bytes -------------------------------------------------------------------------------------
+# -- the same bytes --------------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize("depth", [None, 4096])
@@ -44,7 +46,7 @@ def test_threads_and_memory_do_not_show(tree: Path, code: str, depth: int | None
     assert sidecar_of(tree, code=code, depth=depth, memory=TIGHT) == first
 
 
-# The last length leaves as much of the last strip empty as there can be, so that some of its cells are virtual.
+# The last length leaves as much of the last strip empty as can be: some of its cells are virtual.
 @pytest.mark.parametrize("length", [5_000_000, 9_000_000, 223 * (26_240 - 64) + 1])
 @pytest.mark.parametrize("code", ["shelf", SMALL])
 def test_one_read_and_two_give_the_same(tmp_path: Path, code: str, length: int) -> None:
@@ -107,7 +109,7 @@ def test_where_the_sidecar_lies_does_not_show(tree: Path, tmp_path: Path) -> Non
     assert protect([tmp_path / "elsewhere/set"]).sidecar.read_bytes() == first
 
 
-# -- results and members -----------------------------------------------------------------------------------
+# -- results and members ---------------------------------------------------------------------------
 
 
 def test_the_result(tree: Path, tmp_path: Path) -> None:
@@ -159,7 +161,7 @@ def test_paths_are_relative_to_the_sidecar(tmp_path: Path, monkeypatch: pytest.M
     assert verify(tmp_path / "other/x.oakum", root=tmp_path / "deep").outcome is Outcome.INTACT
 
 
-# -- bad input ------------------------------------------------------------------------------------------------
+# -- bad input -------------------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize(
@@ -270,7 +272,9 @@ def test_a_full_disk_during_a_repair(tree: Path, tmp_path: Path, monkeypatch: py
     assert snapshot(tmp_path) == before
 
 
-def test_too_little_room_is_said_before_the_work(tree: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:  # fmt: skip
+def test_too_little_room_is_said_before_the_work(
+    tree: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
     usage = shutil._ntuple_diskusage(1000, 900, 100)  # type: ignore[attr-defined]
     monkeypatch.setattr(shutil, "disk_usage", lambda _: usage)
     with pytest.raises(CannotCheck, match="has room for 100 bytes"):

@@ -83,7 +83,9 @@ def test_no_sidecar(tmp_path: Path, name: str, why: str) -> None:
         verify(tmp_path / name)
 
 
-@pytest.mark.parametrize("data", [b"", b"x", content(50_000), bytes(50_000)], ids=["empty", "one", "other", "zeros"])  # fmt: skip
+@pytest.mark.parametrize(
+    "data", [b"", b"x", content(50_000), bytes(50_000)], ids=["empty", "one", "other", "zeros"]
+)
 def test_not_a_sidecar(tmp_path: Path, data: bytes) -> None:
     (tmp_path / "x.oakum").write_bytes(data)
     for job in (verify, repair):
@@ -115,7 +117,7 @@ def test_a_sidecar_without_permission(tmp_path: Path, monkeypatch: pytest.Monkey
         verify(tmp_path / "x")
 
 
-# -- digests only ---------------------------------------------------------------------------------------
+# -- digests only ----------------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize("size", [0, 1, 5000, 300_000])
@@ -133,6 +135,18 @@ def test_digests_only(tmp_path: Path, size: int) -> None:
         assert states(result)["set/a"] is MemberState.ALTERED
 
 
+def test_digests_only_with_a_small_last_window(tmp_path: Path) -> None:
+    """The last of several windows is so short that it has no digests of cells."""
+    data = content(2 * WINDOW + 3000)
+    folder, _, places = windowed(tmp_path, a=data)
+    assert len(places) == 3
+    assert verify(folder, digests_only=True).outcome is Outcome.INTACT
+    rewrite(folder / "a", with_flips(data, 4, within=(2 * WINDOW, len(data))))
+    result = verify(folder, digests_only=True)
+    assert (result.outcome, result.totals.bits_flipped) == (Outcome.CORRECTABLE, 4)
+    assert states(result)["set/a"] is MemberState.ALTERED
+
+
 def test_digests_only_past_capacity(tmp_path: Path) -> None:
     for size in (30_000, 300_000):
         (tmp_path / "f").write_bytes(content(size))
@@ -143,7 +157,7 @@ def test_digests_only_past_capacity(tmp_path: Path) -> None:
         assert states(result)["f"] is MemberState.UNCORRECTABLE
 
 
-# -- lost sections ----------------------------------------------------------------------------------------
+# -- lost sections ---------------------------------------------------------------------------------
 
 
 def test_losing_a_section_between_others_costs_only_its_window(tmp_path: Path) -> None:
@@ -213,7 +227,7 @@ def test_digests_that_are_lost_cost_time_but_no_data(tmp_path: Path) -> None:
     assert (tmp_path / "set.mended.oakum").read_bytes() == whole
 
 
-# -- what is counted ---------------------------------------------------------------------------------------
+# -- what is counted -------------------------------------------------------------------------------
 
 
 def test_margins_say_how_close_it_was(tmp_path: Path) -> None:
@@ -252,7 +266,7 @@ def test_bursts_are_told_from_scattered_flips(tmp_path: Path) -> None:
     assert (totals.bits_flipped_burst, totals.bits_flipped_scattered) == (40, 10)
 
 
-# -- what is not imported ------------------------------------------------------------------------------------
+# -- what is not imported --------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize("depth", [None, 4096])

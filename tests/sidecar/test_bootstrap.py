@@ -31,8 +31,8 @@ from oakum.sidecar.bootstrap import (
 
 def bootstrap(code: str = "shelf", **changes: object) -> Bootstrap:
     made = Bootstrap(
-        CodeParameters.of(resolve_code(code)), 16, 3, 4_000_000, 1_000_000, 4544, 8192, 9_000_000, 777, 300, 5,
-        2, 1, b"P" * 16, b"S" * 16, b"I" * 16, 7,
+        CodeParameters.of(resolve_code(code)), 16, 3, 4_000_000, 1_000_000, 4544, 8192, 9_000_000, 777, 300,
+        5, 2, 1, b"P" * 16, b"S" * 16, b"I" * 16, 7,
     )  # fmt: skip
     return replace(made, **changes)  # type: ignore[arg-type]
 
@@ -112,7 +112,7 @@ def test_a_newer_version_is_named() -> None:
 
 @given(st.integers(6, RECORD_BYTES - 9), st.integers(1, 255))
 def test_whatever_a_record_says_it_is_read_or_refused(place: int, change: int) -> None:
-    """A wrong byte with a checksum that fits: a record whose geometry and code are checked, or FormatError."""
+    """A wrong byte with a checksum that fits: a record that can be checked, or FormatError."""
     packed = bytearray(bootstrap().pack())
     packed[place] ^= change
     try:
@@ -148,7 +148,7 @@ def test_identity_is_a_hash_of_record_and_table() -> None:
     assert identified.identity == hashlib.sha256(b"oakum section\0" + plain + b"table").digest()[:16]
 
 
-# -- the marker ---------------------------------------------------------------------------------------------
+# -- the marker ------------------------------------------------------------------------------------
 
 
 def test_marker_against_its_published_chances() -> None:
@@ -161,13 +161,13 @@ def test_marker_against_its_published_chances() -> None:
 
 
 def test_marker_is_unlike_itself_shifted() -> None:
-    """Aperiodic autocorrelation: +-1 sequences, no sidelobe above 7 (a bit shift never looks like a marker)."""
+    """Aperiodic autocorrelation: +-1 sequences, no sidelobe above 7 (a shift never looks like a marker)."""
     bits = 2 * np.unpackbits(np.frombuffer(MARKER, np.uint8)).astype(int) - 1
     sidelobes = np.correlate(bits, bits, "full")[:63]
     assert np.abs(sidelobes).max() <= 7
 
 
-# -- digests through the code paths that use them --------------------------------------------------------------
+# -- digests through the code paths that use them --------------------------------------------------
 
 
 def sanity_buffer(length: int) -> bytes:

@@ -98,7 +98,7 @@ def test_beyond_that_nothing_wrong_is_called_known(lost: int, wrong: int) -> Non
 
 def test_columns_are_solved_one_by_one() -> None:
     """61 wrong rows in half of the columns: the other half is still known."""
-    frame, data, rows = coded(40)
+    frame, _, rows = coded(40)
     hurt = rows.copy()
     hurt[100:161, 20:] ^= 0x5A
     found = correct(frame, hurt, None, IDENTITY)

@@ -112,7 +112,8 @@ def overhead(code: str, length: int) -> float:
 
 @pytest.mark.parametrize("code", NAMED)
 @pytest.mark.parametrize(
-    ("length", "most"), [(1 << 20, 0.03), (64 << 20, 0.01), (200_000_000, 0.01), (1 << 32, 0.01), (1 << 40, 0.01)]
+    ("length", "most"),
+    [(1 << 20, 0.03), (64 << 20, 0.01), (200_000_000, 0.01), (1 << 32, 0.01), (1 << 40, 0.01)],
 )  # fmt: skip
 def test_overhead_beyond_the_code_is_within_the_design(code: str, length: int, most: float) -> None:
     """Design, section 5: at most 1 % of the stream from 64 MiB, 3 % at 1 MiB."""

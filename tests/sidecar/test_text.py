@@ -1,4 +1,4 @@
-"""The page of plain words: it fits, can be read, says the right figures, and follows from the record alone."""
+"""The page of plain words: it fits, can be read, and says the right figures."""
 
 from __future__ import annotations
 

@@ -27,7 +27,7 @@ class Buffer:
         self.data = bytearray(content(size, 77))
 
     def write(self, offset: int, data: bytes | bytearray | memoryview) -> None:
-        assert 0 <= offset
+        assert offset >= 0
         assert offset + len(data) <= len(self.data)
         self.data[offset : offset + len(data)] = data
 

@@ -9,9 +9,11 @@ Data Transmission, chapter 12), refined by whether the symbol in question is hit
 
 from __future__ import annotations
 
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
+from fractions import Fraction
 from functools import cache
-from math import comb
+from math import comb, log
 
 import numpy as np
 from numpy.typing import NDArray
@@ -20,6 +22,8 @@ from oakum.algebra.inner import NONE, InnerCode
 from oakum.algebra.splits import BYTE, split_weights
 
 Floats = NDArray[np.float64]
+Count = int | Fraction
+"""Fractions occur where a published enumerator is spread evenly over the places of a word."""
 
 
 @dataclass(frozen=True)
@@ -67,10 +71,19 @@ def symbol_chances(inner: InnerCode, p: float) -> SymbolChances:
 
 @cache
 def pattern_counts(inner: InnerCode) -> PatternCounts:
-    """Count the error patterns of a whole word."""
-    n, rest, t = inner.n, inner.n - BYTE, inner.t
-    mistaken, hit, mistaken_hit = [0] * (n + 1), [0] * (n + 1), [0] * (n + 1)
-    for (v, u), codewords in split_weights(inner).items():
+    """The error patterns of a whole word of `inner`, averaged over its message bytes."""
+    return count_patterns(split_weights(inner), inner.n, inner.t, inner.m)
+
+
+def count_patterns(weights: Mapping[tuple[int, int], Count], n: int, t: int, share: int) -> PatternCounts:
+    """Count the error patterns of words of n bits in which up to t flips are corrected.
+
+    `weights` is a split weight enumerator B[v, u], summed over `share` bytes.
+    """
+    rest = n - BYTE
+    mistaken: list[Count] = [0] * (n + 1)
+    hit, mistaken_hit = mistaken.copy(), mistaken.copy()
+    for (v, u), codewords in weights.items():
         if v + u == 0:
             continue
         for inside, outside, patterns in _near(v, u, rest, t):
@@ -78,10 +91,12 @@ def pattern_counts(inner: InnerCode) -> PatternCounts:
             mistaken[inside + outside] += number
             hit[inside + outside] += number if inside else 0
             mistaken_hit[inside + outside] += number if v else 0
-    flagged = [0] * (t + 1) + [inner.m * comb(n, j) - mistaken[j] for j in range(t + 1, n + 1)]
-    struck = [comb(n, j) - comb(rest, j) for j in range(n + 1)]
-    flagged_hit = [0] * (t + 1) + [inner.m * struck[j] - hit[j] for j in range(t + 1, n + 1)]
-    return PatternCounts(*(_log_each(c, inner.m) for c in (flagged, flagged_hit, mistaken_hit)))
+    beyond = range(t + 1, n + 1)
+    flagged = [share * comb(n, j) - mistaken[j] for j in beyond]
+    flagged_hit = [share * (comb(n, j) - comb(rest, j)) - hit[j] for j in beyond]
+    return PatternCounts(
+        *(_log_each([0] * (n + 1 - len(c)) + c, share) for c in (flagged, flagged_hit, mistaken_hit))
+    )
 
 
 def _near(v: int, u: int, rest: int, t: int) -> list[tuple[int, int, int]]:
@@ -100,10 +115,8 @@ def _near(v: int, u: int, rest: int, t: int) -> list[tuple[int, int, int]]:
     return found
 
 
-def _log_each(counts: list[int], share: int) -> Floats:
-    """Logarithms of counts / share; integers may be beyond the range of a float."""
-    from math import log
-
+def _log_each(counts: Sequence[Count], share: int) -> Floats:
+    """Logarithms of counts / share."""
     return np.array([log(c) - log(share) if c else -np.inf for c in counts])
 
 

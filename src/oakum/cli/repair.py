@@ -7,6 +7,8 @@ import typer
 
 from oakum.cli.checking import check
 from oakum.cli.options import DEFAULT_MEMORY, Jobs, Json, Memory, Quiet, Root, Sidecar, Target, Unreadable
+from oakum.cli.verify import STATUS as CHECKED
+from oakum.errors import UsageError
 from oakum.results import Outcome
 
 _STATUS = {Outcome.INTACT: 0, Outcome.CORRECTABLE: 0, Outcome.UNCORRECTABLE: 20, Outcome.UNCHECKED: 30}
@@ -23,6 +25,28 @@ def repair(
             help="Folder to write the members under; for one file also its new name.",
         ),
     ] = None,
+    in_place: Annotated[
+        bool,
+        typer.Option(
+            "--in-place",
+            help="Put the bytes right in the files themselves, under a journal.",
+            show_default=False,
+        ),
+    ] = False,
+    even_newer: Annotated[
+        bool,
+        typer.Option(
+            "--even-newer",
+            help="With --in-place: also put back files that look edited.",
+            show_default=False,
+        ),
+    ] = False,
+    undo: Annotated[
+        bool,
+        typer.Option(
+            "--roll-back", help="Undo the last repair --in-place, or an interrupted one.", show_default=False
+        ),
+    ] = False,
     member: Annotated[
         list[str] | None,
         typer.Option(
@@ -43,7 +67,21 @@ def repair(
     memory: Memory = DEFAULT_MEMORY,
     jobs: Jobs = None,
 ) -> int:
-    """Write the corrected files beside the damaged ones."""
+    """Write the corrected files beside the damaged ones, or put them right where they are."""
+    _refuse_together(in_place, even_newer, undo, output=output, member=member, accept_loss=accept_loss)
+    if undo:
+        from oakum.jobs.repair import roll_back
+
+        back = check(
+            "repair",
+            target,
+            as_json=json,
+            quiet=quiet,
+            job=lambda progress: roll_back(
+                target, sidecar=sidecar, root=root, memory=memory, jobs=jobs, progress=progress
+            ),
+        )
+        return CHECKED[back.outcome]
     from oakum.jobs.repair import repair as job
 
     result = check(
@@ -56,6 +94,8 @@ def repair(
             sidecar=sidecar,
             root=root,
             output=output,
+            in_place=in_place,
+            even_newer=even_newer,
             members=tuple(member or ()),
             accept_loss=accept_loss,
             unreadable=unreadable,
@@ -65,3 +105,25 @@ def repair(
         ),
     )
     return _STATUS[result.outcome]
+
+
+def _refuse_together(
+    in_place: bool,
+    even_newer: bool,
+    undo: bool,
+    *,
+    output: Path | None,
+    member: list[str] | None,
+    accept_loss: bool,
+) -> None:
+    """Options that contradict each other."""
+    if in_place and output is not None:
+        raise UsageError("--in-place and --output contradict each other; give one of them")
+    if in_place and accept_loss:
+        raise UsageError("--accept-loss writes files that are only partly right, and never over others")
+    if even_newer and not in_place:
+        raise UsageError("--even-newer goes with --in-place; other repairs leave the files as they are")
+    if undo and (in_place or accept_loss or output is not None or member):
+        raise UsageError(
+            "--roll-back undoes the whole of the last repair in place; give it alone"
+        )

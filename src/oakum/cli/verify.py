@@ -8,7 +8,7 @@ from oakum.cli.checking import check
 from oakum.cli.options import DEFAULT_MEMORY, Jobs, Json, Memory, Quiet, Root, Sidecar, Target, Unreadable
 from oakum.results import Outcome
 
-_STATUS = {Outcome.INTACT: 0, Outcome.CORRECTABLE: 10, Outcome.UNCORRECTABLE: 20, Outcome.UNCHECKED: 30}
+STATUS = {Outcome.INTACT: 0, Outcome.CORRECTABLE: 10, Outcome.UNCORRECTABLE: 20, Outcome.UNCHECKED: 30}
 
 
 def verify(
@@ -48,4 +48,4 @@ def verify(
             progress=progress,
         ),
     )
-    return _STATUS[result.outcome]
+    return STATUS[result.outcome]

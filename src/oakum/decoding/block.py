@@ -35,6 +35,7 @@ from oakum.decoding.trials import (
     erasure_trials,
     generalised_distance,
     hopeful,
+    nearest_rival,
     neighbouring_rows,
 )
 from oakum.geometry import Geometry
@@ -162,6 +163,7 @@ class _Block:
         self.value = self.raw.copy()
         self.finished = np.zeros(len(self.strips), bool)
         self.status = np.zeros((len(self.strips), self.d.words.words(self.width)), np.uint8)
+        self.heed_density = True
         self.false_pins = 0
 
     def run(self) -> BlockOutcome:
@@ -191,7 +193,8 @@ class _Block:
             status = np.empty((len(rows), self.status.shape[1]), np.uint8)
             pins = self.pinned[rows].view(np.uint8)
             self.d.words.correct(cells, self.parity[rows], self.staggers[rows], status, pinned=pins)
-            status[dense_words(status)] = DENSE
+            if self.heed_density:
+                status[dense_words(status)] = DENSE
             if self.unusable is not None:
                 status[self.unusable[rows]] = UNUSABLE
             self.status[rows] = status
@@ -440,7 +443,9 @@ class _Block:
                 return number + 1
             if self._contradicted() and self._withdraw():
                 continue
-            if not self.d.feedback or (not solved and int(self.finished.sum()) == finished):
+            if not self.d.feedback:
+                return number + 1
+            if not solved and int(self.finished.sum()) == finished and not self._reconsider():
                 return number + 1
         return ROUNDS
 
@@ -460,6 +465,15 @@ class _Block:
     def _contradicted(self) -> bool:
         """Whether a cell all of whose bytes are known disagrees with its digest."""
         return bool((self.digested & ~self.finished & self.pinned.all(axis=1)).any())
+
+    def _reconsider(self) -> bool:
+        """Nothing more can be solved: take back verdicts about density, then what is only provisional."""
+        if self.heed_density and (self.status == DENSE).any():
+            self.heed_density = False
+            self.tried_as_received, self.tried_erasures = _Seen(), _Seen()
+            self._decode_words()
+            return True
+        return self._withdraw()
 
     def _withdraw(self) -> bool:
         """Take back every provisional solution; those columns must be sure the next time."""

@@ -21,6 +21,7 @@ from oakum.kernels.words import FLAGGED
 Bytes = NDArray[np.uint8]
 Places = NDArray[np.intp]
 Mask = NDArray[np.bool_]
+Floats = NDArray[np.float64]
 
 DENSE = 254
 """Status of a word that lies in a burst, of its data or of its inner parity: its bytes stay as received."""
@@ -44,7 +45,10 @@ REACH = 5.0
 """How far beyond the code's reach a column may be expected to be for such trials to be made."""
 
 DENSE_RUN = 32
-"""So many words in a row without a clean one are a burst in the data or in its inner parity."""
+"""So many words in a row without a clean one are a burst in the data or in its inner parity ..."""
+
+BY_CHANCE = float(np.log(1e-6))
+"""... if the log of the chance that scattered flips leave no clean word among so many is below this."""
 
 
 @dataclass(frozen=True)
@@ -144,34 +148,80 @@ def chance_of_acceptance(places: Places, errors: Places, checks: Places) -> NDAr
     return np.asarray(choose + errors * np.log(255 / 256) + (errors - checks) * np.log(256.0))
 
 
-def generalised_distance(known: Reliability, wrong: Mask, d: int) -> NDArray[np.float64]:
+def generalised_distance(known: Reliability, wrong: Mask, d: int) -> Floats:
     """Forney's measure of how far a solution is from what was received, for each column, in symbols.
 
     With e flips corrected in its word a symbol has the reliability (d - 2e)/d, an erased or flagged one 0;
     a symbol that the solution leaves as it is adds 1 - reliability, one that it alters (`wrong`, bool[R,
     columns]) adds 1 + reliability. At most one codeword is nearer than D; see the source above.
     """
-    flips = np.where(known.status <= UNUSABLE - 1, known.status, 0).astype(np.float64)
-    reliability = np.maximum(1.0 - 2.0 * flips / d, 0.0)
-    reliability[known.erased | (known.status == FLAGGED)] = 0.0
-    terms = np.where(wrong, 1.0 + reliability, 1.0 - reliability)
-    return np.asarray(np.where(known.open, terms, 0.0).sum(axis=0))
+    total = np.zeros(wrong.shape[1])
+    for reliability, places in _by_reliability(known, d):
+        altered = np.count_nonzero(places & wrong, axis=0)
+        total += (1 - reliability) * np.count_nonzero(places, axis=0) + 2 * reliability * altered
+    return total
+
+
+def nearest_rival(known: Reliability, wrong: Mask, d: int, distance: int) -> Floats:
+    """The least generalised distance that any codeword but the solution itself can have, for each column.
+
+    A rival differs from the solution in at least D = `distance` symbols. It costs least if it leaves those
+    that the solution alters as they were received and alters the least reliable of the others (Taipale and
+    Pursley, IEEE Trans. Inform. Theory 37, 1991). Infinite where fewer than D symbols are open.
+    """
+    total = np.zeros(wrong.shape[1])
+    missing = distance - np.count_nonzero(wrong & known.open, axis=0)
+    for reliability, places in _by_reliability(known, d):
+        taken = np.clip(missing, 0, np.count_nonzero(places & ~wrong, axis=0))
+        total += (1 - reliability) * np.count_nonzero(places, axis=0) + 2 * reliability * taken
+        missing -= taken
+    return np.where(missing > 0, np.inf, total)
+
+
+def _by_reliability(known: Reliability, d: int) -> Iterator[tuple[float, Mask]]:
+    """Reliabilities in rising order, and the open symbols that have them."""
+    none = known.erased | known.dense | (known.status == FLAGGED)
+    yield 0.0, none & known.open
+    rest = known.open & ~none
+    for flips in range((d - 1) // 2, 0, -1):
+        yield (d - 2 * flips) / d, rest & (known.status == flips)
+    yield 1.0, rest & ((known.status == 0) | (known.status == UNUSABLE))
 
 
 def dense_words(status: Bytes) -> Mask:
-    """Which words, bool[R, words], lie in a run of at least DENSE_RUN words none of which is clean."""
+    """Which words, bool[R, words], lie in a run without a clean one that is too long for scattered flips.
+
+    The share of clean words is taken from those outside such runs, so that the runs can only grow longer.
+    """
+    run = DENSE_RUN
+    while True:
+        dense = _in_runs(status, run)
+        longer = _least_run(status[~dense])
+        if longer <= run:
+            return dense
+        run = longer
+
+
+def _in_runs(status: Bytes, run: int) -> Mask:
+    """Which words lie among at least `run` in a row none of which is clean."""
     rows, words = status.shape
-    if words < DENSE_RUN:
+    if words < run:
         return np.zeros(status.shape, bool)
     clean = np.zeros((rows, words + 1), np.int32)
     np.cumsum(status == 0, axis=1, out=clean[:, 1:])
-    begins = clean[:, DENSE_RUN:] == clean[:, :-DENSE_RUN]
+    begins = clean[:, run:] == clean[:, :-run]
     if not begins.any():
         return np.zeros(status.shape, bool)
     covered = np.zeros((rows, words + 1), np.int32)
     covered[:, : begins.shape[1]] += begins
-    covered[:, DENSE_RUN:] -= begins[:, : words + 1 - DENSE_RUN]
+    covered[:, run:] -= begins[:, : words + 1 - run]
     return np.asarray(np.cumsum(covered, axis=1)[:, :words] > 0)
+
+
+def _least_run(outside: Bytes) -> int:
+    """The least run of words without a clean one that is no accident, by the statuses `outside` of runs."""
+    clean = np.count_nonzero(outside == 0) / max(outside.size, 1)
+    return DENSE_RUN if clean in (0, 1) else max(DENSE_RUN, int(np.ceil(BY_CHANCE / np.log1p(-clean))))
 
 
 def neighbouring_rows(strips: Places, room: int, least: int) -> Mask:

@@ -298,6 +298,7 @@ class WindowCheck:
         self.parity = np.full(g.r * g.blocks, start_state, np.uint8).reshape(g.blocks, g.r)
         self.inner_suspects: dict[int, set[int]] = {}
         self.wear = Wear()
+        self._body_unreadable = 0
         self.right_spans: list[Range] = []
 
     def _known_bad(self, unreadable: dict[bytes, list[Range]]) -> list[Range]:
@@ -334,6 +335,7 @@ class WindowCheck:
         else:
             self._scan_whole_body()
         self.wear = examine_records(self.section)
+        self.wear.unreadable += self._body_unreadable
 
     def _scan_data(self, hasher: MemberHasher | None) -> None:
         g = self.g
@@ -423,6 +425,12 @@ class WindowCheck:
             ranges.append((start, stop))
         return ranges
 
+    def _read_body(self, offset: int, length: int) -> tuple[Bytes, list[Range]]:
+        """Bytes of the section's body, those that cannot be read counted."""
+        data, faults = self.section.body(offset, length)
+        self._body_unreadable += sum(stop - start for start, stop in faults)
+        return data, faults
+
     def _scan_parity(self) -> None:
         """The parity strips, in pieces of columns as they are digested block by block."""
         g = self.g
@@ -436,7 +444,7 @@ class WindowCheck:
             )
             futures = []
             for j in range(g.r):
-                cells, faults = self.section.body(j * g.depth + first * CELL, width)
+                cells, faults = self._read_body(j * g.depth + first * CELL, width)
                 futures.append(
                     self._pools.work.submit(
                         self._compare_parity, first, j, cells, faults, expected[j :: g.r], known
@@ -465,7 +473,7 @@ class WindowCheck:
         """One of the two areas of inner parity: cells that disagree with their digest are looked at later."""
         for offset in range(0, length, CHUNK):
             size = min(CHUNK, length - offset)
-            data, faults = self.section.body(start + offset, size)
+            data, faults = self._read_body(start + offset, size)
             digests = cell_digests(data)
             expected, known = self.section.digests(track, offset // CELL, len(digests))
             bad = digests != expected
@@ -498,7 +506,7 @@ class WindowCheck:
     def _scan_whole_body(self) -> None:
         """A small window: one digest speaks for the whole body."""
         g = self.g
-        body, faults = self.section.body(0, g.body)
+        body, faults = self._read_body(0, g.body)
         if not faults and xxhash.xxh3_64_intdigest(body.data) == self.section.bootstrap.body_digest:
             self.parity[:] = RIGHT
         else:
@@ -511,6 +519,14 @@ class WindowCheck:
     def block_bytes(self) -> int:
         """Bytes of a whole block, for the progress of decoding."""
         return self.g.n * self.g.width(0) if self.g.blocks else 0
+
+    def burst_left(self) -> int:
+        """The contiguous loss in bytes that the parity that is left can repair anywhere in the window.
+
+        Parity cells that are not right are counted as lost, although flips in them may be corrected.
+        """
+        worst = int((self.parity != RIGHT).sum(axis=1).max()) if self.parity.size else 0
+        return max(0, (self.g.r - worst) * self.g.depth - 2 * CELL)
 
     def has_damage(self, start: int, stop: int, *, unknown: bool) -> bool:
         """Whether a cell that holds any of the window's bytes start..stop-1 is wrong (or `unknown`)."""

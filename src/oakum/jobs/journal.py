@@ -1,4 +1,4 @@
-"""The journal of a repair in place: for every byte that it changes, what stood there and what is to stand there.
+"""The journal of a repair in place: what stood in every place that changes, and what is to stand there.
 
 The journal is whole and on the medium before the first byte of a member changes. Read forwards it finishes
 a repair that was interrupted, read backwards it brings the damaged state back; both may be done again and
@@ -110,7 +110,7 @@ def journal_path(sidecar: Path) -> Path:
     return sidecar.with_name(sidecar.name + SUFFIX)
 
 
-# -- writing ------------------------------------------------------------------------------------------------
+# -- writing --------------------------------------------------------------------------------------------
 
 
 class Draft:
@@ -132,7 +132,7 @@ class Draft:
         return number
 
     def patch(self, entry: int, offset: int, old: bytes | None, new: bytes) -> None:
-        """Bytes of an entry that will change, at most PATCH of them; `old` is None where it was unreadable."""
+        """Bytes of an entry that will change, at most PATCH; `old` is None where it was unreadable."""
         place = self._write(_Kind.PATCH, old is None, entry, old or b"", new, offset)
         patch = Patch(entry, offset, len(old or b""), len(new), old is None, place)
         self.contents.patches[entry].append(patch)
@@ -185,18 +185,21 @@ def _condition(condition: Condition | None) -> bytes:
     return fixed + struct.pack("<H", len(c.target)) + c.target
 
 
-# -- reading ------------------------------------------------------------------------------------------------
+# -- reading --------------------------------------------------------------------------------------------
 
 
 class Journal:
     """A journal on the medium, checked record by record when it is opened."""
 
-    def __init__(self, sidecar: Path) -> None:
-        """Open the journal of `sidecar`. Raises FileNotFoundError, or CannotCheck for one that is damaged."""
+    def __init__(self, sidecar: Path, *, write: bool = True) -> None:
+        """Open the journal of `sidecar`, to `write` to it too.
+
+        Raises FileNotFoundError, or CannotCheck for one that is damaged or cannot be read.
+        """
         self.path = journal_path(sidecar)
         try:
-            flags = os.O_RDWR | os.O_CLOEXEC | os.O_NOFOLLOW | os.O_NONBLOCK
-            self._fd = os.open(self.path, flags)
+            flags = os.O_CLOEXEC | os.O_NOFOLLOW | os.O_NONBLOCK
+            self._fd = os.open(self.path, flags | (os.O_RDWR if write else os.O_RDONLY))
         except FileNotFoundError:
             raise
         except OSError as error:
@@ -218,9 +221,7 @@ class Journal:
         return self.contents.finished
 
     def _damaged(self) -> CannotCheck:
-        return CannotCheck(
-            f"{self.path} is damaged and cannot be used; nothing was changed. Move it away to go on without it"
-        )
+        return CannotCheck(f"{self.path} is damaged and cannot be used; move it away to go on without it")
 
     def _read(self) -> Contents:
         contents: Contents | None = None

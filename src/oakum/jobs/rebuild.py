@@ -2,45 +2,71 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable, Sequence
 from pathlib import Path
+from typing import Protocol
 
 from oakum.encoding import Changed, Kernels, Unreadable, WindowEncoder, plan_reading
 from oakum.files import NewFile
 from oakum.jobs.checking import ProtectedSet
 from oakum.jobs.protect import Placed, pack_table
 from oakum.jobs.verify import SetCheck
-from oakum.members import MemberHasher, MemberStream, Opener, Span
+from oakum.members import MemberHasher, MemberStream, Opener, Span, Stream
 from oakum.sidecar.reading import Section
 from oakum.sidecar.table import Kind, Piece
 from oakum.sidecar.writing import SectionWriter
 
 
+class Source(Stream, Protocol):
+    """A stream of members that is closed when it has been read."""
+
+    def close(self) -> None:
+        """Close the members."""
+
+
+StreamOf = Callable[[Sequence[Span]], Source]
+"""Makes the stream of some spans; how it gets at the corrected bytes is its own business."""
+
+
 def rebuild_sidecar(opened: ProtectedSet, check: SetCheck, members: Opener, path: Path, memory: int) -> bool:
     """Write the sidecar of `opened` to `path`, reading members through `members`.
 
-    True when every section came out with the identity it had; otherwise nothing is written. A sidecar of
-    which whole sections are lost is not written anew: protect makes a new one.
+    True when every section came out with the identity it had; otherwise nothing is written.
+    """
+    with NewFile(path) as file:
+        length = write_sidecar(opened, check, lambda spans: MemberStream(members, spans), file, memory)
+        if length is None:
+            return False
+        file.commit(length)
+    return True
+
+
+def write_sidecar(
+    opened: ProtectedSet, check: SetCheck, stream_of: StreamOf, file: NewFile, memory: int
+) -> int | None:
+    """Write the sidecar of `opened` anew into `file`, and return its length in bytes.
+
+    None when it did not come out with the identities that its sections had. A sidecar of which whole
+    sections are lost is not written anew: protect makes a new one.
     """
     sections = opened.sections
     if not sections[-1].bootstrap.last or len(sections) != sections[-1].bootstrap.window + 1:
-        return False
+        return None
     kernels = Kernels.of(check.code)
     hasher = MemberHasher()
     check.progress.phase("writing the sidecar anew", sum(s.geometry.length for s in sections))
-    with NewFile(path) as file:
-        for section, table in zip(sections, opened.tables, strict=True):
-            if not _write_section(section, table, check, members, file, kernels, hasher, memory):
-                return False
-        last = sections[-1]
-        file.commit(last.bootstrap.section_offset + last.layout.size)
-    return True
+    for section, table in zip(sections, opened.tables, strict=True):
+        if not _write_section(section, table, check, stream_of, file, kernels, hasher, memory):
+            return None
+    last = sections[-1]
+    return last.bootstrap.section_offset + last.layout.size
 
 
 def _write_section(
     section: Section,
     table: tuple[Piece, ...],
     check: SetCheck,
-    members: Opener,
+    stream_of: StreamOf,
     file: NewFile,
     kernels: Kernels,
     hasher: MemberHasher,
@@ -48,7 +74,7 @@ def _write_section(
 ) -> bool:
     spans = [Span(p.path, p.offset, p.length) for p in table if p.kind is Kind.FILE]
     writer = SectionWriter(section.bootstrap, section.layout, Placed(file, section.bootstrap.section_offset))
-    stream = MemberStream(members, spans)
+    stream = stream_of(spans)
     try:
         hasher.expect(spans)
         encoder = WindowEncoder(

@@ -16,13 +16,15 @@ from dataclasses import dataclass, replace
 from pathlib import Path
 
 from oakum.errors import CannotCheck, UsageError
-from oakum.files import NewFile, reason
+from oakum.files import Lock, NewFile, reason
 from oakum.jobs.checking import Finding, KnownMember, ProtectedSet, open_set
 from oakum.jobs.common import DEFAULT_MEMORY, find_sidecar
+from oakum.jobs.inplace import InPlace
 from oakum.jobs.rebuild import rebuild_sidecar
+from oakum.jobs.replay import resume, undo
 from oakum.jobs.tally import Tally
 from oakum.jobs.unreadable import read_unreadable
-from oakum.jobs.verify import SetCheck, result_of
+from oakum.jobs.verify import SetCheck, result_of, verify
 from oakum.members import Folder, open_folder
 from oakum.pools import Pools
 from oakum.progress import Progress, Silent
@@ -40,6 +42,8 @@ def repair(
     sidecar: Path | None = None,
     root: Path | None = None,
     output: Path | None = None,
+    in_place: bool = False,
+    even_newer: bool = False,
     members: Sequence[str] = (),
     accept_loss: bool = False,
     unreadable: Path | None = None,
@@ -50,25 +54,55 @@ def repair(
     """Correct a protected set and its sidecar.
 
     Altered members are written beside themselves (`x.mended.tar`), absent ones to their own place; with
-    `output` every member (or those named by `members`) is written below that folder. When something
-    cannot be corrected nothing is written, unless `accept_loss`. Raises CannotCheck where nothing can be
-    done at all, UsageError for members that the sidecar does not have.
+    `output` every member (or those named by `members`) is written below that folder. With `in_place` the
+    damaged bytes themselves are put right, under a journal; members that look edited are refused unless
+    `even_newer`. When something cannot be corrected nothing is written, unless `accept_loss`. Raises
+    CannotCheck where nothing can be done at all, UsageError for members that the sidecar does not have.
     """
     begin = time.monotonic()
-    opened = open_set(find_sidecar(target, sidecar), root, read_unreadable(unreadable), target)
-    try:
-        wanted = _chosen(opened, members)
-        with Pools(jobs) as pools, Mending(opened, output, accept_loss) as mending:
-            check = SetCheck(opened, pools, progress)
-            try:
-                check.scan(hashing=True)
-                tally = mending.run(check, wanted)
-            finally:
-                check.close()
-            result = mending.finish(result_of("repair", target, check, tally, 0.0), check, memory)
-        return replace(result, seconds=time.monotonic() - begin)
-    finally:
-        opened.close()
+    path = find_sidecar(target, sidecar)
+    with Lock(path) as lock:
+        if in_place and resume(path, root):
+            lock.renew()
+            progress.note("a repair in place that had been interrupted was finished first")
+        opened = open_set(path, root, read_unreadable(unreadable), target)
+        try:
+            wanted = _chosen(opened, members)
+            writing = (
+                InPlace(opened, even_newer=even_newer) if in_place else Mending(opened, output, accept_loss)
+            )
+            with Pools(jobs) as pools, writing:
+                check = SetCheck(opened, pools, progress)
+                try:
+                    check.scan(hashing=True)
+                    tally = writing.run(check, wanted)
+                finally:
+                    check.close()
+                result = writing.finish(result_of("repair", target, check, tally, 0.0), check, memory)
+        finally:
+            opened.close()
+    return replace(result, seconds=time.monotonic() - begin)
+
+
+def roll_back(
+    target: Path,
+    *,
+    sidecar: Path | None = None,
+    root: Path | None = None,
+    memory: int = DEFAULT_MEMORY,
+    jobs: int | None = None,
+    progress: Progress = Silent(),
+) -> CheckResult:
+    """Bring back what stood before the last repair in place, and say how the set now stands.
+
+    Raises CannotCheck without a journal, UsageError when a file was changed after the repair.
+    """
+    path = find_sidecar(target, sidecar)
+    with Lock(path):
+        back = undo(path, root)
+    result = verify(target, sidecar=sidecar, root=root, memory=memory, jobs=jobs, progress=progress)
+    note = f"{len(back):,} files were put back as they were before the repair in place"
+    return replace(result, notes=(note, *result.notes))
 
 
 def _chosen(opened: ProtectedSet, names: Sequence[str]) -> list[KnownMember]:

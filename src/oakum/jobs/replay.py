@@ -63,7 +63,7 @@ class Place:
         self.close()
 
 
-# -- before anything is changed -------------------------------------------------------------------------------
+# -- before anything is changed -------------------------------------------------------------------------
 
 
 def refuse_unfit(contents: Contents, place: Place) -> None:
@@ -121,7 +121,7 @@ def digest_of(place: Place, entry: Entry) -> bytes:
     return digest.digest()
 
 
-# -- changing ---------------------------------------------------------------------------------------------------
+# -- changing -------------------------------------------------------------------------------------------
 
 
 def carry_out(journal: Journal, place: Place, *, forward: bool) -> None:
@@ -141,16 +141,15 @@ def carry_out(journal: Journal, place: Place, *, forward: bool) -> None:
         _restore_folders(journal.contents, place)
 
 
-def _patch_file(
-    journal: Journal, entry: Entry, patches: list[Patch], place: Place, forward: bool
-) -> None:
+def _patch_file(journal: Journal, entry: Entry, patches: list[Patch], place: Place, forward: bool) -> None:
     goal = _goal(entry, forward)
     fd = place.open(entry, os.O_RDWR)
     try:
         _put(journal, patches, fd, forward)
         os.ftruncate(fd, goal.size)
-        os.fchmod(fd, goal.mode)  # Writing takes away the set-user-ID bits.
-        os.utime(fd, ns=(os.fstat(fd).st_atime_ns, goal.modified_ns))
+        with suppress(PermissionError):  # Those who may write a file need not own it.
+            os.fchmod(fd, goal.mode)  # Writing takes away the set-user-ID bits.
+            os.utime(fd, ns=(os.fstat(fd).st_atime_ns, goal.modified_ns))
         os.fsync(fd)
     finally:
         os.close(fd)
@@ -236,7 +235,7 @@ def _replace_sidecar(
     journal: Journal, entry: Entry, patches: list[Patch], place: Place, forward: bool
 ) -> None:
     """Write the sidecar as it is to be, and give it its name; nothing is done where it is so already."""
-    if (digest_of(place, entry) == entry.after.digest) == forward:
+    if _is_right(entry, place) == forward:
         return
     goal = _goal(entry, forward)
     with FileBytes(place.sidecar) as source, NewFile(place.sidecar, overwrite=True) as file:
@@ -251,7 +250,7 @@ def _replace_sidecar(
         )
 
 
-# -- what a run does with a journal -----------------------------------------------------------------------------
+# -- what a run does with a journal ---------------------------------------------------------------------
 
 
 def finish(journal: Journal, place: Place) -> None:
@@ -336,7 +335,7 @@ def undo(sidecar: Path, root: Path | None) -> list[Entry]:
 def unfinished(sidecar: Path) -> bool:
     """Whether a repair in place of this sidecar was interrupted."""
     try:
-        with Journal(sidecar) as journal:
+        with Journal(sidecar, write=False) as journal:
             return not journal.finished
     except (FileNotFoundError, CannotCheck):
         return False

@@ -137,6 +137,13 @@ class Tally:
             member.edited and state is not MemberState.INTACT, tuple((a, b - a) for a, b in lost),
         )  # fmt: skip
 
+    def _foreign_bytes(self) -> int:
+        """Bytes before the first section and after the last one that no writer put there."""
+        first, last = self._opened.sections[0], self._opened.sections[-1]
+        before = max(0, first.base - first.bootstrap.section_offset)
+        after = max(0, self._opened.source.size - last.end) if last.bootstrap.last else 0
+        return before + after
+
     def sidecar(self, path: Path, *, members_correctable: bool) -> SidecarReport:
         """The condition of the sidecar itself.
 
@@ -149,8 +156,15 @@ class Tally:
             details.append(f"{self._sidecar_unreadable:,} bytes of it could not be read")
         if incomplete:
             details.append("whole sections of it are lost")
+        foreign = self._foreign_bytes()
+        if foreign:
+            details.append(f"{foreign:,} bytes that are not its own stand before or after it")
         damaged = bool(
-            self._sidecar_bits or self._sidecar_symbols or self._sidecar_unreadable or self._sidecar_lost
+            self._sidecar_bits
+            or self._sidecar_symbols
+            or self._sidecar_unreadable
+            or self._sidecar_lost
+            or foreign
         )
         if incomplete or (self._sidecar_lost and not members_correctable):
             state = Outcome.UNCORRECTABLE

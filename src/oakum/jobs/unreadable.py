@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import csv
+import io
 import os
 from pathlib import Path
 
@@ -28,7 +29,9 @@ def read_unreadable(path: Path | None) -> dict[bytes, list[tuple[int, int]]]:
         raise CannotCheck(f"{path} cannot be read: {reason(error)}") from None
     ranges: dict[bytes, list[tuple[int, int]]] = {}
     try:
-        for number, row in enumerate(csv.reader(text.splitlines()), 1):
+        lines = csv.reader(io.StringIO(text, newline=""))
+        for row in lines:
+            number = lines.line_num
             if not row or row[0].startswith("#") or (number == 1 and row == ["path", "offset", "length"]):
                 continue
             name, start, stop = _range(row, number, path)

@@ -4,14 +4,16 @@ from __future__ import annotations
 
 import hashlib
 import time
-from dataclasses import dataclass
+from collections.abc import Iterator
+from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import TYPE_CHECKING
 
 from oakum.algebra.concatenated import ConcatenatedCode
 from oakum.errors import FormatError
-from oakum.jobs.checking import KnownMember, ProtectedSet, WindowCheck, open_set
+from oakum.jobs.checking import UNKNOWN, KnownMember, ProtectedSet, WindowCheck, open_set
 from oakum.jobs.common import DEFAULT_MEMORY, announce_compiling, find_sidecar, summarise
+from oakum.jobs.replay import unfinished
 from oakum.jobs.unreadable import read_unreadable
 from oakum.members import MemberHasher
 from oakum.pools import Pools
@@ -49,9 +51,32 @@ def verify(
                 tally = check.run(hashing=not digests_only)
             finally:
                 check.close()
-        return result_of("verify", target, check, tally, time.monotonic() - begin)
+        result = result_of("verify", target, check, tally, time.monotonic() - begin)
+        return replace(result, notes=(*result.notes, *_warnings(check)))
     finally:
         opened.close()
+
+
+def _warnings(check: SetCheck) -> Iterator[str]:
+    """What should be known before the next damage comes."""
+    if unfinished(check.opened.path):
+        yield (
+            "a repair in place was interrupted: oakum repair --in-place finishes it, --roll-back undoes it"
+        )
+    if check.opened.sections and any(w.g.guaranteed_burst for w in check.windows):
+        whole = min(w.g.guaranteed_burst for w in check.windows if w.g.guaranteed_burst)
+        left = min(w.burst_left() for w in check.windows if w.g.guaranteed_burst)
+        if left < whole:
+            yield (
+                f"as long as the sidecar stays damaged, one contiguous loss of {left:,} bytes in the "
+                f"members can be put right anywhere, where it was {whole:,}; oakum repair mends the sidecar too"
+            )
+    unknown = sum(int((w.data == UNKNOWN).sum()) for w in check.windows if w.g.digested)
+    if unknown:
+        yield (
+            f"the digests of {unknown:,} cells of 4,096 bytes are lost with parts of the sidecar; damage in "
+            "them takes longer to find, and may be beyond correction sooner"
+        )
 
 
 @dataclass

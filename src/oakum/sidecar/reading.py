@@ -136,19 +136,24 @@ class Section:
         if content is None:
             rows, erased = self.rows(frame)
             content = correct(frame, rows, erased, self.bootstrap.identity)
-        if content.known is not None and self._torn.any():
-            torn = np.broadcast_to(np.repeat(self._torn, self.layout.rows)[:, np.newaxis], rows.shape)
-            more = torn.astype(np.uint8) if erased is None else torn | erased
-            second = correct(frame, rows, more, self.bootstrap.identity)
-            if second.known is None or second.known.sum() > content.known.sum():
-                content = second
+        for torn in self._torn if content.known is not None else ():
+            more = np.broadcast_to(np.repeat(torn, self.layout.rows)[:, np.newaxis], rows.shape)
+            other = correct(frame, rows, more if erased is None else more | erased, self.bootstrap.identity)
+            if other.known is None:
+                return other
+            if content.known is None or other.known.sum() > content.known.sum():
+                content = other
         return content
 
     @cached_property
-    def _torn(self) -> NDArray[np.bool_]:
-        """Which stretches have a head that cannot be read: what follows it is likely to be lost too."""
+    def _torn(self) -> list[Rows]:
+        """Guesses, uint8[stretches], at which stretches are lost where nothing says that they are.
+
+        Those whose head cannot be read; and also the one before each, since a burst may begin behind its head.
+        """
         starts = [self.base + self.layout.stretch_start(t) for t in range(self.layout.stretches)]
-        return np.array([_read_head(self.source, start) is None for start in starts])
+        headless = np.array([_read_head(self.source, start) is None for start in starts], np.uint8)
+        return [headless, headless | np.append(headless[1:], np.uint8(0))] if headless.any() else []
 
     def digests(
         self, track: Track, first: int, count: int

@@ -28,7 +28,7 @@ class Sink(Protocol):
 
 
 class SectionWriter:
-    """Puts everything of one section in its place. Not for use from several threads at once.
+    """Puts everything of one section in its place. Only `write_body` may be called from several threads.
 
     Content of the frames is laid down plainly as it comes, so that nothing grows with the stream in
     memory; `finish` reads it back, frame by frame, and adds headers and check rows.

@@ -1,0 +1,247 @@
+"""How likely a code is to lose something to a channel: the exact figures of one pass, bounds, and measurements.
+
+The chance of one column is exact for the model: what the inner decoder makes of its symbols
+(`oakum.algebra.outcomes`), how many of them runs of damage have taken (a compound Poisson distribution), and
+whether both ways of decoding fail (`oakum.probability.ColumnChances`). Two things are left out, both of
+which make the figures a little too high for plan's purpose: the last word of a cell is shorter, and a symbol
+that a run has taken can no longer be wrong in another way.
+
+Columns are not independent. Columns a word's length (m bytes) or more apart share no word, so that under
+flips alone every m-th column is; the others tend to be lost together with them. So a block of w columns is lost with a
+chance of at least 1 - (1 - P)^floor(w/m) and at most w P. Runs strike whole neighbourhoods: the stream is
+lost to them when somewhere the number of runs over one column passes r, which can only begin at the start of
+a run; the bound is the expected number of such starts (the up-crossings of a shot noise).
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from functools import cached_property
+
+import numpy as np
+
+from oakum.algebra.concatenated import ConcatenatedCode
+from oakum.algebra.outcomes import Floats, log_sum, symbol_chances
+from oakum.channel import Channel, Runs
+from oakum.geometry import CELL, whole_depth
+from oakum.measured import MeasuredCurve, measured_curve
+from oakum.probability import (
+    IMPOSSIBLE,
+    ColumnChances,
+    convolve,
+    log_any,
+    log_compound_poisson,
+    log_power,
+)
+from oakum.results import Loss
+
+_NEGLIGIBLE = 40.0
+"""Numbers of hits whose chance is so many e-folds below the total that matters are not worked out."""
+
+
+@dataclass(frozen=True)
+class Shape:
+    """A stream as a code cuts it: its length, the depth of its windows, how many there are."""
+
+    code: ConcatenatedCode
+    length: int
+    depth: int
+    windows: int
+
+    @staticmethod
+    def of(code: ConcatenatedCode, length: int, depth: int | None = None) -> Shape:
+        """The shape of a stream of `length` bytes, as one window or in windows of `depth`."""
+        whole = whole_depth(max(length, 1), code.outer.k)
+        if depth is None or depth >= whole:
+            return Shape(code, length, whole, 1)
+        return Shape(code, length, depth, -(-length // (code.outer.k * depth)))
+
+    @property
+    def columns(self) -> int:
+        """Columns of all windows."""
+        return self.windows * self.depth
+
+    @property
+    def blocks(self) -> int:
+        """Blocks of all windows."""
+        return self.windows * -(-self.depth // CELL)
+
+    @property
+    def width(self) -> int:
+        """Columns of a full block."""
+        return min(CELL, self.depth)
+
+    @property
+    def guaranteed_burst(self) -> int:
+        """The longest lost piece, in bytes, that is put right wherever it lies: r S less two cells."""
+        return max(0, self.code.outer.r * self.depth - 2 * CELL)
+
+
+def forecast(shape: Shape, channel: Channel) -> Loss:
+    """The chances of loss when a stream of this shape is read after the channel's years."""
+    return _Forecast(shape, channel).loss()
+
+
+@dataclass(frozen=True, eq=False)
+class _Family:
+    """Runs of one kind as one window sees them; `number` of them fall on everything, exactly so if `fixed`.
+
+    `single`: the chances of one run to take so many symbols of one column. `crossing`: the chances that one
+    concerns the window, by the symbols that it takes of every column.
+    """
+
+    number: float
+    fixed: bool
+    single: dict[int, float]
+    crossing: dict[int, float]
+
+    def distribution(self, size: int) -> Floats:
+        """ln of the chances of one run to take 0, 1, ..., size-2, or more symbols."""
+        chances = np.zeros(size)
+        for strips, part in self.single.items():
+            chances[min(strips, size - 1)] += part
+        chances[0] += max(0.0, 1 - chances.sum())
+        with np.errstate(divide="ignore"):
+            return np.asarray(np.log(chances))
+
+
+@dataclass(frozen=True)
+class _Forecast:
+    shape: Shape
+    channel: Channel
+
+    def loss(self) -> Loss:
+        s, r = self.shape, self.shape.code.outer.r
+        hits = self._hits
+        by_flips, in_block = IMPOSSIBLE, IMPOSSIBLE
+        for taken in np.flatnonzero(hits[: r + 1] > hits.max() - 800).tolist():
+            if taken and hits[taken] + self._ceiling < by_flips - _NEGLIGIBLE:
+                break
+            one = self._columns.log_loss(r - taken)
+            by_flips = float(np.logaddexp(by_flips, hits[taken] + one))
+            in_block = float(np.logaddexp(in_block, hits[taken] + min(0.0, one + np.log(s.width))))
+        swamped = log_sum(hits[r + 1 :])
+        column = min(0.0, float(np.logaddexp(by_flips, swamped)))
+        flips_alone = self._columns.log_loss(r) if self._families else by_flips
+        block = (
+            max(log_any(flips_alone, s.width // self._apart), swamped),
+            _capped(in_block, swamped, self._crossings + np.log(s.width / s.depth)),
+        )
+        stream = (
+            max(log_any(flips_alone, s.columns // self._apart), swamped, block[0]),
+            _capped(in_block + np.log(s.blocks), swamped + np.log(s.windows), self._crossings + np.log(s.windows)),
+        )
+        return Loss(column, _ordered(column, block), _ordered(column, stream), self._measured())
+
+    @cached_property
+    def _exposed(self) -> int:
+        """Strips that the channel reaches."""
+        outer = self.shape.code.outer
+        return outer.k if self.channel.spare_sidecar else outer.n
+
+    @cached_property
+    def _columns(self) -> ColumnChances:
+        chances = symbol_chances(self.shape.code.inner, self.channel.final_flip_rate)
+        return ColumnChances(self._exposed, chances)
+
+    @property
+    def _apart(self) -> int:
+        """Columns so far apart share no word."""
+        return max(1, self.shape.code.inner.m)
+
+    @cached_property
+    def _ceiling(self) -> float:
+        """The log chance of a column to be lost when all check symbols but one or none are gone."""
+        return self._columns.log_loss(0)
+
+    # -- runs of damage
+
+    @cached_property
+    def _total(self) -> float:
+        """Bytes that runs fall on: the strips of all windows (the rest of the sidecar is left out)."""
+        return float(self.shape.windows * self._exposed * self.shape.depth)
+
+    @cached_property
+    def _families(self) -> list[_Family]:
+        lost = self.channel.lost_run(self.shape.length)
+        all_runs = (*self.channel.runs, *([lost] if lost else []))
+        return [self._family(runs) for runs in all_runs if runs.count or runs.per_tb_year]
+
+    def _family(self, runs: Runs) -> _Family:
+        """How runs of one kind fall on a window: one of a S + b bytes takes a symbols of every column and one
+        more of b columns in S; it concerns a window when it starts in it or runs into it."""
+        window = self._exposed * self.shape.depth
+        single: dict[int, float] = {}
+        crossing: dict[int, float] = {}
+        for length, share in runs.shares:
+            more, rest = divmod(length, self.shape.depth)
+            reach = share * min(1.0, (window + (length if self.shape.windows > 1 else 0)) / self._total)
+            for strips, part in ((more, 1 - rest / self.shape.depth), (more + 1, rest / self.shape.depth)):
+                single[strips] = single.get(strips, 0.0) + reach * part
+            crossing[more] = crossing.get(more, 0.0) + reach
+        number = runs.expected(round(self._total), self.channel.years)
+        return _Family(number, bool(runs.count), single, crossing)
+
+    @cached_property
+    def _hits(self) -> Floats:
+        """ln P(so many symbols of a column are taken by runs), 0..r and "more" as the last entry."""
+        return self._hits_without(None)
+
+    def _hits_without(self, one: _Family | None) -> Floats:
+        """The same, but for one run of the family `one`: what its other runs and the rest do."""
+        size = self.shape.code.outer.r + 2
+        rates: dict[int, float] = {}
+        fixed = []
+        for family in self._families:
+            if family.fixed:
+                fixed.append(log_power(family.distribution(size), round(family.number) - (family is one)))
+                continue
+            for strips, part in family.single.items():
+                kept = min(strips, size)
+                rates[kept] = rates.get(kept, 0.0) + family.number * part
+        hits = log_compound_poisson(rates, size)
+        for distribution in fixed:
+            hits = convolve(hits, distribution)
+        return hits
+
+    @cached_property
+    def _crossings(self) -> float:
+        """ln of the expected number of runs in one window whose start takes a column beyond r.
+
+        Runs of a Poisson process find the others as if they were not there (Slivnyak's theorem).
+        """
+        r = self.shape.code.outer.r
+        terms = []
+        for family in self._families:
+            others = self._hits_without(family) if family.fixed else self._hits
+            for more, reach in family.crossing.items():
+                if more <= r and reach > 0:
+                    terms.append(float(np.log(family.number * reach) + others[r - more]))
+        return log_sum(np.array(terms)) if terms else IMPOSSIBLE
+
+    # -- feedback
+
+    def _measured(self) -> float | None:
+        """ln of the most that the stream's chance can be, by the measured curve of the code."""
+        if self._families or self.channel.spare_sidecar:
+            return None
+        curve = measured_curve(self.shape.code)
+        if curve is None or not self.channel.final_flip_rate:
+            return None
+        return _of_many(curve, self.channel.final_flip_rate, self.shape.blocks)
+
+
+def _of_many(curve: MeasuredCurve, rate: float, blocks: int) -> float:
+    """Blocks share neither words nor columns: they are lost independently."""
+    return log_any(float(np.log(min(1.0, curve.at_most(rate)))), blocks)
+
+
+def _capped(*terms: float) -> float:
+    """The union bound: the log of the sum, at most 0."""
+    return min(0.0, log_sum(np.array(terms)))
+
+
+def _ordered(column: float, bounds: tuple[float, float]) -> tuple[float, float]:
+    """Bounds that hold the chance of one column, the lower below the upper."""
+    low = max(bounds[0], column)
+    return low, max(low, bounds[1])
