@@ -1,6 +1,6 @@
 """Simulated audits: files and what became of them, put into a pattern below the level of files.
 
-Each scenario takes a generator of random numbers and a strength of 0, 1 or 2 (2 the strongest) and returns the
+Each scenario takes random numbers and a strength of 0, 1 or 2 (2 the strongest) and returns the
 file as it was and as it is.
 """
 
@@ -67,7 +67,7 @@ def flip(rng: np.random.Generator, data: Array, count: int, ones: float | None =
     if ones is None:
         chosen = rng.choice(len(bits), count, replace=False)
     else:
-        up = int(round(count * ones))
+        up = round(count * ones)
         zeros, others = np.flatnonzero(bits == 0), np.flatnonzero(bits)
         chosen = np.concatenate(
             [rng.choice(zeros, up, replace=False), rng.choice(others, count - up, replace=False)]

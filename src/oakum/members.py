@@ -8,8 +8,8 @@ import os
 import stat
 import threading
 from bisect import bisect_right
-from collections import OrderedDict
-from collections.abc import Iterator, Sequence
+from collections import Counter, OrderedDict
+from collections.abc import Sequence
 from contextlib import suppress
 from dataclasses import dataclass
 from itertools import accumulate
@@ -48,24 +48,25 @@ def collect(paths: Sequence[Path], root: Path) -> tuple[list[Member], list[str]]
             raise UsageError(
                 f"{path} is neither a file, a folder nor a link; name something that can be kept"
             )
-        members += _walk(os.fsencode(path), os.fsencode(root), notes)
+        absolute = os.fsencode(path)
+        _walk(absolute, os.path.relpath(absolute, os.fsencode(root)), members, notes)
     if len({m.path for m in members}) != len(members):
         raise UsageError("a path was given twice, or a folder and something inside it; name each file once")
     return members, notes
 
 
-def _walk(path: bytes, root: bytes, notes: list[str]) -> Iterator[Member]:
+def _walk(path: bytes, relative: bytes, members: list[Member], notes: list[str]) -> None:
+    """Append what `path` stands for; its path in the set is `relative`."""
     try:
         found = os.lstat(path)
-        relative = os.path.relpath(path, root)
         if stat.S_ISREG(found.st_mode):
-            yield _member(Kind.FILE, relative, found, found.st_size)
+            members.append(_member(Kind.FILE, relative, found, found.st_size))
         elif stat.S_ISLNK(found.st_mode):
-            yield _member(Kind.LINK, relative, found, 0, os.readlink(path))
+            members.append(_member(Kind.LINK, relative, found, 0, os.readlink(path)))
         elif stat.S_ISDIR(found.st_mode):
-            yield _member(Kind.FOLDER, relative, found, 0)
+            members.append(_member(Kind.FOLDER, relative, found, 0))
             for name in sorted(os.listdir(path)):
-                yield from _walk(os.path.join(path, name), root, notes)
+                _walk(path + b"/" + name, relative + b"/" + name, members, notes)
         else:
             notes.append(f"{os.fsdecode(path)} is neither a file, a folder nor a link and is not protected")
     except OSError as error:
@@ -191,7 +192,8 @@ class MemberStream:
         self._starts = list(accumulate((s.length for s in self._spans), initial=0))
         self._known_bad = _joined(known_bad)
         self._open: OrderedDict[bytes, int | None] = OrderedDict()
-        self._lock = threading.RLock()
+        self._users: Counter[bytes] = Counter()
+        self._lock = threading.Lock()
 
     @property
     def length(self) -> int:
@@ -234,16 +236,18 @@ class MemberStream:
     def _read_member(self, path: bytes, offset: int, buffer: memoryview) -> list[Fault]:
         with self._lock:
             fd = self._descriptor(path)
+            self._users[path] += 1
+        try:
             if fd is None:
                 buffer[:] = bytes(len(buffer))
                 return [(0, len(buffer))]
-            own = os.dup(fd)
-        try:
-            return read_into(own, offset, buffer)
+            return read_into(fd, offset, buffer)
         except OSError as error:
             raise CannotCheck(f"{os.fsdecode(path)} cannot be read: {reason(error)}") from None
         finally:
-            os.close(own)
+            with self._lock:
+                self._users[path] -= 1
+                self._close_some()
 
     def _descriptor(self, path: bytes) -> int | None:
         """An open descriptor of a member; None when there is no such file (which is remembered)."""
@@ -260,11 +264,18 @@ class MemberStream:
             os.close(fd)
             fd = None
         self._open[path] = fd
-        if len(self._open) > OPEN_FILES:
-            _, oldest = self._open.popitem(last=False)
-            if oldest is not None:
-                os.close(oldest)
         return fd
+
+    def _close_some(self) -> None:
+        """Close the member that was not used for longest, when too many are open and nobody reads it."""
+        if len(self._open) <= OPEN_FILES:
+            return
+        oldest = next(iter(self._open))
+        if not self._users[oldest]:
+            fd = self._open.pop(oldest)
+            del self._users[oldest]
+            if fd is not None:
+                os.close(fd)
 
     def fetch(self, offset: int, length: int) -> None:
         """See `Stream`. Only of a member that is open already: opening others ahead would cost more."""

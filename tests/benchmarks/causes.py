@@ -1,4 +1,4 @@
-"""How often the right cause is named first: every cause at three strengths, and false alarms on random errors.
+"""How often the right cause is named first, at three strengths each, and false alarms on random errors.
 
     python tests/benchmarks/causes.py [seeds [first seed]]
 

@@ -192,9 +192,7 @@ def test_no_room_is_said_before(tree: Path, tmp_path: Path, monkeypatch: pytest.
 
 
 @pytest.mark.parametrize("way", ["finish", "undo"])
-def test_an_interrupted_repair(
-    tree: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch, way: str
-) -> None:
+def test_an_interrupted_repair(tree: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch, way: str) -> None:
     """The journal stands, half of the bytes are written: the next run finishes, or undoes, the rest."""
     protect([tree])
     good = snapshot(tmp_path)
@@ -209,7 +207,9 @@ def test_an_interrupted_repair(
 
     def dying(fd: int, data: memoryview, offset: int) -> int:
         nonlocal written
-        if journal_path(tmp_path / "set.oakum").exists() and "oakum" not in os.readlink(f"/proc/self/fd/{fd}"):
+        if journal_path(tmp_path / "set.oakum").exists() and "oakum" not in os.readlink(
+            f"/proc/self/fd/{fd}"
+        ):
             written += 1
             if written > 4:
                 through(fd, data[: len(data) // 2], offset)
@@ -233,9 +233,7 @@ def test_an_interrupted_repair(
     assert snapshot(tmp_path) == bad
 
 
-def test_a_failure_puts_everything_back(
-    tree: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
-) -> None:
+def test_a_failure_puts_everything_back(tree: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
     protect([tree])
     damage(tree)
     (tree / "deep/down/b.txt").unlink()

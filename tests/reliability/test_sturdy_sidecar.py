@@ -6,6 +6,7 @@ that lost a byte counts as erased, and a contiguous run of what the others can m
 
 from __future__ import annotations
 
+import re
 import shutil
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass
@@ -109,9 +110,7 @@ def section_length(shelf: Shelf) -> int:
 
 
 @pytest.mark.parametrize("with_data", [False, True], ids=["alone", "with-data"])
-def test_a_tenth_is_overwritten_anywhere(
-    shelf: Shelf, tmp_path: Path, long: bool, with_data: bool
-) -> None:
+def test_a_tenth_is_overwritten_anywhere(shelf: Shelf, tmp_path: Path, long: bool, with_data: bool) -> None:
     """With windows a tenth of the sidecar can be more than a third of a section; then a tenth of that."""
     tenth = (section_length(shelf) if shelf.windows else len(shelf.whole)) // 10
     places = np.linspace(0, len(shelf.whole) - tenth, 200 if long else 9).astype(int)
@@ -178,5 +177,5 @@ def test_what_it_can_no_longer_do_is_said(shelf: Shelf) -> None:
         assert not any("contiguous loss" in n for n in verify(shelf.folder / "set").notes)
     finally:
         rewrite(shelf.sidecar, shelf.whole)
-    left, whole = (int(w.replace(",", "")) for w in note.split() if w.replace(",", "").strip(";").isdigit())
+    left, whole = (int(number.replace(",", "")) for number in re.findall(r"[0-9][0-9,]*", note))
     assert 0 < left < whole

@@ -21,6 +21,7 @@ from numpy.typing import NDArray
 
 from oakum.algebra.concatenated import ConcatenatedCode
 from oakum.decoding.bursts import cluster
+from oakum.decoding.distances import Distances
 from oakum.decoding.trials import (
     BELIEVED,
     CHASE_COLUMNS,
@@ -33,9 +34,7 @@ from oakum.decoding.trials import (
     chase_sets,
     dense_words,
     erasure_trials,
-    generalised_distance,
     hopeful,
-    nearest_rival,
     neighbouring_rows,
 )
 from oakum.geometry import Geometry
@@ -286,7 +285,8 @@ class _Block:
         fixed = np.take(self.others_right, places, axis=1)
         fixed[self.strips] = ~known.open
         late = np.take(self.late_erasures, places, axis=1)
-        return _Posed(places, known, symbols, fixed, late, self.d.columns.syndromes(symbols))
+        syndromes = self.d.columns.syndromes(symbols)
+        return _Posed(places, known, symbols, fixed, late, syndromes, self.d.code.inner.d)
 
     def _try_as_received(self) -> int:
         """Decode the unsolved columns, erasing only what is known to be bad. Returns how many are solved.
@@ -309,12 +309,17 @@ class _Block:
         if not len(places) or not self.d.later_trials:
             return 0
         posed = self._posed(places, known.take(places))
-        return self._try(posed, erasure_trials(posed.known, self.d.code.inner.t))
+        return self._try(posed, erasure_trials(posed.known, self.d.code.inner.t), complete=True)
 
-    def _try(self, posed: _Posed, trials: Iterator[Mask]) -> int:
-        """Make trial after trial on what is left of a problem; pin what is solved."""
+    def _try(self, posed: _Posed, trials: Iterator[Mask], *, complete: bool = False) -> int:
+        """Make trial after trial on what is left of a problem; pin what is solved.
+
+        A solution that a codeword within the guarantee might beat has to wait until a `complete` set of
+        trials, which would find that codeword, has been made.
+        """
         left = np.arange(len(posed.places))
-        solved = np.zeros(len(left), bool)
+        solved, waiting = np.zeros(len(left), bool), np.zeros(len(left), bool)
+        second_best = np.zeros(0, np.uint8)
         sizes = np.full(len(left), -1, np.intp)
         for trial in trials:
             size = np.count_nonzero(trial, axis=0)
@@ -329,12 +334,21 @@ class _Block:
             good = np.zeros(len(solved), bool)
             good[now] = errors[now] >= 0
             good &= ~((magnitudes != 0) & posed.fixed).any(axis=0)
+            rivalled = self._rivalled(posed, erased, errors, magnitudes, good)
             self._weigh(posed, errors, erased, magnitudes, good)
+            if self.d.later_trials and (wait := good & rivalled).any():
+                good &= ~wait
+                second_best = second_best if waiting.any() else np.zeros_like(magnitudes)
+                np.copyto(second_best, magnitudes, where=wait & ~waiting)
+                waiting |= wait
             self._pin(posed, magnitudes, good)
             solved |= good
             left = left[~good[left]]
             if not len(left):
                 break
+        if complete and (waiting & ~solved).any():
+            self._pin(posed, second_best, waiting & ~solved)
+            solved |= waiting
         self.open = np.setdiff1d(self.open, posed.places[solved], assume_unique=True)
         return int(solved.sum())
 
@@ -409,11 +423,29 @@ class _Block:
         unsure = np.flatnonzero(good & (chance >= BELIEVED))
         if not len(unsure):
             return
-        wrong = np.take(magnitudes, unsure, axis=1)[self.strips] != 0
-        near = generalised_distance(posed.known.take(unsure), wrong, self.d.code.inner.d) <= self.g.r
-        usable = ((chance[unsure] < USABLE) | near) & ~self.strict[posed.places[unsure]]
-        self.provisional[posed.places[unsure[usable]]] = True
+        altered = posed.distances.altered(np.take(magnitudes, unsure, axis=1)[self.strips] != 0, unsure)
+        near = posed.distances.of_solutions(altered, unsure) <= self.g.r
+        strict = self.strict[posed.places[unsure]]
+        usable = near | (chance[unsure] < USABLE) & ~strict
+        self.provisional[posed.places[unsure[usable & ~strict]]] = True
         good[unsure[~usable]] = False
+
+    def _rivalled(
+        self, posed: _Posed, erased: Bytes, errors: NDArray[np.int16], magnitudes: Bytes, good: Mask
+    ) -> Mask:
+        """The `good` solutions that another codeword, nearer than the guarantee reaches, might beat."""
+        distance = self.g.r + 1
+        rivalled = np.zeros(len(good), bool)
+        most = np.maximum(errors, 0) + np.count_nonzero(erased, axis=0)
+        # What costs little first: a rival costs at least 2 a symbol, or 1 where the word is not clean.
+        which = np.flatnonzero(good & (2 * most + posed.unclean > distance))
+        if len(which):
+            which = which[posed.distances.rival_bound(most[which], which, distance) < distance]
+        if len(which):
+            altered = posed.distances.altered(np.take(magnitudes, which, axis=1)[self.strips] != 0, which)
+            beaten = posed.distances.of_rivals(altered, which, distance) < distance
+            rivalled[which] = beaten & (posed.distances.of_solutions(altered, which) >= distance)
+        return rivalled
 
     def _pin(self, posed: _Posed, magnitudes: Bytes, good: Mask) -> None:
         """The bytes of solved columns are known from now on."""
@@ -522,6 +554,17 @@ class _Posed:
     fixed: Mask
     late: Bytes
     syndromes: Bytes
+    inner_distance: int
+
+    @cached_property
+    def distances(self) -> Distances:
+        """The measure of how far solutions are from what was received."""
+        return Distances.of(self.known, self.inner_distance)
+
+    @cached_property
+    def unclean(self) -> Strips:
+        """How many symbols of each column are erased, or in a word with flips."""
+        return np.asarray(np.count_nonzero((self.known.status != 0) | self.known.erased, axis=0))
 
     @cached_property
     def doubtful(self) -> Strips:

@@ -21,7 +21,6 @@ from oakum.kernels.words import FLAGGED
 Bytes = NDArray[np.uint8]
 Places = NDArray[np.intp]
 Mask = NDArray[np.bool_]
-Floats = NDArray[np.float64]
 
 DENSE = 254
 """Status of a word that lies in a burst, of its data or of its inner parity: its bytes stay as received."""
@@ -146,46 +145,6 @@ def chance_of_acceptance(places: Places, errors: Places, checks: Places) -> NDAr
     errors = np.minimum(errors, places)
     choose = _LOG_FACTORIAL[places] - _LOG_FACTORIAL[errors] - _LOG_FACTORIAL[places - errors]
     return np.asarray(choose + errors * np.log(255 / 256) + (errors - checks) * np.log(256.0))
-
-
-def generalised_distance(known: Reliability, wrong: Mask, d: int) -> Floats:
-    """Forney's measure of how far a solution is from what was received, for each column, in symbols.
-
-    With e flips corrected in its word a symbol has the reliability (d - 2e)/d, an erased or flagged one 0;
-    a symbol that the solution leaves as it is adds 1 - reliability, one that it alters (`wrong`, bool[R,
-    columns]) adds 1 + reliability. At most one codeword is nearer than D; see the source above.
-    """
-    total = np.zeros(wrong.shape[1])
-    for reliability, places in _by_reliability(known, d):
-        altered = np.count_nonzero(places & wrong, axis=0)
-        total += (1 - reliability) * np.count_nonzero(places, axis=0) + 2 * reliability * altered
-    return total
-
-
-def nearest_rival(known: Reliability, wrong: Mask, d: int, distance: int) -> Floats:
-    """The least generalised distance that any codeword but the solution itself can have, for each column.
-
-    A rival differs from the solution in at least D = `distance` symbols. It costs least if it leaves those
-    that the solution alters as they were received and alters the least reliable of the others (Taipale and
-    Pursley, IEEE Trans. Inform. Theory 37, 1991). Infinite where fewer than D symbols are open.
-    """
-    total = np.zeros(wrong.shape[1])
-    missing = distance - np.count_nonzero(wrong & known.open, axis=0)
-    for reliability, places in _by_reliability(known, d):
-        taken = np.clip(missing, 0, np.count_nonzero(places & ~wrong, axis=0))
-        total += (1 - reliability) * np.count_nonzero(places, axis=0) + 2 * reliability * taken
-        missing -= taken
-    return np.where(missing > 0, np.inf, total)
-
-
-def _by_reliability(known: Reliability, d: int) -> Iterator[tuple[float, Mask]]:
-    """Reliabilities in rising order, and the open symbols that have them."""
-    none = known.erased | known.dense | (known.status == FLAGGED)
-    yield 0.0, none & known.open
-    rest = known.open & ~none
-    for flips in range((d - 1) // 2, 0, -1):
-        yield (d - 2 * flips) / d, rest & (known.status == flips)
-    yield 1.0, rest & ((known.status == 0) | (known.status == UNUSABLE))
 
 
 def dense_words(status: Bytes) -> Mask:

@@ -6,7 +6,7 @@ import os
 import shutil
 import time
 from collections.abc import Iterator, Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 from pathlib import Path
 from typing import BinaryIO
 
@@ -157,16 +157,16 @@ def _refuse_inside(sidecar: Path, places: Sequence[Path]) -> None:
 def _refuse_changed(folder: Folder, members: Sequence[Member]) -> None:
     """End the run when a file is not what it was at the start."""
     for member in members:
-        name = os.fsdecode(member.path)
         try:
             now = folder.stat(member.path)
         except OSError:
             raise CannotCheck(
-                f"{name} went away while it was read; run protect again when nothing changes"
+                f"{os.fsdecode(member.path)} went away while it was read; run protect again when nothing changes"
             ) from None
         if member.kind is Kind.FILE and (now.st_size, now.st_mtime_ns) != (member.size, member.modified_ns):
             raise CannotCheck(
-                f"{name} changed while it was read; run protect again when nothing writes to it"
+                f"{os.fsdecode(member.path)} changed while it was read; "
+                "run protect again when nothing writes to it"
             )
 
 
@@ -470,4 +470,4 @@ def make_bootstrap(
 def pack_table(pieces: Sequence[Piece], digests: Sequence[bytes]) -> bytes:
     """The member table, with one digest for every file among the pieces."""
     remaining = iter(digests)
-    return b"".join((replace(p, digest=next(remaining)) if p.kind is Kind.FILE else p).pack() for p in pieces)
+    return b"".join(p.pack(next(remaining) if p.kind is Kind.FILE else None) for p in pieces)

@@ -69,7 +69,7 @@ def _warnings(check: SetCheck) -> Iterator[str]:
         if left < whole:
             yield (
                 f"as long as the sidecar stays damaged, one contiguous loss of {left:,} bytes in the "
-                f"members can be put right anywhere, where it was {whole:,}; oakum repair mends the sidecar too"
+                f"members can be put right anywhere, where it was {whole:,}; oakum repair mends the sidecar"
             )
     unknown = sum(int((w.data == UNKNOWN).sum()) for w in check.windows if w.g.digested)
     if unknown:

@@ -47,12 +47,12 @@ class Piece:
     digest: bytes = bytes(32)
     target: bytes = b""
 
-    def pack(self) -> bytes:
-        """The entry's bytes."""
+    def pack(self, digest: bytes | None = None) -> bytes:
+        """The entry's bytes, with another `digest` where one is given."""
         total = _ENTRY.size + len(self.path) + len(self.target)
         head = _ENTRY.pack(
             total, self.kind, PIECE_ENDS if self.ends else 0, self.mode, self.modified_ns,
-            self.size, self.offset, self.length, self.digest, len(self.path), len(self.target),
+            self.size, self.offset, self.length, digest or self.digest, len(self.path), len(self.target),
         )  # fmt: skip
         return head + self.path + self.target
 
