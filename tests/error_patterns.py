@@ -29,7 +29,7 @@ def pattern_of(original: bytes, damaged: bytes, path: str = "a") -> Pattern:
         cell = slice(start, min(start + CELL, length))
         if not np.array_equal(right[cell], received[cell]):
             collector.add(path, len(right), 0, start, received[cell], right[cell])
-    pattern = collector.finish(len(right), {path: len(received)}, {})
+    pattern = collector.finish(len(right))
     return with_lengths(pattern, path, original, damaged)
 
 

@@ -84,8 +84,9 @@ class Statistics:
     lowest_margin: float | None
     margin_at: tuple[int, int] | None
     coverage: float = 1.0
-    columns: int = 0
-    column_bits: int = 0
+    stream_bytes: int = 0
+    depth: int = 0
+    windows: int = 1
 
 
 @dataclass(frozen=True)

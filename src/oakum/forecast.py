@@ -16,11 +16,12 @@ a run; the bound is the expected number of such starts (the up-crossings of a sh
 from __future__ import annotations
 
 from dataclasses import dataclass
-from functools import cached_property
+from functools import cached_property, lru_cache
 
 import numpy as np
 
 from oakum.algebra.concatenated import ConcatenatedCode
+from oakum.algebra.inner import InnerCode
 from oakum.algebra.outcomes import Floats, log_sum, symbol_chances
 from oakum.channel import Channel, Runs
 from oakum.geometry import CELL, whole_depth
@@ -141,8 +142,7 @@ class _Forecast:
 
     @cached_property
     def _columns(self) -> ColumnChances:
-        chances = symbol_chances(self.shape.code.inner, self.channel.final_flip_rate)
-        return ColumnChances(self._exposed, chances)
+        return _column_chances(self._exposed, self.shape.code.inner, self.channel.final_flip_rate)
 
     @property
     def _apart(self) -> int:
@@ -225,10 +225,16 @@ class _Forecast:
         """ln of the most that the stream's chance can be, by the measured curve of the code."""
         if self._families or self.channel.spare_sidecar:
             return None
-        curve = measured_curve(self.shape.code)
+        curve = measured_curve(self.shape.code, self.shape.width)
         if curve is None or not self.channel.final_flip_rate:
             return None
         return _of_many(curve, self.channel.final_flip_rate, self.shape.blocks)
+
+
+@lru_cache(64)
+def _column_chances(n: int, inner: InnerCode, rate: float) -> ColumnChances:
+    """Shared by all outer codes of one length: the chances of the symbols are the same."""
+    return ColumnChances(n, symbol_chances(inner, rate))
 
 
 def _of_many(curve: MeasuredCurve, rate: float, blocks: int) -> float:

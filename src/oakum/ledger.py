@@ -50,9 +50,9 @@ MIGRATIONS = (
     """,
     """
     ALTER TABLE targets ADD COLUMN readings_differ INTEGER;
-    ALTER TABLE targets ADD COLUMN columns INTEGER;
-    ALTER TABLE targets ADD COLUMN column_bits INTEGER;
-    ALTER TABLE targets ADD COLUMN guaranteed_flips INTEGER;
+    ALTER TABLE targets ADD COLUMN stream_bytes INTEGER;
+    ALTER TABLE targets ADD COLUMN depth INTEGER;
+    ALTER TABLE targets ADD COLUMN windows INTEGER;
     """,
 )
 """Each step leads from one schema version to the next; a new ledger goes through all of them."""
@@ -257,7 +257,7 @@ def _explained(path: Path) -> Iterator[None]:
 
 
 def _request(targets: Sequence[Path]) -> str:
-    return json.dumps([_text(os.path.abspath(t)) for t in targets])
+    return json.dumps([target_key(t) for t in targets])
 
 
 def _text(path: str) -> str:
@@ -265,10 +265,15 @@ def _text(path: str) -> str:
     return path.encode("utf-8", "surrogateescape").decode("utf-8", "backslashreplace")
 
 
+def target_key(target: Path) -> str:
+    """How the ledger names a target: its path from the root on."""
+    return _text(os.path.abspath(target))
+
+
 def target_row(target: TargetAudit) -> Row:
     """What the ledger keeps of a target; None where it is not known."""
     row: Row = {
-        "path": _text(os.path.abspath(target.target)), "identity": target.identity,
+        "path": target_key(target.target), "identity": target.identity,
         "outcome": str(target.outcome), "reason": _text(target.reason),
     }  # fmt: skip
     check, s = target.check, target.statistics
@@ -289,6 +294,6 @@ def target_row(target: TargetAudit) -> Row:
         "burst_exposure": s.burst_rate.exposure, "burst_lengths": json.dumps(s.burst_lengths[:1000]),
         "read_errors": s.read_errors, "sidecar_outcome": str(check.sidecar.state),
         "sidecar_bits_flipped": check.sidecar.bits_flipped, "findings": json.dumps(findings),
-        "seconds": round(check.seconds, 3), "readings_differ": s.readings_differ, "columns": s.columns,
-        "column_bits": s.column_bits, "guaranteed_flips": check.code.guaranteed_flips,
+        "seconds": round(check.seconds, 3), "readings_differ": s.readings_differ,
+        "stream_bytes": s.stream_bytes, "depth": s.depth, "windows": s.windows,
     }  # fmt: skip

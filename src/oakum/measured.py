@@ -65,18 +65,19 @@ class MeasuredCurve:
 
 
 @cache
-def _stored() -> dict[str, MeasuredCurve]:
+def _stored() -> dict[str, list[MeasuredCurve]]:
     from importlib.resources import files
 
     text = files("oakum").joinpath("data", "curves.json").read_text(encoding="utf-8")
     return {
-        notation: MeasuredCurve(
-            curve["width"], tuple((p["flip_rate"], p["blocks"], p["blocks_lost"]) for p in curve["points"])
+        notation: sorted(
+            (MeasuredCurve(c["width"], tuple(map(tuple, c["points"]))) for c in curves), key=lambda c: c.width
         )
-        for notation, curve in json.loads(text).items()
+        for notation, curves in json.loads(text).items()
     }
 
 
-def measured_curve(code: ConcatenatedCode) -> MeasuredCurve | None:
-    """The curve of a code, if it was ever measured."""
-    return _stored().get(code.notation)
+def measured_curve(code: ConcatenatedCode, width: int) -> MeasuredCurve | None:
+    """The curve of a code for blocks of `width` columns, or of the next wider ones (which lose no less)."""
+    wide = [curve for curve in _stored().get(code.notation, []) if curve.width >= width]
+    return wide[0] if wide else None

@@ -289,6 +289,14 @@ class MemberStream:
                 inside = span.offset + offset - self._starts[number]
                 os.posix_fadvise(fd, inside, length, os.POSIX_FADV_WILLNEED)
 
+    def forget(self) -> None:
+        """Let the system drop what it keeps of open members, so that they are read from the medium again."""
+        if hasattr(os, "posix_fadvise"):
+            with self._lock:
+                for fd in self._open.values():
+                    if fd is not None:
+                        os.posix_fadvise(fd, 0, 0, os.POSIX_FADV_DONTNEED)
+
     def path_at(self, offset: int) -> bytes:
         """The member that holds byte `offset` of the stream."""
         return self._spans[bisect_right(self._starts, offset) - 1].path

@@ -8,6 +8,7 @@ are those in the file: memory, sectors and buffers are aligned to files and not 
 from __future__ import annotations
 
 from bisect import insort
+from collections.abc import Sequence
 from dataclasses import dataclass, field, replace
 
 import numpy as np
@@ -41,7 +42,6 @@ class MemberPattern:
     path: str
     size: int
     found: int | None
-    cells: int
     wrong_cells: int
     wrong_bytes: int
     histogram: Integers
@@ -98,16 +98,25 @@ class Pattern:
         """received XOR right of the single wrong bytes."""
         return self.received ^ self.right
 
-    def with_file(self, path: str, size: int, found: int | None, converted: str = "") -> Pattern:
+    def with_file(
+        self,
+        path: str,
+        size: int,
+        found: int | None,
+        converted: str = "",
+        unreadable: Sequence[tuple[int, int]] = (),
+    ) -> Pattern:
         """The same with what else is known of a file: its length now, and line ends that were converted."""
         members = list(self.members)
         for number, member in enumerate(members):
             if member.path == path:
-                members[number] = replace(member, found=found, converted=converted)
+                members[number] = replace(
+                    member, found=found, converted=converted, unreadable=tuple(unreadable)
+                )
                 return replace(self, members=tuple(members))
         nothing = np.zeros(256, np.int64)
-        members.append(MemberPattern(path, size, found, 0, 0, 0, nothing, 0, 0, (), converted))
-        return replace(self, members=tuple(members))
+        new = MemberPattern(path, size, found, 0, 0, nothing, 0, 0, tuple(unreadable), converted)
+        return replace(self, members=(*members, new))
 
 
 @dataclass
@@ -209,14 +218,8 @@ class PatternCollector:
         starts = np.array([m.start for m in self._order], np.int64)
         return np.asarray(np.searchsorted(starts, places, side="right") - 1, np.int64)
 
-    def finish(
-        self,
-        bytes_read: int,
-        found: dict[str, int | None],
-        unreadable: dict[str, list[tuple[int, int]]] | None = None,
-        cell: int = 4096,
-    ) -> Pattern:
-        """The pattern. `found` gives the length now of damaged members (by path, absent ones None)."""
+    def finish(self, bytes_read: int) -> Pattern:
+        """The pattern, when everything was added; see `Pattern.with_file` for what it does not know."""
         starts = np.array([m.start for m in self._order], np.int64)
         places = np.concatenate([np.empty(0, np.int64), *self._places])
         values = np.concatenate([np.empty((2, 0), np.uint8), *self._values], axis=1)
@@ -231,14 +234,10 @@ class PatternCollector:
             of_run, bounds[:, 0], bounds[:, 1], sums[:, _WRONG], sums[:, _BITS], sums[:, _ZEROS],
             sums[:, _ONES], sums[:, _HIGH], sums[:, _UNKNOWN], sums[:, _FIRST:],
         )  # fmt: skip
-        bad = unreadable or {}
         members = tuple(
-            MemberPattern(
-                m.path, m.size, found.get(m.path, m.size), -(-m.size // cell), m.wrong_cells, m.wrong_bytes,
-                m.histogram, m.ones, m.bits, tuple(bad.get(m.path, ())),
-            )
+            MemberPattern(m.path, m.size, m.size, m.wrong_cells, m.wrong_bytes, m.histogram, m.ones, m.bits)
             for m in self._order
-        )  # fmt: skip
+        )
         return Pattern(
             members, bytes_read, owner, places, values[0], values[1], runs, self._positions, self._omitted
         )  # fmt: skip

@@ -8,7 +8,7 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass
-from functools import cached_property
+from functools import cache, cached_property
 from math import lgamma
 
 import numpy as np
@@ -98,11 +98,9 @@ class ColumnChances:
     def _patterns(self) -> tuple[NDArray[np.int_], NDArray[np.int_], Floats]:
         """All (e, s) with e + s <= n, and the logarithms of their chances."""
         a, f = self.symbol.wrong_unflagged, self.symbol.flagged
-        errors, flagged = np.nonzero(np.add.outer(np.arange(self.n + 1), np.arange(self.n + 1)) <= self.n)
-        right = self.n - errors - flagged
-        factorials = log_factorials(self.n)
-        weights = factorials[self.n] - factorials[errors] - factorials[flagged] - factorials[right]
-        weights += _times(errors, a) + flagged * f + _times(right, log_complement(float(np.logaddexp(a, f))))
+        errors, flagged, ways = _multinomials(self.n)
+        weights = ways + _times(errors, a) + flagged * f
+        weights += _times(self.n - errors - flagged, log_complement(float(np.logaddexp(a, f))))
         return errors, flagged, weights
 
     @cached_property
@@ -112,11 +110,28 @@ class ColumnChances:
         kept = self.symbol.wrong_as_received
         # Wrong as received is either unflagged or flagged, so that the difference is the flagged part.
         hit = min(kept + log_complement(a - kept) - f, 0.0)
+        flagged, wrong, ways = _binomials(self.n)
         tails = np.full((self.n + 1, self.n + 2), IMPOSSIBLE)
-        for s in range(self.n + 1):
-            tails[s, : s + 1] = np.logaddexp.accumulate(log_binomial(s, hit)[::-1])[::-1]
+        tails[flagged, wrong] = ways + wrong * hit + _times(flagged - wrong, log_complement(hit))
+        tails = np.logaddexp.accumulate(tails[:, ::-1], axis=1)[:, ::-1]
         tails[:, 0] = 0.0
-        return tails
+        return np.asarray(tails)
+
+
+@cache
+def _multinomials(n: int) -> tuple[NDArray[np.int_], NDArray[np.int_], Floats]:
+    """e and s for all e + s <= n, and ln of n! / (e! s! (n-e-s)!)."""
+    errors, flagged = np.nonzero(np.add.outer(np.arange(n + 1), np.arange(n + 1)) <= n)
+    logs = log_factorials(n)
+    return errors, flagged, logs[n] - logs[errors] - logs[flagged] - logs[n - errors - flagged]
+
+
+@cache
+def _binomials(n: int) -> tuple[NDArray[np.int_], NDArray[np.int_], Floats]:
+    """s and i for all i <= s <= n, and ln of s! / (i! (s-i)!)."""
+    of, chosen = np.tril_indices(n + 1)
+    logs = log_factorials(n)
+    return of, chosen, logs[of] - logs[chosen] - logs[of - chosen]
 
 
 # ---- exact intervals

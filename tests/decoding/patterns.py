@@ -42,7 +42,7 @@ def kinds(inner: InnerCode) -> list[Kind]:
 
 def erased_by(trial: int, kind: Kind, t: int) -> bool:
     """Trial 0 erases nothing, trial 1 flagged words, trial 2 also those with t corrected flips, and so on."""
-    return trial > 0 and (kind.status == FLAGGED or 0 < kind.status and kind.status >= t + 2 - trial)
+    return trial > 0 and (kind.status == FLAGGED or (kind.status > 0 and kind.status >= t + 2 - trial))
 
 
 def load(trial: int, kind: Kind, t: int) -> int:

@@ -13,12 +13,13 @@ import pytest
 from support import BadSectors, content, plant, rewrite, snapshot, with_flips
 
 from oakum import CannotCheck, OakumError, UsageError, describe, protect, protect_pipe, repair, verify
+from oakum.encoding import RESERVE
 from oakum.results import Outcome
 
 SMALL = "RS(60,40)+EH(128,120)"
 """A short code: windows of 160 KiB at the least depth."""
 
-TIGHT = (48 << 20) + (1 << 20)
+TIGHT = RESERVE + 255 * 4096
 """So little memory that a window of a few megabytes is read twice."""
 
 

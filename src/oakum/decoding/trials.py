@@ -154,14 +154,14 @@ def dense_words(status: Bytes) -> Mask:
     """
     run = DENSE_RUN
     while True:
-        dense = _in_runs(status, run)
+        dense = unclean_runs(status, run)
         longer = _least_run(status[~dense])
         if longer <= run:
             return dense
         run = longer
 
 
-def _in_runs(status: Bytes, run: int) -> Mask:
+def unclean_runs(status: Bytes, run: int) -> Mask:
     """Which words lie among at least `run` in a row none of which is clean."""
     rows, words = status.shape
     if words < run:

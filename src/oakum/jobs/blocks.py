@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import numpy as np
+import xxhash
 from numpy.typing import NDArray
 
 from oakum.decoding.block import BlockOutcome, Decoders, decode_block
@@ -90,12 +91,19 @@ class _Received:
         return self._window.pinned(self.number, strips)
 
 
-def examine(window: WindowCheck, block: _Received, decoders: Decoders, *, keep: bool) -> Finding:
-    """Decode a block and reduce the outcome to counts, places and, with `keep`, corrected bytes."""
+def examine(
+    window: WindowCheck, block: _Received, decoders: Decoders, *, keep: bool, evidence: bool = False
+) -> Finding:
+    """Decode a block and reduce the outcome to counts, places and, with `keep`, corrected bytes.
+
+    With `evidence` the cells that are not right come along as an audit wants them.
+    """
     outcome = decode_block(block, decoders)
     finding = _data_finding(window, outcome, keep=keep)
     _add_parity_strips(window.g, outcome, finding)
     _add_inner_parity(window, block, outcome, decoders, finding)
+    if evidence:
+        _add_evidence(window, outcome, finding)
     return finding
 
 
@@ -126,6 +134,25 @@ def _data_finding(window: WindowCheck, outcome: BlockOutcome, *, keep: bool) -> 
     if places:
         finding.places, finding.bits = np.concatenate(places), np.concatenate(bits)
     return finding
+
+
+def _add_evidence(window: WindowCheck, outcome: BlockOutcome, finding: Finding) -> None:
+    """What an audit wants to see of cells of data: both versions, and whether a second reading differed."""
+    g = window.g
+    for row in np.flatnonzero(outcome.strips < g.k).tolist():
+        strip, erased = int(outcome.strips[row]), outcome.erased[row]
+        start = window.start + strip * g.depth + outcome.number * CELL
+        length = min(g.width(outcome.number), window.start + g.length - start)
+        received, right = outcome.received[row], outcome.right[row]
+        seen = window.seen.get(g.cell_number(strip, outcome.number))
+        if seen is not None and not erased.any() and seen != xxhash.xxh3_64_intdigest(received.data):
+            finding.unsteady += 1
+        if outcome.finished[row]:
+            received = np.where(erased, right, received)
+            if (received != right).any():
+                finding.evidence.append((start, received[:length], right[:length]))
+        elif not erased.any():
+            finding.evidence.append((start, received[:length], None))
 
 
 def _best(outcome: BlockOutcome, row: int) -> Bytes:

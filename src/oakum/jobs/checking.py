@@ -14,7 +14,7 @@ from collections.abc import Callable, Iterator, Sequence
 from concurrent.futures import Future
 from dataclasses import dataclass, field
 from pathlib import Path
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Protocol, TypeVar
 
 import numpy as np
 import xxhash
@@ -29,7 +29,7 @@ from oakum.members import Folder, MemberHasher, MemberStream, Span
 from oakum.pools import Pools, wait_all
 from oakum.progress import Progress
 from oakum.sidecar.layout import Track
-from oakum.sidecar.reading import Section, Wear, examine_records, find_sections
+from oakum.sidecar.reading import ByteSource, Section, Wear, examine_records, find_sections
 from oakum.sidecar.table import Kind, Piece
 
 if TYPE_CHECKING:
@@ -43,6 +43,7 @@ RIGHT, WRONG, UNKNOWN = 0, 1, 2
 """As in `oakum.decoding.block`, which is not imported where nothing is damaged."""
 
 CHUNK = 8 << 20
+MOST_SEEN = 1 << 18
 GROUP = 8
 """Neighbouring blocks that one work unit takes, so that strips are read in longer pieces."""
 
@@ -73,17 +74,22 @@ class KnownMember:
     presumed: bool = False
     """Its SHA-256 was not asked for, and no digest of a cell speaks against it."""
 
-    def read(
-        self, folder: Folder, known_bad: Sequence[Range] = ()
-    ) -> Iterator[tuple[int, Bytes, list[Range]]]:
-        """All its bytes as they are, piece by piece: where, which, and what could not be read."""
-        stream = MemberStream(folder, [Span(self.piece.path, 0, self.size)], known_bad)
-        try:
-            for start in range(0, self.size, CHUNK):
-                data = np.empty(min(CHUNK, self.size - start), np.uint8)
-                yield start, data, stream.read_into(start, data.data)
-        finally:
-            stream.close()
+
+class OpenBytes(ByteSource, Protocol):
+    """A sidecar's bytes, to be closed when done."""
+
+    def close(self) -> None:
+        """Close it."""
+
+
+class OpenStream(Protocol):
+    """The bytes of members end to end, to be closed when done."""
+
+    def read_into(self, offset: int, buffer: memoryview) -> list[Range]:
+        """See `MemberStream.read_into`."""
+
+    def close(self) -> None:
+        """Close all members."""
 
 
 @dataclass
@@ -92,7 +98,7 @@ class ProtectedSet:
 
     path: Path
     root: Path
-    source: FileBytes
+    source: OpenBytes
     folder: Folder
     sections: list[Section]
     tables: list[tuple[Piece, ...]]
@@ -105,9 +111,21 @@ class ProtectedSet:
         self._files = sorted(files, key=lambda m: m.stream_start)
         self._starts = [m.stream_start for m in self._files]
 
+    def stream(self, spans: Sequence[Span], start: int, known_bad: Sequence[Range] = ()) -> OpenStream:
+        """The bytes of some spans as they are; the first begins at byte `start` of the whole stream."""
+        return MemberStream(self.folder, spans, known_bad)
+
     def read(self, member: KnownMember) -> Iterator[tuple[int, Bytes, list[Range]]]:
-        """A member's bytes as they are (see `KnownMember.read`), known bad ranges left out."""
-        return member.read(self.folder, self.unreadable.get(member.piece.path, ()))
+        """All of a member's bytes as they are, piece by piece: where, which, and what could not be read."""
+        path = member.piece.path
+        known_bad = self.unreadable.get(path, ())
+        stream = self.stream([Span(path, 0, member.size)], member.stream_start, known_bad)
+        try:
+            for start in range(0, member.size, CHUNK):
+                data = np.empty(min(CHUNK, member.size - start), np.uint8)
+                yield start, data, stream.read_into(start, data.data)
+        finally:
+            stream.close()
 
     def members_at(self, start: int, length: int) -> list[KnownMember]:
         """The files that hold bytes of a range of the stream, in order."""
@@ -118,6 +136,9 @@ class ProtectedSet:
         """Close everything."""
         self.source.close()
         self.folder.close()
+
+
+Set = TypeVar("Set", bound=ProtectedSet)
 
 
 def open_set(
@@ -131,7 +152,21 @@ def open_set(
     Raises CannotCheck when the sidecar cannot be read, protects something else than `target`, or its members
     are not there at all.
     """
-    source = FileBytes(path)
+    opened = assemble(ProtectedSet, path, FileBytes(path), root)
+    opened.unreadable = unreadable or {}
+    try:
+        if target is not None:
+            _refuse_other(opened, absolute(target))
+        look_at_members(opened)
+        _refuse_missing_medium(opened)
+    except BaseException:
+        opened.close()
+        raise
+    return opened
+
+
+def assemble(kind: type[Set], path: Path, source: OpenBytes, root: Path | None) -> Set:
+    """Read the records of a sidecar; `source` is closed if that fails."""
     try:
         sections = find_sections(source)
         tables = [section.table() for section in sections]
@@ -139,21 +174,14 @@ def open_set(
     except BaseException:
         source.close()
         raise
-    opened = ProtectedSet(
-        path, folder.root, source, folder, sections, tables, _put_together(sections, tables)
-    )
-    opened.unreadable = unreadable or {}
-    try:
-        if target is not None:
-            _refuse_other(opened, absolute(target))
-        _look_at_sections(opened)
-        for member in opened.members.values():
-            _look_at(folder, member)
-        _refuse_missing_medium(opened)
-    except BaseException:
-        opened.close()
-        raise
-    return opened
+    return kind(path, folder.root, source, folder, sections, tables, _put_together(sections, tables))
+
+
+def look_at_members(opened: ProtectedSet) -> None:
+    """Say what is there of sections and members, without reading the members."""
+    _look_at_sections(opened)
+    for member in opened.members.values():
+        _look_at(opened.folder, member)
 
 
 def _put_together(
@@ -275,6 +303,12 @@ class Finding:
     corrected: list[tuple[int, Bytes]] = field(default_factory=list)
     """Corrected bytes by place in the stream, where they are asked for."""
 
+    evidence: list[tuple[int, Bytes, Bytes | None]] = field(default_factory=list)
+    """For audits, cells that are not right: place in the stream, as received, as it should be where known."""
+
+    unsteady: int = 0
+    """For audits: cells of data that gave other bytes when they were read again."""
+
 
 class WindowCheck:
     """The state of one window while it is checked."""
@@ -289,7 +323,7 @@ class WindowCheck:
         self._pools = pools
         spans = [Span(p.path, p.offset, p.length) for p in self.pieces]
         self.spans = spans
-        self.stream = MemberStream(opened.folder, spans, self._known_bad(opened.unreadable))
+        self.stream = opened.stream(spans, self.start, self._known_bad(opened.unreadable))
         self.faulty: list[Range] = []
         """Ranges of the window that could not be read."""
 
@@ -300,6 +334,17 @@ class WindowCheck:
         self.wear = Wear()
         self._body_unreadable = 0
         self.right_spans: list[Range] = []
+        self.auditing = False
+        """Whether findings come with evidence, and what digests wrong cells had is kept in `seen`."""
+
+        self.seen: dict[int, int] = {}
+        self.sampled: tuple[int, int] | None = None
+        """Bytes and blocks looked at, where that is not all of the window."""
+
+    @property
+    def extent(self) -> tuple[int, int]:
+        """Bytes of the stream and blocks that were looked at."""
+        return self.sampled or (self.g.length, self.g.blocks)
 
     def _known_bad(self, unreadable: dict[bytes, list[Range]]) -> list[Range]:
         """What the user says cannot be read, as ranges of the window."""
@@ -368,12 +413,8 @@ class WindowCheck:
         expected, known = self.section.digests(Track.DATA, first, self.g.cell_at(stop - 1) + 1 - first)
 
         def work(number: int, cells: Bytes) -> None:
-            digests = cell_digests(cells)
-            here = slice(number - first, number - first + len(digests))
-            state = np.where(digests == expected[here], np.uint8(RIGHT), np.uint8(WRONG))
-            if known is not None:
-                state[~known[here]] = UNKNOWN
-            self.data[number : number + len(digests)] = state
+            here = slice(number - first, number - first - (-len(cells) // CELL))
+            self._compare_run(number, cells, expected[here], None if known is None else known[here])
 
         return [
             self._pools.work.submit(
@@ -381,6 +422,46 @@ class WindowCheck:
             )
             for run in self.g.runs(start, stop, 1 << 20)
         ]
+
+    def _compare_run(
+        self, number: int, cells: Bytes, expected: NDArray[np.uint64], known: Mask | None
+    ) -> None:
+        """Consecutive cells of one strip from `number` on against their digests."""
+        digests = cell_digests(cells)
+        state = np.where(digests == expected, np.uint8(RIGHT), np.uint8(WRONG))
+        if known is not None:
+            state[~known] = UNKNOWN
+        self.data[number : number + len(digests)] = state
+        if self.auditing and len(self.seen) < MOST_SEEN:
+            wrong = np.flatnonzero(state == WRONG)
+            self.seen.update(zip((number + wrong).tolist(), digests[wrong].tolist(), strict=True))
+
+    def scan_sample(self, groups: Sequence[Range]) -> None:
+        """Read only the blocks first..end-1 of each of `groups`, of all strips; no SHA-256 is compared."""
+        g, nbytes = self.g, 0
+        for first, end in groups:
+            start, width = first * CELL, min(end * CELL, g.depth) - first * CELL
+            for strip in range(g.k):
+                real = min(width, g.strip_length(strip) - start)
+                if real <= 0:
+                    break
+                cells = np.empty(min(-(-real // CELL) * CELL, width), np.uint8)
+                faults = self.stream.read_into(strip * g.depth + start, cells.data)
+                number, count = g.cell_number(strip, first), -(-len(cells) // CELL)
+                self._compare_run(number, cells, *self.section.digests(Track.DATA, number, count))
+                for a, b in faults:
+                    self.data[number + a // CELL : number - (-b // CELL)] = WRONG
+                    self.faulty.append((strip * g.depth + start + a, strip * g.depth + start + b))
+                nbytes += real
+                self._progress.advance(real)
+            expected, known = self.section.digests(Track.PARITY, first * g.r, (end - first) * g.r)
+            for j in range(g.r):
+                cells, faults = self.section.body(j * g.depth + start, width)
+                self._compare_parity(first, j, cells, faults, expected[j :: g.r], known)
+            self._progress.advance(g.r * width)
+        self.sampled = nbytes, sum(end - first for first, end in groups)
+        self.faulty.sort()
+        self.wear = examine_records(self.section)
 
     def _compare_members(self, hasher: MemberHasher) -> None:
         """Which members are right, and which parts of the window belong to them."""
@@ -561,7 +642,7 @@ class WindowCheck:
         from oakum.jobs.blocks import GroupReader, examine
 
         reader = GroupReader(self, blocks)
-        return [examine(self, reader.block(b), decoders, keep=keep) for b in blocks]
+        return [examine(self, reader.block(b), decoders, keep=keep, evidence=self.auditing) for b in blocks]
 
     def states(self, block: int) -> NDArray[np.uint8]:
         """RIGHT, WRONG or UNKNOWN for the cells of a block, uint8[n]; virtual cells are right."""

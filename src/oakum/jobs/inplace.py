@@ -18,7 +18,7 @@ from dataclasses import replace
 import numpy as np
 
 from oakum.errors import CannotCheck, UsageError
-from oakum.files import Fault, FileBytes, NewFile, read_into, room_in
+from oakum.files import Fault, NewFile, read_into, room_in
 from oakum.geometry import CELL
 from oakum.jobs.checking import RIGHT, Bytes, Finding, KnownMember, ProtectedSet, Range, WindowCheck
 from oakum.jobs.journal import PATCH, Condition, Draft, Entry, Journal, Patch, Thing
@@ -28,6 +28,7 @@ from oakum.jobs.tally import Tally
 from oakum.jobs.verify import SetCheck
 from oakum.members import MemberStream, Span
 from oakum.results import CheckResult, MemberState, Outcome
+from oakum.sidecar.reading import ByteSource
 from oakum.sidecar.table import Kind
 
 STEP = 1 << 20
@@ -262,7 +263,7 @@ class InPlace:
             self._compare(draft, number, self._opened.source, file, length)
         return True
 
-    def _compare(self, draft: Draft, number: int, old: FileBytes, new: NewFile, length: int) -> None:
+    def _compare(self, draft: Draft, number: int, old: ByteSource, new: NewFile, length: int) -> None:
         """Patches for every cell's worth of bytes in which the old and the new sidecar differ."""
         for start in range(0, max(length, old.size), CELL):
             right = new.read(start, max(0, min(CELL, length - start)))

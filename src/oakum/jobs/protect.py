@@ -161,7 +161,8 @@ def _refuse_changed(folder: Folder, members: Sequence[Member]) -> None:
             now = folder.stat(member.path)
         except OSError:
             raise CannotCheck(
-                f"{os.fsdecode(member.path)} went away while it was read; run protect again when nothing changes"
+                f"{os.fsdecode(member.path)} went away while it was read; "
+                "run protect again when nothing changes"
             ) from None
         if member.kind is Kind.FILE and (now.st_size, now.st_mtime_ns) != (member.size, member.modified_ns):
             raise CannotCheck(

@@ -38,8 +38,9 @@ class Tally:
         """A window that has been scanned."""
         erased = sum(b - a for a, b in window.faulty)
         self._erased += erased
-        self._read += 8 * (window.g.length - erased)
-        self._block_count += window.g.blocks
+        nbytes, blocks = window.extent
+        self._read += 8 * (nbytes - erased)
+        self._block_count += blocks
         self._sidecar_bits += window.wear.bits
         self._sidecar_symbols += window.wear.symbols
         self._sidecar_unreadable += window.wear.unreadable
@@ -76,6 +77,12 @@ class Tally:
                 finding.margin if finding.correctable else None,
             )
         )
+
+    @property
+    def burst_lengths(self) -> list[int]:
+        """Lengths in bytes of all bursts, in ascending order. Call it when everything has been added."""
+        self._bursts.finish()
+        return sorted(self._bursts.lengths.tolist())
 
     def _add_lost(self, start: int, stop: int) -> None:
         """Give a lost range of the stream to the members it touches."""

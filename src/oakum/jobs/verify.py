@@ -11,7 +11,7 @@ from typing import TYPE_CHECKING
 
 from oakum.algebra.concatenated import ConcatenatedCode
 from oakum.errors import FormatError
-from oakum.jobs.checking import UNKNOWN, KnownMember, ProtectedSet, WindowCheck, open_set
+from oakum.jobs.checking import UNKNOWN, Finding, KnownMember, ProtectedSet, WindowCheck, open_set
 from oakum.jobs.common import DEFAULT_MEMORY, announce_compiling, find_sidecar, summarise
 from oakum.jobs.replay import unfinished
 from oakum.jobs.unreadable import read_unreadable
@@ -111,8 +111,15 @@ class SetCheck:
         for number in range(len(opened.sections)):
             window = WindowCheck(opened, number, self.progress, self.pools)
             self.windows.append(window)
-            window.scan(hasher)
+            self.scan_window(window, hasher)
         self._settle_members(hashing=hashing)
+
+    def scan_window(self, window: WindowCheck, hasher: MemberHasher | None) -> None:
+        """Read one window; an audit may read less of it, and asks for more."""
+        window.scan(hasher)
+
+    def take(self, finding: Finding) -> None:
+        """A decoded block, for those who want more of it than the tally."""
 
     def _settle_members(self, *, hashing: bool) -> None:
         """Without SHA-256, members are right when all their cells are and nothing else speaks against it."""
@@ -161,6 +168,7 @@ class SetCheck:
             tally.add_window(window)
             for finding in window.findings(self.decoders, keep=False):
                 tally.add(finding)
+                self.take(finding)
                 self.progress.advance(window.block_bytes)
         return tally
 

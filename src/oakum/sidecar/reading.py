@@ -137,7 +137,7 @@ class Section:
             rows, erased = self.rows(frame)
             content = correct(frame, rows, erased, self.bootstrap.identity)
         for torn in self._torn if content.known is not None else ():
-            more = np.broadcast_to(np.repeat(torn, self.layout.rows)[:, np.newaxis], rows.shape)
+            more = np.broadcast_to(torn[:, np.newaxis], rows.shape)
             other = correct(frame, rows, more if erased is None else more | erased, self.bootstrap.identity)
             if other.known is None:
                 return other
@@ -147,13 +147,20 @@ class Section:
 
     @cached_property
     def _torn(self) -> list[Rows]:
-        """Guesses, uint8[stretches], at which stretches are lost where nothing says that they are.
+        """Guesses, uint8[240], at which rows of the frames are lost where nothing says that they are.
 
-        Those whose head cannot be read; and also the one before each, since a burst may begin behind its head.
+        Those of stretches whose head cannot be read. A burst that took a head may also have begun behind the
+        head before it, and may have ended before the last rows: so with that stretch too, or half of each.
         """
         starts = [self.base + self.layout.stretch_start(t) for t in range(self.layout.stretches)]
-        headless = np.array([_read_head(self.source, start) is None for start in starts], np.uint8)
-        return [headless, headless | np.append(headless[1:], np.uint8(0))] if headless.any() else []
+        headless = np.repeat([_read_head(self.source, s) is None for s in starts], self.layout.rows)
+        headless = headless.astype(np.uint8)
+        if not headless.any():
+            return []
+        sooner = [
+            np.append(headless[n:], np.zeros(n, np.uint8)) for n in (self.layout.rows, self.layout.rows // 2)
+        ]
+        return [headless, headless | sooner[0], sooner[1]]
 
     def digests(
         self, track: Track, first: int, count: int
