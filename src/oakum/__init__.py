@@ -14,7 +14,8 @@ from oakum.errors import CannotCheck, FormatError, OakumError, UsageError
 
 if TYPE_CHECKING:
     from oakum.jobs.describe import describe
-    from oakum.jobs.protect import protect, protect_pipe
+    from oakum.jobs.pipe import protect_pipe
+    from oakum.jobs.protect import protect
     from oakum.jobs.repair import repair, roll_back
     from oakum.jobs.verify import verify
 
@@ -23,7 +24,7 @@ __version__ = "0.1.0"
 _LAZY = {
     "describe": "oakum.jobs.describe",
     "protect": "oakum.jobs.protect",
-    "protect_pipe": "oakum.jobs.protect",
+    "protect_pipe": "oakum.jobs.pipe",
     "repair": "oakum.jobs.repair",
     "roll_back": "oakum.jobs.repair",
     "verify": "oakum.jobs.verify",

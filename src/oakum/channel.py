@@ -13,7 +13,6 @@ from collections.abc import Sequence
 from dataclasses import dataclass, replace
 from functools import lru_cache
 from math import expm1, isfinite
-from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -260,12 +259,13 @@ class Figure:
 
 @dataclass(frozen=True)
 class Medium:
-    """A kind of medium: the channel that stands for it, and the figures behind that."""
+    """A kind of medium: the damage that stands for it, and the figures behind that."""
 
     name: str
     title: str
-    channel: dict[str, Any]
+    runs: tuple[Runs, ...]
     figures: tuple[Figure, ...]
+    flip_rate: float = 0.0
 
 
 _SECTOR = 4096
@@ -279,7 +279,7 @@ MEDIA = {
             "optical",
             "optical disc at its act-now limit",
             # 33,024 of 37,856 bytes of a product code word are lost together: sixteen sectors of 2,048.
-            {"runs": (Runs(((16 * 2048, 1.0),), 1.0, readable=False, cluster=4, within=64 * 16 * 2048),)},
+            (Runs(((16 * 2048, 1.0),), 1.0, readable=False, cluster=4, within=64 * 16 * 2048),),
             (
                 Figure("a product code word of a DVD holds 33,024 bytes, which fall together", "ECMA-267", PUBLISHED),
                 Figure(
@@ -298,7 +298,7 @@ MEDIA = {
         Medium(
             "tape",
             "LTO-9 tape",
-            {"runs": (Runs(((1 << 20, 1.0),), 8 * TB * 1e-20, readable=False),)},
+            (Runs(((1 << 20, 1.0),), 8 * TB * 1e-20, readable=False),),
             (
                 Figure(f"1 uncorrectable bit in 1e20 read, {_HOST}", "makers' data sheets", SECOND_HAND),
                 Figure("LTO-8 ten times worse; LTO-3 under 1 in 1e17", "makers' data sheets", SECOND_HAND),
@@ -309,12 +309,10 @@ MEDIA = {
         Medium(
             "disk",
             "nearline hard disk, kept powered down",
-            {
-                "runs": (
-                    Runs(((_SECTOR, 1.0),), 8 * TB * 1e-15, readable=False, cluster=2, within=100 * _SECTOR),
-                    Runs(((1, 0.1), (512, 0.1), (64 << 10, 0.8)), 1e-3),
-                )
-            },
+            (
+                Runs(((_SECTOR, 1.0),), 8 * TB * 1e-15, readable=False, cluster=2, within=100 * _SECTOR),
+                Runs(((1, 0.1), (512, 0.1), (64 << 10, 0.8)), 1e-3),
+            ),
             (
                 Figure(f"1 sector in 1e15 bits read, {_HOST}", "makers' data sheets", PUBLISHED),
                 Figure(
@@ -335,7 +333,7 @@ MEDIA = {
         Medium(
             "flash",
             "flash without power, within its retention time",
-            {"runs": (Runs(((_SECTOR, 1.0),), 8 * TB * 1e-15, readable=False),)},
+            (Runs(((_SECTOR, 1.0),), 8 * TB * 1e-15, readable=False),),
             (
                 Figure(f"1 sector in 1e15 bits read (client; enterprise 1e16), {_HOST}", "JESD218", SECOND_HAND),
                 Figure(

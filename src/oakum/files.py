@@ -86,7 +86,7 @@ class FileBytes:
             raise CannotCheck(f"{path} cannot be opened: {reason(error)}") from None
         found = os.fstat(self._fd)
         if not stat.S_ISREG(found.st_mode):
-            os.close(self._fd)
+            let_go(self._fd)
             raise CannotCheck(f"{path} is not a file; name the sidecar itself")
         self.path = path
         self.size = found.st_size
@@ -103,7 +103,7 @@ class FileBytes:
 
     def close(self) -> None:
         """Close the file."""
-        os.close(self._fd)
+        let_go(self._fd)
 
     def __enter__(self) -> FileBytes:
         return self
@@ -138,7 +138,7 @@ class Lock:
                         self._fd, fd = fd, -1
                 finally:
                     if fd >= 0:
-                        os.close(fd)
+                        let_go(fd)
         except OSError as error:
             raise CannotCheck(f"{self.path} cannot be opened: {reason(error)}") from None
 
@@ -150,7 +150,7 @@ class Lock:
     def release(self) -> None:
         """Give up the lock."""
         if self._fd >= 0:
-            os.close(self._fd)
+            let_go(self._fd)
             self._fd = -1
 
     def __enter__(self) -> Lock:
@@ -257,7 +257,7 @@ class NewFile:
                 raise self._in_use()
             os.unlink(self._temporary, dir_fd=self._folder)
         finally:
-            os.close(fd)
+            let_go(fd)
 
     def _lock(self) -> None:
         if not try_lock(self._fd):
@@ -297,8 +297,7 @@ class NewFile:
         fds, self._fd, self._folder = (self._fd, self._folder), -1, -1
         for fd in fds:
             if fd >= 0:
-                with suppress(OSError):
-                    os.close(fd)
+                let_go(fd)
 
     def write(self, offset: int, data: bytes | bytearray | memoryview) -> None:
         """Put all of `data` at `offset`."""
@@ -438,6 +437,12 @@ def read_all(fd: int, offset: int, length: int) -> bytes:
         offset += len(part)
         length -= len(part)
     return b"".join(parts)
+
+
+def let_go(fd: int) -> None:
+    """Close a descriptor that was only read from: an error has nothing to tell then."""
+    with suppress(OSError):
+        os.close(fd)
 
 
 def reason(error: OSError) -> str:

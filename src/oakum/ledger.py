@@ -14,10 +14,10 @@ from collections.abc import Iterator, Sequence
 from contextlib import contextmanager
 from dataclasses import dataclass
 from datetime import UTC, datetime
+from importlib.metadata import version
 from pathlib import Path
 from urllib.parse import quote
 
-from oakum import __version__
 from oakum.audits import TargetAudit
 from oakum.errors import CannotCheck
 
@@ -110,15 +110,15 @@ class Ledger:
 
     def _prepare(self, write: bool) -> None:
         with _explained(self.path):
-            ours, version = self._pragma("application_id"), self._pragma("user_version")
-            if ours != APPLICATION_ID and (version or self._has_tables() or not write):
+            ours, schema = self._pragma("application_id"), self._pragma("user_version")
+            if ours != APPLICATION_ID and (schema or self._has_tables() or not write):
                 raise LedgerError(f"{self.path} is not a ledger of oakum; name another file with --ledger")
-            if version > VERSION:
+            if schema > VERSION:
                 raise LedgerError(
-                    f"{self.path} was written by a newer oakum (schema {version}, this one knows {VERSION}); "
+                    f"{self.path} was written by a newer oakum (schema {schema}, this one knows {VERSION}); "
                     "install that one"
                 )
-            if version < VERSION:
+            if schema < VERSION:
                 self._migrate(write)
 
     def _pragma(self, name: str) -> int:
@@ -167,7 +167,7 @@ class Ledger:
         """Enter an audit that begins; returns its number."""
         row: Row = {
             "begun": begun.astimezone(UTC).isoformat(timespec="seconds"),
-            "medium": medium, "oakum": __version__, "request": _request(targets), "share": share,
+            "medium": medium, "oakum": version("oakum"), "request": _request(targets), "share": share,
             "seed": seed,
         }  # fmt: skip
         with self._transaction():

@@ -17,7 +17,7 @@ from pathlib import Path
 from typing import Protocol
 
 from oakum.errors import CannotCheck, UsageError
-from oakum.files import Fault, read_into, reason
+from oakum.files import Fault, let_go, read_into, reason
 from oakum.sidecar.table import Kind
 
 OPEN_FILES = 64
@@ -118,16 +118,16 @@ class Folder:
             return self._parent[1]
         fd = open_folder(self._fd, parent)
         if self._parent is not None:
-            os.close(self._parent[1])
+            let_go(self._parent[1])
         self._parent = (parent, fd)
         return fd
 
     def close(self) -> None:
         """Close all descriptors."""
         if self._parent is not None:
-            os.close(self._parent[1])
+            let_go(self._parent[1])
             self._parent = None
-        os.close(self._fd)
+        let_go(self._fd)
 
 
 def open_folder(root: int, path: bytes, *, made: list[bytes] | None = None) -> int:
@@ -146,10 +146,10 @@ def open_folder(root: int, path: bytes, *, made: list[bytes] | None = None) -> i
                     os.mkdir(part, dir_fd=fd)
                     made.append(so_far)
             below = os.open(part, flags, dir_fd=fd)
-            os.close(fd)
+            let_go(fd)
             fd = below
     except BaseException:
-        os.close(fd)
+        let_go(fd)
         raise
     return fd
 
@@ -261,7 +261,7 @@ class MemberStream:
                 raise CannotCheck(f"{os.fsdecode(path)} cannot be opened: {reason(error)}") from None
             fd = None
         if fd is not None and not stat.S_ISREG(os.fstat(fd).st_mode):
-            os.close(fd)
+            let_go(fd)
             fd = None
         self._open[path] = fd
         return fd
@@ -275,7 +275,7 @@ class MemberStream:
             fd = self._open.pop(oldest)
             del self._users[oldest]
             if fd is not None:
-                os.close(fd)
+                let_go(fd)
 
     def fetch(self, offset: int, length: int) -> None:
         """See `Stream`. Only of a member that is open already: opening others ahead would cost more."""
@@ -305,7 +305,7 @@ class MemberStream:
         """Close all open members."""
         for fd in self._open.values():
             if fd is not None:
-                os.close(fd)
+                let_go(fd)
         self._open.clear()
 
 

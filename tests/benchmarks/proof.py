@@ -33,7 +33,9 @@ def flipped_bits(received: Path, right: Path) -> int:
     with received.open("rb") as a, right.open("rb") as b:
         while (x := a.read(16 * MIB)) and (y := b.read(16 * MIB)):
             size = min(len(x), len(y))
-            total += int(np.bitwise_count(np.frombuffer(x, np.uint8, size) ^ np.frombuffer(y, np.uint8, size)).sum())
+            total += int(
+                np.bitwise_count(np.frombuffer(x, np.uint8, size) ^ np.frombuffer(y, np.uint8, size)).sum()
+            )
     return total
 
 
@@ -66,7 +68,9 @@ def proof_of_tree(folder: Path) -> bool:
     shutil.copytree(original, work, symlinks=True)
     begin = time.perf_counter()
     protected = oakum.protect([work / "library"])
-    say(f"tree: {protected.members:,} members, {protected.stream_bytes:,} bytes, protected in {time.perf_counter() - begin:.1f} s")
+    say(
+        f"tree: {protected.members:,} members, {protected.stream_bytes:,} bytes, protected in {time.perf_counter() - begin:.1f} s"
+    )
     shutil.copy(protected.sidecar, original)
     _damage_tree(copied, work, protected.stream_bytes)
     begin = time.perf_counter()
@@ -115,7 +119,11 @@ def proof_of_file(folder: Path, size: int) -> bool:
         for start in range(0, size, 64 * MIB):
             file.write(rng.bytes(min(64 * MIB, size - start)))
     good = True
-    for name, options in {"shelf": {}, "plain": {"code": "plain"}, "windows of 4 MiB depth": {"depth": 4 * MIB}}.items():
+    for name, options in {
+        "shelf": {},
+        "plain": {"code": "plain"},
+        "windows of 4 MiB depth": {"depth": 4 * MIB},
+    }.items():
         work = folder / "x.img"
         shutil.copy(original, work)
         oakum.protect([work], overwrite=True, **options)
@@ -125,7 +133,9 @@ def proof_of_file(folder: Path, size: int) -> bool:
         begin = time.perf_counter()
         result = oakum.repair(work, output=folder / "x.back")
         seconds = time.perf_counter() - begin
-        same = result.members[0].mended is not None and filecmp.cmp(original, folder / "x.back", shallow=False)
+        same = result.members[0].mended is not None and filecmp.cmp(
+            original, folder / "x.back", shallow=False
+        )
         say(
             f"file, {name}: {'bit for bit the same' if same else 'NOT THE SAME'} after {seconds:.1f} s; "
             f"bits_flipped {result.totals.bits_flipped:,}, population count {flips:,}; weakest margin {result.weakest:.2f}"
@@ -136,7 +146,9 @@ def proof_of_file(folder: Path, size: int) -> bool:
 
 
 def main() -> int:
-    parser = argparse.ArgumentParser(description=__doc__, formatter_class=argparse.RawDescriptionHelpFormatter)
+    parser = argparse.ArgumentParser(
+        description=__doc__, formatter_class=argparse.RawDescriptionHelpFormatter
+    )
     parser.add_argument("what", nargs="*", choices=["tree", "file", []], default=[])
     parser.add_argument("--folder", type=Path, default=None)
     parser.add_argument("--size", type=int, default=1 << 30)
@@ -144,7 +156,9 @@ def main() -> int:
     good = True
     for what in options.what or ["tree", "file"]:
         with tempfile.TemporaryDirectory(dir=options.folder) as folder:
-            good &= proof_of_tree(Path(folder)) if what == "tree" else proof_of_file(Path(folder), options.size)
+            good &= (
+                proof_of_tree(Path(folder)) if what == "tree" else proof_of_file(Path(folder), options.size)
+            )
     return 0 if good else 1
 
 

@@ -14,17 +14,17 @@ from functools import cache
 from itertools import combinations
 
 import numpy as np
-from numpy.typing import NDArray
 
 from oakum.algebra.inner import InnerCode
 from oakum.geometry import Geometry
+from oakum.kernels.columns import ColumnDecoder
 
 FLAGGED = 255
 
 
 @dataclass(frozen=True)
 class Kind:
-    """What has become of a word: the inner decoder's status, whether the symbol is wrong, and the flips in it."""
+    """What has become of a word: the inner decoder's status, whether the symbol is wrong, how many flips."""
 
     status: int
     wrong: bool
@@ -51,7 +51,7 @@ def load(trial: int, kind: Kind, t: int) -> int:
 
 
 def worst_pattern(inner: InnerCode, n: int, r: int, trials: list[int]) -> Counter[Kind]:
-    """The fewest flips that make every one of `trials` fail (2 errors + erasures > r): kinds and their numbers.
+    """The fewest flips that make all of `trials` fail (2 errors + erasures > r): kinds and their numbers.
 
     Minimise sum of x_k flips_k over integers x_k >= 0 with sum of x_k <= n and, for each trial j, sum of
     x_k load_jk >= r + 1.
@@ -146,8 +146,19 @@ def _halves(inner: InnerCode) -> dict[int, list[tuple[int, ...]]]:
     return found
 
 
-def lightest_rival(field_row: NDArray[np.uint8], count: int) -> NDArray[np.intp]:
-    """Which `count` symbols of an outer codeword have the fewest ones: an adversary's choice."""
-    ones = np.bitwise_count(field_row).astype(int)
-    ones[ones == 0] = 99
-    return np.argsort(ones, kind="stable")[:count]
+def rival_flips(decoder: ColumnDecoder, strips: list[int], t: int) -> tuple[dict[int, int], int]:
+    """The fewest flips that turn r/2 + 1 symbols into those of another codeword at distance D.
+
+    `strips` are D places. One codeword that is zero elsewhere is found by erasing all of them but one, and
+    all its multiples are tried. Gives the pattern for each strip chosen, and the flips it takes, at least
+    t + 1 in a word so that the inner decoder does not undo them.
+    """
+    first, *others = strips
+    multiples = np.zeros((decoder.outer.n, 255), np.uint8)
+    multiples[first] = np.arange(1, 256)
+    multiples[others], _ = decoder.erasure_solver(others).solve(decoder.syndromes(multiples))
+    cost = np.maximum(np.bitwise_count(multiples[strips]).astype(int), t + 1)
+    needed = decoder.outer.r // 2 + 1
+    best = int(np.sort(cost, axis=0)[:needed].sum(axis=0).argmin())
+    cheapest = np.argsort(cost[:, best], kind="stable")[:needed]
+    return {strips[i]: int(multiples[strips[i], best]) for i in cheapest}, int(cost[cheapest, best].sum())

@@ -73,7 +73,7 @@ def test_subspace_polynomials(field_poly: int) -> None:
         np.testing.assert_array_equal(field.multiply(values, factors[1 << i]), factors)
 
 
-def test_basis_polynomials_have_every_degree() -> None:
+def test_galois_finds_every_degree() -> None:
     """P_j has degree j: by interpolation, with another implementation of the field."""
     galois = pytest.importorskip("galois")
     field = galois.GF(2**8, irreducible_poly=0x11D)

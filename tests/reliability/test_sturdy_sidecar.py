@@ -1,4 +1,4 @@
-"""A sidecar as sturdy as the data: whatever a tenth of it suffers, the data comes back, and so does the sidecar.
+"""A sidecar as sturdy as the data: whatever a tenth of it suffers, data and sidecar come back.
 
 Together with the damage to the sidecar the data is damaged inside what capacity is left: every parity strip
 that lost a byte counts as erased, and a contiguous run of what the others can make good is overwritten.
@@ -122,7 +122,7 @@ def test_a_tenth_is_overwritten_anywhere(shelf: Shelf, tmp_path: Path, long: boo
 
 @pytest.mark.parametrize("with_data", [False, True], ids=["alone", "with-data"])
 def test_flips_all_over(shelf: Shelf, tmp_path: Path, long: bool, with_data: bool) -> None:
-    """Flips at 8e-3. Parity strips then are hardly ever right; a fifth of the capacity is asked of the rest."""
+    """Flips at 8e-3. Parity strips are hardly ever right then; a fifth of the capacity is asked too."""
     for seed in range(20 if long else 1):
         hurt = with_flips(shelf.whole, int(8 * len(shelf.whole) * 8e-3), seed=seed)
         survive(shelf, tmp_path, hurt, 7 if with_data else 0)
@@ -149,7 +149,7 @@ def test_ends_are_lost(shelf: Shelf, tmp_path: Path, loss: str, with_data: bool)
 
 
 def test_what_goes_with_whole_windows_is_said(shelf: Shelf, tmp_path: Path) -> None:
-    """Cut by a third, a sidecar of two windows keeps the first one in full and says that the other is lost."""
+    """Cut by a third, a sidecar of two windows keeps the first in full and says that the other is lost."""
     if not shelf.windows:
         pytest.skip("one window")
     data = shelf.data.read_bytes()

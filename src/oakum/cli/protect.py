@@ -103,7 +103,7 @@ def _protect_files(
 def _protect_pipe(
     name: str | None, output: Path | None, options: _Options, progress: Progress
 ) -> ProtectResult:
-    from oakum.jobs.protect import protect_pipe as job
+    from oakum.jobs.pipe import protect_pipe as job
 
     if name is None:
         raise UsageError("what comes through a pipe has no name; give it one, such as --name backup.tar")

@@ -124,6 +124,4 @@ def _refuse_together(
     if even_newer and not in_place:
         raise UsageError("--even-newer goes with --in-place; other repairs leave the files as they are")
     if undo and (in_place or accept_loss or output is not None or member):
-        raise UsageError(
-            "--roll-back undoes the whole of the last repair in place; give it alone"
-        )
+        raise UsageError("--roll-back undoes the whole of the last repair in place; give it alone")

@@ -18,7 +18,7 @@ from dataclasses import replace
 import numpy as np
 
 from oakum.errors import CannotCheck, UsageError
-from oakum.files import Fault, NewFile, read_into, room_in
+from oakum.files import Fault, NewFile, let_go, read_into, room_in
 from oakum.geometry import CELL
 from oakum.jobs.checking import RIGHT, Bytes, Finding, KnownMember, ProtectedSet, Range, WindowCheck
 from oakum.jobs.journal import PATCH, Condition, Draft, Entry, Journal, Patch, Thing
@@ -168,7 +168,7 @@ class InPlace:
         try:
             return data, read_into(fd, offset, data.data)
         finally:
-            os.close(fd)
+            let_go(fd)
 
     def _correct(self, draft: Draft, window: WindowCheck, finding: Finding) -> None:
         """Patches for the corrected bytes of a block, one for each member that has some of them."""

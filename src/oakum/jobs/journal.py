@@ -22,7 +22,7 @@ from pathlib import Path
 import xxhash
 
 from oakum.errors import CannotCheck
-from oakum.files import NewFile, read_all, reason, write_all
+from oakum.files import NewFile, let_go, read_all, reason, write_all
 from oakum.sidecar.table import check_path
 
 SUFFIX = ".journal"
@@ -296,11 +296,11 @@ class Journal:
             os.unlink(self.path.name, dir_fd=folder)
             os.fsync(folder)
         finally:
-            os.close(folder)
+            let_go(folder)
 
     def close(self) -> None:
         """Close the file."""
-        os.close(self._fd)
+        let_go(self._fd)
 
     def __enter__(self) -> Journal:
         return self

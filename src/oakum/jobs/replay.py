@@ -13,7 +13,7 @@ from contextlib import suppress
 from pathlib import Path
 
 from oakum.errors import CannotCheck, UsageError
-from oakum.files import FileBytes, NewFile, reason, temporary_name, write_all
+from oakum.files import FileBytes, NewFile, let_go, reason, temporary_name, write_all
 from oakum.jobs.journal import Condition, Contents, Entry, Journal, Patch, Thing, journal_path
 from oakum.members import open_folder
 from oakum.sidecar.reading import find_sections
@@ -50,11 +50,11 @@ class Place:
         try:
             return os.open(os.path.basename(entry.path), flags, dir_fd=folder)
         finally:
-            os.close(folder)
+            let_go(folder)
 
     def close(self) -> None:
         """Close the root."""
-        os.close(self._fd)
+        let_go(self._fd)
 
     def __enter__(self) -> Place:
         return self
@@ -76,7 +76,7 @@ def refuse_unfit(contents: Contents, place: Place) -> None:
             except OSError as error:
                 raise CannotCheck(f"{place.shown(entry)} cannot be written to: {reason(error)}") from None
             found = os.fstat(fd)
-            os.close(fd)
+            let_go(fd)
             if not stat.S_ISREG(found.st_mode) or not sizes[0] <= found.st_size <= sizes[1]:
                 raise CannotCheck(
                     f"{place.shown(entry)} is not what the repair in place left there; nothing was changed"
@@ -102,7 +102,7 @@ def _is_right(entry: Entry, place: Place) -> bool:
                 return os.readlink(name, dir_fd=folder) == entry.after.target
             return stat.S_ISDIR(os.stat(name, dir_fd=folder, follow_symlinks=False).st_mode)
         finally:
-            os.close(folder)
+            let_go(folder)
     except OSError:
         return False
 
@@ -117,7 +117,7 @@ def digest_of(place: Place, entry: Entry) -> bytes:
             digest.update(data)
             offset += len(data)
     finally:
-        os.close(fd)
+        let_go(fd)
     return digest.digest()
 
 
@@ -152,7 +152,7 @@ def _patch_file(journal: Journal, entry: Entry, patches: list[Patch], place: Pla
             os.utime(fd, ns=(os.fstat(fd).st_atime_ns, goal.modified_ns))
         os.fsync(fd)
     finally:
-        os.close(fd)
+        let_go(fd)
 
 
 def _goal(entry: Entry, forward: bool) -> Condition:
@@ -188,7 +188,7 @@ def _make(journal: Journal, entry: Entry, patches: list[Patch], place: Place) ->
                 os.mkdir(name, dir_fd=folder)
         os.fsync(folder)
     finally:
-        os.close(folder)
+        let_go(folder)
 
 
 def _set_link(name: bytes, target: bytes, folder: int) -> None:
@@ -216,7 +216,7 @@ def _unmake(entry: Entry, place: Place) -> None:
                     os.rmdir(name, dir_fd=folder)
         os.fsync(folder)
     finally:
-        os.close(folder)
+        let_go(folder)
 
 
 def _restore_folders(contents: Contents, place: Place) -> None:
@@ -228,7 +228,7 @@ def _restore_folders(contents: Contents, place: Place) -> None:
             os.fchmod(fd, entry.after.mode & 0o777)
             os.utime(fd, ns=(entry.after.modified_ns,) * 2)
         finally:
-            os.close(fd)
+            let_go(fd)
 
 
 def _replace_sidecar(
