@@ -393,7 +393,7 @@ class NewFile:
             with suppress(OSError):  # Its whole folder may be gone.
                 if self._folder < 0:
                     self._folder = self._open_folder()
-                if self._is_ours():
+                if self._fd >= 0 or self._is_ours():  # Nobody takes away a file that is locked.
                     os.unlink(self._temporary, dir_fd=self._folder)
             self._identity = (-1, -1)
         self._close()

@@ -56,7 +56,7 @@ class Laboratory:
 class Damaged:
     """One block: what was protected (`cells`, `parity`), what is received of it, and whether digests are.
 
-    `digested` is False where the digests of all cells are lost. An undamaged cell is then not known to be right.
+    `digested` is False where the digests of all cells are lost; then even undamaged cells are not known.
     """
 
     number = 0
@@ -64,7 +64,6 @@ class Damaged:
     def __init__(self, geometry: Geometry, cells: Bytes, parity: Bytes) -> None:
         self.geometry, self.cells, self.parity = geometry, cells, parity
         self.received, self.received_parity = cells.copy(), parity.copy()
-        self.lost = np.zeros(cells.shape, bool)
         self.digested = True
 
     # -- damage --------------------------------------------------------------------------------------

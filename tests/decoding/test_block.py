@@ -272,8 +272,8 @@ def test_bursts_over_neighbouring_strips(digests: bool) -> None:
     block.withheld[:] = not digests
     rng = np.random.default_rng(2)
     block.strips[100:124] = rng.integers(0, 256, (24, 4096), np.uint8)
-    outcome = is_back(block)
-    assert outcome.margin == pytest.approx(1 - 24 / 32)
+    # A byte that noise left right by chance may be spoilt by the inner code, and then counts as wrong.
+    assert is_back(block).margin == 1 - 24 / 32
 
 
 @pytest.mark.parametrize(

@@ -21,7 +21,7 @@ from oakum.kernels import parity, tiers
 from oakum.kernels.parity import ParityEncoder
 
 FORCED = os.environ.get(tiers.ENVIRONMENT_VARIABLE)
-TIERS = [FORCED] if FORCED else tiers.available_tiers()
+TIERS = [FORCED] if FORCED else list(tiers.available_tiers())
 
 SHELF = OuterCode(255, 223)
 DVB = OuterCode(204, 188)

@@ -96,7 +96,8 @@ class Verify(Case):
         result = verify(self.folder / "set")
         assert result.outcome is not Outcome.INTACT
         flips = result.totals.bits_flipped
-        assert flips == self.flips if not result.totals.bytes_erased > 1 else flips <= self.flips
+        sure = result.outcome is Outcome.CORRECTABLE and result.totals.bytes_erased == 1
+        assert flips == self.flips if sure else flips <= self.flips
         return True
 
     @property
@@ -211,6 +212,9 @@ def test_every_call_fails(tmp_path: Path, long: bool, case: type[Case], how: str
                 succeeded = this.run()
             except (OakumError, OSError):  # The command line ends both with 30.
                 succeeded = False
+        if "unlink" in faults.failed:  # Then it cannot be helped; the next run takes it away.
+            for leftover in folder.rglob(".*.oakum-part"):
+                leftover.unlink()
         note = f"call {n} of {faults.count}: {faults.failed}"
         try:
             this.check(before, succeeded)

@@ -5,7 +5,7 @@ from typing import Annotated
 import typer
 
 from oakum import __version__
-from oakum.cli import describe, protect, repair, verify
+from oakum.cli import audit, describe, history, protect, repair, verify
 
 app = typer.Typer(
     name="oakum",
@@ -41,4 +41,6 @@ def oakum(
 app.command("protect")(protect.protect)
 app.command("verify")(verify.verify)
 app.command("repair")(repair.repair)
+app.command("audit")(audit.audit)
+app.command("history")(history.history)
 app.command("describe")(describe.describe)

@@ -63,7 +63,7 @@ def audit(
     medium_id: MediumId = None,
     counter: Annotated[
         list[str] | None,
-        typer.Option("--counter", metavar="NAME=VALUE", help="A counter of the drive to keep with the entry."),
+        typer.Option("--counter", metavar="NAME=VALUE", help="A counter of the drive, kept with the entry."),
     ] = None,
     sample: Annotated[
         float,
@@ -74,7 +74,7 @@ def audit(
     ] = 1.0,
     seed: Annotated[
         int | None,
-        typer.Option("--seed", metavar="N", min=0, help="Which share is read; the day's number if not given."),
+        typer.Option("--seed", metavar="N", min=0, help="Which share is read; the day decides if not given."),
     ] = None,
     resume: Annotated[
         bool,
@@ -93,7 +93,8 @@ def audit(
     from oakum.jobs.audit import AuditOptions
     from oakum.jobs.audit import audit as job
     from oakum.ledger import default_path
-    from oakum.report import audit_json, json as documents
+    from oakum.report import audit_json
+    from oakum.report import json as documents
     from oakum.report.text import audit as texts
 
     counters = tuple(parse_counter(text) for text in counter or ())

@@ -24,7 +24,9 @@ def history(
     medium_id: MediumId = None,
     threshold: Annotated[
         float,
-        typer.Option("--threshold", metavar="CHANCE", min=1e-12, max=0.5, help="The chance of loss to stay below."),
+        typer.Option(
+            "--threshold", metavar="CHANCE", min=1e-12, max=0.5, help="The chance of loss to stay below."
+        ),
     ] = 0.001,
     export: Annotated[
         Export | None,
@@ -47,7 +49,8 @@ def history(
         emit(export_entries(path, medium_id, str(export)))
         return
     from oakum.jobs.history import history as job
-    from oakum.report import audit_json, json as documents
+    from oakum.report import audit_json
+    from oakum.report import json as documents
     from oakum.report.text import audit as texts
 
     save = None

@@ -196,6 +196,8 @@ class _Block:
                 status[dense_words(status)] = DENSE
             if self.unusable is not None:
                 status[self.unusable[rows]] = UNUSABLE
+            if self.erased.any():  # What stands for an unreadable byte was never received.
+                status[self._words_holding(self.erased[rows] & ~self.pinned[rows], rows)] = UNUSABLE
             self.status[rows] = status
             back = (status == DENSE) | (status == UNUSABLE)
             if back.any():
@@ -205,6 +207,17 @@ class _Block:
         self._ask_digests(rows, cells)
         open_rows = ~self.finished[rows]
         self.value[rows[open_rows]] = cells[open_rows]
+
+    def _words_holding(self, chosen: Mask, rows: Strips) -> Mask:
+        """Which words, bool[R, words], hold a byte of `chosen`, bool[R, width]; the inverse of `_spread`."""
+        m, words = self.g.m, self.status.shape[1]
+        held = np.zeros((len(rows), words), bool)
+        for stagger in np.unique(self.staggers[rows]):
+            here = self.staggers[rows] == stagger
+            turned = np.zeros((int(here.sum()), words * m), bool)
+            turned[:, : self.width] = np.roll(chosen[here], -int(stagger), axis=1)
+            held[here] = turned.reshape(-1, words, m).any(axis=2)
+        return held
 
     def _spread(self, of_words: Bytes, rows: Strips | slice = slice(None)) -> Bytes:
         """A value for each word as one for each byte."""
@@ -424,7 +437,7 @@ class _Block:
         if not len(unsure):
             return
         altered = posed.distances.altered(np.take(magnitudes, unsure, axis=1)[self.strips] != 0, unsure)
-        near = posed.distances.of_solutions(altered, unsure) <= self.g.r
+        near = posed.distances.of_solutions(altered, unsure) < self.g.r + 1
         strict = self.strict[posed.places[unsure]]
         usable = near | (chance[unsure] < USABLE) & ~strict
         self.provisional[posed.places[unsure[usable & ~strict]]] = True
@@ -590,20 +603,16 @@ class _Seen:
 
 
 def burst_bytes(flips: Bytes) -> Mask:
-    """Which wrong bytes of each row of `flips` lie in a burst (seen within the cell alone)."""
-    inside = np.zeros(flips.shape, bool)
+    """Which bytes of each row of `flips` lie inside a burst, right ones too (seen within the cell alone)."""
+    height, width = flips.shape
     rows, places = np.nonzero(flips)
-    if not len(places):
-        return inside
     # One long line, with a gap between the rows that no cluster can bridge.
-    line = rows.astype(np.int64) * (2 * flips.shape[1] + 64) + places
+    stride = width + 64
+    line = rows.astype(np.int64) * stride + places
     found = cluster(line, np.zeros_like(line))
     bursts = found[found.burst]
-    which = np.searchsorted(bursts.start, line, side="right") - 1
-    member = (
-        (which >= 0) & (line < bursts.stop[np.maximum(which, 0)])
-        if len(bursts)
-        else np.zeros(len(line), bool)
-    )
-    inside[rows[member], places[member]] = True
-    return inside
+    edges = np.zeros(height * stride + 1, np.int8)
+    edges[bursts.start] += 1
+    edges[bursts.stop] -= 1
+    inside = np.cumsum(edges[:-1], dtype=np.int8).reshape(height, stride)
+    return np.asarray(inside[:, :width] > 0)

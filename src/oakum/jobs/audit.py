@@ -12,12 +12,13 @@ from pathlib import Path
 import numpy as np
 from numpy.typing import NDArray
 
-from oakum.audits import AuditResult, Distribution, Rate, Statistics, TargetAudit
+from oakum.audits import AuditResult, Distribution, Rate, Statistics, TargetAudit, Trend
 from oakum.causes import find_causes
 from oakum.conversions import undone
 from oakum.errors import CannotCheck, UsageError
 from oakum.jobs.checking import CHUNK, GROUP, Finding, KnownMember, Range, WindowCheck, open_set
 from oakum.jobs.common import DEFAULT_MEMORY, find_sidecar
+from oakum.jobs.history import history
 from oakum.jobs.tally import Tally
 from oakum.jobs.unreadable import read_unreadable
 from oakum.jobs.verify import SetCheck, result_of
@@ -82,8 +83,18 @@ def audit(
     return AuditResult(
         begun, options.medium, tuple(results), time.monotonic() - begin, options.share,
         seed if options.share < 1 else None, options.counters, options.ledger if not book.note else None,
-        book.note,
+        book.note, _trend(options, book.note),
     )  # fmt: skip
+
+
+def _trend(options: AuditOptions, note: str) -> Trend | None:
+    """The trend of a labelled medium, this audit included; None where the ledger has nothing to say."""
+    if options.ledger is None or note or not options.medium:
+        return None
+    try:
+        return history(options.ledger, options.medium)[0]
+    except CannotCheck:
+        return None
 
 
 def _check_options(targets: Sequence[Path], options: AuditOptions) -> None:
@@ -120,7 +131,7 @@ def audit_target(target: Path, options: AuditOptions, seed: int, progress: Progr
                 check.close()
         result = result_of("audit", target, check, tally, time.monotonic() - begin)
         if options.share < 1:
-            note = f"only {check.coverage:.2%} of the stream was read (seed {seed}); SHA-256 was not compared"
+            note = f"{check.coverage:.2%} of the stream was read (seed {seed}); SHA-256 was not compared"
             result = replace(result, notes=(*result.notes, note))
         return TargetAudit(
             target, result.outcome, opened.sections[0].bootstrap.set_identity.hex(), result,

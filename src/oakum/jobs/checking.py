@@ -21,7 +21,7 @@ import xxhash
 from numpy.typing import NDArray
 
 from oakum.digests import cell_digests
-from oakum.errors import CannotCheck
+from oakum.errors import CannotCheck, FormatError
 from oakum.files import FileBytes
 from oakum.geometry import CELL, Geometry
 from oakum.jobs.common import absolute
@@ -168,8 +168,7 @@ def open_set(
 def assemble(kind: type[Set], path: Path, source: OpenBytes, root: Path | None) -> Set:
     """Read the records of a sidecar; `source` is closed if that fails."""
     try:
-        sections = find_sections(source)
-        tables = [section.table() for section in sections]
+        sections, tables = _readable(find_sections(source))
         folder = Folder(path.parent if root is None else root)
     except BaseException:
         source.close()
@@ -182,6 +181,24 @@ def look_at_members(opened: ProtectedSet) -> None:
     _look_at_sections(opened)
     for member in opened.members.values():
         _look_at(opened.folder, member)
+
+
+def _readable(sections: list[Section]) -> tuple[list[Section], list[tuple[Piece, ...]]]:
+    """The sections whose member tables can be read; a section without its table says nothing.
+
+    Raises FormatError when there is none.
+    """
+    kept, tables = [], []
+    lost: FormatError | None = None
+    for section in sections:
+        try:
+            tables.append(section.table())
+            kept.append(section)
+        except FormatError as error:
+            lost = error
+    if lost is not None and not kept:
+        raise lost
+    return kept, tables
 
 
 def _put_together(

@@ -59,7 +59,9 @@ class Wishes:
         if self.spare_sidecar:
             said.append(_given("the sidecar is kept where nothing of this happens to it"))
         else:
-            said.append(Assumption("the sidecar ages like the data", "--spare-sidecar says otherwise", "assumed"))
+            said.append(
+                Assumption("the sidecar ages like the data", "--spare-sidecar says otherwise", "assumed")
+            )
         figures = preset.figures if preset is not None else ()
         return channel, (*(Assumption(f.text, f.source, f.mark) for f in figures), *said)
 

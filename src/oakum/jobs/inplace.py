@@ -23,7 +23,7 @@ from oakum.geometry import CELL
 from oakum.jobs.checking import RIGHT, Bytes, Finding, KnownMember, ProtectedSet, Range, WindowCheck
 from oakum.jobs.journal import PATCH, Condition, Draft, Entry, Journal, Patch, Thing
 from oakum.jobs.rebuild import write_sidecar
-from oakum.jobs.replay import Place, finish, refuse_unfit
+from oakum.jobs.replay import Place, finish, refuse_unfit, without
 from oakum.jobs.tally import Tally
 from oakum.jobs.verify import SetCheck
 from oakum.members import MemberStream, Span
@@ -72,14 +72,6 @@ class Overlay:
     def close(self) -> None:
         """Close the members."""
         self._stream.close()
-
-
-def without(faults: Sequence[Fault], start: int, stop: int) -> list[Fault]:
-    """Ranges with the bytes start..stop-1 taken out of them."""
-    left = []
-    for a, b in faults:
-        left += [(x, y) for x, y in ((a, min(b, start)), (max(a, stop), b)) if x < y]
-    return left
 
 
 class InPlace:

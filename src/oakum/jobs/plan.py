@@ -106,7 +106,9 @@ def _codes(overhead: float | None) -> list[ConcatenatedCode]:
     if overhead is None:
         return codes
     if not overhead > 0:
-        raise UsageError(f"an overhead of {overhead:g} leaves no room for parity; give one above 0, such as 25%")
+        raise UsageError(
+            f"an overhead of {overhead:g} leaves no room for parity; give one above 0, such as 25%"
+        )
     within = [code for code in codes if code.overhead <= overhead]
     if not within:
         raise UsageError(

@@ -188,9 +188,10 @@ class Mending:
         copy = Copy(member, path, self._base / os.fsdecode(path))
         if member.piece.kind is Kind.FILE:
             copy.file = NewFile(copy.shown, open_folder=lambda: self._parent_of(path), advice=ADVICE)
+        self._copies[member.piece.path] = copy
+        if copy.file is not None:
             copy.file.resize(member.size)
             self._wake(copy)
-        self._copies[member.piece.path] = copy
 
     def _parent_of(self, path: bytes) -> int:
         return open_folder(self._base_fd, os.path.dirname(path), made=self._made)

@@ -9,11 +9,12 @@ from __future__ import annotations
 import hashlib
 import os
 import stat
+from collections.abc import Sequence
 from contextlib import suppress
 from pathlib import Path
 
 from oakum.errors import CannotCheck, UsageError
-from oakum.files import FileBytes, NewFile, let_go, reason, temporary_name, write_all
+from oakum.files import Fault, FileBytes, NewFile, let_go, reason, temporary_name, write_all
 from oakum.jobs.journal import Condition, Contents, Entry, Journal, Patch, Thing, journal_path
 from oakum.members import open_folder
 from oakum.sidecar.reading import find_sections
@@ -239,9 +240,17 @@ def _replace_sidecar(
         return
     goal = _goal(entry, forward)
     with FileBytes(place.sidecar) as source, NewFile(place.sidecar, overwrite=True) as file:
+        missing: list[Fault] = []
         for offset in range(0, min(goal.size, source.size), STEP):
-            data, _ = source.read(offset, min(STEP, min(goal.size, source.size) - offset))
+            data, faults = source.read(offset, min(STEP, min(goal.size, source.size) - offset))
             file.write(offset, data.data)
+            missing += [(offset + a, offset + b) for a, b in faults]
+        for patch in patches:
+            if forward or not patch.blind:
+                size = patch.new if forward else patch.old
+                missing = without(missing, patch.offset, patch.offset + size)
+        if missing:
+            raise CannotCheck(f"{place.sidecar} cannot be read in full")
         _put(journal, patches, file.fd, forward)
         file.resize(goal.size)
         found = os.stat(place.sidecar)
@@ -267,6 +276,14 @@ def finish(journal: Journal, place: Place) -> None:
     except (OSError, CannotCheck) as error:
         why = reason(error) if isinstance(error, OSError) else str(error)
         raise CannotCheck(f"the repair in place failed: {why}; {_put_back(journal, place)}") from None
+
+
+def without(faults: Sequence[Fault], start: int, stop: int) -> list[Fault]:
+    """Ranges with the bytes start..stop-1 taken out of them."""
+    left = []
+    for a, b in faults:
+        left += [(x, y) for x, y in ((a, min(b, start)), (max(a, stop), b)) if x < y]
+    return left
 
 
 def _put_back(journal: Journal, place: Place) -> str:

@@ -39,7 +39,7 @@ def check_document(result: CheckResult) -> Document:
         "schema": SCHEMA,
         "command": result.command,
         "outcome": str(result.outcome),
-        "target": _shown(str(result.target)),
+        "target": shown(str(result.target)),
         "code": _code(result.code),
         "totals": _totals(result.totals),
         "blocks": [_block(block) for block in result.blocks],
@@ -56,13 +56,13 @@ def unchecked_document(command: str, target: str, reason: str) -> Document:
         "schema": SCHEMA,
         "command": command,
         "outcome": str(Outcome.UNCHECKED),
-        "target": _shown(target),
+        "target": shown(target),
         "code": None,
         "totals": None,
         "blocks": [],
         "members": [],
         "sidecar": None,
-        "error": _shown(reason),
+        "error": shown(reason),
     }
 
 
@@ -153,8 +153,8 @@ def _member(member: MemberReport) -> Document:
         "bits_flipped": member.bits_flipped,
         "edited": member.edited,
         "lost": [{"offset": offset, "length": length} for offset, length in member.lost],
-        "mended": None if member.mended is None else _shown(str(member.mended)),
-        "detail": _shown(member.detail),
+        "mended": None if member.mended is None else shown(str(member.mended)),
+        "detail": shown(member.detail),
     }
 
 
@@ -164,8 +164,8 @@ def _sidecar(sidecar: SidecarReport) -> Document:
         "state": str(sidecar.state),
         "bits_flipped": sidecar.bits_flipped,
         "symbols_wrong": sidecar.symbols_wrong,
-        "mended": None if sidecar.mended is None else _shown(str(sidecar.mended)),
-        "detail": _shown(sidecar.detail),
+        "mended": None if sidecar.mended is None else shown(str(sidecar.mended)),
+        "detail": shown(sidecar.detail),
     }
 
 
@@ -177,18 +177,18 @@ def _member_description(member: MemberDescription) -> Document:
         "sha256": None if member.sha256 is None else member.sha256.hex(),
         "modified_ns": member.modified_ns,
         "mode": f"{member.mode:04o}",
-        "link_target": None if member.link_target is None else _shown(member.link_target),
+        "link_target": None if member.link_target is None else shown(member.link_target),
     }
 
 
 def _named(name: str) -> Document:
-    shown = _shown(name)
-    if shown == name:
+    text = shown(name)
+    if text == name:
         return {"path": name}
-    return {"path": shown, "path_base64": base64.b64encode(name.encode("utf-8", "surrogateescape")).decode()}
+    return {"path": text, "path_base64": base64.b64encode(name.encode("utf-8", "surrogateescape")).decode()}
 
 
-def _shown(text: str) -> str:
+def shown(text: str) -> str:
     """`text` without lone surrogates (RFC 8259, section 8.2, warns of them); undecodable bytes as `\\xff`."""
     raw = text.encode("utf-8", "surrogateescape")
     return raw.decode("utf-8", "backslashreplace")

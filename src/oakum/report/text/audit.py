@@ -84,7 +84,12 @@ def _rates(s: Statistics) -> Section:
     ]
     if s.burst_lengths:
         middle = s.burst_lengths[len(s.burst_lengths) // 2]
-        rows.append(("burst lengths in bytes", f"{s.burst_lengths[0]:,} to {s.burst_lengths[-1]:,}, median {middle:,}"))
+        rows.append(
+            (
+                "burst lengths in bytes",
+                f"{s.burst_lengths[0]:,} to {s.burst_lengths[-1]:,}, median {middle:,}",
+            )
+        )
     rows += [
         ("lowest margin", margin),
         ("read errors", f"{s.read_errors:,}"),
