@@ -245,6 +245,10 @@ def _unsteady(rest: _Rest) -> Iterator[CauseFinding]:
         yield _finding(Cause.UNSTEADY, 20.0, evidence, 4096 * count)
 
 
+def _runs(count: int, kind: str = "") -> str:
+    return f"{count:,} {kind}run{'' if count == 1 else 's'}"
+
+
 def _aligned(rest: _Rest) -> Iterator[CauseFinding]:
     runs = rest.pattern.runs
     tested = rest.runs & (runs.unknown == 0)  # What is unknown is counted by cells, which are aligned anyway.
@@ -263,7 +267,7 @@ def _aligned(rest: _Rest) -> Iterator[CauseFinding]:
     if best < 3:
         return
     evidence = (
-        f"{int(chosen.sum()):,} of {int(tested.sum()):,} runs begin and end at multiples of {unit:,} bytes, "
+        f"{int(chosen.sum()):,} of {_runs(int(tested.sum()))} with both ends at multiples of {unit:,} bytes, "
         f"the first at byte {int(runs.start[chosen][0]) // unit * unit:,}"
     )
     names = tuple(rest.pattern.members[i].path for i in np.unique(runs.owner[chosen]).tolist())
@@ -286,7 +290,9 @@ def _overwritten(rest: _Rest) -> Iterator[CauseFinding]:
     if not chosen.any():
         return
     longest = int(length[chosen].max())
-    evidence = f"{int(chosen.sum()):,} dense runs, the longest of {longest:,} bytes, at no common boundary"
+    evidence = (
+        f"{_runs(int(chosen.sum()), 'dense ')}, the longest of {longest:,} bytes, at no common boundary"
+    )
     names = tuple(rest.pattern.members[i].path for i in np.unique(runs.owner[chosen]).tolist())
     yield _finding(Cause.RUNS, float(weight[chosen].max()), evidence, rest.take(chosen), names)
 

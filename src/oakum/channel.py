@@ -90,7 +90,7 @@ class Channel:
     def __post_init__(self) -> None:
         if not 0 <= self.flip_rate <= 0.5:
             raise UsageError(
-                f"a flip rate of {self.flip_rate:g} cannot be; give the chance of a bit to flip, from 0 to 0.5"
+                f"a flip rate of {self.flip_rate:g} cannot be; give a chance from 0 to 0.5 for each bit"
             )
         if not (isfinite(self.years) and self.years > 0):
             raise UsageError(f"{self.years:g} years is no period; give a number above 0")
@@ -201,9 +201,7 @@ def draw(channel: Channel, data_bytes: int, sidecar_bytes: int, seed: Sequence[i
         start = int(random.integers(0, data_bytes - lost.lengths[0][0] + 1))
         missing.append((start, start + lost.lengths[0][0]))
     rate = channel.final_flip_rate
-    data = Damage(
-        (*seed, _DATA), rate, _within(garbled, 0, data_bytes), _within(missing, 0, data_bytes)
-    )
+    data = Damage((*seed, _DATA), rate, _within(garbled, 0, data_bytes), _within(missing, 0, data_bytes))
     if channel.spare_sidecar:
         return data, Damage((*seed, _SIDECAR))
     return data, Damage(
@@ -281,7 +279,11 @@ MEDIA = {
             # 33,024 of 37,856 bytes of a product code word are lost together: sixteen sectors of 2,048.
             (Runs(((16 * 2048, 1.0),), 1.0, readable=False, cluster=4, within=64 * 16 * 2048),),
             (
-                Figure("a product code word of a DVD holds 33,024 bytes, which fall together", "ECMA-267", PUBLISHED),
+                Figure(
+                    "a product code word of a DVD holds 33,024 bytes, which fall together",
+                    "ECMA-267",
+                    PUBLISHED,
+                ),
                 Figure(
                     "act now at a DVD PI SUM8 of 280, a BD symbol error rate of 1e-3: rates on the disc, "
                     "before the drive's correction",
@@ -289,7 +291,7 @@ MEDIA = {
                     SECOND_HAND,
                 ),
                 Figure(
-                    f"past that limit 1 group of 16 sectors per TB and year is lost, {_HOST}, in clusters of 4",
+                    f"past it 1 group of 16 sectors per TB and year is lost, {_HOST}, in clusters of 4",
                     "no figure for this is known to us",
                     ASSUMED,
                 ),
@@ -335,10 +337,12 @@ MEDIA = {
             "flash without power, within its retention time",
             (Runs(((_SECTOR, 1.0),), 8 * TB * 1e-15, readable=False),),
             (
-                Figure(f"1 sector in 1e15 bits read (client; enterprise 1e16), {_HOST}", "JESD218", SECOND_HAND),
                 Figure(
-                    "held only for the retention at rated wear: 1 year unpowered at 30 C (client), 3 months at "
-                    "40 C (enterprise); later we know of no figure",
+                    f"1 sector in 1e15 bits read (client), {_HOST}; enterprise 1e16", "JESD218", SECOND_HAND
+                ),
+                Figure(
+                    "held only for the retention at rated wear: 1 year unpowered at 30 C (client), 3 months "
+                    "at 40 C (enterprise); later we know of no figure",
                     "JESD218",
                     SECOND_HAND,
                 ),

@@ -22,7 +22,7 @@ from oakum.algebra.concatenated import ConcatenatedCode
 from oakum.digests import cell_digests
 from oakum.errors import UsageError
 from oakum.geometry import CELL, Geometry, Run, round_up
-from oakum.kernels.stripmap import StripMap
+from oakum.kernels.parity import ParityEncoder
 from oakum.kernels.words import WordCodec
 from oakum.members import MemberHasher, Stream
 from oakum.pools import Pools, wait_all
@@ -40,7 +40,7 @@ RUN = 512 << 10
 PIECE = 1 << 20
 """Columns taken at a time in the second of two reads; also the length of each single read."""
 
-BATCH = 64
+BATCH = 128
 """Strips multiplied at a time, where memory allows; the parity is loaded and stored once a batch."""
 
 LEAST_BATCH = 16
@@ -54,17 +54,18 @@ _PAD = 64  # Keeps rows of a power-of-two length from falling on the same cache 
 
 @dataclass(frozen=True)
 class Kernels:
-    """The compiled loops for one code: strip map of the parity and word codec."""
+    """The compiled loops for one code: parity of the columns, and of the words."""
 
-    parity: StripMap
+    parity: ParityEncoder
     words: WordCodec
 
     @staticmethod
     def of(code: ConcatenatedCode) -> Kernels:
         """Prepare the kernels of a code."""
-        return Kernels(
-            StripMap(code.outer.parity_matrix, field_poly=code.outer.field_poly), WordCodec(code.inner)
-        )
+        kernels = Kernels(ParityEncoder(code.outer), WordCodec(code.inner))
+        kernels.parity.prepare()
+        kernels.words.prepare(correcting=False)
+        return kernels
 
 
 @dataclass(frozen=True)
@@ -175,7 +176,7 @@ class WindowEncoder:
         for survey in surveys:
             wait_all(survey.filled)
         parity = _rows(g.r, g.depth)
-        products = self._multiply(strips, 0, parity)
+        products = self._multiply(strips, 0, parity, last=True)
         for survey in surveys:
             self._store(survey)
         wait_all(products)
@@ -194,7 +195,8 @@ class WindowEncoder:
             strips = buffers[slot][: min(plan.strips, self._used_strips - first)]
             surveys[slot] = survey = self._survey(first * g.depth, strips.reshape(-1))
             wait_all([*survey.filled, *products])  # The parity of one batch is stored before the next one.
-            products = self._multiply(strips, first, parity)
+            last = first + len(strips) == self._used_strips
+            products = self._multiply(strips, first, parity, last=last)
         wait_all(products)
         for i in (1, 0):  # The older one first: digests are stored in order.
             self._store(surveys[slot - i])
@@ -232,7 +234,7 @@ class WindowEncoder:
                 future.result()
                 self._advance(max(0, min(width, g.length - i * g.depth - first)))
                 self._stream.fetch(i * g.depth + first + width, width)
-            wait_all(self._multiply(strips, 0, parity[:, :width]))
+            wait_all(self._multiply(strips, 0, parity[:, :width], last=True))
             self._finish_columns(first, parity[:, :width])
 
     def _reread(self, strip: int, first: int, row: Bytes) -> None:
@@ -285,13 +287,18 @@ class WindowEncoder:
         self._add_digests(Track.DATA, survey.digests)
         self._write_inner(self._g.parity_bytes + survey.inner_start, survey.inner, self._inner_cells)
 
-    def _multiply(self, strips: Bytes, first: int, parity: Bytes) -> list[Future[None]]:
+    def _multiply(self, strips: Bytes, first: int, parity: Bytes, *, last: bool) -> list[Future[None]]:
         """Add the product of strips first, first + 1 ... to the parity (set it for the first ones)."""
         width = strips.shape[1]
         step = max(CELL, round_up(-(-width // (4 * self._pools.jobs)), CELL))
 
         def work(a: int, b: int) -> None:
-            self._kernels.parity.apply(strips[:, a:b], parity[:, a:b], first=first, accumulate=first > 0)
+            if last and not first:
+                self._kernels.parity.apply(strips[:, a:b], parity[:, a:b])
+                return
+            self._kernels.parity.add(strips[:, a:b], parity[:, a:b], first=first, accumulate=first > 0)
+            if last:
+                self._kernels.parity.finish(parity[:, a:b])
 
         return [self._pools.work.submit(work, a, min(a + step, width)) for a in range(0, width, step)]
 

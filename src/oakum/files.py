@@ -216,6 +216,9 @@ class NewFile:
         self._name = os.fsencode(path.name)
         self._temporary = temporary_name(self._name)
         self._folder = self._fd = -1
+        self._begun = False
+        """Whether there may be a temporary file of ours."""
+
         self._identity = (-1, -1)
         """Device and number of the temporary file, once it is ours."""
 
@@ -237,16 +240,13 @@ class NewFile:
     def _create(self) -> None:
         """Make the temporary file; one that a dead run left behind goes first."""
         flags = os.O_RDWR | os.O_CREAT | os.O_EXCL | os.O_CLOEXEC | os.O_NOFOLLOW
+        self._begun = True
         try:
             self._fd = os.open(self._temporary, flags, 0o666, dir_fd=self._folder)
         except FileExistsError:
             self._take_away_leftover()
             self._fd = os.open(self._temporary, flags, 0o666, dir_fd=self._folder)
-        try:
-            self._identity = _identity(self._fd)
-        except OSError:
-            os.unlink(self._temporary, dir_fd=self._folder)
-            raise
+        self._identity = _identity(self._fd)
         self._lock()
 
     def _take_away_leftover(self) -> None:
@@ -357,6 +357,7 @@ class NewFile:
             self._fd = os.dup(fd)
             os.close(fd)
             self._place()
+            self._begun = False
             os.fsync(self._folder)
         except OSError as error:
             raise self._failed(reason(error)) from None
@@ -377,10 +378,8 @@ class NewFile:
                     raise self._taken() from None
             else:
                 os.unlink(self._temporary, dir_fd=here)
-                self._identity = (-1, -1)
                 return
         os.rename(self._temporary, self._name, src_dir_fd=here, dst_dir_fd=here)
-        self._identity = (-1, -1)
 
     def _is_ours(self) -> bool:
         """Whether the temporary name still stands for the file that was made here."""
@@ -389,14 +388,20 @@ class NewFile:
 
     def discard(self) -> None:
         """Take away what was written so far; nothing happens after `commit`."""
-        if self._identity != (-1, -1):
-            with suppress(OSError):  # Its whole folder may be gone.
+        if self._begun:
+            self._begun = False
+            with suppress(OSError, CannotCheck):  # Its whole folder may be gone.
                 if self._folder < 0:
                     self._folder = self._open_folder()
-                if self._fd >= 0 or self._is_ours():  # Nobody takes away a file that is locked.
+                if self._identity == (-1, -1):  # A signal came while it was made.
+                    self._take_away_leftover()
+                elif self._fd >= 0 or self._is_ours():  # Nobody takes away a file that is locked.
                     os.unlink(self._temporary, dir_fd=self._folder)
-            self._identity = (-1, -1)
         self._close()
+
+    def __del__(self) -> None:
+        """For a signal that comes before whoever asked for the file has got hold of it."""
+        self.discard()
 
     def __enter__(self) -> NewFile:
         return self

@@ -1,4 +1,4 @@
-"""How likely a code is to lose something to a channel: the exact figures of one pass, bounds, and measurements.
+"""How likely a code is to lose something to a channel: one pass exactly, bounds, and measurements.
 
 The chance of one column is exact for the model: what the inner decoder makes of its symbols
 (`oakum.algebra.outcomes`), how many of them runs of damage have taken (a compound Poisson distribution), and
@@ -7,10 +7,10 @@ which make the figures a little too high for plan's purpose: the last word of a 
 that a run has taken can no longer be wrong in another way.
 
 Columns are not independent. Columns a word's length (m bytes) or more apart share no word, so that under
-flips alone every m-th column is; the others tend to be lost together with them. So a block of w columns is lost with a
-chance of at least 1 - (1 - P)^floor(w/m) and at most w P. Runs strike whole neighbourhoods: the stream is
-lost to them when somewhere the number of runs over one column passes r, which can only begin at the start of
-a run; the bound is the expected number of such starts (the up-crossings of a shot noise).
+flips alone every m-th column is; the others tend to be lost together with them. So a block of w columns is
+lost with a chance of at least 1 - (1 - P)^floor(w/m) and at most w P. Runs strike whole neighbourhoods: the
+stream is lost to them when somewhere the number of runs over one column passes r, which can only begin at the
+start of a run; the bound is the expected number of such starts (the up-crossings of a shot noise).
 """
 
 from __future__ import annotations
@@ -31,12 +31,13 @@ from oakum.probability import (
     ColumnChances,
     convolve,
     log_any,
+    log_binomial,
     log_compound_poisson,
     log_power,
 )
 from oakum.results import Loss
 
-_NEGLIGIBLE = 40.0
+_NEGLIGIBLE = 20.0
 """Numbers of hits whose chance is so many e-folds below the total that matters are not worked out."""
 
 
@@ -130,7 +131,9 @@ class _Forecast:
         )
         stream = (
             max(log_any(flips_alone, s.columns // self._apart), swamped, block[0]),
-            _capped(in_block + np.log(s.blocks), swamped + np.log(s.windows), self._crossings + np.log(s.windows)),
+            _capped(
+                in_block + np.log(s.blocks), swamped + np.log(s.windows), self._crossings + np.log(s.windows)
+            ),
         )
         return Loss(column, _ordered(column, block), _ordered(column, stream), self._measured())
 
@@ -176,6 +179,8 @@ class _Forecast:
         for length, share in runs.shares:
             more, rest = divmod(length, self.shape.depth)
             reach = share * min(1.0, (window + (length if self.shape.windows > 1 else 0)) / self._total)
+            if not rest:  # Whole strips: the last of them is the one that is added.
+                more, rest = more - 1, self.shape.depth
             for strips, part in ((more, 1 - rest / self.shape.depth), (more + 1, rest / self.shape.depth)):
                 single[strips] = single.get(strips, 0.0) + reach * part
             crossing[more] = crossing.get(more, 0.0) + reach
@@ -190,19 +195,33 @@ class _Forecast:
     def _hits_without(self, one: _Family | None) -> Floats:
         """The same, but for one run of the family `one`: what its other runs and the rest do."""
         size = self.shape.code.outer.r + 2
-        rates: dict[int, float] = {}
-        fixed = []
-        for family in self._families:
-            if family.fixed:
-                fixed.append(log_power(family.distribution(size), round(family.number) - (family is one)))
-                continue
-            for strips, part in family.single.items():
-                kept = min(strips, size)
-                rates[kept] = rates.get(kept, 0.0) + family.number * part
-        hits = log_compound_poisson(rates, size)
+        fixed = [
+            log_power(family.distribution(size), round(family.number) - (family is one))
+            for family in self._families
+            if family.fixed
+        ]
+        hits = self._poisson_hits(size)
         for distribution in fixed:
             hits = convolve(hits, distribution)
         return hits
+
+    def _poisson_hits(self, size: int) -> Floats:
+        """What the runs take whose number is not fixed.
+
+        Runs no longer than a strip take the symbols of a column independently, each with the chance
+        1 - exp(-rate). Of longer ones every run is counted, also where two overlap: a little too much.
+        """
+        families = [family for family in self._families if not family.fixed]
+        rates: dict[int, float] = {}
+        for family in families:
+            for strips, part in family.single.items():
+                kept = min(strips, size)
+                rates[kept] = rates.get(kept, 0.0) + family.number * part
+        if not any(more for family in families for more in family.crossing if more > 0):
+            rate = rates.get(1, 0.0) / self._exposed
+            taken = log_binomial(self._exposed, float(np.log(-np.expm1(-rate))) if rate else IMPOSSIBLE)
+            return np.append(taken[: size - 1], log_sum(taken[size - 1 :]))
+        return log_compound_poisson(rates, size)
 
     @cached_property
     def _crossings(self) -> float:
@@ -249,5 +268,5 @@ def _capped(*terms: float) -> float:
 
 def _ordered(column: float, bounds: tuple[float, float]) -> tuple[float, float]:
     """Bounds that hold the chance of one column, the lower below the upper."""
-    low = max(bounds[0], column)
+    low = min(0.0, max(bounds[0], column))
     return low, max(low, bounds[1])

@@ -98,6 +98,7 @@ class Ledger:
                 path.parent.mkdir(parents=True, exist_ok=True)
         elif not path.is_file():
             raise LedgerError(f"there is no ledger {path}; oakum audit writes one, or name it with --ledger")
+        _refuse_other_files(path)
         uri = f"file:{quote(str(path.absolute()))}?mode={'rwc' if write else 'ro'}"
         with _explained(path):
             self._db = sqlite3.connect(uri, uri=True, timeout=PATIENCE_SECONDS, isolation_level=None)
@@ -110,8 +111,11 @@ class Ledger:
 
     def _prepare(self, write: bool) -> None:
         with _explained(self.path):
+            self._db.execute("BEGIN")  # So that what is read belongs together.
             ours, schema = self._pragma("application_id"), self._pragma("user_version")
-            if ours != APPLICATION_ID and (schema or self._has_tables() or not write):
+            tables = self._has_tables()
+            self._db.execute("COMMIT")
+            if ours != APPLICATION_ID and (schema or tables or not write):
                 raise LedgerError(f"{self.path} is not a ledger of oakum; name another file with --ledger")
             if schema > VERSION:
                 raise LedgerError(
@@ -231,6 +235,17 @@ class Ledger:
 
     def __exit__(self, *_: object) -> None:
         self.close()
+
+
+def _refuse_other_files(path: Path) -> None:
+    """SQLite would take a very short file for an empty database, and write over it."""
+    with _explained(path):
+        if not path.exists():
+            return
+        with path.open("rb") as file:
+            head = file.read(16)
+    if head and head != b"SQLite format 3\0":
+        raise LedgerError(f"{path} is not a ledger of oakum; name another file with --ledger")
 
 
 @contextmanager

@@ -1,9 +1,9 @@
 """The decoder's measured curves: how many blocks were lost at which flip rate, with feedback and all trials.
 
-Nothing is extrapolated. Between two measured rates the chance is interpolated on a straight line in the probit
-scale, on which the curves of iterative decoders near their threshold are nearly straight (finite-length
-scaling: Amraoui, Montanari, Richardson and Urbanke, IEEE Trans. Inform. Theory 55, 2009). Below them, all
-that a measurement says is that the loss is not above the exact upper limit at the next rate measured.
+Nothing is extrapolated. Between two measured rates the chance is interpolated on a straight line in the
+probit scale, on which the curves of iterative decoders near their threshold are nearly straight (scaling at
+finite length: Amraoui, Montanari, Richardson and Urbanke, IEEE Trans. Inform. Theory 55, 2009). Below them,
+all that a measurement says is that the loss is not above the exact upper limit at the next rate measured.
 """
 
 from __future__ import annotations
@@ -60,7 +60,9 @@ class MeasuredCurve:
             pools.append([rate, 1, lost, blocks])
             while len(pools) > 1 and pools[-2][2] * pools[-1][3] >= pools[-1][2] * pools[-2][3]:
                 rate_sum, count, lost_sum, blocks_sum = pools.pop()
-                pools[-1] = [a + b for a, b in zip(pools[-1], (rate_sum, count, lost_sum, blocks_sum), strict=True)]
+                pools[-1] = [
+                    a + b for a, b in zip(pools[-1], (rate_sum, count, lost_sum, blocks_sum), strict=True)
+                ]
         return [(rates / count, (lost + 0.5) / (blocks + 1)) for rates, count, lost, blocks in pools]
 
 

@@ -16,7 +16,16 @@ from numpy.typing import NDArray
 
 from oakum.algebra.outcomes import Floats, SymbolChances, log_sum
 
+Patterns = tuple[NDArray[np.int_], NDArray[np.int_], Floats]
+"""Two numbers that go together, and a logarithm for each pair."""
+
 IMPOSSIBLE = -np.inf
+
+PRUNED = 96
+"""Check symbols up to which patterns that cannot matter are left out of the sums."""
+
+NEGLIGIBLE = 45.0
+"""A term so many e-folds below a sum is below the precision of a float, however many there are of them."""
 
 
 def log_factorials(n: int) -> Floats:
@@ -88,14 +97,24 @@ class ColumnChances:
             return 0.0
         if self.symbol.flagged == IMPOSSIBLE:
             return log_binomial_tail(self.n, self.symbol.wrong_as_received, checks // 2 + 1)
-        errors, flagged, weights = self._patterns
+        return self._sum(checks, self._patterns if checks > PRUNED else self._likely)
+
+    def _sum(self, checks: int, patterns: Patterns) -> float:
+        errors, flagged, weights = patterns
         far = 2 * errors + flagged > checks
         errors, flagged = errors[far], flagged[far]
         needed = np.maximum(checks // 2 + 1 - errors, 0)
         return log_sum(weights[far] + self._wrong_of_flagged[flagged, needed])
 
     @cached_property
-    def _patterns(self) -> tuple[NDArray[np.int_], NDArray[np.int_], Floats]:
+    def _likely(self) -> Patterns:
+        """The patterns that matter for up to PRUNED check symbols: fewer of these never make less loss."""
+        errors, flagged, weights = self._patterns
+        kept = weights > self._sum(PRUNED, self._patterns) - NEGLIGIBLE
+        return errors[kept], flagged[kept], weights[kept]
+
+    @cached_property
+    def _patterns(self) -> Patterns:
         """All (e, s) with e + s <= n, and the logarithms of their chances."""
         a, f = self.symbol.wrong_unflagged, self.symbol.flagged
         errors, flagged, ways = _multinomials(self.n)
@@ -119,7 +138,7 @@ class ColumnChances:
 
 
 @cache
-def _multinomials(n: int) -> tuple[NDArray[np.int_], NDArray[np.int_], Floats]:
+def _multinomials(n: int) -> Patterns:
     """e and s for all e + s <= n, and ln of n! / (e! s! (n-e-s)!)."""
     errors, flagged = np.nonzero(np.add.outer(np.arange(n + 1), np.arange(n + 1)) <= n)
     logs = log_factorials(n)
@@ -127,7 +146,7 @@ def _multinomials(n: int) -> tuple[NDArray[np.int_], NDArray[np.int_], Floats]:
 
 
 @cache
-def _binomials(n: int) -> tuple[NDArray[np.int_], NDArray[np.int_], Floats]:
+def _binomials(n: int) -> Patterns:
     """s and i for all i <= s <= n, and ln of s! / (i! (s-i)!)."""
     of, chosen = np.tril_indices(n + 1)
     logs = log_factorials(n)

@@ -1,4 +1,4 @@
-"""How fast the strip map and the word codec are, as ratios of runs that take turns.
+"""How fast the strip map, the parity encoder and the word codec are, as ratios of runs that take turns.
 
     python tests/benchmarks/bench_stripmap.py
 
@@ -14,6 +14,7 @@ import ctypes.util
 import statistics
 import time
 from collections.abc import Callable
+from functools import partial
 
 import numpy as np
 from numpy.typing import NDArray
@@ -21,6 +22,7 @@ from numpy.typing import NDArray
 from oakum.algebra.inner import InnerCode
 from oakum.algebra.outer import OuterCode
 from oakum.kernels import tiers
+from oakum.kernels.parity import ParityEncoder
 from oakum.kernels.stripmap import StripMap
 from oakum.kernels.words import WordCodec
 
@@ -76,6 +78,12 @@ def strip_map_runs() -> dict[str, tuple[int, Callable[[], object]]]:
     for tier, map_ in maps.items():
         runs[f"strip map, {tier}"] = (source.size, lambda map_=map_: map_.apply(source, out))
         map_.apply(source, out)
+    for tier in maps:
+        encoder, ours = ParityEncoder(CODE, tier), rows(CODE.r, LENGTH, 6)
+        if encoder.transform is not None:
+            runs[f"parity by moments, {tier}"] = (source.size, partial(encoder.apply, source, ours))
+            encoder.apply(source, ours)
+            assert np.array_equal(ours, out)
     name = ctypes.util.find_library("isal")
     if name:
         library, theirs = ctypes.CDLL(name), rows(CODE.r, LENGTH, 3)

@@ -6,6 +6,7 @@ import os
 from collections.abc import Callable
 from concurrent.futures import ThreadPoolExecutor
 from functools import cache
+from pathlib import Path
 
 import numpy as np
 import pytest
@@ -13,6 +14,7 @@ from guarded import guarded
 from hypothesis import given, settings
 from hypothesis import strategies as st
 from reference import strip_map
+from tier_runs import ON_X86, gfni_environment, run_tests
 
 from oakum.algebra.field import Field
 from oakum.algebra.outer import OuterCode
@@ -295,3 +297,20 @@ def test_self_test_notices_wrong_kernels() -> None:
         kernel(*arguments[:8], 0, *arguments[9:])
 
     assert not parity.gives_known_answer(without_accumulating, tier)
+
+
+# ---- other CPUs
+
+
+@pytest.mark.skipif(not ON_X86, reason="names features of x86-64")
+@pytest.mark.parametrize("features", ["+sse2", "+sse2,+sse3,+ssse3"], ids=["SSE2", "SSSE3"])
+def test_on_older_CPUs(features: str) -> None:
+    """Without any kernel of moments, and with 16-byte shuffles."""
+    environment = {**os.environ, "NUMBA_CPU_NAME": "generic", "NUMBA_CPU_FEATURES": features}
+    run_tests(environment, "test_parity.py", keyword="not galois and not reedsolo and not CPU")
+
+
+def test_on_a_CPU_with_gfni(tmp_path: Path) -> None:
+    """Emulated where the CPU lacks the instruction, and then only what does not take minutes."""
+    keyword = "unit_columns or (syndromes and 239) or outside or notices"
+    run_tests(gfni_environment(tmp_path), "test_parity.py", keyword=keyword)

@@ -9,6 +9,7 @@ from __future__ import annotations
 
 import errno
 import os
+import signal
 from collections.abc import Callable, Iterable
 from dataclasses import dataclass, field
 from pathlib import Path
@@ -16,10 +17,18 @@ from typing import Any
 
 import pytest
 
-BY_DESCRIPTOR = ("preadv", "pread", "pwrite", "ftruncate", "fsync", "close", "fstat", "fchmod", "dup")
+BY_DESCRIPTOR = (
+    "preadv", "pread", "pwrite", "ftruncate", "fsync", "close", "fstat", "fchmod", "utime", "dup",
+)  # fmt: skip
 BY_NAME = (
     "open", "link", "rename", "unlink", "stat", "mkdir", "symlink", "readlink", "rmdir", "lstat", "listdir",
 )  # fmt: skip
+CHANGING = (
+    "pwrite", "ftruncate", "open", "link", "rename", "unlink", "mkdir", "symlink", "rmdir", "fsync", "fchmod",
+    "utime",
+)  # fmt: skip
+"""The calls that can change what is on the medium: between two of them a kill finds the same state."""
+
 CALLS = (*BY_DESCRIPTOR, *BY_NAME)
 
 ERRORS = {
@@ -34,7 +43,7 @@ class Faults:
     """Counts the calls below `folder` and lets some fail.
 
     `at`: the number (from 1) of the call that fails, `for_good`: and so do all later ones of the same name.
-    `short`: reads and writes are cut to one byte instead of failing.
+    `short`: reads and writes are cut to one byte instead of failing. `kill`: the process ends there and then.
     """
 
     folder: Path
@@ -42,6 +51,7 @@ class Faults:
     at: int = 0
     for_good: bool = False
     short: bool = False
+    kill: bool = False
     count: int = 0
     failed: list[str] = field(default_factory=list)
 
@@ -58,6 +68,8 @@ class Faults:
             self.count += 1
             if self.at and (self.count == self.at or (self.for_good and name in self.failed)):
                 self.failed.append(name)
+                if self.kill:
+                    os.kill(os.getpid(), signal.SIGKILL)
                 if not self.short:
                     if name == "close":
                         true(*args)

@@ -5,7 +5,7 @@ from typing import Annotated
 import typer
 
 from oakum import __version__
-from oakum.cli import audit, describe, history, protect, repair, verify
+from oakum.cli import audit, describe, history, plan, protect, rehearse, repair, verify
 
 app = typer.Typer(
     name="oakum",
@@ -38,9 +38,11 @@ def oakum(
     """Options before the command; the help text stands above."""
 
 
+app.command("plan")(plan.plan)
 app.command("protect")(protect.protect)
 app.command("verify")(verify.verify)
 app.command("repair")(repair.repair)
 app.command("audit")(audit.audit)
 app.command("history")(history.history)
+app.command("rehearse")(rehearse.rehearse)
 app.command("describe")(describe.describe)

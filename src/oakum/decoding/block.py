@@ -450,8 +450,8 @@ class _Block:
         distance = self.g.r + 1
         rivalled = np.zeros(len(good), bool)
         most = np.maximum(errors, 0) + np.count_nonzero(erased, axis=0)
-        # What costs little first: a rival costs at least 2 a symbol, or 1 where the word is not clean.
-        which = np.flatnonzero(good & (2 * most + posed.unclean > distance))
+        # The cheap bound first: a rival alters D - `most` others at least, for 2 each less the slack.
+        which = np.flatnonzero(good & (2 * most + posed.slack > distance))
         if len(which):
             which = which[posed.distances.rival_bound(most[which], which, distance) < distance]
         if len(which):
@@ -575,9 +575,12 @@ class _Posed:
         return Distances.of(self.known, self.inner_distance)
 
     @cached_property
-    def unclean(self) -> Strips:
-        """How many symbols of each column are erased, or in a word with flips."""
-        return np.asarray(np.count_nonzero((self.known.status != 0) | self.known.erased, axis=0))
+    def slack(self) -> NDArray[np.float64]:
+        """How much cheaper than 2 a symbol all symbols of a column together are for a rival, at the most."""
+        known, d = self.known, self.inner_distance
+        void = np.count_nonzero((known.status >= UNUSABLE) | known.erased, axis=0)
+        unclean = np.count_nonzero(known.status, axis=0)
+        return np.asarray(void + unclean * ((d - 1) // 2 * 2 / d))
 
     @cached_property
     def doubtful(self) -> Strips:

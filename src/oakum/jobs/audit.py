@@ -15,7 +15,7 @@ from numpy.typing import NDArray
 from oakum.audits import AuditResult, Distribution, Rate, Statistics, TargetAudit, Trend
 from oakum.causes import find_causes
 from oakum.conversions import undone
-from oakum.errors import CannotCheck, UsageError
+from oakum.errors import CannotCheck, OakumError, UsageError
 from oakum.jobs.checking import CHUNK, GROUP, Finding, KnownMember, Range, WindowCheck, open_set
 from oakum.jobs.common import DEFAULT_MEMORY, find_sidecar
 from oakum.jobs.history import history
@@ -93,7 +93,7 @@ def _trend(options: AuditOptions, note: str) -> Trend | None:
         return None
     try:
         return history(options.ledger, options.medium)[0]
-    except CannotCheck:
+    except OakumError:
         return None
 
 

@@ -168,7 +168,7 @@ def open_set(
 def assemble(kind: type[Set], path: Path, source: OpenBytes, root: Path | None) -> Set:
     """Read the records of a sidecar; `source` is closed if that fails."""
     try:
-        sections, tables = _readable(find_sections(source))
+        sections, tables = readable(find_sections(source))
         folder = Folder(path.parent if root is None else root)
     except BaseException:
         source.close()
@@ -183,7 +183,7 @@ def look_at_members(opened: ProtectedSet) -> None:
         _look_at(opened.folder, member)
 
 
-def _readable(sections: list[Section]) -> tuple[list[Section], list[tuple[Piece, ...]]]:
+def readable(sections: list[Section]) -> tuple[list[Section], list[tuple[Piece, ...]]]:
     """The sections whose member tables can be read; a section without its table says nothing.
 
     Raises FormatError when there is none.

@@ -22,8 +22,8 @@ class Wishes:
     """The figures of one run; None where nothing was said.
 
     Rates are per year: `flip_rate` the chance of a bit to flip, `bursts_per_tb` and `sectors_per_tb` events
-    per terabyte. `bursts` is an exact number instead; a burst length alone means one burst. `lost_share` is a part
-    of the data, from 0 to 1.
+    per terabyte. `bursts` is an exact number instead; a burst length alone means one burst. `lost_share` is a
+    part of the data, from 0 to 1.
     """
 
     medium: str | None = None
@@ -50,7 +50,7 @@ class Wishes:
         channel = Channel(flip_rate, runs, self.lost_share or 0.0, years, self.spare_sidecar)
         if channel.harmless and self.years is not None:
             raise UsageError(
-                "a period needs a rate of damage; add --flip-rate, --bursts-per-tb, --sectors-per-tb or --medium"
+                "a period needs a rate; add --flip-rate, --bursts-per-tb, --sectors-per-tb or --medium"
             )
         if channel.harmless:
             raise UsageError(

@@ -6,9 +6,10 @@ import os
 from pathlib import Path
 
 from oakum.files import FileBytes
+from oakum.jobs.checking import readable
 from oakum.jobs.common import absolute, find_sidecar, summarise
 from oakum.results import Description, MemberDescription
-from oakum.sidecar.reading import Section, find_sections
+from oakum.sidecar.reading import find_sections
 from oakum.sidecar.table import Kind, Piece
 
 
@@ -16,10 +17,13 @@ def describe(sidecar: Path) -> Description:
     """Read a sidecar's records. Raises CannotCheck (FormatError) when it has none that can be read."""
     path = absolute(find_sidecar(sidecar, None))
     with FileBytes(path) as source:
-        sections = find_sections(source)
-        members = _members(sections)
+        found = find_sections(source)
+        sections, tables = readable(found)
+        members = _members(tables)
         first, last = sections[0].bootstrap, sections[-1].bootstrap
         notes = [] if last.last else ["the sidecar's end is missing; its last sections say no more"]
+        if len(sections) < len(found):
+            notes.append("the list of members of some sections is damaged beyond correction and is left out")
         full = sections[:-1] or sections
         return Description(
             path, first.version, first.set_identity.hex(), summarise(first.code.code()),
@@ -29,11 +33,11 @@ def describe(sidecar: Path) -> Description:
         )  # fmt: skip
 
 
-def _members(sections: list[Section]) -> list[MemberDescription]:
+def _members(tables: list[tuple[Piece, ...]]) -> list[MemberDescription]:
     """All members in order; of one that lies in several windows the last entry counts."""
     pieces: dict[bytes, Piece] = {}
-    for section in sections:
-        for piece in section.table():
+    for table in tables:
+        for piece in table:
             pieces[piece.path] = piece
     return [
         MemberDescription(

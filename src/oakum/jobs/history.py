@@ -6,7 +6,7 @@ import json
 import math
 from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
-from datetime import UTC, datetime
+from datetime import UTC, datetime, timedelta
 from pathlib import Path
 
 import numpy as np
@@ -25,6 +25,12 @@ THRESHOLD = 0.001
 """The chance of losing something from which on a medium is to be refreshed."""
 
 LEAST_AUDITS = 3
+LEAST_SPAN = 30 / 365.25
+"""Years that audits must span before a trend is drawn through them."""
+
+MOST_BURSTS = 1e-3
+"""Bursts a byte beyond which a rate means nothing any more."""
+
 HORIZON = 50
 """Years beyond which no trend is drawn out."""
 
@@ -103,8 +109,13 @@ class _Medium:
         self.flips = self._fit([p.flips for p in self.points])
         self.bursts = self._fit([p.bursts for p in self.points])
 
+    @property
+    def enough(self) -> bool:
+        """Whether a trend can be drawn at all."""
+        return len(self.points) >= LEAST_AUDITS and self.times[-1] - self.times[0] >= LEAST_SPAN
+
     def _fit(self, rates: list[Rate]) -> PoissonFit | None:
-        if len(rates) < LEAST_AUDITS or not all(r.exposure for r in rates):
+        if not self.enough or not all(r.exposure for r in rates):
             return None
         return fit_poisson(self.times, [r.count for r in rates], [r.exposure for r in rates])
 
@@ -129,7 +140,7 @@ class _Medium:
     def _margin_slope(self) -> float | None:
         """The straight line through the lowest margins, as change a year."""
         known = [(t, p.margin) for t, p in zip(self.times, self.points, strict=True) if p.margin is not None]
-        if len(known) < LEAST_AUDITS or len({t for t, _ in known}) < 2:
+        if not self.enough or len(known) < LEAST_AUDITS:
             return None
         times, margins = np.array(known).T
         return float(np.polyfit(times, margins, 1)[0])
@@ -143,13 +154,13 @@ class _Medium:
             rates[-1].high if fit is None else fit.rate(max(time, self.times[-1]), ONE_SIDED)
             for fit, rates in pairs
         )
-        return min(0.5, flips), bursts
+        return min(0.5, flips), min(MOST_BURSTS, bursts)
 
     def _chance(self, time: float) -> float:
         """The chance that some target cannot be read in full at a time; an upper bound."""
         flips, bursts = self._rates(time)
         seen = any(p.bursts.count for p in self.points)
-        kept = 1.0
+        log_kept = 0.0
         for row in self.audits[-1][1]:
             if not row["stream_bytes"]:
                 continue
@@ -159,8 +170,8 @@ class _Medium:
             )  # fmt: skip
             runs = (Runs(((self._burst_length(), 1.0),), per_tb_year=bursts * TB),) if seen else ()
             loss = forecast(shape, Channel(flip_rate=flips, runs=runs))
-            kept *= 1 - math.exp(min(0.0, loss.at_most))
-        return 1 - kept
+            log_kept += math.log1p(-min(1 - 1e-16, math.exp(min(0.0, loss.at_most))))
+        return -math.expm1(log_kept)
 
     def _burst_length(self) -> int:
         """The mean length of the bursts of the last audits, in bytes."""
@@ -174,7 +185,7 @@ class _Medium:
 
     def _year_of_loss(self, slope: float | None) -> int | None:
         """The first year in which the chance passes the threshold or the margin ends; None: not in sight."""
-        if len(self.points) < LEAST_AUDITS:
+        if not self.enough:
             return None
         years = []
         if slope is not None and slope < 0 and self.points[-1].margin is not None:
@@ -189,7 +200,7 @@ class _Medium:
         first = min(years, default=math.inf)
         if first > self.today + HORIZON:
             return None
-        return self.now.year + max(0, math.floor(first - self.today))
+        return (self.now + timedelta(seconds=max(0.0, first - self.today) * YEAR)).year
 
     # -- what to do ------------------------------------------------------------------------------------
 
@@ -224,7 +235,7 @@ class _Medium:
                 )
         if margin < THIN:
             return Advice.AUDIT_SOONER, f"the weakest block keeps {margin:.0%} of its margin."
-        if len(self.points) < LEAST_AUDITS:
+        if not self.enough:
             return (
                 Advice.KEEP,
                 "nothing found so far speaks against it; there are too few audits for a trend.",
@@ -239,11 +250,13 @@ class _Medium:
                 f"{have} how the medium is, not where it is going: no trend and no date can be given before "
                 f"{LEAST_AUDITS} audits"
             )
+        elif not self.enough:
+            yield f"all {count} audits lie within a month, too close together to tell where it is going"
         exposure = sum(p.flips.exposure for p in self.points)
         if exposure and not any(p.flips.count for p in self.points):
             limit = poisson_upper_limit(0) / exposure
             yield f"no scattered flip was found at all: the rate is below {limit:.2g} a bit (95 % confidence)"
-        elif count >= LEAST_AUDITS and self.flips is None:
+        elif self.enough and self.flips is None:
             yield "the flips fell on the first or the last audit only, which fixes no trend"
         if any(p.coverage < 0.999 for p in self.points):
             least = min(p.coverage for p in self.points)

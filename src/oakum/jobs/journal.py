@@ -6,7 +6,8 @@ again. It stands beside the sidecar and is named after it.
 
 The file is a row of records, each a header of 40 bytes, the old bytes and the new bytes. The first record
 says which set it belongs to, the one of kind END that nothing is missing, the one of kind DONE (appended
-later) that the repair was finished. Numbers are little endian.
+later) that the repair was finished, one of kind UNDOING after it that it is being undone. Numbers are little
+endian.
 """
 
 from __future__ import annotations
@@ -43,6 +44,7 @@ class _Kind(IntEnum):
     PATCH = 3
     END = 4
     DONE = 5
+    UNDOING = 6
 
 
 class Thing(IntEnum):
@@ -121,7 +123,11 @@ class Draft:
         self.contents = Contents(identity)
         self._file = NewFile(journal_path(sidecar), overwrite=True)
         self._end = 0
-        self._write(_Kind.SET, 0, 0, identity, b"")
+        try:
+            self._write(_Kind.SET, 0, 0, identity, b"")
+        except BaseException:
+            self._file.discard()
+            raise
 
     def add(self, entry: Entry) -> int:
         """Begin an entry; returns its number."""
@@ -232,7 +238,7 @@ class Journal:
                     break
                 contents = Contents(payload)
             elif ended:
-                contents.finished |= kind is _Kind.DONE
+                contents.finished = kind is _Kind.DONE
             elif kind is _Kind.ENTRY:
                 contents.entries.append(self._entry(detail, payload))
                 contents.patches.append([])
@@ -284,10 +290,18 @@ class Journal:
 
     def finish(self) -> None:
         """Note, on the medium, that the repair came to its end. Raises OSError."""
-        record = _record(_Kind.DONE, 0, 0, b"", b"", 0)
+        self._note(_Kind.DONE)
+
+    def begin_undoing(self) -> None:
+        """Note, on the medium, that the repair is being undone and is finished no more. Raises OSError."""
+        self._note(_Kind.UNDOING)
+
+    def _note(self, kind: _Kind) -> None:
+        record = _record(kind, 0, 0, b"", b"", 0)
         write_all(self._fd, self._end, record)
         os.fsync(self._fd)
-        self.contents.finished = True
+        self._end += len(record)
+        self.contents.finished = kind is _Kind.DONE
 
     def remove(self) -> None:
         """Take the journal away, for good. Raises OSError."""

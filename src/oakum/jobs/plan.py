@@ -35,8 +35,8 @@ CHECKS = range(8, 97, 8)
 SHOWN_BELOW, SHOWN_ABOVE = 4, 3
 """Codes of the frontier shown beside the recommended one: with less and with more overhead."""
 
-CURVES = 5
-CURVE_POINTS = 33
+CURVES = 4
+CURVE_POINTS = 25
 HIGHEST_RATE = 0.03
 
 
@@ -184,12 +184,12 @@ def _notes(channel: Channel, depth: int | None) -> tuple[str, ...]:
     notes = []
     if channel.flip_rate:
         notes.append(
-            "columns that share words tend to be lost together, so that the chances for blocks and for the whole "
-            "are given as bounds; the choice goes by the upper one"
+            "columns that share words tend to be lost together, so that the chances for the whole are "
+            "given as bounds; the choice goes by the upper one"
         )
         notes.append(
-            "the chances are those of one pass of the decoder; its later trials and feedback save more, as far as "
-            "the measured curves tell"
+            "the chances are those of one pass of the decoder; feedback saves more, as far as the "
+            "measured curves tell"
         )
     if channel.runs and depth is not None:
         notes.append("a burst that is longer than the depth takes more than one byte of a codeword")

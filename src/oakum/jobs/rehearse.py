@@ -10,7 +10,7 @@ from __future__ import annotations
 import time
 from collections.abc import Callable, Sequence
 from contextlib import closing
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 
 import numpy as np
@@ -32,7 +32,7 @@ from oakum.jobs.checking import (
     look_at_members,
     open_set,
 )
-from oakum.jobs.common import DEFAULT_MEMORY, announce_compiling, find_sidecar, summarise
+from oakum.jobs.common import announce_compiling, find_sidecar, summarise
 from oakum.jobs.damage import Wishes
 from oakum.jobs.tally import Tally
 from oakum.jobs.verify import SetCheck, result_of
@@ -60,7 +60,6 @@ def rehearse(
     find_limit: bool = False,
     sidecar: Path | None = None,
     root: Path | None = None,
-    memory: int = DEFAULT_MEMORY,
     jobs: int | None = None,
     progress: Progress = Silent(),
 ) -> RehearsalResult:
@@ -160,7 +159,7 @@ def _merged(a: Sequence[Range], b: Sequence[Range]) -> list[Range]:
 class DamagedSet(ProtectedSet):
     """A protected set whose members are read through damage."""
 
-    damage: Damage = Damage(())
+    damage: Damage = field(default_factory=lambda: Damage(()))
 
     def stream(self, spans: Sequence[Span], start: int, known_bad: Sequence[Range] = ()) -> OpenStream:
         return DamagedStream(MemberStream(self.folder, spans, known_bad), start, self.damage)

@@ -340,6 +340,8 @@ def undo(sidecar: Path, root: Path | None) -> list[Entry]:
                 )
         refuse_unfit(journal.contents, place)
         try:
+            if journal.finished:
+                journal.begin_undoing()
             carry_out(journal, place, forward=False)
             journal.remove()
         except OSError as error:

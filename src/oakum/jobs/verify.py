@@ -63,14 +63,14 @@ def _warnings(check: SetCheck) -> Iterator[str]:
         yield (
             "a repair in place was interrupted: oakum repair --in-place finishes it, --roll-back undoes it"
         )
-    if check.opened.sections and any(w.g.guaranteed_burst for w in check.windows):
-        whole = min(w.g.guaranteed_burst for w in check.windows if w.g.guaranteed_burst)
-        left = min(w.burst_left() for w in check.windows if w.g.guaranteed_burst)
-        if left < whole:
-            yield (
-                f"as long as the sidecar stays damaged, one contiguous loss of {left:,} bytes in the "
-                f"members can be put right anywhere, where it was {whole:,}; oakum repair mends the sidecar"
-            )
+    worn = [w for w in check.windows if w.burst_left() < w.g.guaranteed_burst]
+    if worn:
+        worst = min(worn, key=WindowCheck.burst_left)
+        yield (
+            "as long as the sidecar stays damaged, one contiguous loss of "
+            f"{worst.burst_left():,} bytes in the members can be put right anywhere, where it was "
+            f"{worst.g.guaranteed_burst:,}; oakum repair mends the sidecar"
+        )
     unknown = sum(int((w.data == UNKNOWN).sum()) for w in check.windows if w.g.digested)
     if unknown:
         yield (

@@ -17,6 +17,7 @@ from oakum.algebra.field import Bytes
 from oakum.algebra.outer import OuterCode
 from oakum.kernels.columns_kernels import FAILED, Tables, decode_columns
 from oakum.kernels.lanes import FIELD
+from oakum.kernels.parity import ParityEncoder
 from oakum.kernels.roots import factors
 from oakum.kernels.stripmap import StripMap
 
@@ -26,27 +27,28 @@ __all__ = ["FAILED", "ColumnDecoder", "ErasureSolver"]
 class ColumnDecoder:
     """Bounded-distance decoding of columns of `outer`.
 
-    `tier` is that of the strip maps (see `oakum.kernels.tiers`). All methods may be called from several
-    threads at once and release the GIL while they compute.
+    `tier` is that of syndromes and strip maps (see `oakum.kernels.tiers`). All methods may be called from
+    several threads at once and release the GIL while they compute.
     """
 
     def __init__(self, outer: OuterCode, tier: str | None = None) -> None:
         self.outer = outer
         self._tier = tier
-        self._checks = StripMap(outer.check_matrix, field_poly=outer.field_poly, tier=tier)
+        self._checks = ParityEncoder(outer, tier)
         self._tables = Tables(outer)
         self._foreign = outer.field_poly != FIELD.poly
         self._solver = lru_cache(maxsize=64)(self._build_solver)
 
     def prepare(self) -> None:
         """Compile, or load, everything that the methods need, in the calling thread."""
+        self._checks.prepare()
         decode_columns.prepare()
 
     def syndromes(self, received: Bytes) -> Bytes:
         """The syndromes uint8[r, L] of the columns of `received`, uint8[n, L]. ValueError on other shapes."""
         _check_rows(received, "received", self.outer.n)
         out = np.empty((self.outer.r, received.shape[1]), dtype=np.uint8)
-        self._checks.apply(received, out)
+        self._checks.syndromes(received, out)
         return out
 
     def decode(

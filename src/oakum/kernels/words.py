@@ -48,11 +48,12 @@ class WordCodec:
             self._tables = parity_tables(inner, self.tier)
             self._kernel = PARITY_KERNELS[self.tier].prepare()
 
-    def prepare(self) -> None:
-        """Compile, or load, everything that the methods need, in the calling thread."""
+    def prepare(self, *, correcting: bool = True) -> None:
+        """Compile, or load, what the methods need (`correct` only if `correcting`), in the calling thread."""
         if self.inner.p:
             PARITY_KERNELS[self.tier].prepare()
-            kernels.correct.prepare()
+            if correcting:
+                kernels.correct.prepare()
 
     def words(self, cell_length: int) -> int:
         """The number of words in a cell of `cell_length` bytes."""

@@ -40,7 +40,7 @@ def check_document(result: CheckResult) -> Document:
         "command": result.command,
         "outcome": str(result.outcome),
         "target": shown(str(result.target)),
-        "code": _code(result.code),
+        "code": code_document(result.code),
         "totals": _totals(result.totals),
         "blocks": [_block(block) for block in result.blocks],
         "members": [_member(member) for member in result.members],
@@ -71,8 +71,8 @@ def protect_document(result: ProtectResult) -> Document:
     return {
         "schema": SCHEMA,
         "command": "protect",
-        "sidecar": _named(str(result.sidecar)),
-        "code": _code(result.code),
+        "sidecar": named(str(result.sidecar)),
+        "code": code_document(result.code),
         "members": result.members,
         "stream_bytes": result.stream_bytes,
         "sidecar_bytes": result.sidecar_bytes,
@@ -90,10 +90,10 @@ def description_document(description: Description) -> Document:
     return {
         "schema": SCHEMA,
         "command": "describe",
-        "sidecar": _named(str(description.sidecar)),
+        "sidecar": named(str(description.sidecar)),
         "format_version": description.format_version,
         "identity": description.identity,
-        "code": _code(description.code),
+        "code": code_document(description.code),
         "stream_bytes": description.stream_bytes,
         "sidecar_bytes": description.sidecar_bytes,
         "depth": description.depth,
@@ -105,7 +105,7 @@ def description_document(description: Description) -> Document:
     }
 
 
-def _code(code: CodeSummary) -> Document:
+def code_document(code: CodeSummary) -> Document:
     return {
         "name": code.name,
         "outer": list(code.outer),
@@ -146,7 +146,7 @@ def _block(block: BlockReport) -> Document:
 
 def _member(member: MemberReport) -> Document:
     return {
-        **_named(member.path),
+        **named(member.path),
         "kind": member.kind,
         "size": member.size,
         "state": str(member.state),
@@ -160,7 +160,7 @@ def _member(member: MemberReport) -> Document:
 
 def _sidecar(sidecar: SidecarReport) -> Document:
     return {
-        **_named(str(sidecar.path)),
+        **named(str(sidecar.path)),
         "state": str(sidecar.state),
         "bits_flipped": sidecar.bits_flipped,
         "symbols_wrong": sidecar.symbols_wrong,
@@ -171,7 +171,7 @@ def _sidecar(sidecar: SidecarReport) -> Document:
 
 def _member_description(member: MemberDescription) -> Document:
     return {
-        **_named(member.path),
+        **named(member.path),
         "kind": member.kind,
         "size": member.size,
         "sha256": None if member.sha256 is None else member.sha256.hex(),
@@ -181,7 +181,7 @@ def _member_description(member: MemberDescription) -> Document:
     }
 
 
-def _named(name: str) -> Document:
+def named(name: str) -> Document:
     text = shown(name)
     if text == name:
         return {"path": name}

@@ -7,6 +7,7 @@ from __future__ import annotations
 
 import hashlib
 import struct
+from collections.abc import Sequence
 from dataclasses import dataclass, field, replace
 from functools import lru_cache
 from typing import TYPE_CHECKING
@@ -207,21 +208,32 @@ def _decoder() -> ColumnDecoder:
 def decode(coded: bytes) -> tuple[Bootstrap, int] | None:
     """Correct and read one coded copy. Returns the record and the number of bits that were wrong.
 
-    None when there is no record to be read. The systematic bytes are tried first, so that a copy that
-    is whole costs no decoding.
+    None when there is no record to be read.
     """
-    found = unpack(coded)
-    if found is None:
+    (found,) = decode_all([coded])
+    return None if found is None else (found, count_bits(encode(found.pack()), coded))
+
+
+def decode_all(copies: Sequence[bytes]) -> list[Bootstrap | None]:
+    """Correct and read many coded copies at once, so that a file full of false ones costs little.
+
+    The systematic bytes are tried first, so that a copy that is whole costs no decoding. Raises FormatError
+    for a record that this version cannot use.
+    """
+    found = [unpack(coded) for coded in copies]
+    damaged = [i for i, record in enumerate(found) if record is None]
+    if damaged:
         decoder = _decoder()
-        received = np.frombuffer(coded, np.uint8).reshape(-1, CODEWORDS)
-        magnitudes, errors = decoder.decode(decoder.syndromes(np.ascontiguousarray(received)))
-        if (errors < 0).any():
-            return None
-        record = (received ^ magnitudes)[: RECORD_BYTES // CODEWORDS].tobytes()
-        found = unpack(record)
-        if found is None:
-            return None
-    return found, count_bits(encode(found.pack()), coded)
+        received = np.frombuffer(b"".join(copies[i] for i in damaged), np.uint8)
+        columns = np.ascontiguousarray(
+            received.reshape(-1, 255, CODEWORDS).transpose(1, 0, 2).reshape(255, -1)
+        )
+        magnitudes, errors = decoder.decode(decoder.syndromes(columns))
+        records = (columns ^ magnitudes)[: RECORD_BYTES // CODEWORDS]
+        solved = (errors.reshape(-1, CODEWORDS) >= 0).all(axis=1)
+        for at in np.flatnonzero(solved).tolist():
+            found[damaged[at]] = unpack(records[:, CODEWORDS * at : CODEWORDS * (at + 1)].tobytes())
+    return found
 
 
 def count_bits(right: bytes, received: bytes) -> int:

@@ -18,7 +18,16 @@ from numpy.typing import NDArray
 
 from oakum.errors import FormatError
 from oakum.geometry import MAX_LENGTH, Geometry
-from oakum.sidecar.bootstrap import CODED_BYTES, HEAD_BYTES, MARKER, MARKER_ERRORS, Bootstrap, decode, encode
+from oakum.sidecar.bootstrap import (
+    CODED_BYTES,
+    HEAD_BYTES,
+    MARKER,
+    MARKER_ERRORS,
+    Bootstrap,
+    decode,
+    decode_all,
+    encode,
+)
 from oakum.sidecar.frames import Content, Rows, check_rows, correct, payload, read_plain, seal
 from oakum.sidecar.layout import (
     DIGEST_BYTES,
@@ -37,6 +46,7 @@ Fault = tuple[int, int]
 """A range (start, stop), relative to what was asked for, that could not be read and was filled with zeros."""
 
 SCAN_STEP = 1 << 20
+AT_A_TIME = 512
 FRAMES_KEPT = 64
 
 
@@ -220,7 +230,7 @@ def find_sections(source: ByteSource) -> list[Section]:
             break
         section = Section(source, head)
         sections.setdefault(section.bootstrap.window, section)
-        place = max(section.end, place + 1)
+        place = max(section.end, head.place + 1)
         if section.bootstrap.last:
             break
     if not sections:
@@ -234,6 +244,10 @@ def _head_at(source: ByteSource, place: int) -> Head | None:
     bootstrap = _read_head(source, place)
     if bootstrap is None:
         return None
+    return _head(source, place, bootstrap)
+
+
+def _head(source: ByteSource, place: int, bootstrap: Bootstrap) -> Head:
     layout = Layout(bootstrap.geometry, bootstrap.table_length)
     _check(bootstrap, layout, source.size)
     return Head(place, bootstrap, layout)
@@ -266,10 +280,17 @@ def _scan(source: ByteSource, start: int) -> Iterator[Head]:
     """All heads from `start` on, found by their markers."""
     for place in range(max(0, start), source.size, SCAN_STEP):
         data, _ = source.read(place, min(SCAN_STEP + len(MARKER) - 1, source.size - place))
-        for offset in find_marker(data):
-            head = _head_at(source, place + int(offset))
-            if head is not None:
-                yield head
+        places = [place + int(offset) for offset in find_marker(data)]
+        for first in range(0, len(places), AT_A_TIME):
+            yield from _heads(source, places[first : first + AT_A_TIME])
+
+
+def _heads(source: ByteSource, places: list[int]) -> Iterator[Head]:
+    """The heads that begin at places where a marker was found, as far as they are any."""
+    copies = [source.read(place + len(MARKER), CODED_BYTES)[0].tobytes() for place in places]
+    for place, bootstrap in zip(places, decode_all(copies), strict=True):
+        if bootstrap is not None:
+            yield _head(source, place, bootstrap)
 
 
 def find_marker(data: Rows) -> NDArray[np.intp]:

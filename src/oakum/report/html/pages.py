@@ -8,7 +8,7 @@ from collections.abc import Iterable, Sequence
 from oakum.audits import AuditResult, CauseFinding, TargetAudit, Trend
 from oakum.report.html import charts
 from oakum.report.terminal import safe
-from oakum.report.text.audit import TERA, rate_words, summary_line
+from oakum.report.text.audit import TERA, chance_words, rate_words, summary_line
 from oakum.report.units import counted, percent, size
 from oakum.results import BlockReport, MemberReport, MemberState, Outcome
 
@@ -30,13 +30,17 @@ h3 { font-size: 1.05rem; } p { max-width: 44rem; margin: .5rem 0; }
 .lead { font-size: 1.12rem; } ol { max-width: 44rem; padding-left: 1.4rem; } li { margin: .6rem 0; }
 .pictures { display: grid; gap: 1rem 2.5rem;
   grid-template-columns: repeat(auto-fit, minmax(min(100%, 26rem), 1fr)); }
-figure { margin: 0; min-width: 0; break-inside: avoid; } figcaption { margin-bottom: .3rem; }
+figure { margin: 0; min-width: 0; max-width: 36rem; break-inside: avoid; }
+figcaption { margin-bottom: .3rem; }
 svg { width: 100%; height: auto; display: block; } svg text { font-family: inherit !important; }
 table { border-collapse: collapse; width: 100%; max-width: 52rem; font-variant-numeric: tabular-nums; }
 th, td { text-align: left; vertical-align: top; padding: .25rem .9rem .25rem 0;
   border-bottom: 1px solid var(--soft); }
 th { font-weight: 600; color: var(--hue); } td.n, th.n { text-align: right; }
+th, td { overflow-wrap: normal; } td:first-child { overflow-wrap: anywhere; min-width: 4.5rem; }
+td.n:first-child { min-width: 0; } th:last-child, td:last-child { padding-right: 0; }
 footer { margin-top: 3rem; border-top: 1px solid var(--soft); padding-top: .8rem; font-size: .9rem; }
+@media (max-width: 32rem) { table { font-size: .88rem; } th, td { padding-right: .5rem; } }
 @media print {
   body { max-width: none; background: none; }
   :root { --paper: #fff; --ink: #000; --hue: #1d5c70; }
@@ -166,15 +170,15 @@ def _weakest(blocks: Sequence[BlockReport]) -> str:
     ordered = sorted(blocks, key=lambda b: (b.margin is not None, b.margin or 0.0, b.window, b.block))
     rows = [
         (
-            f"{b.window:,}", f"{b.block:,}", "none" if b.margin is None else percent(max(0.0, b.margin)),
+            f"{b.window:,}, {b.block:,}", "none" if b.margin is None else percent(max(0.0, b.margin)),
             "unknown" if b.bits_flipped is None else f"{b.bits_flipped:,}", f"{b.bytes_erased:,}",
         )
         for b in ordered[:ROWS_SHOWN]
     ]  # fmt: skip
     if not rows:
         return ""
-    head = ("Window", "Block", "Margin", "Bits flipped", "Bytes erased")
-    return "<h3>The weakest blocks</h3>\n" + _table(head, rows, numbers=range(5))
+    head = ("Window, block", "Margin", "Bits flipped", "Bytes erased")
+    return "<h3>The weakest blocks</h3>\n" + _table(head, rows, numbers=range(1, 4))
 
 
 def _members(members: Sequence[MemberReport]) -> str:
@@ -205,7 +209,7 @@ def _trend(number: int, trend: Trend) -> str:
         g = trend.flips
         parts.append(
             f"<p>The flip rate changes {g.factor:.3g} times a year ({g.low:.3g} to {g.high:.3g}); "
-            f"the chance of loss now is at most {trend.chance_now:.2g}.</p>"
+            f"the chance of loss now is at most {chance_words(trend.chance_now)}.</p>"
         )
     if trend.refresh_by is not None:
         parts.append(f"<p>That chance passes {trend.threshold:g} in {trend.refresh_by}.</p>")

@@ -8,7 +8,7 @@ from oakum.audits import AuditResult, CauseFinding, Growth, Point, Rate, Statist
 from oakum.report.terminal import safe
 from oakum.report.text.check import check_text
 from oakum.report.text.layout import Section, joined, pairs, paragraph, table
-from oakum.report.units import counted, percent, size, took
+from oakum.report.units import counted, percent, size
 from oakum.results import Outcome
 
 TERA = 1e12
@@ -128,7 +128,7 @@ def _trend(trend: Trend) -> list[Section]:
         facts.append(("bursts a terabyte", _growth(trend.bursts, TERA)))
     if trend.margin_a_year is not None:
         facts.append(("lowest margin, change a year", f"{trend.margin_a_year * 100:+.1f} % of r"))
-    facts.append(("chance of loss now, at most", f"{trend.chance_now:.2g}"))
+    facts.append(("chance of loss now, at most", chance_words(trend.chance_now)))
     if trend.refresh_by is not None:
         facts.append((f"chance passes {trend.threshold:g}", f"in {trend.refresh_by}"))
     sections.append(["The trend", *pairs(facts)])
@@ -141,6 +141,11 @@ def _trend(trend: Trend) -> list[Section]:
 def _advice(trend: Trend) -> str:
     name = f"{safe(trend.medium)}: " if trend.medium else ""
     return f"{name}{trend.advice}, for {trend.reason}"
+
+
+def chance_words(chance: float) -> str:
+    """A chance with two digits, as far down as it means anything."""
+    return f"{chance:.2g}" if chance >= 1e-15 else "1e-15"
 
 
 def _growth(growth: Growth, unit: float) -> str:
@@ -159,4 +164,4 @@ def _point(point: Point) -> Sequence[str]:
     )
 
 
-__all__ = ["audit_text", "history_text", "rate_words", "summary_line", "took"]
+__all__ = ["audit_text", "chance_words", "history_text", "rate_words", "summary_line"]
