@@ -69,7 +69,8 @@ def proof_of_tree(folder: Path) -> bool:
     begin = time.perf_counter()
     protected = oakum.protect([work / "library"])
     say(
-        f"tree: {protected.members:,} members, {protected.stream_bytes:,} bytes, protected in {time.perf_counter() - begin:.1f} s"
+        f"tree: {protected.members:,} members, {protected.stream_bytes:,} bytes, "
+        f"protected in {time.perf_counter() - begin:.1f} s"
     )
     shutil.copy(protected.sidecar, original)
     _damage_tree(copied, work, protected.stream_bytes)
@@ -138,7 +139,8 @@ def proof_of_file(folder: Path, size: int) -> bool:
         )
         say(
             f"file, {name}: {'bit for bit the same' if same else 'NOT THE SAME'} after {seconds:.1f} s; "
-            f"bits_flipped {result.totals.bits_flipped:,}, population count {flips:,}; weakest margin {result.weakest:.2f}"
+            f"bits_flipped {result.totals.bits_flipped:,}, population count {flips:,}; "
+            f"weakest margin {result.weakest:.2f}"
         )
         good &= same and flips == result.totals.bits_flipped
         (folder / "x.back").unlink(missing_ok=True)

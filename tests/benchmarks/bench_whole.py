@@ -1,0 +1,105 @@
+"""protect and verify against a checksum, as whole processes: medians of interleaved runs, ratios in one run.
+
+    python tests/benchmarks/bench_whole.py [--sizes 64MiB 1GiB 4GiB] [--runs 5] [--folder DIR]
+
+For every size a file of random bytes is made and read once, so that it is in the page cache. Then each round
+runs `openssl dgst -sha256`, `cp`, `oakum protect`, `oakum verify` and `oakum verify --digests-only` one after
+the other. Times are wall times of whole processes, start-up and fsync included; memory is the peak of the
+process. Only ratios within one run mean anything.
+"""
+
+from __future__ import annotations
+
+import argparse
+import os
+import platform
+import statistics
+import sys
+import tempfile
+import time
+from collections.abc import Sequence
+from pathlib import Path
+
+import numpy as np
+
+UNITS = {"KiB": 1 << 10, "MiB": 1 << 20, "GiB": 1 << 30}
+OAKUM = [sys.executable, "-m", "oakum"]
+
+
+def size_of(text: str) -> int:
+    """A size such as 64MiB in bytes."""
+    return int(text[:-3]) * UNITS[text[-3:]]
+
+
+def run(command: Sequence[str]) -> tuple[float, float]:
+    """Wall seconds and peak memory in MiB of a process; raises RuntimeError when it fails."""
+    begin = time.perf_counter()
+    pid = os.posix_spawnp(
+        command[0], command, os.environ, file_actions=[(os.POSIX_SPAWN_OPEN, 1, os.devnull, os.O_WRONLY, 0)]
+    )
+    _, status, usage = os.wait4(pid, 0)
+    seconds = time.perf_counter() - begin
+    if status:
+        raise RuntimeError(f"{' '.join(command)} ended with {os.waitstatus_to_exitcode(status)}")
+    return seconds, usage.ru_maxrss / 1024
+
+
+def measure(folder: Path, size: int, runs: int) -> dict[str, tuple[float, float]]:
+    """Median wall seconds and greatest peak memory of each command on a file of `size` bytes."""
+    file = folder / "file"
+    rng = np.random.default_rng(1)
+    with file.open("wb") as out:
+        for start in range(0, size, 1 << 26):
+            out.write(rng.bytes(min(1 << 26, size - start)))
+    commands = {
+        "openssl dgst -sha256": ["openssl", "dgst", "-sha256", str(file)],
+        "cp": ["cp", str(file), str(folder / "copy")],
+        "protect": [*OAKUM, "protect", "--quiet", "--overwrite", str(file)],
+        "verify": [*OAKUM, "verify", "--quiet", str(file)],
+        "verify --digests-only": [*OAKUM, "verify", "--quiet", "--digests-only", str(file)],
+    }
+    results: dict[str, list[tuple[float, float]]] = {name: [] for name in commands}
+    for turn in range(runs + 1):  # The first round warms page cache and kernels and does not count.
+        for name, command in commands.items():
+            found = run(command)
+            if turn:
+                results[name].append(found)
+    for path in folder.iterdir():
+        path.unlink()
+    return {
+        name: (statistics.median(t for t, _ in found), max(m for _, m in found))
+        for name, found in results.items()
+    }
+
+
+def cpu_name() -> str:
+    """The CPU's name, where the system tells it."""
+    try:
+        lines = Path("/proc/cpuinfo").read_text().splitlines()
+        return next(line.partition(":")[2].strip() for line in lines if line.startswith("model name"))
+    except (OSError, StopIteration):
+        return platform.machine()
+
+
+def main() -> None:
+    parser = argparse.ArgumentParser(
+        description=__doc__, formatter_class=argparse.RawDescriptionHelpFormatter
+    )
+    parser.add_argument("--sizes", nargs="+", default=["1MiB", "64MiB", "1GiB", "4GiB"])
+    parser.add_argument("--runs", type=int, default=5)
+    parser.add_argument("--folder", type=Path, default=None)
+    options = parser.parse_args()
+    print(
+        f"{time.strftime('%Y-%m-%d')}, {cpu_name()}, {os.cpu_count()} cores, medians of {options.runs} runs\n"
+    )
+    print(f"{'size':>6}  {'command':<24}{'seconds':>9}{'over openssl':>14}{'peak MiB':>10}")
+    for text in options.sizes:
+        with tempfile.TemporaryDirectory(dir=options.folder) as folder:
+            found = measure(Path(folder), size_of(text), options.runs)
+        unit = found["openssl dgst -sha256"][0]
+        for name, (seconds, memory) in found.items():
+            print(f"{text:>6}  {name:<24}{seconds:>9.2f}{seconds / unit:>14.2f}{memory:>10.0f}", flush=True)
+
+
+if __name__ == "__main__":
+    main()
