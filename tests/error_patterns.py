@@ -13,7 +13,7 @@ import numpy as np
 
 from oakum import conversions
 from oakum.audits import Cause
-from oakum.patterns import Pattern, PatternCollector
+from oakum.patterns import FileFacts, Pattern, PatternCollector
 
 CELL = 4096
 Array = np.ndarray
@@ -38,7 +38,7 @@ def with_lengths(pattern: Pattern, path: str, original: bytes, damaged: bytes) -
     if len(original) == len(damaged):
         return pattern
     converted = conversions.undone([damaged], len(original), hashlib.sha256(original).digest())
-    return pattern.with_file(path, len(original), len(damaged), converted)
+    return pattern.with_files([FileFacts(path, len(original), len(damaged), converted)])
 
 
 def binary(rng: np.random.Generator, size: int) -> Array:

@@ -13,7 +13,9 @@ from typing import TYPE_CHECKING, Any
 from oakum.errors import CannotCheck, FormatError, OakumError, UsageError
 
 if TYPE_CHECKING:
+    from oakum.jobs.audit import AuditOptions, audit
     from oakum.jobs.describe import describe
+    from oakum.jobs.history import history
     from oakum.jobs.pipe import protect_pipe
     from oakum.jobs.protect import protect
     from oakum.jobs.repair import repair, roll_back
@@ -22,6 +24,9 @@ if TYPE_CHECKING:
 __version__ = "0.1.0"
 
 _LAZY = {
+    "AuditOptions": "oakum.jobs.audit",
+    "audit": "oakum.jobs.audit",
+    "history": "oakum.jobs.history",
     "describe": "oakum.jobs.describe",
     "protect": "oakum.jobs.protect",
     "protect_pipe": "oakum.jobs.pipe",
@@ -31,7 +36,8 @@ _LAZY = {
 }
 
 __all__ = [
-    "CannotCheck", "FormatError", "OakumError", "UsageError", "__version__", "describe", "protect",
+    "AuditOptions", "CannotCheck", "FormatError", "OakumError", "UsageError", "__version__", "audit",
+    "describe", "history", "protect",
     "protect_pipe", "repair", "roll_back", "verify",
 ]  # fmt: skip
 

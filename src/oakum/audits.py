@@ -130,6 +130,8 @@ class AuditResult:
     ledger: Path | None = None
     ledger_note: str = ""
     trend: Trend | None = None
+    overall: Statistics | None = None
+    """All targets together, where there are several."""
 
     @property
     def outcome(self) -> Outcome:

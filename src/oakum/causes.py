@@ -32,6 +32,9 @@ WORDS = (8, 32, 64)
 SLACK = 3
 """Bytes by which a run may miss a boundary, for the same reason."""
 
+MOST_WRONG = 0.85
+"""The share of wrong bytes from which on a file is another one: of text against text some agree by chance."""
+
 GENERIC = (Cause.RUNS, Cause.SCATTERED)
 """Causes that say little; they are named after those that say more."""
 
@@ -129,7 +132,13 @@ def _cut_short(rest: _Rest) -> Iterator[CauseFinding]:
 
 def _rewritten(rest: _Rest) -> Iterator[CauseFinding]:
     found, weight = [], 20.0
-    for number, member in enumerate(rest.pattern.members):
+    runs, count = rest.pattern.runs, len(rest.pattern.members)
+    wrong = np.bincount(rest.pattern.owner[rest.single], minlength=count)
+    np.add.at(wrong, runs.owner[rest.runs], runs.wrong[rest.runs])
+    for number in np.flatnonzero(wrong).tolist():
+        member = rest.pattern.members[number]
+        if wrong[number] < MOST_WRONG * min(member.size, member.found or member.size):
+            continue
         evidence = _rewriting(rest, number, member)
         if not evidence:
             continue
@@ -148,7 +157,7 @@ def _rewriting(rest: _Rest, number: int, member: MemberPattern) -> str:
     unknown = int(runs.unknown[mine].sum())
     wrong = int(runs.wrong[mine].sum()) + int(((rest.pattern.owner == number) & rest.single).sum())
     filled = int(runs.zeros[mine].sum()) + int(runs.ones[mine].sum())
-    if length < TAIL or wrong < 0.85 * length or filled > 0.5 * wrong:
+    if length < TAIL or wrong < MOST_WRONG * length or filled > 0.5 * wrong:
         return ""
     if not unknown and int(runs.bits[mine].sum()) < 1.5 * wrong:
         return ""  # Another byte differs in about four bits; one or so a byte is a bit that fails.

@@ -139,9 +139,8 @@ class Damage:
         """
         for start in range(offset - offset % CHUNK, offset + len(data), CHUNK) if self.flip_rate else ():
             places, bits = _flips(self.seed, start // CHUNK, self.flip_rate)
-            inside = places + (start - offset)
-            here = (inside >= 0) & (inside < len(data))
-            np.bitwise_xor.at(data, inside[here], bits[here])
+            first, last = np.searchsorted(places, (offset - start, offset - start + len(data)))
+            np.bitwise_xor.at(data, places[first:last] + (start - offset), bits[first:last])
         for start, stop in _touching(self.garbled, offset, len(data)):
             self._garble(offset, data, start, stop)
         faults = _touching(self.missing, offset, len(data))
@@ -159,10 +158,10 @@ class Damage:
 
 @lru_cache(_KEPT)
 def _flips(seed: tuple[int, ...], chunk: int, rate: float) -> tuple[NDArray[np.int32], Bytes]:
-    """Bytes that flips strike in one chunk, and which bit; a byte may be struck more than once."""
+    """Bytes that flips strike in one chunk, in order, and which bit; a byte may be struck more than once."""
     random = np.random.default_rng([*seed, chunk, 0])
     count = random.binomial(8 * CHUNK, rate)
-    places = random.choice(8 * CHUNK, count, replace=False, shuffle=False).astype(np.int32)
+    places = np.sort(random.choice(8 * CHUNK, count, replace=False, shuffle=False).astype(np.int32))
     return places >> 3, np.left_shift(1, places & 7).astype(np.uint8)
 
 
@@ -174,7 +173,9 @@ def _noise(seed: tuple[int, ...], chunk: int) -> Bytes:
 
 def _touching(ranges: Sequence[Range], offset: int, length: int) -> list[Range]:
     """The parts of sorted disjoint ranges that lie in offset..offset+length-1, relative to `offset`."""
-    found = []
+    found: list[Range] = []
+    if not ranges:
+        return found
     for start, stop in ranges[max(0, bisect_left(ranges, (offset, 0)) - 1) :]:
         if start >= offset + length:
             break

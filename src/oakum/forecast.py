@@ -33,12 +33,17 @@ from oakum.probability import (
     log_any,
     log_binomial,
     log_compound_poisson,
+    log_occupancy,
     log_power,
 )
 from oakum.results import Loss
 
 _NEGLIGIBLE = 20.0
 """Numbers of hits whose chance is so many e-folds below the total that matters are not worked out."""
+
+
+MANY = 5000
+"""Runs of a known number up to which those that overlap are told apart."""
 
 
 @dataclass(frozen=True)
@@ -196,7 +201,7 @@ class _Forecast:
         """The same, but for one run of the family `one`: what its other runs and the rest do."""
         size = self.shape.code.outer.r + 2
         fixed = [
-            log_power(family.distribution(size), round(family.number) - (family is one))
+            self._counted_hits(family, round(family.number) - (family is one), size)
             for family in self._families
             if family.fixed
         ]
@@ -204,6 +209,13 @@ class _Forecast:
         for distribution in fixed:
             hits = convolve(hits, distribution)
         return hits
+
+    def _counted_hits(self, family: _Family, number: int, size: int) -> Floats:
+        """What a known number of runs takes; those no longer than a strip hit one symbol of a column at most."""
+        if number <= MANY and not any(more > 0 for more in family.crossing):
+            chance = family.single.get(1, 0.0)
+            return log_occupancy(self._exposed, float(np.log(chance)) if chance else IMPOSSIBLE, number, size)
+        return log_power(family.distribution(size), number)
 
     def _poisson_hits(self, size: int) -> Floats:
         """What the runs take whose number is not fixed.

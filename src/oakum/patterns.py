@@ -8,7 +8,7 @@ are those in the file: memory, sectors and buffers are aligned to files and not 
 from __future__ import annotations
 
 from bisect import insort
-from collections.abc import Sequence
+from collections.abc import Iterable
 from dataclasses import dataclass, field, replace
 
 import numpy as np
@@ -24,6 +24,9 @@ MOST_PLACES = 1 << 21
 
 MOST_PIECES = 1 << 15
 """Pieces of runs kept before they are joined."""
+
+SPARSE = 400
+"""Wrong bytes in a cell below which they are looked at one by one."""
 
 POSITIONS = 64
 """Bit positions told apart: bit b (0 the lowest) of the byte at offset o in the file is 8 * (o % 8) + b."""
@@ -50,6 +53,17 @@ class MemberPattern:
     unreadable: tuple[tuple[int, int], ...] = ()
     converted: str = ""
     """The conversion of line ends that was undone and gave the recorded SHA-256 (see `causes`)."""
+
+
+@dataclass(frozen=True)
+class FileFacts:
+    """What is known of a file apart from its bytes; the fields are those of `MemberPattern`."""
+
+    path: str
+    size: int
+    found: int | None
+    converted: str = ""
+    unreadable: tuple[tuple[int, int], ...] = ()
 
 
 @dataclass(frozen=True)
@@ -98,25 +112,16 @@ class Pattern:
         """received XOR right of the single wrong bytes."""
         return self.received ^ self.right
 
-    def with_file(
-        self,
-        path: str,
-        size: int,
-        found: int | None,
-        converted: str = "",
-        unreadable: Sequence[tuple[int, int]] = (),
-    ) -> Pattern:
-        """The same with what else is known of a file: its length now, and line ends that were converted."""
-        members = list(self.members)
-        for number, member in enumerate(members):
-            if member.path == path:
-                members[number] = replace(
-                    member, found=found, converted=converted, unreadable=tuple(unreadable)
-                )
-                return replace(self, members=tuple(members))
-        nothing = np.zeros(256, np.int64)
-        new = MemberPattern(path, size, found, 0, 0, nothing, 0, 0, tuple(unreadable), converted)
-        return replace(self, members=(*members, new))
+    def with_files(self, files: Iterable[FileFacts]) -> Pattern:
+        """The same with what else is known of files; those in which no byte is wrong are added."""
+        members = {member.path: member for member in self.members}
+        for file in files:
+            nothing = MemberPattern(file.path, file.size, file.size, 0, 0, np.zeros(256, np.int64), 0, 0)
+            members[file.path] = replace(
+                members.get(file.path, nothing),
+                found=file.found, converted=file.converted, unreadable=file.unreadable,
+            )  # fmt: skip
+        return replace(self, members=tuple(members.values()))
 
 
 @dataclass
@@ -170,7 +175,8 @@ class PatternCollector:
         member.ones += int(np.bitwise_count(right).sum())
         member.bits += 8 * len(right)
         bits = np.bitwise_count(flips[wrong]).astype(np.int64)
-        self._positions += [_by_position(offset, flips & ~right), _by_position(offset, flips & right)]
+        up = _by_position(offset, flips & received)
+        self._positions += [up, _by_position(offset, flips) - up]
         clusters = cluster(wrong.astype(np.int64), bits)
         single = np.ones(len(wrong), bool)
         for begin, stop in zip(
@@ -219,7 +225,7 @@ class PatternCollector:
         return np.asarray(np.searchsorted(starts, places, side="right") - 1, np.int64)
 
     def finish(self, bytes_read: int) -> Pattern:
-        """The pattern, when everything was added; see `Pattern.with_file` for what it does not know."""
+        """The pattern, when everything was added; see `Pattern.with_files` for what it does not know."""
         starts = np.array([m.start for m in self._order], np.int64)
         places = np.concatenate([np.empty(0, np.int64), *self._places])
         values = np.concatenate([np.empty((2, 0), np.uint8), *self._values], axis=1)
@@ -313,17 +319,16 @@ def _sums(offset: int, received: Bytes, flips: Bytes) -> Integers:
 
 
 def _by_position(offset: int, flips: Bytes) -> Integers:
-    """int64[64]: set bits by position, of bytes from `offset` of the file on."""
-    whole = np.zeros(-(-(offset % 8 + len(flips)) // 8) * 8, np.uint8)
-    whole[offset % 8 :][: len(flips)] = flips
-    bits = np.unpackbits(whole, bitorder="little").reshape(-1, POSITIONS)
-    return np.asarray(bits.sum(axis=0, dtype=np.int64))
-
-
-def _lost(received: Bytes) -> Integers:
-    """The row of a piece whose right bytes are not known: wrong throughout, as far as one can tell."""
-    row = np.zeros((1, _FIRST + POSITIONS), np.int64)
-    row[0, [_WRONG, _UNKNOWN]] = len(received)
-    row[0, _ZEROS] = np.count_nonzero(received == 0)
-    row[0, _ONES] = np.count_nonzero(received == 0xFF)
-    return row
+    """int64[64]: set bits by position, of bytes from `offset` of the file on (a cell at the most)."""
+    places = np.flatnonzero(flips)
+    if len(places) < SPARSE:
+        bits = np.unpackbits(flips[places, None], axis=1, bitorder="little")
+        columns = 8 * ((offset + places[:, None]) % 8) + np.arange(8)
+        counts = np.bincount(columns.ravel(), weights=bits.ravel(), minlength=POSITIONS)
+    else:
+        whole = np.zeros(-(-(offset % 8 + len(flips)) // 8) * 8, np.uint8)
+        whole[offset % 8 :][: len(flips)] = flips
+        bits = np.unpackbits(whole, bitorder="little").reshape(-1, POSITIONS)
+        # A product of matrices is the fastest sum, and exact for so few.
+        counts = np.ones(len(bits), np.float32) @ bits.astype(np.float32)
+    return np.asarray(counts, np.int64)

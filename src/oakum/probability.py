@@ -220,6 +220,26 @@ def log_power(single: Floats, times: int) -> Floats:
     return total
 
 
+def log_occupancy(places: int, log_chance: float, times: int, size: int) -> Floats:
+    """How many of `places` are hit when each of so many tries hits one of them, any, with the given chance.
+
+    ln P(0), ..., P(size-2), P(size-1 or more); a place that is hit again counts once. One step a try:
+    from d places hit to d + 1 with the chance p (places - d) / places.
+    """
+    hit = np.arange(size)
+    with np.errstate(divide="ignore"):
+        more = log_chance + np.log(np.maximum(places - hit, 0) / places)
+    more[-1] = IMPOSSIBLE
+    stay = np.array([log_complement(m) for m in more])
+    logs = np.full(size, IMPOSSIBLE)
+    logs[0] = 0.0
+    for _ in range(times):
+        moved = logs[:-1] + more[:-1]
+        logs = logs + stay
+        logs[1:] = np.logaddexp(logs[1:], moved)
+    return logs
+
+
 def log_compound_poisson(rates: dict[int, float], size: int) -> Floats:
     """ln P(X = 0), ..., P(X = size-2), P(X >= size-1) where j is added `rates[j]` times on average.
 

@@ -1,4 +1,4 @@
-"""What the inner decoder makes of symbols, against brute force, published codes and a decoder that decodes."""
+"""What the inner decoder makes of symbols, against brute force, published codes and the real decoder."""
 
 from fractions import Fraction
 from math import comb, exp, log

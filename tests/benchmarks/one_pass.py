@@ -99,6 +99,13 @@ def lost_as_received(outer: OuterCode, odds: SymbolOdds) -> float:
     return float(binom.sf(outer.r // 2, outer.n, odds.wrong))
 
 
+def lost_erasing(outer: OuterCode, odds: SymbolOdds) -> float:
+    """The chance that 2 miscorrected + flagged > r in a column with the symbols of flagged words erased."""
+    m = np.arange(outer.n + 1)
+    flagged = (odds.flagged_right + odds.flagged_wrong) / (1 - odds.miscorrected)
+    return float(binom.pmf(m, outer.n, odds.miscorrected) @ binom.sf(outer.r - 2 * m, outer.n - m, flagged))
+
+
 def lost_in_one_pass(outer: OuterCode, odds: SymbolOdds) -> float:
     """The chance that a column is lost both as received and with all symbols of flagged words erased.
 

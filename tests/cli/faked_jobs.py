@@ -86,7 +86,7 @@ def oakum_fixture(monkeypatch: pytest.MonkeyPatch, capfdbinary: pytest.CaptureFi
         module = importlib.import_module(f"oakum.jobs.{command}")
         monkeypatch.setattr(module, command, job)
         if command == "protect":
-            monkeypatch.setattr(module, "protect_pipe", job)
+            monkeypatch.setattr(importlib.import_module("oakum.jobs.pipe"), "protect_pipe", job)
         status = run(arguments)
         captured = capfdbinary.readouterr()
         args, options = seen[0] if seen else ((), {})

@@ -28,6 +28,7 @@ def test_protect_hands_over_everything(oakum: Oakum) -> None:
         "depth": 65_536,
         "overwrite": True,
         "read_back": True,
+        "bag": False,
         "memory": 1024 * MIB,
         "jobs": 3,
     }
@@ -43,6 +44,7 @@ def test_protect_defaults(oakum: Oakum) -> None:
         "depth": None,
         "overwrite": False,
         "read_back": False,
+        "bag": False,
         "memory": 512 * MIB,
         "jobs": None,
     }

@@ -43,6 +43,14 @@ def protect(
         bool,
         typer.Option("--read-back", help="Read the new sidecar again and check it.", show_default=False),
     ] = False,
+    bag: Annotated[
+        bool,
+        typer.Option(
+            "--bag",
+            help="PATH lies in a bag (BagIt): make the sidecar one of its tag files.",
+            show_default=False,
+        ),
+    ] = False,
     json: Json = False,
     quiet: Quiet = False,
     memory: Memory = DEFAULT_MEMORY,
@@ -57,6 +65,8 @@ def protect(
             )
         if json and output == PIPE:
             raise UsageError("the sidecar and --json cannot both go to standard output; give --output a file")
+        if bag:
+            raise UsageError("--bag needs files that lie in a bag; what comes through a pipe lies nowhere")
         if read_back:
             raise UsageError("--read-back needs files; check what came through a pipe with oakum verify")
         with reporting(quiet) as progress:
@@ -65,7 +75,7 @@ def protect(
         if name is not None:
             raise UsageError("--name is for what comes through a pipe; files keep their own names")
         with reporting(quiet) as progress:
-            result = _protect_files(paths, output, read_back, options, progress)
+            result = _protect_files(paths, output, read_back, bag, options, progress)
     _report(result, as_json=json, quiet=quiet, on_stderr=output == PIPE)
 
 
@@ -81,7 +91,12 @@ class _Options:
 
 
 def _protect_files(
-    paths: list[Path], output: Path | None, read_back: bool, options: _Options, progress: Progress
+    paths: list[Path],
+    output: Path | None,
+    read_back: bool,
+    bag: bool,
+    options: _Options,
+    progress: Progress,
 ) -> ProtectResult:
     from oakum.jobs.protect import protect as job
 
@@ -94,6 +109,7 @@ def _protect_files(
         depth=None if options.depth in (None, "whole") else parse_size(options.depth),
         overwrite=options.overwrite,
         read_back=read_back,
+        bag=bag,
         memory=options.memory,
         jobs=options.jobs,
         progress=progress,

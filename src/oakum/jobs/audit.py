@@ -24,7 +24,7 @@ from oakum.jobs.unreadable import read_unreadable
 from oakum.jobs.verify import SetCheck, result_of
 from oakum.ledger import Entry, Ledger, LedgerError, Row, target_key
 from oakum.members import MemberHasher, MemberStream
-from oakum.patterns import Pattern, PatternCollector
+from oakum.patterns import FileFacts, Pattern, PatternCollector
 from oakum.pools import Pools
 from oakum.progress import Progress, Silent
 from oakum.results import CheckResult, Outcome
@@ -83,7 +83,7 @@ def audit(
     return AuditResult(
         begun, options.medium, tuple(results), time.monotonic() - begin, options.share,
         seed if options.share < 1 else None, options.counters, options.ledger if not book.note else None,
-        book.note, _trend(options, book.note),
+        book.note, _trend(options, book.note), overall(results),
     )  # fmt: skip
 
 
@@ -215,7 +215,7 @@ class AuditCheck(SetCheck):
         pattern = self.collector.finish(tally.totals.bits_read // 8)
         pattern = replace(pattern, unsteady=self.unsteady)
         named = {m.path for m in pattern.members} | set(unreadable)
-        looked = 0
+        files, looked = [], 0
         for member in self.opened.members.values():
             name = _name(member)
             if name not in named and not member.longer:
@@ -225,8 +225,8 @@ class AuditCheck(SetCheck):
             if found is not None and found != member.size and looked < MOST_CONVERTED:
                 looked += 1
                 converted = undone(self._whole(member), member.size, member.sha256)
-            pattern = pattern.with_file(name, member.size, found, converted, unreadable.get(name, ()))
-        return pattern
+            files.append(FileFacts(name, member.size, found, converted, tuple(unreadable.get(name, ()))))
+        return pattern.with_files(files)
 
     def _unreadable(self) -> dict[str, list[Range]]:
         """What could not be read, by member."""
@@ -277,7 +277,7 @@ class AuditCheck(SetCheck):
             flip_rate=rate(totals.bits_flipped_scattered, readable),
             burst_rate=rate(len(lengths), readable // 8),
             burst_lengths=tuple(lengths),
-            read_errors=sum(len(self._errors(m)) for m in self._unreadable().items()),
+            read_errors=sum(1 for _ in self._read_errors()),
             readings_differ=self.unsteady,
             lowest_margin=None if lost else 1.0 if weakest is None else weakest.margin,
             margin_at=None if lost or weakest is None else (weakest.window, weakest.block),
@@ -287,17 +287,40 @@ class AuditCheck(SetCheck):
             windows=len(self.opened.sections),
         )
 
-    def _errors(self, entry: tuple[str, list[Range]]) -> list[Range]:
-        """Ranges of a member that the medium did not give, though the file goes on past them."""
-        name, ranges = entry
-        member = next(m for m in self.opened.members.values() if _name(m) == name)
-        found = self._length_now(member)
-        return [] if found is None else [r for r in ranges if r[0] < found]
+    def _read_errors(self) -> Iterator[Range]:
+        """Ranges that the medium did not give, in files that go on past them."""
+        members = {_name(m): m for m in self.opened.members.values()}
+        for name, ranges in self._unreadable().items():
+            found = self._length_now(members[name])
+            yield from (r for r in ranges if found is not None and r[0] < found)
 
     def distribution(self, pattern: Pattern) -> Distribution:
         """Where the flips are."""
         up, down = (tuple(row) for row in pattern.positions.tolist())
         return Distribution(tuple(self._along.tolist()), (up, down))
+
+
+def overall(targets: Sequence[TargetAudit]) -> Statistics | None:
+    """The counts of all targets that were checked, added up; None where there are fewer than two."""
+    known = [t.statistics for t in targets if t.statistics is not None]
+    if len(known) < 2:
+        return None
+    flips, bursts = [s.flip_rate for s in known], [s.burst_rate for s in known]
+    margins = [s.lowest_margin for s in known]
+    size = sum(s.stream_bytes for s in known)
+    return Statistics(
+        bits_read=sum(s.bits_read for s in known),
+        sidecar_bits_read=sum(s.sidecar_bits_read for s in known),
+        flip_rate=rate(sum(r.count for r in flips), sum(r.exposure for r in flips)),
+        burst_rate=rate(sum(r.count for r in bursts), sum(r.exposure for r in bursts)),
+        burst_lengths=tuple(sorted(n for s in known for n in s.burst_lengths)),
+        read_errors=sum(s.read_errors for s in known),
+        readings_differ=sum(s.readings_differ for s in known),
+        lowest_margin=None if None in margins else min(m for m in margins if m is not None),
+        margin_at=None,
+        coverage=sum(s.coverage * s.stream_bytes for s in known) / size if size else 1.0,
+        stream_bytes=size,
+    )
 
 
 def rate(count: int, exposure: float) -> Rate:

@@ -20,7 +20,9 @@ class GroupReader:
         self.window = window
         self._first = blocks[0] * CELL
         self._length = blocks[-1] * CELL + window.g.width(blocks[-1]) - self._first
+        self._blocks = blocks
         self._strips: dict[int, tuple[Bytes, list[Range]]] = {}
+        self._inner: dict[int, tuple[Bytes, list[Range]]] = {}
 
     def strip(self, strip: int) -> tuple[Bytes, list[Range]]:
         """A strip's bytes over all blocks of the group, and what could not be read."""
@@ -34,6 +36,27 @@ class GroupReader:
                 data, faults = self.window.section.body((strip - g.k) * g.depth + start, self._length)
             self._strips[strip] = data, faults
         return self._strips[strip]
+
+    def inner(self, strip: int, block: int) -> tuple[Bytes, list[Range]]:
+        """The inner parity of one cell, and what of it could not be read.
+
+        That of a data strip lies together for all blocks of the group, that of a block's parity strips too.
+        """
+        g = self.window.g
+        if strip < g.k:
+            key, start = strip, g.inner_start(strip, self._blocks[0])
+            stop = g.inner_start(strip, self._blocks[-1]) + g.group(self._blocks[-1])
+            offset = g.inner_start(strip, block) - start
+        else:
+            key, start = -1 - block, g.data_inner + g.parity_inner_start(0, block)
+            stop = start + g.r * g.group(block)
+            offset = (strip - g.k) * g.group(block)
+        if key not in self._inner:
+            self._inner[key] = self.window.section.body(g.parity_bytes + start, stop - start)
+        data, faults = self._inner[key]
+        size = g.group(block)
+        here = [(max(a - offset, 0), min(b - offset, size)) for a, b in faults]
+        return data[offset : offset + size], [(a, b) for a, b in here if a < b]
 
     def block(self, number: int) -> _Received:
         """One block of the group."""
@@ -72,13 +95,9 @@ class _Received:
             return out, None
         lost: Mask | None = None
         for row, strip in enumerate(strips.tolist()):
-            if strip < g.k:
-                place = g.parity_bytes + g.inner_start(strip, b)
-            else:
-                place = g.parity_bytes + g.data_inner + g.parity_inner_start(strip - g.k, b)
             if strip < g.k and g.cell_number(strip, b) >= g.data_cells:
                 continue  # A virtual cell: zeros, and so is its inner parity.
-            out[row], faults = self._window.section.body(place, g.group(b))
+            out[row], faults = self._reader.inner(strip, b)
             for start, stop in faults:
                 lost = np.zeros(out.shape, bool) if lost is None else lost
                 lost[row, start:stop] = True

@@ -7,6 +7,7 @@ work unit.
 
 from __future__ import annotations
 
+import errno
 import os
 import stat
 from bisect import bisect_left, bisect_right
@@ -22,7 +23,7 @@ from numpy.typing import NDArray
 
 from oakum.digests import cell_digests
 from oakum.errors import CannotCheck, FormatError
-from oakum.files import FileBytes
+from oakum.files import FileBytes, reason
 from oakum.geometry import CELL, Geometry
 from oakum.jobs.common import absolute
 from oakum.members import Folder, MemberHasher, MemberStream, Span
@@ -68,11 +69,22 @@ class KnownMember:
     in_the_way: bool = False
     """Something else stands in its place."""
 
+    covered: int = 0
+    """Bytes of it that the sections at hand protect."""
+
+    there: int | None = None
+    """Bytes that its file has; None where that was not looked at."""
+
     longer: int = 0
     edited: bool = False
     checked: bool = True
     presumed: bool = False
     """Its SHA-256 was not asked for, and no digest of a cell speaks against it."""
+
+    @property
+    def hopeless(self) -> bool:
+        """Whether some of it is neither in the file nor protected by any section at hand."""
+        return self.there is not None and self.there + self.covered < self.size
 
 
 class OpenBytes(ByteSource, Protocol):
@@ -116,12 +128,16 @@ class ProtectedSet:
         return MemberStream(self.folder, spans, known_bad)
 
     def read(self, member: KnownMember) -> Iterator[tuple[int, Bytes, list[Range]]]:
-        """All of a member's bytes as they are, piece by piece: where, which, and what could not be read."""
+        """All of a member's bytes as they are, piece by piece: where, which, and what could not be read.
+
+        It ends soon after the end of the file, however long the sidecar says that the member is.
+        """
         path = member.piece.path
         known_bad = self.unreadable.get(path, ())
         stream = self.stream([Span(path, 0, member.size)], member.stream_start, known_bad)
         try:
-            for start in range(0, member.size, CHUNK):
+            there = member.size if member.there is None else member.there
+            for start in range(0, min(member.size, there + 1), CHUNK):
                 data = np.empty(min(CHUNK, member.size - start), np.uint8)
                 yield start, data, stream.read_into(start, data.data)
         finally:
@@ -214,6 +230,7 @@ def _put_together(
             known.size = max(known.size, piece.size)
             if piece.ends:
                 known.sha256 = piece.digest
+            known.covered += piece.length
             place += piece.length
     return members
 
@@ -239,16 +256,17 @@ def _look_at(folder: Folder, member: KnownMember) -> None:
     try:
         found = folder.stat(piece.path)
     except (FileNotFoundError, NotADirectoryError):
-        member.absent, member.fault = True, "is not there"
+        member.absent, member.fault, member.there = True, "is not there", 0
         return
     except OSError as error:
-        if isinstance(error, PermissionError):
-            raise CannotCheck(f"{os.fsdecode(piece.path)} cannot be looked at: permission denied") from None
+        if error.errno != errno.ELOOP:
+            raise CannotCheck(f"{os.fsdecode(piece.path)} cannot be looked at: {reason(error)}") from None
+        member.there = 0
         member.absent, member.fault = True, "is not there; a link stands in its way"
         return
     kinds = {Kind.FILE: stat.S_ISREG, Kind.FOLDER: stat.S_ISDIR, Kind.LINK: stat.S_ISLNK}
     if not kinds[piece.kind](found.st_mode):
-        member.absent, member.in_the_way = True, True
+        member.absent, member.in_the_way, member.there = True, True, 0
         member.fault = f"is no {piece.kind.name.lower()} any more"
     elif piece.kind is Kind.LINK:
         member.right = folder.readlink(piece.path) == piece.target
@@ -256,6 +274,7 @@ def _look_at(folder: Folder, member: KnownMember) -> None:
     elif piece.kind is Kind.FOLDER:
         member.right = True
     else:
+        member.there = found.st_size
         member.edited = found.st_mtime_ns > piece.modified_ns > 0
         member.longer = max(0, found.st_size - member.size) if member.sha256 is not None else 0
         if found.st_size < member.size:

@@ -67,6 +67,8 @@ def find_sidecar(target: Path, sidecar: Path | None) -> Path:
     beside = beside.with_name(beside.name + SUFFIX)
     if beside.is_file():
         return beside
+    if (target / "bagit.txt").is_file() and (target / f"data{SUFFIX}").is_file():
+        return absolute(target / f"data{SUFFIX}")  # A bag whose payload is protected.
     if not os.path.lexists(target):
         raise CannotCheck(
             f"neither {target} nor a sidecar of it is there; check the path, or that the medium is mounted"

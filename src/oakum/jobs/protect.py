@@ -17,6 +17,7 @@ from oakum.encoding import Changed, Kernels, ReadingPlan, Unreadable, WindowEnco
 from oakum.errors import CannotCheck, UsageError
 from oakum.files import NewFile
 from oakum.geometry import Geometry, Window, plan_windows
+from oakum.jobs.bag import into_bag, refuse_in_bag
 from oakum.jobs.common import (
     DEFAULT_MEMORY,
     absolute,
@@ -45,11 +46,14 @@ def protect(
     depth: int | None = None,
     overwrite: bool = False,
     read_back: bool = False,
+    bag: bool = False,
     memory: int = DEFAULT_MEMORY,
     jobs: int | None = None,
     progress: Progress = Silent(),
 ) -> ProtectResult:
     """Protect files and folders with one sidecar.
+
+    With `bag` the paths lie in a bag, and the sidecar becomes one of its tag files (see `oakum.jobs.bag`).
 
     `depth` in bytes cuts the stream into windows; None makes the whole stream one. `memory` bounds the
     buffers, in bytes. Raises UsageError for what cannot be meant and CannotCheck for what cannot be read or
@@ -61,7 +65,12 @@ def protect(
     if not paths:
         raise UsageError("name at least one file or folder to protect")
     places = [absolute(path) for path in paths]
-    sidecar = sidecar_path(paths, output)
+    holder = None
+    if bag:
+        holder, places, sidecar = into_bag(places, None if output is None else absolute(output))
+    else:
+        sidecar = sidecar_path(paths, output)
+        refuse_in_bag(sidecar)
     _refuse_inside(sidecar, places)
     root = members_root(places, sidecar)
     members, notes = collect(places, root)
@@ -79,6 +88,8 @@ def protect(
             folder.close()
         progress.phase("bringing the sidecar to the medium", None)
         file.commit(size)
+    if holder is not None:
+        holder.enter(sidecar)
     if read_back:
         _read_back(sidecar, root, memory, jobs, progress)
     return ProtectResult(

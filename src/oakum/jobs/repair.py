@@ -287,7 +287,7 @@ class Mending:
     def _is_right(self, copy: Copy, progress: Progress) -> bool:
         if copy.file is None:
             return True
-        if copy.member.sha256 is None:
+        if copy.member.sha256 is None or copy.member.hopeless:
             return False
         digest = hashlib.sha256()
         for start in range(0, copy.member.size, COPY_STEP):

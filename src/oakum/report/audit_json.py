@@ -18,6 +18,7 @@ def audit_document(result: AuditResult) -> Document:
         "seed": result.seed,
         "counters": dict(result.counters),
         "targets": [_target(target) for target in result.targets],
+        "overall": None if result.overall is None else _statistics(result.overall),
         "ledger": None if result.ledger is None else shown(str(result.ledger)),
         "ledger_error": shown(result.ledger_note) or None,
         "trend": None if result.trend is None else _trend(result.trend),

@@ -9,6 +9,7 @@ from __future__ import annotations
 import threading
 from collections import Counter, OrderedDict
 from collections.abc import Iterator
+from contextlib import suppress
 from dataclasses import dataclass, replace
 from functools import cached_property
 from typing import Protocol
@@ -23,10 +24,12 @@ from oakum.sidecar.bootstrap import (
     HEAD_BYTES,
     MARKER,
     MARKER_ERRORS,
+    RECORD_BYTES,
     Bootstrap,
     decode,
     decode_all,
     encode,
+    unpack,
 )
 from oakum.sidecar.frames import Content, Rows, check_rows, correct, payload, read_plain, seal
 from oakum.sidecar.layout import (
@@ -228,7 +231,7 @@ def find_sections(source: ByteSource) -> list[Section]:
         head = _head_at(source, place + TEXT_BYTES) or next(_scan(source, place), None)
         if head is None:
             break
-        section = Section(source, head)
+        section = Section(source, _most_common(source, head))
         sections.setdefault(section.bootstrap.window, section)
         place = max(section.end, head.place + 1)
         if section.bootstrap.last:
@@ -237,6 +240,21 @@ def find_sections(source: ByteSource) -> list[Section]:
         raise FormatError("this is not an oakum sidecar, or nothing of it can be recognised any more")
     owner, _ = Counter(s.bootstrap.set_identity for s in sections.values()).most_common(1)[0]
     return [s for _, s in sorted(sections.items()) if s.bootstrap.set_identity == owner]
+
+
+def _most_common(source: ByteSource, head: Head) -> Head:
+    """The head of a section that most of its stretches have: one of them may be from another sidecar."""
+    found: Counter[Bootstrap] = Counter()
+    for stretch in range(head.layout.stretches):
+        place = head.base + head.layout.stretch_start(stretch) + len(MARKER)
+        with suppress(FormatError):
+            record = unpack(source.read(place, RECORD_BYTES)[0].tobytes())
+            if record is not None and record.stretch == stretch:
+                found[replace(record, stretch=head.bootstrap.stretch)] += 1
+    best = found.most_common(1)
+    if not best or best[0][0] == head.bootstrap or found[head.bootstrap] == best[0][1]:
+        return head
+    return _head(source, head.place, best[0][0])
 
 
 def _head_at(source: ByteSource, place: int) -> Head | None:

@@ -21,6 +21,8 @@ def audit_text(result: AuditResult) -> str:
     last: list[Section] = []
     if len(result.targets) > 1:
         last.append(paragraph(summary_line(result)))
+    if result.overall is not None:
+        last.append(_rates(result.overall, "All targets together"))
     if result.ledger_note:
         last.append(paragraph(f"No entry in the ledger: {safe(result.ledger_note)}."))
     elif result.ledger is not None:
@@ -74,7 +76,7 @@ def _finding(number: int, finding: CauseFinding) -> Section:
     return ["  " + line for line in lines]
 
 
-def _rates(s: Statistics) -> Section:
+def _rates(s: Statistics, title: str = "What this says of the medium") -> Section:
     margin = "none, some is beyond correction" if s.lowest_margin is None else percent(s.lowest_margin)
     if s.margin_at is not None:
         margin += " (window {:,}, block {:,})".format(*s.margin_at)
@@ -98,7 +100,7 @@ def _rates(s: Statistics) -> Section:
     ]
     if s.coverage < 1:
         rows.append(("share of the stream read", percent(s.coverage, 1)))
-    return ["What this says of the medium (with 95 % intervals)", *pairs(rows)]
+    return [f"{title} (with 95 % intervals)", *pairs(rows)]
 
 
 def rate_words(rate: Rate, unit: float = 1.0) -> str:
