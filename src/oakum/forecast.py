@@ -211,7 +211,7 @@ class _Forecast:
         return hits
 
     def _counted_hits(self, family: _Family, number: int, size: int) -> Floats:
-        """What a known number of runs takes; those no longer than a strip hit one symbol of a column at most."""
+        """What a known number of runs takes: no more than one symbol of a column each, where they are short."""
         if number <= MANY and not any(more > 0 for more in family.crossing):
             chance = family.single.get(1, 0.0)
             return log_occupancy(self._exposed, float(np.log(chance)) if chance else IMPOSSIBLE, number, size)

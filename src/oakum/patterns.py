@@ -174,22 +174,24 @@ class PatternCollector:
         member.wrong_bytes += len(wrong)
         member.ones += int(np.bitwise_count(right).sum())
         member.bits += 8 * len(right)
-        bits = np.bitwise_count(flips[wrong]).astype(np.int64)
-        up = _by_position(offset, flips & received)
-        self._positions += [up, _by_position(offset, flips) - up]
-        clusters = cluster(wrong.astype(np.int64), bits)
-        single = np.ones(len(wrong), bool)
-        for begin, stop in zip(
-            clusters.start[clusters.burst].tolist(), clusters.stop[clusters.burst].tolist(), strict=True
-        ):
-            single &= (wrong < begin) | (wrong >= stop)
-            here = slice(begin, stop)
-            self._add_run(
-                np.array([[begin, stop]]) + start + offset, _sums(offset + begin, received[here], flips[here])
-            )
-        wrong = wrong[single]
+        wrong = wrong[self._take_runs(start + offset, offset, received, flips, wrong)]
         if len(wrong):
             self._add_single(start + offset + wrong, np.stack([received[wrong], right[wrong]]))
+
+    def _take_runs(
+        self, place: int, offset: int, received: Bytes, flips: Bytes, wrong: Integers
+    ) -> NDArray[np.bool_]:
+        """Keep the dense stretches of a piece at `place` of the stream; which wrong bytes are in none."""
+        single = np.ones(len(wrong), bool)
+        if DENSITY * len(wrong) <= LEAST_LENGTH:
+            return single
+        clusters = cluster(wrong.astype(np.int64), np.bitwise_count(flips[wrong]).astype(np.int64))
+        clusters = clusters[clusters.burst]
+        for begin, stop in zip(clusters.start.tolist(), clusters.stop.tolist(), strict=True):
+            single &= (wrong < begin) | (wrong >= stop)
+            sums = _sums(offset + begin, received[begin:stop], flips[begin:stop])
+            self._add_run(np.array([[begin, stop]]) + place, sums)
+        return single
 
     def _add_single(self, places: Integers, values: Bytes) -> None:
         room = max(0, MOST_PLACES - self._kept)
@@ -324,11 +326,18 @@ def _by_position(offset: int, flips: Bytes) -> Integers:
     if len(places) < SPARSE:
         bits = np.unpackbits(flips[places, None], axis=1, bitorder="little")
         columns = 8 * ((offset + places[:, None]) % 8) + np.arange(8)
-        counts = np.bincount(columns.ravel(), weights=bits.ravel(), minlength=POSITIONS)
-    else:
-        whole = np.zeros(-(-(offset % 8 + len(flips)) // 8) * 8, np.uint8)
-        whole[offset % 8 :][: len(flips)] = flips
-        bits = np.unpackbits(whole, bitorder="little").reshape(-1, POSITIONS)
-        # A product of matrices is the fastest sum, and exact for so few.
-        counts = np.ones(len(bits), np.float32) @ bits.astype(np.float32)
-    return np.asarray(counts, np.int64)
+        return np.bincount(columns.ravel()[bits.ravel() > 0], minlength=POSITIONS)
+    whole = np.zeros(-(-(offset % 8 + len(flips)) // 8) * 8, np.uint8)
+    whole[offset % 8 :][: len(flips)] = flips
+    bits = np.unpackbits(whole, bitorder="little").reshape(-1, POSITIONS)
+    # A product of matrices is the fastest sum, and exact for so few.
+    return np.asarray(np.ones(len(bits), np.float32) @ bits.astype(np.float32), np.int64)
+
+
+def _lost(received: Bytes) -> Integers:
+    """The row of a piece whose right bytes are not known: wrong throughout, as far as one can tell."""
+    row = np.zeros((1, _FIRST + POSITIONS), np.int64)
+    row[0, [_WRONG, _UNKNOWN]] = len(received)
+    row[0, _ZEROS] = np.count_nonzero(received == 0)
+    row[0, _ONES] = np.count_nonzero(received == 0xFF)
+    return row
