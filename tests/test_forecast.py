@@ -1,6 +1,7 @@
 """Forecasts against drawing the same damage, and against what the geometry guarantees."""
 
 from dataclasses import replace
+from itertools import pairwise
 from math import comb, exp, inf, log
 
 import numpy as np
@@ -12,7 +13,7 @@ from oakum.algebra.outcomes import symbol_chances
 from oakum.channel import TB, Channel, Runs, draw
 from oakum.forecast import Shape, forecast
 from oakum.geometry import CELL
-from oakum.measured import MeasuredCurve
+from oakum.measured import MeasuredCurve, measured_curve
 from oakum.probability import ColumnChances
 
 SHELF, PLAIN = resolve_code("shelf"), resolve_code("plain")
@@ -156,7 +157,10 @@ def test_depth_bounds_what_a_burst_costs() -> None:
     whole = forecast(Shape.of(SHELF, 10**12), burst)
     windows = forecast(Shape.of(SHELF, 10**12, 1 << 20), burst)
     assert windows.stream[1] > whole.stream[1]
-    assert Shape.of(SHELF, 10**12, 1 << 20).guaranteed_burst == 32 * (1 << 20) - 2 * CELL
+    full = Shape.of(SHELF, 9 * 223 << 20, 1 << 20)
+    assert full.guaranteed_burst == 32 * (1 << 20) - 2 * CELL
+    # A short last window holds less, wherever the burst may fall.
+    assert Shape.of(SHELF, (9 * 223 << 20) + 10**7, 1 << 20).guaranteed_burst < full.guaranteed_burst
 
 
 # ---- measured curves
@@ -177,7 +181,7 @@ def test_below_the_measured_rates_only_the_limit_holds() -> None:
 def test_between_measured_rates_the_estimate_rises() -> None:
     rates = np.linspace(0.0101, 0.0129, 20)
     found = [CURVE.estimate(rate) for rate in rates]
-    assert all(a is not None and b is not None and a < b for a, b in zip(found, found[1:], strict=False))
+    assert all(a is not None and b is not None and a < b for a, b in pairwise(found))
     assert CURVE.estimate(0.012) == pytest.approx(37.5 / 101)
 
 
@@ -190,3 +194,23 @@ def test_binomial_coefficients_are_not_forgotten() -> None:
     # RS(63,55) without an inner code at a tiny rate: C(63, 5) (8 p)^5.
     loss = forecast(Shape.of(resolve_code("RS(63,55)"), 10**6), Channel(1e-12))
     assert loss.column == pytest.approx(log(comb(63, 5)) + 5 * log(8e-12), rel=1e-9)
+
+
+@pytest.mark.parametrize("name", ["slim", "shelf", "stout"])
+def test_the_named_codes_come_with_measured_curves(name: str) -> None:
+    curve = measured_curve(resolve_code(name), CELL)
+    assert curve is not None and curve.width == CELL
+    rates = [rate for rate, _, _ in curve.points]
+    assert rates == sorted(set(rates))
+    assert all(0 <= lost <= blocks and blocks >= 20 for _, blocks, lost in curve.points)
+    assert measured_curve(resolve_code(name), CELL + 1) is None
+
+
+def test_measured_curves_only_ever_lower_the_bound() -> None:
+    shape = Shape.of(SHELF, 100 * 223 * CELL)
+    loss = forecast(shape, Channel(0.0115))
+    assert loss.stream[1] == pytest.approx(0, abs=1e-6)  # one pass loses everything
+    assert loss.measured is not None and loss.at_most == loss.measured
+    # With bursts beside the flips nothing was measured.
+    assert forecast(shape, Channel(0.0115, (Runs(((1000, 1.0),), 1.0),))).measured is None
+    assert forecast(shape, Channel(1e-4)).at_most < -50

@@ -14,6 +14,7 @@ from pathlib import Path
 from xml.etree import ElementTree
 
 import pytest
+from support import with_flips
 
 from oakum import ledger as ledgers
 from oakum.audits import TargetAudit
@@ -197,6 +198,41 @@ def test_a_disk_that_takes_no_more(tmp_path: Path) -> None:
         assert db.execute("PRAGMA integrity_check").fetchone() == ("ok",)
 
 
+@pytest.mark.parametrize(
+    "change",
+    [
+        "UPDATE audits SET begun = 'long ago'",
+        "UPDATE audits SET begun = '2031-05-04T12:00:00'",
+        "UPDATE targets SET findings = '[{'",
+        "UPDATE targets SET findings = '[1]'",
+        "UPDATE targets SET burst_lengths = '[-1]'",
+        "UPDATE targets SET burst_lengths = '7'",
+    ],
+)
+def test_entries_that_make_no_sense(tmp_path: Path, change: str) -> None:
+    path = filled(tmp_path / "l")
+    with sqlite3.connect(path) as db:
+        db.execute(change)
+    db.close()
+    with Ledger(path, write=False) as ledger, pytest.raises(LedgerError, match="makes no sense"):
+        ledger.entries()
+
+
+def test_a_ledger_with_flipped_bits_is_refused_in_a_sentence(tmp_path: Path) -> None:
+    """Whatever the flips do, the answer is entries or a `LedgerError`, never another exception."""
+    good = filled(tmp_path / "l").read_bytes()
+    outcomes = set()
+    for seed in range(60):
+        (tmp_path / "l").write_bytes(with_flips(good, 200, seed))
+        try:
+            with Ledger(tmp_path / "l", write=False) as ledger:
+                ledger.entries()
+            outcomes.add("read")
+        except LedgerError:
+            outcomes.add("refused")
+    assert "refused" in outcomes
+
+
 def test_no_ledger_to_read(tmp_path: Path) -> None:
     with pytest.raises(LedgerError, match="there is no ledger"):
         Ledger(tmp_path / "l", write=False)
@@ -217,12 +253,13 @@ def test_only_the_latest_audit_of_the_same_targets_is_taken_up_again(tmp_path: P
     with Ledger(tmp_path / "l", write=True) as ledger:
         number = begin(ledger, targets=("x", "y"))
         ledger.add(number, unchecked("x"))
-        entry = ledger.interrupted("M", [Path("x"), Path("y")])
+        entry = ledger.interrupted("M", [Path("x"), Path("y")], 1.0)
         assert entry is not None and entry.audit["id"] == number
-        assert ledger.interrupted("M", [Path("x")]) is None
-        assert ledger.interrupted("N", [Path("x"), Path("y")]) is None
+        assert ledger.interrupted("M", [Path("x")], 1.0) is None
+        assert ledger.interrupted("M", [Path("x"), Path("y")], 0.5) is None
+        assert ledger.interrupted("N", [Path("x"), Path("y")], 1.0) is None
         ledger.finish(number)
-        assert ledger.interrupted("M", [Path("x"), Path("y")]) is None
+        assert ledger.interrupted("M", [Path("x"), Path("y")], 1.0) is None
 
 
 # -- exports -------------------------------------------------------------------------------------------

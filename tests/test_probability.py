@@ -62,7 +62,7 @@ def test_tails_far_below_the_smallest_float() -> None:
 @pytest.mark.parametrize(("t", "exact"), [(8, "2.08533645e-05"), (16, "2.60888880e-14")])
 def test_miscorrection_of_a_random_word_is_about_one_in_t_factorial(t: int, exact: str) -> None:
     # McEliece and Swanson, IEEE Trans. Inform. Theory 32, 1986 (computed). The share of all words within t of
-    # a codeword is V(255, t) 256^-2t; V(255, t) 256^-255 is the chance of at most t symbols that are not zero.
+    # a codeword is V(255, t) 256^-2t; V(255, t) 256^-255 is the chance of at most t symbols not zero.
     share = exp(log_binomial_tail(255, log(1 / 256), 255 - t) + (255 - 2 * t) * log(256))
     assert f"{share:.8e}" == exact
 

@@ -162,7 +162,7 @@ def _rewriting(rest: _Rest, number: int, member: MemberPattern) -> str:
     if not unknown and int(runs.bits[mine].sum()) < 1.5 * wrong:
         return ""  # Another byte differs in about four bits; one or so a byte is a bit that fails.
     entropy, random = _entropy(member.histogram)
-    share = f"{wrong / length:.0%} of its bytes differ, from the first to the last"
+    share = f"{100 * (wrong / length):.0f} % of its bytes differ, from the first to the last"
     if entropy > random - 0.05:
         return (
             f"{share}, and what is there now looks random ({entropy:.2f} bits a byte), as encrypted data do"
@@ -228,7 +228,9 @@ def _past_offset(rest: _Rest) -> Iterator[CauseFinding]:
         shift = (
             f"; the file is {abs(change):,} bytes {'longer' if change > 0 else 'shorter'}" if change else ""
         )
-        evidence = f"from byte {start:,} on, {wrong / length:.0%} of the {length:,} bytes are wrong{shift}"
+        evidence = (
+            f"from byte {start:,} on, {100 * (wrong / length):.0f} % of the {length:,} bytes are wrong{shift}"
+        )
         found.append((number, evidence, rest.take(last)))
     yield from _merged(rest, Cause.PAST_OFFSET, found, 8.0, "are wrong from some byte on")
 
@@ -300,7 +302,7 @@ def _overwritten(rest: _Rest) -> Iterator[CauseFinding]:
         return
     longest = int(length[chosen].max())
     evidence = (
-        f"{_runs(int(chosen.sum()), 'dense ')}, the longest of {longest:,} bytes, at no common boundary"
+        f"{_runs(int(chosen.sum()), 'dense ')} of up to {longest:,} bytes, at no common boundary"
     )
     names = tuple(rest.pattern.members[i].path for i in np.unique(runs.owner[chosen]).tolist())
     yield _finding(Cause.RUNS, float(weight[chosen].max()), evidence, rest.take(chosen), names)
@@ -391,7 +393,7 @@ def _direction(rest: _Rest) -> Iterator[CauseFinding]:
     if weight < LEAST_WEIGHT or share - expected < 0.1:
         return
     way = "from 0 to 1" if upwards else "from 1 to 0"
-    evidence = f"{count:,} of {total:,} scattered flips are {way}; chance would give {expected:.0%}"
+    evidence = f"{count:,} of {total:,} scattered flips are {way}; chance would give {100 * expected:.0f} %"
     yield _finding(Cause.DIRECTION, weight, evidence, rest.take(single=rest.single))
 
 

@@ -212,7 +212,7 @@ class NewFile:
         self.path = path
         self._overwrite = overwrite
         self._advice = advice
-        self._open_folder = open_folder or self._open_parent
+        self._folder_opener = open_folder
         self._name = os.fsencode(path.name)
         self._temporary = temporary_name(self._name)
         self._folder = self._fd = -1
@@ -234,7 +234,9 @@ class NewFile:
             self.discard()
             raise
 
-    def _open_parent(self) -> int:
+    def _open_folder(self) -> int:
+        if self._folder_opener is not None:
+            return self._folder_opener()
         return os.open(self.path.parent, os.O_RDONLY | os.O_DIRECTORY | os.O_CLOEXEC)
 
     def _create(self) -> None:
@@ -282,10 +284,12 @@ class NewFile:
         if self._fd < 0:
             if self._folder < 0:
                 self._folder = self._open_folder()
-            self._fd = os.open(self._temporary, os.O_RDWR | os.O_CLOEXEC | os.O_NOFOLLOW, dir_fd=self._folder)
-            if _identity(self._fd) != self._identity:
+            fd = os.open(self._temporary, os.O_RDWR | os.O_CLOEXEC | os.O_NOFOLLOW, dir_fd=self._folder)
+            if _identity(fd) != self._identity or not try_lock(fd):  # It was taken for a leftover meanwhile.
+                let_go(fd)
+                self._begun = False
                 raise self._in_use()
-            self._lock()
+            self._fd = fd
         return self._fd
 
     def park(self) -> None:
@@ -381,9 +385,12 @@ class NewFile:
                 return
         os.rename(self._temporary, self._name, src_dir_fd=here, dst_dir_fd=here)
 
-    def _is_ours(self) -> bool:
-        """Whether the temporary name still stands for the file that was made here."""
-        found = os.stat(self._temporary, dir_fd=self._folder, follow_symlinks=False)
+    def _is_ours(self, *, otherwise: bool = False) -> bool:
+        """Whether the temporary name still stands for our file; `otherwise` where that is unknown."""
+        try:
+            found = os.stat(self._temporary, dir_fd=self._folder, follow_symlinks=False)
+        except OSError:
+            return otherwise
         return (found.st_dev, found.st_ino) == self._identity
 
     def discard(self) -> None:
@@ -395,7 +402,7 @@ class NewFile:
                     self._folder = self._open_folder()
                 if self._identity == (-1, -1):  # A signal came while it was made.
                     self._take_away_leftover()
-                elif self._fd >= 0 or self._is_ours():  # Nobody takes away a file that is locked.
+                elif self._is_ours(otherwise=self._fd >= 0):
                     os.unlink(self._temporary, dir_fd=self._folder)
         self._close()
 

@@ -24,7 +24,7 @@ from oakum.algebra.concatenated import ConcatenatedCode
 from oakum.algebra.inner import InnerCode
 from oakum.algebra.outcomes import Floats, log_sum, symbol_chances
 from oakum.channel import Channel, Runs
-from oakum.geometry import CELL, whole_depth
+from oakum.geometry import CELL, whole_depth, window_depth
 from oakum.measured import MeasuredCurve, measured_curve
 from oakum.probability import (
     IMPOSSIBLE,
@@ -48,7 +48,10 @@ MANY = 5000
 
 @dataclass(frozen=True)
 class Shape:
-    """A stream as a code cuts it: its length, the depth of its windows, how many there are."""
+    """A stream as a code cuts it: its length, the depth of its windows, how many there are.
+
+    The last window may be shorter than the others, and then its depth is less too.
+    """
 
     code: ConcatenatedCode
     length: int
@@ -64,29 +67,67 @@ class Shape:
         return Shape(code, length, depth, -(-length // (code.outer.k * depth)))
 
     @property
-    def columns(self) -> int:
-        """Columns of all windows."""
-        return self.windows * self.depth
+    def alike(self) -> list[Windows]:
+        """The windows in groups of one depth."""
+        k = self.code.outer.k
+        rest = self.length - (self.windows - 1) * k * self.depth
+        last = Windows(self.code, window_depth(rest, k, self.depth), 1)
+        if last.depth == self.depth:
+            return [Windows(self.code, self.depth, self.windows)]
+        return [Windows(self.code, self.depth, self.windows - 1), last] if self.windows > 1 else [last]
 
     @property
     def blocks(self) -> int:
         """Blocks of all windows."""
-        return self.windows * -(-self.depth // CELL)
+        return sum(windows.blocks for windows in self.alike)
+
+    @property
+    def guaranteed_burst(self) -> int:
+        """The longest lost piece, in bytes, that is put right wherever it lies: r S less two cells."""
+        least = min(windows.depth for windows in self.alike)
+        return max(0, self.code.outer.r * least - 2 * CELL)
+
+
+@dataclass(frozen=True)
+class Windows:
+    """Some windows of one depth."""
+
+    code: ConcatenatedCode
+    depth: int
+    number: int
+
+    @property
+    def columns(self) -> int:
+        """Columns of all of them."""
+        return self.number * self.depth
+
+    @property
+    def blocks(self) -> int:
+        """Blocks of all of them."""
+        return self.number * -(-self.depth // CELL)
 
     @property
     def width(self) -> int:
         """Columns of a full block."""
         return min(CELL, self.depth)
 
-    @property
-    def guaranteed_burst(self) -> int:
-        """The longest lost piece, in bytes, that is put right wherever it lies: r S less two cells."""
-        return max(0, self.code.outer.r * self.depth - 2 * CELL)
-
 
 def forecast(shape: Shape, channel: Channel) -> Loss:
-    """The chances of loss when a stream of this shape is read after the channel's years."""
-    return _Forecast(shape, channel).loss()
+    """The chances of loss when a stream of this shape is read after the channel's years.
+
+    `column` and `block` are those of the likeliest to be lost where windows differ.
+    """
+    exposed = shape.code.outer.k if channel.spare_sidecar else shape.code.outer.n
+    total = sum(exposed * windows.columns for windows in shape.alike)
+    parts = [_Forecast(windows, channel, shape.length, exposed, total).loss() for windows in shape.alike]
+    measured = [part.measured for part in parts if part.measured is not None]
+    worst = max(parts, key=lambda part: part.column)
+    return Loss(
+        worst.column,
+        (max(p.block[0] for p in parts), max(p.block[1] for p in parts)),
+        (max(p.stream[0] for p in parts), _capped(*(p.stream[1] for p in parts))),
+        _capped(*measured) if len(measured) == len(parts) else None,
+    )
 
 
 @dataclass(frozen=True, eq=False)
@@ -114,11 +155,16 @@ class _Family:
 
 @dataclass(frozen=True)
 class _Forecast:
-    shape: Shape
+    """The forecast for windows of one depth; `exposed` strips of them and `total` bytes in all are struck."""
+
+    windows: Windows
     channel: Channel
+    length: int
+    exposed: int
+    total: int
 
     def loss(self) -> Loss:
-        s, r = self.shape, self.shape.code.outer.r
+        s, r = self.windows, self.windows.code.outer.r
         hits = self._hits
         by_flips, in_block = IMPOSSIBLE, IMPOSSIBLE
         for taken in np.flatnonzero(hits[: r + 1] > hits.max() - 800).tolist():
@@ -137,25 +183,19 @@ class _Forecast:
         stream = (
             max(log_any(flips_alone, s.columns // self._apart), swamped, block[0]),
             _capped(
-                in_block + np.log(s.blocks), swamped + np.log(s.windows), self._crossings + np.log(s.windows)
+                in_block + np.log(s.blocks), swamped + np.log(s.number), self._crossings + np.log(s.number)
             ),
         )
         return Loss(column, _ordered(column, block), _ordered(column, stream), self._measured())
 
     @cached_property
-    def _exposed(self) -> int:
-        """Strips that the channel reaches."""
-        outer = self.shape.code.outer
-        return outer.k if self.channel.spare_sidecar else outer.n
-
-    @cached_property
     def _columns(self) -> ColumnChances:
-        return _column_chances(self._exposed, self.shape.code.inner, self.channel.final_flip_rate)
+        return _column_chances(self.exposed, self.windows.code.inner, self.channel.final_flip_rate)
 
     @property
     def _apart(self) -> int:
         """Columns so far apart share no word."""
-        return max(1, self.shape.code.inner.m)
+        return max(1, self.windows.code.inner.m)
 
     @cached_property
     def _ceiling(self) -> float:
@@ -165,31 +205,29 @@ class _Forecast:
     # -- runs of damage
 
     @cached_property
-    def _total(self) -> float:
-        """Bytes that runs fall on: the strips of all windows (the rest of the sidecar is left out)."""
-        return float(self.shape.windows * self._exposed * self.shape.depth)
-
-    @cached_property
     def _families(self) -> list[_Family]:
-        lost = self.channel.lost_run(self.shape.length)
+        lost = self.channel.lost_run(self.length)
         all_runs = (*self.channel.runs, *([lost] if lost else []))
         return [self._family(runs) for runs in all_runs if runs.count or runs.per_tb_year]
 
     def _family(self, runs: Runs) -> _Family:
         """How runs of one kind fall on a window: one of a S + b bytes takes a symbols of every column and one
         more of b columns in S; it concerns a window when it starts in it or runs into it."""
-        window = self._exposed * self.shape.depth
+        window = self.exposed * self.windows.depth
         single: dict[int, float] = {}
         crossing: dict[int, float] = {}
         for length, share in runs.shares:
-            more, rest = divmod(length, self.shape.depth)
-            reach = share * min(1.0, (window + (length if self.shape.windows > 1 else 0)) / self._total)
+            more, rest = divmod(length, self.windows.depth)
+            reach = share * min(1.0, (window + (length if self.total > window else 0)) / self.total)
             if not rest:  # Whole strips: the last of them is the one that is added.
-                more, rest = more - 1, self.shape.depth
-            for strips, part in ((more, 1 - rest / self.shape.depth), (more + 1, rest / self.shape.depth)):
+                more, rest = more - 1, self.windows.depth
+            for strips, part in (
+                (more, 1 - rest / self.windows.depth),
+                (more + 1, rest / self.windows.depth),
+            ):
                 single[strips] = single.get(strips, 0.0) + reach * part
             crossing[more] = crossing.get(more, 0.0) + reach
-        number = runs.expected(round(self._total), self.channel.years)
+        number = runs.expected(self.total, self.channel.years)
         return _Family(number, bool(runs.count), single, crossing)
 
     @cached_property
@@ -199,7 +237,7 @@ class _Forecast:
 
     def _hits_without(self, one: _Family | None) -> Floats:
         """The same, but for one run of the family `one`: what its other runs and the rest do."""
-        size = self.shape.code.outer.r + 2
+        size = self.windows.code.outer.r + 2
         fixed = [
             self._counted_hits(family, round(family.number) - (family is one), size)
             for family in self._families
@@ -211,10 +249,10 @@ class _Forecast:
         return hits
 
     def _counted_hits(self, family: _Family, number: int, size: int) -> Floats:
-        """What a known number of runs takes: no more than one symbol of a column each, where they are short."""
+        """What a known number of runs takes: at most one symbol of a column each, where they are short."""
         if number <= MANY and not any(more > 0 for more in family.crossing):
             chance = family.single.get(1, 0.0)
-            return log_occupancy(self._exposed, float(np.log(chance)) if chance else IMPOSSIBLE, number, size)
+            return log_occupancy(self.exposed, float(np.log(chance)) if chance else IMPOSSIBLE, number, size)
         return log_power(family.distribution(size), number)
 
     def _poisson_hits(self, size: int) -> Floats:
@@ -230,8 +268,8 @@ class _Forecast:
                 kept = min(strips, size)
                 rates[kept] = rates.get(kept, 0.0) + family.number * part
         if not any(more for family in families for more in family.crossing if more > 0):
-            rate = rates.get(1, 0.0) / self._exposed
-            taken = log_binomial(self._exposed, float(np.log(-np.expm1(-rate))) if rate else IMPOSSIBLE)
+            rate = rates.get(1, 0.0) / self.exposed
+            taken = log_binomial(self.exposed, float(np.log(-np.expm1(-rate))) if rate else IMPOSSIBLE)
             return np.append(taken[: size - 1], log_sum(taken[size - 1 :]))
         return log_compound_poisson(rates, size)
 
@@ -241,7 +279,7 @@ class _Forecast:
 
         Runs of a Poisson process find the others as if they were not there (Slivnyak's theorem).
         """
-        r = self.shape.code.outer.r
+        r = self.windows.code.outer.r
         terms = []
         for family in self._families:
             others = self._hits_without(family) if family.fixed else self._hits
@@ -256,10 +294,10 @@ class _Forecast:
         """ln of the most that the stream's chance can be, by the measured curve of the code."""
         if self._families or self.channel.spare_sidecar:
             return None
-        curve = measured_curve(self.shape.code, self.shape.width)
+        curve = measured_curve(self.windows.code, self.windows.width)
         if curve is None or not self.channel.final_flip_rate:
             return None
-        return _of_many(curve, self.channel.final_flip_rate, self.shape.blocks)
+        return _of_many(curve, self.channel.final_flip_rate, self.windows.blocks)
 
 
 @lru_cache(64)

@@ -11,7 +11,7 @@ import json
 import os
 import sqlite3
 from collections.abc import Iterator, Sequence
-from contextlib import contextmanager
+from contextlib import closing, contextmanager
 from dataclasses import dataclass
 from datetime import UTC, datetime
 from importlib.metadata import version
@@ -124,6 +124,11 @@ class Ledger:
                 )
             if schema < VERSION:
                 self._migrate(write)
+            if _columns(self._db) != _expected_columns():
+                raise LedgerError(
+                    f"the ledger {self.path} is damaged: its tables are not what they should be; "
+                    "restore the ledger from a copy"
+                )
 
     def _pragma(self, name: str) -> int:
         return int(self._db.execute(f"PRAGMA {name}").fetchone()[0])
@@ -140,9 +145,7 @@ class Ledger:
             self._db = copy
             self._db.row_factory = sqlite3.Row
         with self._transaction():
-            for step in MIGRATIONS[self._pragma("user_version") :]:  # Another run may have done it meanwhile.
-                for statement in filter(str.strip, step.split(";")):
-                    self._db.execute(statement)
+            _apply(self._db, self._pragma("user_version"))  # Another run may have done it meanwhile.
             self._db.execute(f"PRAGMA application_id = {APPLICATION_ID}")
             self._db.execute(f"PRAGMA user_version = {VERSION}")
 
@@ -199,14 +202,14 @@ class Ledger:
 
     # -- reading -----------------------------------------------------------------------------------
 
-    def interrupted(self, medium: str, targets: Sequence[Path]) -> Entry | None:
-        """The latest audit of the same targets, where it did not come to its end."""
-        for entry in reversed(self.entries(medium, finished=None)):
-            if entry.audit["request"] == _request(targets):
+    def interrupted(self, medium: str, targets: Sequence[Path], share: float) -> Entry | None:
+        """The latest audit of the same share of the same targets, where it did not come to its end."""
+        for entry in reversed(self.entries(medium)):
+            if (entry.audit["request"], entry.audit["share"]) == (_request(targets), share):
                 return None if entry.audit["finished"] else entry
         return None
 
-    def entries(self, medium: str | None = None, finished: bool | None = None) -> list[Entry]:
+    def entries(self, medium: str | None = None) -> list[Entry]:
         """Audits in the order in which they began, of one medium or of all."""
         with _explained(self.path):
             chosen = "" if medium is None else "WHERE medium = ?"
@@ -215,14 +218,18 @@ class Ledger:
             ).fetchall()
             entries = []
             for audit in audits:
-                if finished is not None and (audit["finished"] is not None) != finished:
-                    continue
                 rows = self._db.execute("SELECT * FROM targets WHERE audit = ? ORDER BY id", (audit["id"],))
                 counters = self._db.execute("SELECT * FROM counters WHERE audit = ?", (audit["id"],))
                 entries.append(
                     Entry(
                         dict(audit), tuple(dict(r) for r in rows), {c["name"]: c["value"] for c in counters}
                     )
+                )
+        for entry in entries:
+            if not _understood(entry):
+                raise LedgerError(
+                    f"the ledger {self.path} is damaged: its audit {entry.audit['id']} makes no sense; "
+                    "restore the ledger from a copy"
                 )
         return entries
 
@@ -248,12 +255,34 @@ def _refuse_other_files(path: Path) -> None:
         raise LedgerError(f"{path} is not a ledger of oakum; name another file with --ledger")
 
 
+def _apply(db: sqlite3.Connection, version: int) -> None:
+    """The steps that lead on from a schema version."""
+    for step in MIGRATIONS[version:]:
+        for statement in filter(str.strip, step.split(";")):
+            db.execute(statement)
+
+
+def _columns(db: sqlite3.Connection) -> set[tuple[str, str]]:
+    """Names of all columns with their tables."""
+    return {
+        (table, str(row[1]))
+        for table in ("audits", "targets", "counters")
+        for row in db.execute(f"PRAGMA table_info({table})")
+    }
+
+
+def _expected_columns() -> set[tuple[str, str]]:
+    with closing(sqlite3.connect(":memory:")) as db:
+        _apply(db, 0)
+        return _columns(db)
+
+
 @contextmanager
 def _explained(path: Path) -> Iterator[None]:
     """SQLite's and the system's refusals as one sentence."""
     try:
         yield
-    except sqlite3.DatabaseError as error:
+    except (sqlite3.Error, UnicodeError, OverflowError, IndexError) as error:
         text = str(error)
         if "locked" in text or "busy" in text:
             text = f"the ledger {path} is locked by another program; try again when that has ended"
@@ -269,6 +298,19 @@ def _explained(path: Path) -> Iterator[None]:
     except OSError as error:
         reason = (error.strerror or str(error)).lower()
         raise LedgerError(f"the ledger {path} cannot be used: {reason}") from None
+
+
+def _understood(entry: Entry) -> bool:
+    """Whether what is kept as text can be read back; everybody may have written to the file."""
+    try:
+        sound = entry.begun.tzinfo is not None
+        for row in entry.targets:
+            findings, lengths = (json.loads(str(row[n] or "[]")) for n in ("findings", "burst_lengths"))
+            sound &= all(isinstance(n, int) and n > 0 for n in lengths)
+            sound &= all(isinstance(f[n], str) for f in findings for n in ("cause", "likelihood", "evidence"))
+    except (ValueError, TypeError, KeyError, RecursionError):
+        return False
+    return sound
 
 
 def _request(targets: Sequence[Path]) -> str:

@@ -174,6 +174,8 @@ class PatternCollector:
         member.wrong_bytes += len(wrong)
         member.ones += int(np.bitwise_count(right).sum())
         member.bits += 8 * len(right)
+        up = _by_position(offset, flips & received)
+        self._positions += [up, _by_position(offset, flips) - up]
         wrong = wrong[self._take_runs(start + offset, offset, received, flips, wrong)]
         if len(wrong):
             self._add_single(start + offset + wrong, np.stack([received[wrong], right[wrong]]))

@@ -14,7 +14,7 @@ from oakum import __version__
 
 ROOT = Path(__file__).parents[2]
 PAGES = sorted((ROOT / "man").glob("*.[15]"))
-COMMANDS = ("protect", "verify", "repair", "describe", "audit", "history")
+COMMANDS = ("protect", "verify", "repair", "describe", "audit", "history", "plan", "rehearse")
 
 
 @pytest.mark.skipif(shutil.which("groff") is None, reason="needs groff")

@@ -102,8 +102,8 @@ def test_erasing_flagged_words_agrees_with_the_formula(name: str, rate: float) -
         words.correct(cells, block.received_parity, lab.staggers, status)
         erased = (words.spread(status, lab.staggers, cells.shape[1]) == FLAGGED).astype(np.uint8)
         magnitudes, errors = columns.decode(columns.syndromes(cells), erased)
-        shares.append(float((errors < 0).mean()))
-        assert np.array_equal((cells ^ magnitudes)[:, errors >= 0], block.cells[:, errors >= 0])
+        # With close to r erasures hardly a check is left, and the wrong ones are not found out.
+        shares.append(float(((errors < 0) | (cells ^ magnitudes != block.cells).any(axis=0)).mean()))
     assert agrees(shares, lost_erasing(lab.code.outer, symbol_odds(lab.code.inner, rate)))
 
 

@@ -77,6 +77,52 @@ def test_counts_equal_what_was_injected(tmp_path: Path, depth: int | None) -> No
     assert {f.cause for f in target.findings} == {Cause.RUNS, Cause.SCATTERED}
 
 
+def burst_bits(before: bytes, after: bytes) -> int:
+    """Flips in bursts by the words of the design: at least 32 bytes, more than a quarter of them wrong."""
+    wrong = [i for i, (a, b) in enumerate(zip(before, after, strict=True)) if a != b]
+    bits, cluster = 0, wrong[:1]
+    for place in [*wrong[1:], 1 << 60]:
+        if place - cluster[-1] > 16:
+            length = cluster[-1] + 1 - cluster[0]
+            if length >= 32 and 4 * len(cluster) > length:
+                bits += sum((before[i] ^ after[i]).bit_count() for i in cluster)
+            cluster = []
+        cluster.append(place)
+    return bits
+
+
+@pytest.mark.parametrize("seed", range(12))
+def test_counts_in_scenarios_of_all_kinds(tmp_path: Path, seed: int) -> None:
+    """Flips, runs of all lengths, and damage to the sidecar, drawn from a seed; all within capacity."""
+    rng = np.random.default_rng([55, seed])
+    before = content(int(rng.integers(70_000, 600_000)), seed)
+    (tmp_path / "x").write_bytes(before)
+    depth = None if seed % 2 else 4096
+    sidecar = protect([tmp_path / "x"], code=("shelf", WINDOWED)[seed % 3 == 0], depth=depth).sidecar
+    after = with_flips(before, int(rng.integers(1, 200)), seed)
+    for _ in range(int(rng.integers(0, 4))):
+        length = int(rng.choice([8, 33, 200, 4096, len(before) // 100]))
+        after = overwritten(after, int(rng.integers(len(before))), length, seed)
+    rewrite(tmp_path / "x", after)
+    body = sidecar.read_bytes()
+    damaged = with_flips(body, int(rng.integers(0, 60)), seed, within=(len(body) // 3, len(body)))
+    rewrite(sidecar, damaged)
+    target = only(audit([tmp_path / "x"]))
+    t = totals(target)
+    assert target.outcome is Outcome.CORRECTABLE
+    assert t.bits_flipped == flipped_bits(before, after)
+    assert t.bits_flipped_burst == burst_bits(before, after)
+    assert t.symbols_wrong == sum(a != b for a, b in zip(before, after, strict=True))
+    assert target.check is not None and target.check.sidecar.bits_flipped == flipped_bits(body, damaged)
+    right, flips = (np.frombuffer(d, np.uint8) for d in (before, after))
+    flips = flips ^ right
+    rows = [np.concatenate([f, np.zeros(-len(f) % 8, np.uint8)]) for f in (flips & ~right, flips & right)]
+    counts = tuple(
+        tuple(np.unpackbits(row, bitorder="little").reshape(-1, 64).sum(axis=0).tolist()) for row in rows
+    )
+    assert target.distribution.positions == counts
+
+
 def test_it_says_the_same_as_verify(tmp_path: Path) -> None:
     folder = plant(tmp_path / "set", {"a": content(500_000), "b": content(1000, 2)})
     protect([folder])
@@ -330,6 +376,22 @@ def test_a_sample_sees_its_share_and_counts_it_exactly(tmp_path: Path, depth: in
     bits = np.bitwise_count(np.frombuffer(data, np.uint8)[places] ^ np.frombuffer(damaged, np.uint8)[places])
     assert s.flip_rate.count == bits[np.isin(strips, list(seen))].sum()
     assert any("SHA-256 was not compared" in note for note in target.check.notes)
+
+
+def test_windows_that_are_left_out_are_not_decoded(tmp_path: Path) -> None:
+    """The last window is so small that it has no digests; unless it is chosen nothing is said of it."""
+    size = 40 * 4096 * 9 + 1000
+    folder = plant(tmp_path / "set", {"a": content(size)})
+    protect([folder], code=WINDOWED, depth=4096)
+    rewrite(folder / "a", content(size)[:-500] + bytes(500))
+    seen = set()
+    for seed in range(12):
+        target = only(audit([folder], AuditOptions(share=0.1, seed=seed)))
+        s = target.statistics
+        assert s is not None and s.bits_read in (8 * 40 * 4096, 8000)
+        assert (target.outcome is Outcome.CORRECTABLE) == (s.bits_read == 8000)
+        seen.add(s.bits_read)
+    assert seen == {8 * 40 * 4096, 8000}
 
 
 @pytest.mark.parametrize("share", [0.0, -1.0, 1.5])

@@ -10,6 +10,7 @@ import pytest
 from support import BadSectors, content, overwritten, plant, rewrite, snapshot, with_flips
 
 from oakum import CannotCheck, UsageError, protect, repair, roll_back, verify
+from oakum.files import Lock
 from oakum.jobs import replay
 from oakum.jobs.journal import Journal, journal_path
 from oakum.results import MemberState, Outcome
@@ -287,3 +288,111 @@ def test_a_journal_of_another_set(tree: Path, tmp_path: Path) -> None:
     with pytest.raises(CannotCheck, match="belongs to other content"):
         roll_back(tree)
     assert everything(tmp_path) == before
+
+
+# -- what can stand in the way of replaying ----------------------------------------------------------
+
+
+def interrupted(tree: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    """Damage, and a repair in place that ends with its journal on the medium and nothing changed yet."""
+    damage(tree)
+    (tree / "deep/down/b.txt").unlink()
+
+    def stop(*_: object) -> None:
+        raise KeyboardInterrupt
+
+    with monkeypatch.context() as patch:
+        patch.setattr("oakum.jobs.inplace.finish", stop)
+        with pytest.raises(KeyboardInterrupt):
+            repair(tree, in_place=True)
+
+
+def test_files_that_are_not_what_the_journal_speaks_of(
+    tree: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    protect([tree])
+    interrupted(tree, monkeypatch)
+    (tree / "a.tif").rename(tmp_path / "kept")
+    for job in (lambda: repair(tree, in_place=True), lambda: roll_back(tree)):
+        with pytest.raises(CannotCheck, match=r"a\.tif cannot be written to: no such file"):
+            job()
+    for stands_there in (b"short", b"long" * 50_000):
+        (tree / "a.tif").write_bytes(stands_there)
+        with pytest.raises(CannotCheck, match="is not what the repair in place left there"):
+            repair(tree, in_place=True)
+        assert (tree / "a.tif").read_bytes() == stands_there
+    with pytest.raises(CannotCheck, match="the folder .*nowhere cannot be opened"):
+        repair(tree, in_place=True, root=tmp_path / "nowhere")
+    (tmp_path / "kept").replace(tree / "a.tif")
+    before = snapshot(tmp_path)
+    with monkeypatch.context() as patch:
+        patch.setattr(
+            replay, "carry_out", lambda *_, **__: (_ for _ in ()).throw(OSError(5, "Input/output error"))
+        )
+        with pytest.raises(CannotCheck, match="not everything could be put back: input/output error"):
+            roll_back(tree)
+    assert snapshot(tmp_path) == before
+    shutil.rmtree(tree / "deep")  # Nothing was ever made in it.
+    roll_back(tree)
+    assert not (tmp_path / "set.oakum.journal").exists()
+
+
+def test_a_sidecar_that_cannot_be_read_is_not_replaced(
+    tree: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """Its unreadable parts would come back as zeros."""
+    sidecar = protect([tree]).sidecar
+    damage(tree)
+    repair(tree, in_place=True)
+    before = snapshot(tmp_path)
+    BadSectors({sidecar: [(8_192, 8_704)]}).install(monkeypatch)
+    through = os.pread
+    monkeypatch.setattr(os, "pread", through)
+    with pytest.raises(CannotCheck, match="cannot be read in full"):
+        roll_back(tree)
+    monkeypatch.undo()
+    now = snapshot(tmp_path)
+    now.pop("set.oakum.journal")
+    before.pop("set.oakum.journal")
+    assert now["set.oakum"] == before["set.oakum"]
+    roll_back(tree)
+
+
+def test_a_folder_that_somebody_filled_stays(tree: Path) -> None:
+    protect([tree])
+    shutil.rmtree(tree / "deep/down")
+    repair(tree, in_place=True)
+    (tree / "deep/down/new").write_bytes(b"theirs")
+    roll_back(tree)
+    assert os.listdir(tree / "deep/down") == ["new"]
+
+
+def test_what_stands_in_the_way_is_named(tree: Path, tmp_path: Path) -> None:
+    protect([tree])
+    (tree / "one").unlink()
+    (tree / "one").mkdir()
+    before = snapshot(tmp_path)
+    with pytest.raises(UsageError, match="one is no file any more; move away what stands there"):
+        repair(tree, in_place=True)
+    (tree / "one").rmdir()
+    (tree / "link").unlink()
+    (tree / "link").write_bytes(b"mine")
+    with pytest.raises(UsageError, match="link is no link any more"):
+        repair(tree, in_place=True)
+    assert snapshot(tmp_path).keys() == before.keys() - {"set/one"} | set()
+
+
+def test_a_half_repaired_set_is_not_protected_anew(
+    tree: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    protect([tree])
+    interrupted(tree, monkeypatch)
+    before = snapshot(tmp_path)
+    with pytest.raises(UsageError, match="was interrupted; first finish it"):
+        protect([tree], overwrite=True)
+    assert snapshot(tmp_path) == before
+    with Lock(tmp_path / "set.oakum"), pytest.raises(CannotCheck, match="another run is at work"):
+        protect([tree], overwrite=True)
+    roll_back(tree)
+    protect([tree], overwrite=True)
+    assert verify(tree).outcome is Outcome.INTACT

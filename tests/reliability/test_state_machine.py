@@ -1,8 +1,8 @@
 """A set and its sidecar through a long life, held against a model that knows the right bytes.
 
-Rules protect, flip bits, overwrite, cut, delete, rename, edit, hurt and swap the sidecar, verify, repair beside, in
-place and back. The model keeps what was protected and what was edited since; a repair that says it worked has the
-right bytes, one that says it did not has changed nothing, and verify never calls damage intact.
+Rules protect, flip bits, overwrite, cut, delete, rename, edit, hurt and swap the sidecar, verify, repair
+beside, in place and back. The model keeps what was protected: a repair that says it worked has the right bytes,
+one that says it did not has changed nothing, and verify never calls damage intact.
 """
 
 from __future__ import annotations
@@ -70,7 +70,7 @@ class Life(RuleBasedStateMachine):
 
     @rule(code=CODES, depth=st.sampled_from([None, 4096]))
     def protect(self, code: str, depth: int | None) -> None:
-        protect([self.folder], code=code, depth=depth, overwrite=True)
+        protect([self.folder], code=code, depth=depth, overwrite=True)  # No repair here is ever interrupted.
         self.recorded, self.sidecar_right = self.files(), self.sidecar.read_bytes()
         self.versions.append((self.sidecar_right, self.recorded))
         self.journal = None
@@ -189,14 +189,13 @@ class Life(RuleBasedStateMachine):
             assert self.everything() == before
             return
         assert self.journal is not None
-        restored = {n: d for n, d in self.journal.items()}
         now = self.everything()
-        assert {n: now.get(n) for n in restored} == restored
+        assert {n: now.get(n) for n in self.journal} == self.journal
         self.journal = None
 
     @invariant()
     def nothing_is_left_behind(self) -> None:
-        assert not [p for p in self.base.rglob(".*")]
+        assert not list(self.base.rglob(".*"))
 
 
 TestLife = Life.TestCase

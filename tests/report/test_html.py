@@ -29,6 +29,7 @@ from oakum.audits import (
     TargetAudit,
     Trend,
 )
+from oakum.cli.running import run
 from oakum.report.html import audit_page, history_page
 from oakum.results import CheckResult, Outcome
 
@@ -135,6 +136,24 @@ def test_the_counts_are_there(correctable: CheckResult) -> None:
         assert text in shown
     for cause in Cause:
         assert str(cause)[1:] in shown
+
+
+def test_the_command(
+    tmp_path: Path, capsys: pytest.CaptureFixture[str], monkeypatch: pytest.MonkeyPatch
+) -> None:
+    file, page = tmp_path / "x", tmp_path / "page.html"
+    file.write_bytes(bytes(5000))
+    ledger = ["--ledger", str(tmp_path / "l")]
+    assert run(["protect", str(file), "--quiet"]) == 0
+    assert run(["audit", str(file), *ledger, "--html", str(page), "--quiet"]) == 0
+    assert page.read_text().startswith("<!doctype html>") and "Nothing is damaged" in page.read_text()
+    assert run(["history", *ledger, "--html", str(page)]) == 2
+    assert "exists" in capsys.readouterr().err
+    assert run(["history", *ledger, "--html", str(page), "--overwrite", "--quiet"]) == 0
+    assert "Audits over the years" in page.read_text()
+    monkeypatch.setattr("oakum.jobs.pages.find_spec", lambda name: None)
+    assert run(["history", *ledger, "--html", str(tmp_path / "other")]) == 2
+    assert "oakum[report]" in capsys.readouterr().err and not (tmp_path / "other").exists()
 
 
 def test_charts_are_imported_only_when_drawn() -> None:

@@ -63,6 +63,10 @@ MOST_CHASES = 100
 """Times that random trials are made on one block at the most, which bounds its time to some seconds."""
 
 
+MOST_SUSPICIONS = 30
+"""Times that single columns are suspected of a wrong solution in one block at the most."""
+
+
 class BlockSource(Protocol):
     """Where the decoder gets what was received of one block. All arrays have one row a strip asked for."""
 
@@ -257,6 +261,7 @@ class _Block:
         self.tried_as_received, self.tried_erasures = _Seen(), _Seen()
         self.flip_rate = self._estimate_flip_rate()
         self.chases = MOST_CHASES
+        self.suspicions = MOST_SUSPICIONS
         self.erased_together = 0
         self.random = np.random.default_rng(self.source.number)  # Decoding twice gives the same twice.
 
@@ -486,7 +491,7 @@ class _Block:
                 self._decode_words()
             if self.finished.all():
                 return number + 1
-            if self._contradicted() and self._withdraw():
+            if self._contradicted().any() and self._withdraw_wrong():
                 continue
             if not self.d.feedback:
                 return number + 1
@@ -507,22 +512,40 @@ class _Block:
             solved = self._chase()
         return solved
 
-    def _contradicted(self) -> bool:
-        """Whether a cell all of whose bytes are known disagrees with its digest."""
-        return bool((self.digested & ~self.finished & self.pinned.all(axis=1)).any())
+    def _contradicted(self) -> Mask:
+        """Which rows are known in full and disagree with their digest, bool[R]."""
+        return self.digested & ~self.finished & self.pinned.all(axis=1)
 
     def _reconsider(self) -> bool:
-        """Nothing more can be solved: take back verdicts about density, then what is only provisional."""
+        """Nothing more can be solved: take back verdicts about density, then what is only provisional.
+
+        Where most columns are solved they stand: most of them are right, and others rest on them.
+        """
         if self.heed_density and (self.status == DENSE).any():
             self.heed_density = False
             self.tried_as_received, self.tried_erasures = _Seen(), _Seen()
             self._decode_words()
             return True
-        return self._withdraw()
+        return 2 * len(self.open) > self.width and self._withdraw(np.flatnonzero(self.provisional))
 
-    def _withdraw(self) -> bool:
-        """Take back every provisional solution; those columns must be sure the next time."""
-        places = np.flatnonzero(self.provisional)
+    def _withdraw_wrong(self) -> bool:
+        """Digests contradict what is known: take back what the words disagree with, or what is provisional.
+
+        A wrong solution differs from the right one in D symbols at least, and the words of all of these are
+        flagged although all their bytes are known.
+        """
+        rows = np.flatnonzero(self._contradicted())
+        flagged = np.count_nonzero(self._spread(self.status[rows], rows) == FLAGGED, axis=0)
+        worst = int(flagged.argmax())
+        if self.suspicions and flagged[worst] >= 2:
+            self.suspicions -= 1
+            # Its neighbours share nearly all of its words; alone in a word, a byte is corrected best.
+            near = np.arange(max(0, worst - 2), min(self.width, worst + 3))
+            return self._withdraw(near[flagged[near] >= flagged[worst] - 2])
+        return self._withdraw(np.flatnonzero(self.provisional))
+
+    def _withdraw(self, places: Strips) -> bool:
+        """Take back the solutions of some columns, which must be sure the next time."""
         if not len(places):
             return False
         rows = np.flatnonzero(~self.finished)

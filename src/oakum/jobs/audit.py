@@ -131,7 +131,9 @@ def audit_target(target: Path, options: AuditOptions, seed: int, progress: Progr
                 check.close()
         result = result_of("audit", target, check, tally, time.monotonic() - begin)
         if options.share < 1:
-            note = f"{check.coverage:.2%} of the stream was read (seed {seed}); SHA-256 was not compared"
+            note = (
+                f"{100 * check.coverage:.2f} % of the stream was read (seed {seed}); SHA-256 was not compared"
+            )
             result = replace(result, notes=(*result.notes, note))
         return TargetAudit(
             target, result.outcome, opened.sections[0].bootstrap.set_identity.hex(), result,
@@ -171,7 +173,7 @@ class AuditCheck(SetCheck):
         """All of it, or nothing, or some groups of blocks where the set is one window."""
         window.auditing = True
         if len(self.windows) - 1 not in self._chosen:
-            window.sampled = 0, 0
+            window.skip()
         elif self.share == 1 or len(self.opened.sections) > 1 or not window.g.digested:
             window.scan(hasher)
         else:
@@ -354,7 +356,7 @@ class _Book:
         try:
             book.ledger = Ledger(options.ledger, write=True)
             if options.resume:
-                book.entry = book.ledger.interrupted(options.medium, targets)
+                book.entry = book.ledger.interrupted(options.medium, targets, options.share)
             if book.entry is not None:
                 book.number = int(book.entry.audit["id"] or 0)
             else:

@@ -98,7 +98,7 @@ def _event(root: Xml.Element, entry: Entry, row: Row) -> None:
     _add(event, "eventDateTime", str(row["checked"]))
     coverage = row["coverage"]
     if isinstance(coverage, float):
-        detail = f"comparison with the sidecar, {coverage:.2%} of the content"
+        detail = f"comparison with the sidecar, {100 * coverage:.2f} % of the content"
         _add(_add(event, "eventDetailInformation"), "eventDetail", detail)
     information = _add(event, "eventOutcomeInformation")
     _add(information, "eventOutcome", "pass" if row["outcome"] == Outcome.INTACT else "fail"

@@ -217,24 +217,25 @@ class _Medium:
         if margin < NONE_LEFT:
             return (
                 Advice.REFRESH_NOW,
-                f"the weakest block has kept only {max(0.0, margin):.0%} of its margin.",
+                f"the weakest block has kept only {100 * max(0.0, margin):.0f} % of its margin.",
             )
         if ahead <= 1:
             return Advice.REFRESH_SOON, f"the trend passes the limit in {refresh}."
         if margin < LOW:
             return (
                 Advice.REFRESH_SOON,
-                f"the weakest block has lost more than half of its margin ({margin:.0%} left).",
+                f"the weakest block has lost more than half of its margin ({100 * margin:.0f} % left).",
             )
         if ahead <= 5:
             return Advice.AUDIT_SOONER, f"the trend passes the limit in {refresh}."
         for fit, what in ((self.flips, "flip rate"), (self.bursts, "rate of bursts")):
             if fit is not None and fit.slope_interval[0] > 0:
                 return Advice.AUDIT_SOONER, (
-                    f"the {what} grows by {math.expm1(fit.slope):.0%} a year, more than chance explains."
+                    f"the {what} grows by {100 * math.expm1(fit.slope):.0f} % a year, "
+                    "more than chance explains."
                 )
         if margin < THIN:
-            return Advice.AUDIT_SOONER, f"the weakest block keeps {margin:.0%} of its margin."
+            return Advice.AUDIT_SOONER, f"the weakest block keeps {100 * margin:.0f} % of its margin."
         if not self.enough:
             return (
                 Advice.KEEP,
@@ -261,6 +262,6 @@ class _Medium:
         if any(p.coverage < 0.999 for p in self.points):
             least = min(p.coverage for p in self.points)
             yield (
-                f"some audits were samples, of {least:.0%} of the content at the least: rates are of what "
-                "was read, and the lowest margin of all may be lower"
+                f"some audits were samples, of {100 * least:.0f} % of the content at the least: rates are of "
+                "what was read, and the lowest margin of all may be lower"
             )

@@ -64,11 +64,9 @@ def plan(
         Shape.of(code, length, check_depth(depth) if depth is not None else None) for code in _codes(overhead)
     ]
     candidates = [_candidate(shape, channel) for shape in shapes]
-    frontier = _frontier(candidates)
-    limit = float(np.log(target))
-    reached = [c for c in frontier if c.period.at_most <= limit]
-    chosen = reached[0] if reached else frontier[-1]
-    shown = _around(frontier, chosen)
+    reached = [c for c in candidates if c.period.at_most <= np.log(target)]
+    chosen = reached[0] if reached else min(candidates, key=lambda c: c.period.at_most)
+    shown = _around(_frontier(candidates, chosen), chosen)
     by_notation = {shape.code.notation: shape for shape in shapes}
     return PlanResult(
         path, length, channel.years, target, overhead, _with_size(assumptions, length, path, depth), shown,
@@ -128,11 +126,15 @@ def _candidate(shape: Shape, channel: Channel) -> Candidate:
     )
 
 
-def _frontier(candidates: Sequence[Candidate]) -> list[Candidate]:
-    """Those that no other beats in both overhead and loss, by rising overhead."""
+def _frontier(candidates: Sequence[Candidate], chosen: Candidate) -> list[Candidate]:
+    """Those that no other beats in both overhead and loss, by rising overhead.
+
+    Beside the chosen one only those that at least halve the loss, since parity should be worth its space.
+    """
     best: list[Candidate] = []
     for candidate in candidates:
-        if not best or candidate.period.at_most < best[-1].period.at_most:
+        before = best[-1].period.at_most if best else np.inf
+        if candidate is chosen or candidate.period.at_most < before - np.log(2):
             best.append(candidate)
     return best
 

@@ -26,6 +26,7 @@ from oakum.jobs.common import (
     sidecar_path,
     summarise,
 )
+from oakum.jobs.replay import replacing
 from oakum.members import Folder, Member, MemberHasher, MemberStream, Span, collect
 from oakum.pools import Pools
 from oakum.progress import Progress, Silent
@@ -78,7 +79,7 @@ def protect(
         notes.append(_NOT_BESIDE)
     length = sum(m.size for m in members)
     windows = plan_windows(length, chosen.outer.k, depth)
-    with NewFile(sidecar, overwrite=overwrite) as file, Pools(jobs) as pools:
+    with replacing(sidecar, overwrite), NewFile(sidecar, overwrite=overwrite) as file, Pools(jobs) as pools:
         folder = Folder(root)
         try:
             job = _Job(chosen, members, windows, depth or 0, memory, pools, progress)

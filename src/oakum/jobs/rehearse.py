@@ -203,7 +203,8 @@ class _Stage:
             length = sum(g.length for g in geometries)
             files = [m for m in opened.members.values() if m.piece.kind is Kind.FILE and m.size]
             spans = [Span(m.piece.path, 0, m.size) for m in sorted(files, key=lambda m: m.stream_start)]
-            shape = Shape(check.code, length, max(g.depth for g in geometries), len(geometries))
+            depth = max(g.depth for g in geometries) if len(geometries) > 1 else None
+            shape = Shape.of(check.code, length, depth)
             if not length:
                 raise CannotCheck(f"{target} holds no bytes; there is nothing to rehearse on")
             return _Stage(

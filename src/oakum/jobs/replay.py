@@ -9,12 +9,12 @@ from __future__ import annotations
 import hashlib
 import os
 import stat
-from collections.abc import Sequence
-from contextlib import suppress
+from collections.abc import Iterator, Sequence
+from contextlib import contextmanager, suppress
 from pathlib import Path
 
 from oakum.errors import CannotCheck, UsageError
-from oakum.files import Fault, FileBytes, NewFile, let_go, reason, temporary_name, write_all
+from oakum.files import Fault, FileBytes, Lock, NewFile, let_go, reason, temporary_name, write_all
 from oakum.jobs.journal import Condition, Contents, Entry, Journal, Patch, Thing, journal_path
 from oakum.members import open_folder
 from oakum.sidecar.reading import find_sections
@@ -358,6 +358,25 @@ def unfinished(sidecar: Path) -> bool:
             return not journal.finished
     except (FileNotFoundError, CannotCheck):
         return False
+
+
+@contextmanager
+def replacing(sidecar: Path, overwrite: bool) -> Iterator[None]:
+    """Hold the lock of a sidecar that is to be replaced by one of other content.
+
+    Raises CannotCheck while another run is at work on it, UsageError when a repair in place was interrupted:
+    what half of it left behind must not be protected as if it were right.
+    """
+    if not overwrite or not sidecar.is_file():
+        yield
+        return
+    with Lock(sidecar):
+        if unfinished(sidecar):
+            raise UsageError(
+                f"a repair in place with {sidecar} was interrupted; first finish it with oakum repair --in-place "
+                "or undo it with --roll-back"
+            )
+        yield
 
 
 def _refuse_foreign(journal: Journal, sidecar: Path) -> None:

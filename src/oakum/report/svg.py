@@ -8,8 +8,8 @@ from xml.sax.saxutils import escape
 from oakum.report.chart import Scales, points
 from oakum.results import Curve
 
-_W, _H = 720, 440
-_LEFT, _RIGHT, _TOP, _BOTTOM = 76, 150, 24, 56
+_W, _H = 820, 440
+_LEFT, _RIGHT, _TOP, _BOTTOM = 76, 230, 28, 56
 _DASHES = ("", "9 4", "3 3", "12 4 3 4", "1 4", "6 6", "2 6", "14 3")
 _STYLE = (
     "text{font:13px sans-serif;fill:#222}.axis,.grid,.mark{stroke:#222;fill:none}.grid{stroke-opacity:.12}"

@@ -154,6 +154,18 @@ def trend(name: str, points: Sequence[Point]) -> str:
     return chart.svg
 
 
+def margin_trend(name: str, points: Sequence[Point]) -> str:
+    """The lowest margin of each audit."""
+    chart = Chart(name, "Lowest margin over the audits")
+    with chart as axes:
+        known = [(p.when, 100 * max(0.0, p.margin)) for p in points if p.margin is not None]
+        times: list[Any] = [when for when, _ in known]
+        axes.plot(times, [margin for _, margin in known], "o-", color=HUE, markersize=5, linewidth=1.2)
+        axes.set(ylim=(0, 103), ylabel="lowest margin, % of r")
+        axes.tick_params(axis="x", rotation=30)
+    return chart.svg
+
+
 def _floor(known: Sequence[tuple[Any, Rate]]) -> float:
     """Where the bottom of the picture is: below all that is known."""
     return min(r.low if r.low else r.high / 10 for _, r in known)

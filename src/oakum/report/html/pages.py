@@ -43,7 +43,7 @@ footer { margin-top: 3rem; border-top: 1px solid var(--soft); padding-top: .8rem
 @media (max-width: 32rem) { table { font-size: .88rem; } th, td { padding-right: .5rem; } }
 @media print {
   body { max-width: none; background: none; }
-  :root { --paper: #fff; --ink: #000; --hue: #1d5c70; }
+  :root { --paper: #fff; --ink: #000; --hue: #1d5c70; --soft: #ccc; }
 }
 """
 
@@ -160,6 +160,10 @@ def _pictures(number: int, target: TargetAudit) -> str:
     if any(map(any, where.positions)):
         svg = charts.positions(f"p{number}", where)
         figures.append(("Flips by bit position, up those from 0 to 1", svg))
+    return _figures(figures)
+
+
+def _figures(figures: Sequence[tuple[str, str]]) -> str:
     shown = "".join(
         f"<figure><figcaption>{_text(title)}</figcaption>{svg}</figure>" for title, svg in figures
     )
@@ -212,13 +216,13 @@ def _trend(number: int, trend: Trend) -> str:
             f"the chance of loss now is at most {chance_words(trend.chance_now)}.</p>"
         )
     if trend.refresh_by is not None:
-        parts.append(f"<p>That chance passes {trend.threshold:g} in {trend.refresh_by}.</p>")
+        parts.append(f"<p>If this goes on, the limit is passed in {trend.refresh_by}.</p>")
+    figures = []
     if any(p.flips.exposure for p in trend.points):
-        svg = charts.trend(f"t{number}", trend.points)
-        parts.append(
-            '<div class="pictures"><figure><figcaption>Scattered flips a bit, audit by audit</figcaption>'
-            f"{svg}</figure></div>"
-        )
+        figures.append(("Scattered flips a bit, audit by audit", charts.trend(f"t{number}", trend.points)))
+    if sum(p.margin is not None for p in trend.points) > 1:
+        figures.append(("Lowest margin, audit by audit", charts.margin_trend(f"w{number}", trend.points)))
+    parts.append(_figures(figures))
     rows = [
         (
             p.when.date().isoformat(), percent(p.coverage), rate_words(p.flips), f"{p.bursts.count:,}",

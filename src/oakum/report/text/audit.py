@@ -132,7 +132,7 @@ def _trend(trend: Trend) -> list[Section]:
         facts.append(("lowest margin, change a year", f"{trend.margin_a_year * 100:+.1f} % of r"))
     facts.append(("chance of loss now, at most", chance_words(trend.chance_now)))
     if trend.refresh_by is not None:
-        facts.append((f"chance passes {trend.threshold:g}", f"in {trend.refresh_by}"))
+        facts.append(("limit passed, if this goes on", f"in {trend.refresh_by}"))
     sections.append(["The trend", *pairs(facts)])
     shown = trend.points[-AUDITS_SHOWN:]
     head = ("day", "read", "flips a bit", "bursts", "margin")
