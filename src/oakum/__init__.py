@@ -14,10 +14,13 @@ from oakum.errors import CannotCheck, FormatError, OakumError, UsageError
 
 if TYPE_CHECKING:
     from oakum.jobs.audit import AuditOptions, audit
+    from oakum.jobs.damage import Wishes
     from oakum.jobs.describe import describe
     from oakum.jobs.history import history
     from oakum.jobs.pipe import protect_pipe
+    from oakum.jobs.plan import plan
     from oakum.jobs.protect import protect
+    from oakum.jobs.rehearse import rehearse
     from oakum.jobs.repair import repair, roll_back
     from oakum.jobs.verify import verify
 
@@ -25,20 +28,22 @@ __version__ = "0.1.0"
 
 _LAZY = {
     "AuditOptions": "oakum.jobs.audit",
+    "Wishes": "oakum.jobs.damage",
     "audit": "oakum.jobs.audit",
     "history": "oakum.jobs.history",
     "describe": "oakum.jobs.describe",
+    "plan": "oakum.jobs.plan",
     "protect": "oakum.jobs.protect",
     "protect_pipe": "oakum.jobs.pipe",
+    "rehearse": "oakum.jobs.rehearse",
     "repair": "oakum.jobs.repair",
     "roll_back": "oakum.jobs.repair",
     "verify": "oakum.jobs.verify",
 }
 
 __all__ = [
-    "AuditOptions", "CannotCheck", "FormatError", "OakumError", "UsageError", "__version__", "audit",
-    "describe", "history", "protect",
-    "protect_pipe", "repair", "roll_back", "verify",
+    "AuditOptions", "CannotCheck", "FormatError", "OakumError", "UsageError", "Wishes", "__version__", "audit",
+    "describe", "history", "plan", "protect", "protect_pipe", "rehearse", "repair", "roll_back", "verify",
 ]  # fmt: skip
 
 

@@ -8,8 +8,7 @@ import numpy as np
 from hypothesis import given
 from hypothesis import strategies as st
 
-from oakum.decoding.block import burst_bytes
-from oakum.decoding.bursts import BurstCounter, cluster
+from oakum.decoding.bursts import BurstCounter, burst_bytes, cluster
 
 
 def classify(flips: bytes) -> tuple[int, int, list[int]]:

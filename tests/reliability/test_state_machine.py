@@ -1,8 +1,8 @@
 """A set and its sidecar through a long life, held against a model that knows the right bytes.
 
 Rules protect, flip bits, overwrite, cut, delete, rename, edit, hurt and swap the sidecar, verify, repair
-beside, in place and back. The model keeps what was protected: a repair that says it worked has the right bytes,
-one that says it did not has changed nothing, and verify never calls damage intact.
+beside, in place and back. The model keeps what was protected: a repair that says it worked has the right
+bytes, one that says it did not has changed nothing, and verify never calls damage intact.
 """
 
 from __future__ import annotations

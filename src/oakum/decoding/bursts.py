@@ -64,6 +64,22 @@ def _join(parts: Clusters) -> Clusters:
     )
 
 
+def burst_bytes(flips: NDArray[np.uint8]) -> NDArray[np.bool_]:
+    """Which bytes of each row of `flips` lie inside a burst, right ones too (seen within the cell alone)."""
+    height, width = flips.shape
+    rows, places = np.nonzero(flips)
+    # One long line, with a gap between the rows that no cluster can bridge.
+    stride = width + 64
+    line = rows.astype(np.int64) * stride + places
+    found = cluster(line, np.zeros_like(line))
+    bursts = found[found.burst]
+    edges = np.zeros(height * stride + 1, np.int8)
+    edges[bursts.start] += 1
+    edges[bursts.stop] -= 1
+    inside = np.cumsum(edges[:-1], dtype=np.int8).reshape(height, stride)
+    return np.asarray(inside[:, :width] > 0)
+
+
 class BurstCounter:
     """Adds up flips in bursts and scattered ones over cells that come in any order.
 

@@ -373,8 +373,8 @@ def replacing(sidecar: Path, overwrite: bool) -> Iterator[None]:
     with Lock(sidecar):
         if unfinished(sidecar):
             raise UsageError(
-                f"a repair in place with {sidecar} was interrupted; first finish it with oakum repair --in-place "
-                "or undo it with --roll-back"
+                f"a repair in place with {sidecar} was interrupted; first finish it with oakum repair "
+                "--in-place or undo it with --roll-back"
             )
         yield
 
