@@ -113,6 +113,7 @@ def test_flips_over_the_years_cancel_each_other() -> None:
     # Two flips of a bit leave it as it was: p2 = 2 p (1 - p) (common practice).
     assert Channel(0.1, years=2).final_flip_rate == pytest.approx(0.18)
     assert Channel(0.5, years=7).final_flip_rate == 0.5
+    assert Channel(years=7).with_final_flip_rate(0.01).final_flip_rate == pytest.approx(0.01, rel=1e-12)
     assert Channel(1e-20, years=30).final_flip_rate == pytest.approx(3e-19, rel=1e-12)
 
 

@@ -42,8 +42,9 @@ _LAZY = {
 }
 
 __all__ = [
-    "AuditOptions", "CannotCheck", "FormatError", "OakumError", "UsageError", "Wishes", "__version__", "audit",
-    "describe", "history", "plan", "protect", "protect_pipe", "rehearse", "repair", "roll_back", "verify",
+    "AuditOptions", "CannotCheck", "FormatError", "OakumError", "UsageError", "Wishes", "__version__",
+    "audit", "describe", "history", "plan", "protect", "protect_pipe", "rehearse", "repair", "roll_back",
+    "verify",
 ]  # fmt: skip
 
 

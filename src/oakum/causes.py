@@ -301,9 +301,7 @@ def _overwritten(rest: _Rest) -> Iterator[CauseFinding]:
     if not chosen.any():
         return
     longest = int(length[chosen].max())
-    evidence = (
-        f"{_runs(int(chosen.sum()), 'dense ')} of up to {longest:,} bytes, at no common boundary"
-    )
+    evidence = f"{_runs(int(chosen.sum()), 'dense ')} of up to {longest:,} bytes, at no common boundary"
     names = tuple(rest.pattern.members[i].path for i in np.unique(runs.owner[chosen]).tolist())
     yield _finding(Cause.RUNS, float(weight[chosen].max()), evidence, rest.take(chosen), names)
 

@@ -110,6 +110,10 @@ class Channel:
             return 0.5
         return -expm1(self.years * float(np.log1p(-2 * self.flip_rate))) / 2
 
+    def with_final_flip_rate(self, rate: float) -> Channel:
+        """The same medium, but for so many flips in the end; 0 <= rate < 0.5."""
+        return replace(self, flip_rate=-expm1(float(np.log1p(-2 * rate)) / self.years) / 2)
+
     def after(self, years: float) -> Channel:
         """The same medium read after another time."""
         return replace(self, years=years)

@@ -2,6 +2,7 @@
 
     python tests/benchmarks/rehearsals.py --measure     measures the curves that predict flips (minutes)
     python tests/benchmarks/rehearsals.py               rehearses and compares; at most 3 of 60 may differ
+    python tests/benchmarks/rehearsals.py --channel flips --code 0      a part of it, to share out the work
 
 Short codes and files of one block make it affordable: everything is the real thing, from the sidecar on the
 medium to the last trial of the decoder. Lost sectors are as long as a strip and strike the data alone, so
@@ -18,7 +19,6 @@ import sys
 import tempfile
 import time
 from collections.abc import Callable
-from dataclasses import replace
 from math import exp
 from pathlib import Path
 
@@ -107,22 +107,23 @@ def sector_points(name: str, length: int) -> list[tuple[Wishes, float]]:
     return [(wishes(rate := invert(loss, float(t), 0.0, most)), loss(rate)) for t in TARGETS]
 
 
-def compare(folder: Path, flip_trials: int, sector_trials: int) -> int:
+def compare(folder: Path, codes: list[str], trials_of: dict[str, int]) -> int:
     """Rehearse all points; returns how many predictions lie outside their interval."""
     outside = points = 0
-    for name, (_, width) in CODES.items():
+    for name in codes:
+        width = CODES[name][1]
         code = resolve_code(name)
         path = folder / f"{code.outer.k}-{code.inner.m}.bin"
         path.write_bytes(np.random.default_rng(width).bytes(code.outer.k * width))
         protect([path], code=name)
-        plans = [
-            ("flips", flip_trials, FLIP_SEED, flip_points(name)),
-            ("sectors", sector_trials, SECTOR_SEED, sector_points(name, path.stat().st_size)),
-        ]
-        for channel, trials, seed, todo in plans:
+        for channel, trials in trials_of.items():
+            if channel == "flips":
+                seed, todo = FLIP_SEED, flip_points(name)
+            else:
+                seed, todo = SECTOR_SEED, sector_points(name, path.stat().st_size)
             for number, (wishes, predicted) in enumerate(todo):
                 begin = time.monotonic()
-                result = rehearse(path, replace(wishes), trials=trials, seed=1000 * seed + number)
+                result = rehearse(path, wishes, trials=trials, seed=1000 * seed + number)
                 lost = trials - result.survived
                 low, high = clopper_pearson(lost, trials, LEVEL)
                 points += 1
@@ -143,12 +144,17 @@ def main() -> None:
     parser.add_argument("--blocks", type=int, default=60)
     parser.add_argument("--flip-trials", type=int, default=60)
     parser.add_argument("--sector-trials", type=int, default=200)
+    parser.add_argument("--channel", choices=["flips", "sectors"])
+    parser.add_argument("--code", type=int, choices=range(len(CODES)))
     options = parser.parse_args()
     if options.measure:
         measure(options.blocks)
         return
+    trials = {"flips": options.flip_trials, "sectors": options.sector_trials}
+    chosen = {channel: n for channel, n in trials.items() if options.channel in (None, channel)}
+    codes = list(CODES) if options.code is None else [list(CODES)[options.code]]
     with tempfile.TemporaryDirectory() as folder:
-        sys.exit(compare(Path(folder), options.flip_trials, options.sector_trials) > 3)
+        sys.exit(compare(Path(folder), codes, chosen) > 3)
 
 
 if __name__ == "__main__":

@@ -8,6 +8,7 @@ from __future__ import annotations
 
 from collections.abc import Iterable
 from dataclasses import dataclass, replace
+from unittest.mock import patch
 
 import numpy as np
 import xxhash
@@ -15,7 +16,9 @@ from numpy.typing import NDArray
 
 from oakum.algebra.concatenated import ConcatenatedCode
 from oakum.algebra.naming import resolve_code
-from oakum.decoding.block import RIGHT, UNKNOWN, WRONG, BlockOutcome, Decoders, _Block, _Posed
+from oakum.decoding.block import RIGHT, UNKNOWN, WRONG, BlockOutcome, Decoders, decode_block
+from oakum.decoding.cells import Cells
+from oakum.decoding.columns import Columns, _Posed
 from oakum.geometry import CELL, Geometry
 from oakum.kernels.stripmap import StripMap
 
@@ -65,6 +68,7 @@ class Damaged:
         self.geometry, self.cells, self.parity = geometry, cells, parity
         self.received, self.received_parity = cells.copy(), parity.copy()
         self.digested = True
+        self.wrongly_pinned = 0
 
     # -- damage --------------------------------------------------------------------------------------
 
@@ -122,23 +126,24 @@ class Findings:
 
 def decode(block: Damaged, decoders: Decoders) -> Findings:
     """Decode a block and compare every column with the truth, also while the decoder works."""
-    witness = _Witness(block, decoders)
-    outcome = witness.run()
+    block.wrongly_pinned = 0
+    with patch("oakum.decoding.block.Columns", _WatchedColumns):
+        outcome = decode_block(block, decoders)
     truth = block.cells[outcome.strips]
     lost = ~outcome.known.all(axis=0)
     wrong = (outcome.known & (outcome.right != truth)).any(axis=0)
-    return Findings(outcome, lost, wrong, witness.wrongly_pinned)
+    return Findings(outcome, lost, wrong, block.wrongly_pinned)
 
 
-class _Witness(_Block):
-    """The block decoder, watched: counts the columns that it pins to something else than the truth."""
+class _WatchedColumns(Columns):
+    """Counts the columns that are pinned to something else than the truth."""
 
-    def __init__(self, block: Damaged, decoders: Decoders) -> None:
-        super().__init__(block, decoders)
-        self._truth = block.cells[self.strips]
-        self.wrongly_pinned = 0
+    def __init__(self, source: Damaged, decoders: Decoders, cells: Cells) -> None:
+        super().__init__(source, decoders, cells)
+        self._block, self._truth = source, source.cells[cells.strips]
 
     def _pin(self, posed: _Posed, magnitudes: Bytes, good: Mask) -> None:
         super()._pin(posed, magnitudes, good)
         places = posed.places[good]
-        self.wrongly_pinned += int((self.value[:, places] != self._truth[:, places]).any(axis=0).sum())
+        wrong = self.cells.value[:, places] != self._truth[:, places]
+        self._block.wrongly_pinned += int(wrong.any(axis=0).sum())

@@ -14,10 +14,10 @@ HOPELESS = [
     ("slim", 0.015),
     ("shelf", 0.02),
     ("stout", 0.04),
-    ("plain", 0.02),
+    ("plain", 0.03),
     ("RS(255,239)+EB(128,112)", 0.03),
 ]
-AT_THE_EDGE = [("slim", 0.0085), ("shelf", 0.0130), ("plain", 0.0058), ("RS(255,239)+EB(128,112)", 0.0135)]
+AT_THE_EDGE = [("slim", 0.0085), ("shelf", 0.0142), ("plain", 0.0058), ("RS(255,239)+EB(128,112)", 0.0135)]
 
 
 @pytest.mark.parametrize("digested", [True, False])

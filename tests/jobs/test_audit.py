@@ -187,6 +187,36 @@ def test_a_cause_is_named_where_nothing_can_be_corrected(tmp_path: Path, cause: 
     assert s.flip_rate.exposure < s.bits_read
 
 
+RANDOM = content(9000, 31)
+
+
+def leaky(data: bytes) -> bytes:
+    """A bit in each of 150 random bytes becomes 0, where it was not."""
+    out = bytearray(data)
+    for place in np.random.default_rng(12).choice(len(data), 150, replace=False).tolist():
+        out[place] &= ~(1 << place % 7)
+    return bytes(out)
+
+
+@pytest.mark.parametrize(
+    ("cause", "before", "after"),
+    [
+        (Cause.HIGH_BIT, "fährt über die Brücke\n".encode() * 300, None),
+        (Cause.STUCK_BIT, RANDOM, bytes(b | 8 if i % 8 == 5 else b for i, b in enumerate(RANDOM))),
+        (Cause.DIRECTION, RANDOM, leaky(RANDOM)),
+        (
+            Cause.PERIOD,
+            RANDOM,
+            bytes(b ^ 1 << i // 277 % 8 if i % 277 == 13 else b for i, b in enumerate(RANDOM)),
+        ),
+    ],
+)
+def test_a_cause_in_single_bits(tmp_path: Path, cause: Cause, before: bytes, after: bytes | None) -> None:
+    target = changed(tmp_path, before, after or bytes(b & 0x7F for b in before))
+    assert target.outcome is Outcome.CORRECTABLE
+    assert target.findings[0].cause is cause, target.findings
+
+
 def test_read_errors(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
     folder = plant(tmp_path / "set", {"a": content(400_000)})
     protect([folder])

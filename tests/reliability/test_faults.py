@@ -49,7 +49,7 @@ def test_every_call_fails(tmp_path: Path, long: bool, case: type[Case], how: str
             raise AssertionError(note) from error
         if n == 1:
             total = faults.count if how == "short" else calls(case, tmp_path / "count")
-            step = 1 if long else max(1, total // (12 if how == "short" else 30))
+            step = 1 if long else max(1, total // (8 if how == "short" else 20))
         shutil.rmtree(folder)
         n += step
 

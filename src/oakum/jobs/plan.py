@@ -155,16 +155,10 @@ def _curves(shapes: Sequence[Shape], channel: Channel) -> tuple[Curve, ...]:
         Curve(
             shape.code.name,
             tuple(rates),
-            tuple(forecast(shape, _with_final_rate(channel, rate)).stream[1] for rate in rates),
+            tuple(forecast(shape, channel.with_final_flip_rate(rate)).stream[1] for rate in rates),
         )
         for shape in shapes[::-step][::-1]
     )
-
-
-def _with_final_rate(channel: Channel, rate: float) -> Channel:
-    """The channel with so many flips at the end of its years."""
-    yearly = -np.expm1(np.log1p(-2 * rate) / channel.years) / 2
-    return replace(channel, flip_rate=float(yearly))
 
 
 def _command(chosen: Candidate, path: Path | None, depth: int | None) -> str:

@@ -72,7 +72,10 @@ def rehearse(
     begin = time.monotonic()
     if trials < 1:
         raise UsageError(f"{trials} trials prove nothing; give at least 1")
-    channel, assumptions = wishes.channel() if not _unset(wishes, find_limit) else (Channel(), ())
+    unset = find_limit and replace(wishes, spare_sidecar=False) == Wishes()  # The search begins from nothing.
+    channel, assumptions = (
+        wishes.channel() if not unset else (Channel(spare_sidecar=wishes.spare_sidecar), ())
+    )
     path = find_sidecar(target, sidecar)
     stage = _Stage.prepare(target, path, root, jobs, progress)
     limit, ran, predicted = None, [], None
@@ -90,11 +93,6 @@ def rehearse(
         LEVEL, clopper_pearson(survived, len(ran), LEVEL) if ran else None, predicted, limit,
         time.monotonic() - begin,
     )  # fmt: skip
-
-
-def _unset(wishes: Wishes, find_limit: bool) -> bool:
-    """Whether a search is to begin from nothing at all."""
-    return find_limit and replace(wishes, spare_sidecar=False) == Wishes()
 
 
 # -- bytes with noise over them
@@ -288,7 +286,7 @@ def _find_limit(stage: _Stage, channel: Channel, seed: int) -> Limit:
         nonlocal steps
         steps += 1
         stage.progress.phase(f"trying a {quantity} of {_shown(value)}", None)
-        trial = stage.trial(steps, with_quantity(channel, by_burst, value), (seed, 0), to_first_loss=True)
+        trial = stage.trial(steps, _with_quantity(channel, by_burst, value), (seed, 0), to_first_loss=True)
         return not trial.survived
 
     survived, lost = _bracket(lost_at, first, highest)
@@ -322,10 +320,10 @@ def _bracket(
     return value, None
 
 
-def with_quantity(channel: Channel, by_burst: bool, value: float) -> Channel:
+def _with_quantity(channel: Channel, by_burst: bool, value: float) -> Channel:
     """The channel with another burst length, or another flip rate at the time of reading."""
     if not by_burst:
-        return replace(channel, flip_rate=value, years=1.0)
+        return channel.with_final_flip_rate(value)
     runs = tuple(
         replace(run, lengths=((max(1, round(value)), 1.0),)) if run.readable and run.count else run
         for run in channel.runs
