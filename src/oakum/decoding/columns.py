@@ -269,7 +269,7 @@ class Columns:
         rivalled = np.zeros(len(good), bool)
         most = np.maximum(errors, 0) + np.count_nonzero(erased, axis=0)
         # The cheap bound first: a rival alters D - `most` others at least, for 2 each less the slack.
-        which = np.flatnonzero(good & (2 * most + posed.slack > distance))
+        which = np.flatnonzero(good & (posed.least_distance < distance) & (2 * most + posed.slack > distance))
         if len(which):
             which = which[posed.distances.rival_bound(most[which], which, distance) < distance]
         if len(which):
@@ -351,12 +351,23 @@ class _Posed:
         return Distances.of(self.known, self.inner_distance)
 
     @cached_property
+    def least_distance(self) -> NDArray[np.float64]:
+        """A lower bound on the generalised distance of any codeword, for each column."""
+        void, corrected = self._unclean
+        return np.asarray(void + corrected * (2 / self.inner_distance))
+
+    @cached_property
     def slack(self) -> NDArray[np.float64]:
         """How much cheaper than 2 a symbol all symbols of a column together are for a rival, at the most."""
-        known, d = self.known, self.inner_distance
-        void = np.count_nonzero((known.status >= UNUSABLE) | known.erased, axis=0)
-        unclean = np.count_nonzero(known.status, axis=0)
-        return np.asarray(void + unclean * ((d - 1) // 2 * 2 / d))
+        void, corrected = self._unclean
+        return np.asarray(void + corrected * ((self.inner_distance - 1) // 2 * 2 / self.inner_distance))
+
+    @cached_property
+    def _unclean(self) -> tuple[Strips, Strips]:
+        """How many symbols of each column have no reliability at all, and how many one between 0 and 1."""
+        void = self.known.erased | (self.known.status >= DENSE)
+        corrected = (self.known.status != 0) & (self.known.status < UNUSABLE) & ~void
+        return np.count_nonzero(void, axis=0), np.count_nonzero(corrected, axis=0)
 
     @cached_property
     def doubtful(self) -> Strips:
