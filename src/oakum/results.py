@@ -178,8 +178,8 @@ class Loss:
 
     `column` is that of one outer codeword in one pass of the decoder. Columns that share words are lost
     together rather than one by one; `block` and `stream` are therefore bounds, (at least, at most), in one
-    pass. `measured` is the most that the stream's chance can be with feedback, by the decoder's measured curve;
-    None where there is none.
+    pass. `measured` is the most that the stream's chance can be with feedback, by the decoder's measured
+    curve; None where there is none.
     """
 
     column: float

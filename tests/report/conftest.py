@@ -80,7 +80,7 @@ def uncorrectable(correctable: CheckResult) -> CheckResult:
         outcome=Outcome.UNCORRECTABLE,
         totals=replace(correctable.totals, blocks_correctable=2, blocks_uncorrectable=1),
         blocks=(
-            BlockReport(0, 1, Outcome.UNCORRECTABLE, 1_000, 300, 700_000, None),
+            BlockReport(0, 1, Outcome.UNCORRECTABLE, None, None, 700_000, None),
             BlockReport(0, 2, Outcome.CORRECTABLE, 234, 180, 0, -0.03),
             BlockReport(0, 4, Outcome.CORRECTABLE, 0, 0, 1_300_000, 0.625),
         ),
