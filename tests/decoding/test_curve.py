@@ -124,7 +124,7 @@ def test_no_worse_and_no_better_than_stored(point: curve.Point) -> None:
 
     If the decoder has become better, measure the point again and store it.
     """
-    blocks = 10
+    blocks = 8
     now = curve.measure(point.code, point.rate, blocks, width=NARROW, seed=point.seed + 1)
     error = point.spread * (1 / blocks + 1 / len(point.lost)) ** 0.5
     assert abs(now.share - point.share) <= 3.5 * error

@@ -22,7 +22,7 @@ from oakum.members import Folder, Member, collect
 from oakum.results import Outcome
 from oakum.sidecar.bootstrap import MARKER, encode, unpack
 from oakum.sidecar.layout import TEXT_BYTES
-from oakum.sidecar.table import Kind, Piece, unpack_table
+from oakum.sidecar.table import Kind, Piece, packed_length, unpack_table
 
 Names = dict[bytes, bytes]
 JOBS: list[Callable[[Path], object]] = [
@@ -212,6 +212,12 @@ def test_entries_with_impossible_sizes(size: int, offset: int, length: int, ends
         return
     assert piece.offset + piece.length <= piece.size <= 1 << 60
     assert not ends or piece.offset + piece.length == piece.size
+
+
+@given(st.binary(min_size=1, max_size=40), st.binary(max_size=40))
+def test_the_length_of_an_entry(path: bytes, target: bytes) -> None:
+    entry = Piece(Kind.LINK, path, 0o777, 0, 0, 0, 0, True, target=target).pack()
+    assert packed_length(path, target) == len(entry)
 
 
 def test_a_member_that_claims_to_be_huge(room: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
