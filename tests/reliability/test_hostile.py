@@ -250,7 +250,7 @@ def test_stretches_of_another_sidecar(tmp_path: Path, stretches: tuple[int, ...]
     plant(tmp_path, data)
     whole, other = (protect([tmp_path / name]).sidecar.read_bytes() for name in data)
     assert len(whole) == len(other)
-    from oakum.jobs.checking import open_set
+    from oakum.jobs.opening import open_set
 
     opened = open_set(tmp_path / "mine.oakum", None)
     opened.close()

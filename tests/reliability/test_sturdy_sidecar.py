@@ -18,7 +18,7 @@ from support import content, overwritten, plant, rewrite, snapshot, with_flips
 
 from oakum import protect, repair, verify
 from oakum.geometry import CELL
-from oakum.jobs.checking import open_set
+from oakum.jobs.opening import open_set
 from oakum.results import MemberState, Outcome
 
 PIECE = 64 << 10

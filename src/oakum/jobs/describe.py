@@ -6,8 +6,8 @@ import os
 from pathlib import Path
 
 from oakum.files import FileBytes
-from oakum.jobs.checking import readable
 from oakum.jobs.common import absolute, find_sidecar, summarise
+from oakum.jobs.opening import readable
 from oakum.results import Description, MemberDescription
 from oakum.sidecar.reading import find_sections
 from oakum.sidecar.table import Kind, Piece

@@ -20,8 +20,9 @@ import numpy as np
 from oakum.errors import CannotCheck, UsageError
 from oakum.files import Fault, NewFile, let_go, read_into, room_in
 from oakum.geometry import CELL
-from oakum.jobs.checking import RIGHT, Bytes, Finding, KnownMember, ProtectedSet, Range, WindowCheck
+from oakum.jobs.checking import RIGHT, Bytes, Finding, Range, WindowCheck
 from oakum.jobs.journal import PATCH, Condition, Draft, Entry, Journal, Patch, Thing
+from oakum.jobs.opening import KnownMember, ProtectedSet
 from oakum.jobs.rebuild import write_sidecar
 from oakum.jobs.replay import Place, finish, refuse_unfit, without
 from oakum.jobs.tally import Tally

@@ -8,7 +8,7 @@ from typing import Protocol
 
 from oakum.encoding import Changed, Kernels, Unreadable, WindowEncoder, plan_reading
 from oakum.files import NewFile
-from oakum.jobs.checking import ProtectedSet
+from oakum.jobs.opening import ProtectedSet
 from oakum.jobs.protect import Placed, pack_table
 from oakum.jobs.verify import SetCheck
 from oakum.members import MemberHasher, MemberStream, Opener, Span, Stream

@@ -22,18 +22,10 @@ from oakum.errors import CannotCheck, FormatError, UsageError
 from oakum.files import FileBytes
 from oakum.forecast import Shape, forecast
 from oakum.geometry import CELL
-from oakum.jobs.checking import (
-    Finding,
-    OpenBytes,
-    OpenStream,
-    ProtectedSet,
-    Range,
-    assemble,
-    look_at_members,
-    open_set,
-)
+from oakum.jobs.checking import Finding, Range
 from oakum.jobs.common import announce_compiling, find_sidecar, summarise
 from oakum.jobs.damage import Wishes
+from oakum.jobs.opening import OpenBytes, OpenStream, ProtectedSet, assemble, look_at_members, open_set
 from oakum.jobs.tally import Tally
 from oakum.jobs.verify import SetCheck, result_of
 from oakum.members import MemberStream, Span

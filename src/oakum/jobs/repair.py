@@ -17,9 +17,10 @@ from pathlib import Path
 
 from oakum.errors import CannotCheck, UsageError
 from oakum.files import Lock, NewFile, reason
-from oakum.jobs.checking import Finding, KnownMember, ProtectedSet, open_set
+from oakum.jobs.checking import Finding
 from oakum.jobs.common import DEFAULT_MEMORY, find_sidecar
 from oakum.jobs.inplace import InPlace
+from oakum.jobs.opening import KnownMember, ProtectedSet, open_set
 from oakum.jobs.rebuild import rebuild_sidecar
 from oakum.jobs.replay import resume, undo
 from oakum.jobs.tally import Tally

@@ -8,7 +8,8 @@ from pathlib import Path
 import numpy as np
 
 from oakum.decoding.bursts import BurstCounter
-from oakum.jobs.checking import Finding, KnownMember, ProtectedSet, WindowCheck
+from oakum.jobs.checking import Finding, WindowCheck
+from oakum.jobs.opening import KnownMember, ProtectedSet
 from oakum.results import BlockReport, MemberReport, MemberState, Outcome, SidecarReport, Totals
 from oakum.sidecar.table import Kind
 

@@ -11,8 +11,9 @@ from typing import TYPE_CHECKING
 
 from oakum.algebra.concatenated import ConcatenatedCode
 from oakum.errors import FormatError
-from oakum.jobs.checking import UNKNOWN, Finding, KnownMember, ProtectedSet, WindowCheck, open_set
+from oakum.jobs.checking import UNKNOWN, Finding, WindowCheck
 from oakum.jobs.common import DEFAULT_MEMORY, announce_compiling, find_sidecar, summarise
+from oakum.jobs.opening import KnownMember, ProtectedSet, open_set
 from oakum.jobs.replay import unfinished
 from oakum.jobs.unreadable import read_unreadable
 from oakum.members import MemberHasher
