@@ -24,6 +24,9 @@ from oakum.sidecar.table import Kind, Piece
 Bytes = NDArray[np.uint8]
 Range = tuple[int, int]
 
+CHUNK = 8 << 20
+"""Bytes of a member read at a time."""
+
 
 @dataclass
 class KnownMember:
