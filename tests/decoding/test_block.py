@@ -31,7 +31,7 @@ def is_back(block: MemoryBlock) -> BlockOutcome:
     assert outcome.correctable
     received = np.where(block.lost, np.uint8(0), block.strips)[outcome.strips]
     flips = np.where(block.lost[outcome.strips], np.uint8(0), received ^ block.sent[outcome.strips])
-    assert np.array_equal(outcome.flips(), flips)
+    assert np.array_equal(outcome.flips, flips)
     return outcome
 
 
@@ -145,7 +145,7 @@ def test_wrong_inner_parity_alone_harms_nothing() -> None:
     block.withheld[:] = True
     block.inner_received[20:30] ^= np.uint8(0x6B)
     outcome = is_back(block)
-    assert not outcome.flips().any()
+    assert not outcome.flips.any()
 
 
 # -- step 3: t and t + 1 ---------------------------------------------------------------------------
@@ -262,7 +262,7 @@ def test_what_other_members_vouch_for_is_never_altered() -> None:
     block.vouched[:100, :64] = True
     flip(block, 50, np.arange(64, 128), 0x11)
     outcome = is_back(block)
-    assert not outcome.flips()[:, :64].any()
+    assert not outcome.flips[:, :64].any()
 
 
 @pytest.mark.parametrize("digests", [True, False])

@@ -49,7 +49,9 @@ def counted(flips: bytes, cuts: list[int], order: int) -> tuple[int, int, list[i
     for i in np.random.default_rng(order).permutation(len(cells)).tolist():
         start, stop = cells[i]
         places = start + np.flatnonzero(data[start:stop]).astype(np.int64)
-        counter.add(places, np.bitwise_count(data[places]).astype(np.int64), start, stop)
+        counter.add(
+            places, np.bitwise_count(data[places]).astype(np.int64), np.array([start]), np.array([stop])
+        )
     counter.finish()
     return counter.burst, counter.scattered, sorted(counter.lengths.tolist())
 
@@ -104,7 +106,7 @@ def test_burst_bytes_row_by_row(rows: list[list[tuple[str, int]]]) -> None:
     lines = [line(runs) for runs in rows]
     width = max(1, *map(len, lines))
     flips = np.stack([np.frombuffer(text.ljust(width, b"\0"), np.uint8) for text in lines])
-    inside = burst_bytes(flips)
+    inside = burst_bytes(flips.shape, *np.nonzero(flips))
     for text, marked, row in zip(lines, inside, flips, strict=True):
         _, _, lengths = classify(text)
         assert int(np.bitwise_count(row[marked]).sum()) == classify(text)[0]

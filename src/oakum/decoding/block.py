@@ -42,7 +42,9 @@ def _feedback(cells: Cells, columns: Columns, decoders: Decoders) -> int:
             return number
         finished = int(cells.finished.sum())
         solved = columns.one_round()
-        if decoders.feedback or not len(columns.open):
+        if not len(columns.open):
+            cells.ask_digests()  # Every byte is known: most often nothing is left for the words to do.
+        if not cells.finished.all() and (decoders.feedback or not len(columns.open)):
             cells.decode_words()
         if cells.finished.all():
             return number + 1
@@ -73,7 +75,7 @@ def _outcome(
 
 def _margin(cells: Cells, outcome: BlockOutcome, first_value: Bytes) -> float:
     """1 - max over the columns of (2 wrong + erasures) / r, counted after the inner code."""
-    bad = cells.erased | burst_bytes(outcome.flips())
+    bad = cells.erased | burst_bytes(cells.raw.shape, *outcome.wrong)
     wrong = (first_value != cells.value) & ~bad
-    load = 2 * wrong.sum(axis=0) + bad.sum(axis=0)
+    load = 2 * np.count_nonzero(wrong, axis=0) + np.count_nonzero(bad, axis=0)
     return 1.0 - float(load.max(initial=0)) / cells.g.r

@@ -64,15 +64,21 @@ def _join(parts: Clusters) -> Clusters:
     )
 
 
-def burst_bytes(flips: NDArray[np.uint8]) -> NDArray[np.bool_]:
-    """Which bytes of each row of `flips` lie inside a burst, right ones too (seen within the cell alone)."""
-    height, width = flips.shape
-    rows, places = np.nonzero(flips)
+def burst_bytes(
+    shape: tuple[int, int], rows: NDArray[np.intp], places: NDArray[np.intp]
+) -> NDArray[np.bool_]:
+    """Which bytes of cells, bool[shape], lie inside a burst, right ones too (seen within the cell alone).
+
+    `rows` and `places` are those of the wrong bytes, row after row.
+    """
+    height, width = shape
     # One long line, with a gap between the rows that no cluster can bridge.
     stride = width + 64
     line = rows.astype(np.int64) * stride + places
     found = cluster(line, np.zeros_like(line))
     bursts = found[found.burst]
+    if not len(bursts):
+        return np.zeros(shape, bool)
     edges = np.zeros(height * stride + 1, np.int8)
     edges[bursts.start] += 1
     edges[bursts.stop] -= 1
@@ -93,10 +99,15 @@ class BurstCounter:
         self._edges: list[Clusters] = []
         self._lengths: list[Integers] = []
 
-    def add(self, places: Integers, bits: Integers, start: int, stop: int) -> None:
-        """The wrong bytes (`places` in the stream, ascending) of a cell that takes up start..stop-1."""
+    def add(self, places: Integers, bits: Integers, starts: Integers, stops: Integers) -> None:
+        """The wrong bytes of some cells: ascending `places` in the stream, and `bits` flipped in each.
+
+        The cells take up starts[i]..stops[i]-1, in rising order.
+        """
         found = cluster(places, bits)
-        inside = (found.start - start >= GAP) & (stop - found.stop >= GAP)
+        first = starts[np.searchsorted(starts, found.start, side="right") - 1]
+        last = stops[np.searchsorted(starts, found.stop - 1, side="right") - 1]
+        inside = (found.start - first >= GAP) & (last - found.stop >= GAP)
         self._count(found[inside])
         if not inside.all():
             self._edges.append(found[~inside])

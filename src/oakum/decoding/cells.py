@@ -86,6 +86,11 @@ class Cells:
         """A value for each word as one for each byte."""
         return self.words.spread(of_words, self.staggers[rows], self.width)
 
+    def ask_digests(self) -> None:
+        """Ask the digests of all unfinished rows about the bytes as they are taken to be now."""
+        rows = np.flatnonzero(~self.finished)
+        self._ask_digests(rows, self.value[rows])
+
     def _ask_digests(self, rows: Strips, cells: Bytes) -> None:
         """Finish the rows whose cells agree with their digest."""
         for row, cell in zip(rows.tolist(), cells, strict=True):

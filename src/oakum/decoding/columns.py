@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Iterator
 from dataclasses import dataclass
 from functools import cached_property
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -111,13 +112,17 @@ class Columns:
 
     def _posed(self, places: Strips, known: Reliability) -> _Posed:
         """The columns `places` as a problem for the outer decoder."""
-        symbols = np.take(self.symbols, places, axis=1)
-        symbols[self.cells.strips] = np.take(self.cells.value, places, axis=1)
-        fixed = np.take(self.others_right, places, axis=1)
+        symbols = self._at(places, self.symbols)
+        symbols[self.cells.strips] = self._at(places, self.cells.value)
+        fixed = self._at(places, self.others_right)
         fixed[self.cells.strips] = ~known.open
-        late = np.take(self.late_erasures, places, axis=1)
+        late = self._at(places, self.late_erasures)
         syndromes = self.d.columns.syndromes(symbols)
         return _Posed(places, known, symbols, fixed, late, syndromes, self.d.code.inner.d)
+
+    def _at(self, places: Strips, array: NDArray[Any]) -> NDArray[Any]:
+        """Some columns of an array; the array itself, and no copy, when they are all."""
+        return array if len(places) == self.width else np.take(array, places, axis=1)
 
     def _try_as_received(self) -> int:
         """Decode the unsolved columns, erasing only what is known to be bad. Returns how many are solved.

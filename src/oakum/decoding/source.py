@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cached_property
 from typing import Protocol
 
 import numpy as np
@@ -89,6 +90,17 @@ class BlockOutcome:
         """Whether nothing of the block is lost."""
         return bool(self.finished.all())
 
+    @cached_property
     def flips(self) -> Bytes:
         """uint8[R, width]: received XOR right where both are known, zero elsewhere."""
-        return np.where(self.known & ~self.erased, self.received ^ self.right, np.uint8(0))
+        flips = self.received ^ self.right
+        if not self.known.all():
+            flips[~self.known] = 0
+        if self.erased.any():
+            flips[self.erased] = 0
+        return flips
+
+    @cached_property
+    def wrong(self) -> tuple[Strips, Strips]:
+        """Rows and columns of the bytes that are not zero in `flips`, row after row."""
+        return np.divmod(np.flatnonzero(self.flips.reshape(-1) != 0), max(self.flips.shape[1], 1))

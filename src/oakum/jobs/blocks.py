@@ -129,29 +129,30 @@ def examine(
 def _data_finding(window: WindowCheck, outcome: BlockOutcome, *, keep: bool) -> Finding:
     g = window.g
     rows = np.flatnonzero(outcome.strips < g.k)
-    flips = outcome.flips()[rows]
     finding = Finding(
         window.section.bootstrap.window, outcome.number, outcome.correctable,
-        np.empty(0, np.int64), np.empty(0, np.int64), [], [], int(outcome.erased[rows].sum()),
+        np.empty(0, np.int64), np.empty(0, np.int64), np.empty(0, np.int64), np.empty(0, np.int64), [],
+        int(outcome.erased[rows].sum()),
         outcome.words_corrected, outcome.words_flagged, outcome.margin, 0, 0, False, outcome.rounds,
         outcome.false_pins,
     )  # fmt: skip
-    places, bits, total = [], [], 0
-    for row, flipped in zip(rows.tolist(), flips, strict=True):
-        start = window.start + int(outcome.strips[row]) * g.depth + outcome.number * CELL
-        stop = min(start + g.width(outcome.number), window.start + g.length)
-        wrong = np.flatnonzero(flipped[: stop - start])
-        if len(wrong):
-            places.append(start + wrong.astype(np.int64))
-            bits.append(np.bitwise_count(flipped[wrong]).astype(np.int64))
-            finding.cells.append(((start, stop), slice(total, total + len(wrong))))
-            total += len(wrong)
-        if not outcome.finished[row]:
-            finding.lost.append((start, stop))
-        if keep and (len(wrong) or outcome.erased[row].any()):
-            finding.corrected.append((start, _best(outcome, row)[: stop - start]))
-    if places:
-        finding.places, finding.bits = np.concatenate(places), np.concatenate(bits)
+    starts = window.start + outcome.strips[rows] * g.depth + outcome.number * CELL
+    stops = np.minimum(starts + g.width(outcome.number), window.start + g.length)
+    wrong_rows, columns = outcome.wrong
+    inside = np.searchsorted(wrong_rows, len(rows))  # Strips of data come first.
+    wrong_rows, columns = wrong_rows[:inside], columns[:inside]
+    finding.places = starts[wrong_rows] + columns
+    finding.bits = np.bitwise_count(outcome.flips[wrong_rows, columns]).astype(np.int64)
+    finding.starts, finding.stops = starts, stops
+    lost = np.flatnonzero(~outcome.finished[rows])
+    finding.lost = list(zip(starts[lost].tolist(), stops[lost].tolist(), strict=True))
+    if keep:
+        altered = np.zeros(len(rows), bool)
+        altered[wrong_rows] = True
+        altered |= outcome.erased[rows].any(axis=1)
+        best = outcome.right if outcome.known.all() else _best(outcome)
+        for i in np.flatnonzero(altered).tolist():
+            finding.corrected.append((int(starts[i]), best[i, : stops[i] - starts[i]]))
     return finding
 
 
@@ -174,14 +175,14 @@ def _add_evidence(window: WindowCheck, outcome: BlockOutcome, finding: Finding) 
             finding.evidence.append((start, received[:length], None))
 
 
-def _best(outcome: BlockOutcome, row: int) -> Bytes:
-    """A cell as far as it is known: corrected where that is sure, as received elsewhere."""
-    return np.asarray(np.where(outcome.known[row], outcome.right[row], outcome.received[row]))
+def _best(outcome: BlockOutcome) -> Bytes:
+    """The cells as far as they are known: corrected where that is sure, as received elsewhere."""
+    return np.asarray(np.where(outcome.known, outcome.right, outcome.received))
 
 
 def _add_parity_strips(g: Geometry, outcome: BlockOutcome, finding: Finding) -> None:
     rows = np.flatnonzero(outcome.strips >= g.k)
-    flips = outcome.flips()[rows]
+    flips = outcome.flips[rows]
     finding.sidecar_bits += int(np.bitwise_count(flips).sum())
     finding.sidecar_symbols += int(np.count_nonzero(flips))
     finding.sidecar_lost |= not outcome.finished[rows].all()

@@ -51,8 +51,9 @@ class Finding:
     correctable: bool
     places: NDArray[np.int64]
     bits: NDArray[np.int64]
-    cells: list[tuple[Range, slice]]
-    """For each cell of data with wrong bytes: its range in the stream, and which of `places` are its."""
+    starts: NDArray[np.int64]
+    stops: NDArray[np.int64]
+    """Ranges in the stream of the data cells that were not right, ascending."""
 
     lost: list[Range]
     """Ranges of the stream that could not be put right."""

@@ -57,8 +57,7 @@ class Tally:
         self._sidecar_symbols += finding.sidecar_symbols
         self._sidecar_lost |= finding.sidecar_lost
         self.false_pins += finding.false_pins
-        for (start, stop), which in finding.cells:
-            self._bursts.add(finding.places[which], finding.bits[which], start, stop)
+        self._bursts.add(finding.places, finding.bits, finding.starts, finding.stops)
         if len(finding.places):
             owners = np.searchsorted(self._starts, finding.places, side="right") - 1
             np.add.at(self._bits, owners, finding.bits)
