@@ -30,6 +30,8 @@ def original(tmp_path_factory: pytest.TempPathFactory) -> Path:
     (folder / "plates" / "deep").mkdir(parents=True)
     for name, nbytes in {"a.tif": 90_000, "deep/b.tif": 40_000, "empty": 0, "line\nbreak": 7}.items():
         (folder / "plates" / name).write_bytes(rng.bytes(nbytes))
+    oakum("protect", "plates", "--output", "unused.oakum", cwd=folder)  # What must be compiled now is.
+    (folder / "unused.oakum").unlink()
     done = oakum("protect", "plates", cwd=folder)
     assert (done.returncode, done.stderr) == (0, b"")
     assert (folder / "plates.oakum").is_file()

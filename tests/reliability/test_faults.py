@@ -43,7 +43,8 @@ def test_every_call_fails(tmp_path: Path, long: bool, case: type[Case], how: str
         note = f"call {n} of {faults.count}: {faults.failed}"
         try:
             this.check(before, succeeded)
-            assert faults.failed, "the call that should fail was never made"
+            # Threads take turns as they like, and so a run may need a call less than the one before.
+            assert faults.failed or n > faults.count, "the call that should fail was never made"
             assert succeeded or how != "short"
         except (AssertionError, OakumError) as error:
             raise AssertionError(note) from error
