@@ -62,11 +62,6 @@ class Runs:
         total = sum(share for _, share in self.lengths)
         return tuple((length, share / total) for length, share in self.lengths)
 
-    @property
-    def mean_length(self) -> float:
-        """The average length of a run in bytes."""
-        return sum(length * share for length, share in self.shares)
-
     def expected(self, nbytes: int, years: float) -> float:
         """How many runs strike `nbytes` in `years`, on average."""
         return float(self.count) if self.count else self.per_tb_year * years * nbytes / TB
