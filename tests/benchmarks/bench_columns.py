@@ -2,12 +2,14 @@
 
     python tests/benchmarks/bench_columns.py
 
-Every column of RS(255,223) has the same number of wrong symbols, at places of its own. Megabytes of source a
-second mean little on a shared machine; only the ratios of one run hold. Decoding includes the syndromes.
+Every column of RS(255,223) has the same number of wrong symbols, at places of its own; decoding includes the
+syndromes. All run in one thread: `galois` would otherwise start one a core, and these wait for each other.
+Megabytes of source a second mean little on a shared machine, only the ratios of one run hold.
 """
 
 from __future__ import annotations
 
+import os
 import statistics
 import time
 from collections.abc import Callable
@@ -18,6 +20,8 @@ from numpy.typing import NDArray
 from oakum.algebra.outer import OuterCode
 from oakum.kernels import tiers
 from oakum.kernels.columns import ColumnDecoder
+
+os.environ["NUMBA_NUM_THREADS"] = "1"
 
 CODE = OuterCode(255, 223)
 COLUMNS = 4096
@@ -57,6 +61,34 @@ def galois_decoding(pattern: Bytes) -> Callable[[], None]:
     return run
 
 
+def reedsolo_decoding(pattern: Bytes) -> Callable[[], None]:
+    from reedsolo import RSCodec
+
+    codec = RSCodec(CODE.r, nsize=CODE.n, prim=CODE.field_poly, fcr=CODE.first_root)
+    words = np.ascontiguousarray(pattern[:, :GALOIS_COLUMNS].T).tobytes()
+
+    def run() -> None:
+        assert not any(codec.decode(words)[0])
+
+    return run
+
+
+def column_runs() -> dict[str, tuple[Callable[[], None], int]]:
+    """Name: the call, and its number of columns; ours by tier, then the two libraries."""
+    runs: dict[str, tuple[Callable[[], None], int]] = {}
+    for tier in tiers.available_tiers():
+        decoder = ColumnDecoder(CODE, tier)
+        for count in (0, 1, 4, 16):
+            runs[f"{tier}, {count} wrong"] = decoding(decoder, wrong_symbols(count, seed=count)), COLUMNS
+        pattern = wrong_symbols(16, seed=16)
+        marks = (pattern != 0).astype(np.uint8)
+        runs[f"{tier}, 16 erased"] = decoding(decoder, pattern, marks), COLUMNS
+    few = wrong_symbols(16, seed=16)
+    runs["galois, 16 wrong"] = galois_decoding(few), GALOIS_COLUMNS
+    runs["reedsolo, 16 wrong"] = reedsolo_decoding(few), GALOIS_COLUMNS
+    return runs
+
+
 def megabytes_per_second(runs: dict[str, tuple[Callable[[], None], int]]) -> dict[str, float]:
     """The median of each over rounds in which all take turns; the int is a run's number of columns."""
     seconds: dict[str, list[float]] = {name: [] for name in runs}
@@ -72,19 +104,10 @@ def megabytes_per_second(runs: dict[str, tuple[Callable[[], None], int]]) -> dic
 
 
 def main() -> None:
-    runs: dict[str, tuple[Callable[[], None], int]] = {}
-    for tier in tiers.available_tiers():
-        decoder = ColumnDecoder(CODE, tier)
-        for count in (0, 1, 4, 16):
-            runs[f"{tier}, {count} wrong"] = decoding(decoder, wrong_symbols(count, seed=count)), COLUMNS
-        pattern = wrong_symbols(16, seed=16)
-        marks = (pattern != 0).astype(np.uint8)
-        runs[f"{tier}, 16 erased"] = decoding(decoder, pattern, marks), COLUMNS
-    runs["galois, 16 wrong"] = galois_decoding(wrong_symbols(16, seed=16)), GALOIS_COLUMNS
-    rates = megabytes_per_second(runs)
+    rates = megabytes_per_second(column_runs())
     slowest = rates["galois, 16 wrong"]
     for name, rate in rates.items():
-        print(f"{name:24}{rate:9.1f} MB/s{rate / slowest:8.0f} x galois")
+        print(f"{name:24}{rate:9.1f} MB/s{rate / slowest:8.1f} x galois")
 
 
 if __name__ == "__main__":

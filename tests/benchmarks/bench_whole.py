@@ -85,6 +85,11 @@ def cpu_name() -> str:
         return platform.machine()
 
 
+def heading(runs: int) -> str:
+    """Date and machine, which a figure means nothing without."""
+    return f"{time.strftime('%Y-%m-%d')}, {cpu_name()}, {os.cpu_count()} cores, medians of {runs} runs"
+
+
 def main() -> None:
     parser = argparse.ArgumentParser(
         description=__doc__, formatter_class=argparse.RawDescriptionHelpFormatter
@@ -93,9 +98,7 @@ def main() -> None:
     parser.add_argument("--runs", type=int, default=5)
     parser.add_argument("--folder", type=Path, default=None)
     options = parser.parse_args()
-    print(
-        f"{time.strftime('%Y-%m-%d')}, {cpu_name()}, {os.cpu_count()} cores, medians of {options.runs} runs\n"
-    )
+    print(f"{heading(options.runs)}\n")
     print(f"{'size':>6}  {'command':<24}{'seconds':>9}{'over openssl':>14}{'peak MiB':>10}")
     for text in options.sizes:
         with tempfile.TemporaryDirectory(dir=options.folder) as folder:
