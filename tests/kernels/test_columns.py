@@ -19,7 +19,7 @@ from oakum.algebra.field import Field
 from oakum.algebra.outer import OuterCode
 from oakum.kernels import lanes, tiers
 from oakum.kernels.columns import FAILED, ColumnDecoder
-from oakum.kernels.roots import points
+from oakum.kernels.planes import points
 
 FORCED = os.environ.get(tiers.ENVIRONMENT_VARIABLE)
 TIERS = [FORCED] if FORCED else tiers.available_tiers()

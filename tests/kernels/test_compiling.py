@@ -117,6 +117,7 @@ def test_no_place_for_a_cache(cache: Cache, monkeypatch: pytest.MonkeyPatch, tmp
     assert compiling.cache_home() is None
     assert cache.compilations() == 1
     assert cache.compilations() == 1
+    assert cache.told[-1] == "compiling a product for this CPU; it cannot be kept for later runs"
 
 
 def test_second_choice_is_the_folder_for_temporary_files(
@@ -145,6 +146,14 @@ def test_folders_that_others_can_write_are_passed_over(cache: Cache, which: str)
     (home if which == "home" else home.parent).chmod(0o777)
     assert compiling.cache_home() is None
     assert cache.compilations() == 1
+
+
+@pytest.mark.skipif(os.geteuid() != 0, reason="only root can give a folder away")
+def test_nothing_is_made_in_a_folder_of_somebody_else(cache: Cache) -> None:
+    cache.home.mkdir(mode=0o700)
+    os.chown(cache.home, 65534, 65534)
+    assert compiling.cache_home() is None
+    assert list(cache.home.iterdir()) == []
 
 
 def test_links_are_passed_over(cache: Cache) -> None:

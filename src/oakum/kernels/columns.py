@@ -18,7 +18,6 @@ from oakum.algebra.outer import OuterCode
 from oakum.kernels.columns_kernels import FAILED, Tables, decode_columns
 from oakum.kernels.lanes import FIELD
 from oakum.kernels.parity import ParityEncoder
-from oakum.kernels.roots import factors
 from oakum.kernels.stripmap import StripMap
 
 __all__ = ["FAILED", "ColumnDecoder", "ErasureSolver"]
@@ -83,7 +82,7 @@ class ColumnDecoder:
             syndromes = tables.to_lanes[syndromes]
         decode_columns(
             np.ascontiguousarray(syndromes), np.ascontiguousarray(erased), chosen,
-            tables.places, tables.place_of, factors(), magnitudes, status,
+            tables.locators, tables.place_of, tables.scale_of, magnitudes, status,
         )  # fmt: skip
         return tables.from_lanes[magnitudes] if self._foreign else magnitudes, status
 

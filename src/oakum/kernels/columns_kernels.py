@@ -22,7 +22,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from oakum.algebra.field import Bytes
+from oakum.algebra.field import ORDER, Bytes
 from oakum.algebra.outer import OuterCode
 from oakum.kernels import lanes
 from oakum.kernels.compiling import kernel
@@ -38,7 +38,8 @@ from oakum.kernels.locator import (
     find_starts,
 )
 from oakum.kernels.magnitudes import find_evaluator, find_magnitudes
-from oakum.kernels.roots import NO_PLACE, POINTS, expand, factors, find_roots, points
+from oakum.kernels.planes import POINTS, points
+from oakum.kernels.roots import NO_PLACE, expand, find_roots
 
 Words = NDArray[np.uint64]
 Integers = NDArray[np.int64]
@@ -46,27 +47,24 @@ Integers = NDArray[np.int64]
 FAILED = -1
 """The status of a column that could not be decoded."""
 
-_LOCATOR, _INVERSE, _SCALE = range(3)  # rows of `Tables.places`
-
 
 class Tables:
     """What the kernel has to know about a code.
 
-    places: uint8[3, n], for each place its locator X, 1/X and X^(-first root), in the lanes' field;
+    locators: uint8[n], for each place its locator X in the lanes' field;
     place_of: uint8[256], the place whose 1/X is the Fourier transform's point q, or `NO_PLACE`;
+    scale_of: uint8[256], X^(-first root) at point q; nothing, uint8[0], where all are 1;
     to_lanes, from_lanes: uint8[256], the code's field to the lanes' field and back.
     """
 
     def __init__(self, outer: OuterCode) -> None:
         self.to_lanes = lanes.field_map(outer.field_poly)
         self.from_lanes = np.argsort(self.to_lanes).astype(np.uint8)
-        self.places = np.empty((3, outer.n), dtype=np.uint8)
-        self.places[_LOCATOR] = self.to_lanes[outer.locators]
-        self.places[_INVERSE] = FIELD.inverse(self.places[_LOCATOR])
-        self.places[_SCALE] = FIELD.power(self.places[_INVERSE], outer.first_root)
-        point_of = np.argsort(points())
+        self.locators = self.to_lanes[outer.locators]
         self.place_of = np.full(POINTS, NO_PLACE, dtype=np.uint8)
-        self.place_of[point_of[self.places[_INVERSE]]] = np.arange(outer.n)
+        self.place_of[np.argsort(points())[FIELD.inverse(self.locators)]] = np.arange(outer.n)
+        scales = FIELD.power(points(), outer.first_root % ORDER)
+        self.scale_of = scales if outer.first_root else scales[:0]
 
 
 # -- columns to lanes ---------------------------------------------------------------------------------------
@@ -135,14 +133,14 @@ def _reject_lost(erasures: Integers, r: int, counter: Bytes, flags: Words, found
     """
     for lane in range(LANES):
         lost = flags[LOST, lane >> 6] >> np.uint64(lane & 63) & ONE
-        expected = erasures[lane] + (r - erasures[lane] - counter[0, lane]) // 2
+        expected = erasures[lane] + (r - erasures[lane] - counter[0, lane] >> 1)
         if lost or erasures[lane] > r or found[lane] != expected:
             found[lane] = FAILED
 
 
 @subroutine
 def _store(
-    columns: Integers, erased: Bytes, roots: Bytes, found: Integers, staged: Bytes,
+    columns: Integers, erased: Bytes, place_of: Bytes, roots: Bytes, found: Integers, staged: Bytes,
     magnitudes: Bytes, status: NDArray[np.int16],
 ) -> None:  # fmt: skip
     """Write out the magnitudes and count the errors outside the erased places.
@@ -153,7 +151,7 @@ def _store(
         column = columns[lane]
         errors = min(found[lane], 0)  # FAILED or 0
         for e in range(found[lane]):
-            place = roots[e, lane]
+            place = place_of[roots[e, lane]]
             magnitudes[place, column] = staged[e, lane]
             if not (erased.shape[0] and erased[place, column]):
                 errors += 1
@@ -181,25 +179,25 @@ def _self_test(compiled: Callable[..., Any]) -> bool:
         syndromes ^= outer.field.multiply(outer.check_matrix[:, i, None], errors[i][None, :])
     found = np.zeros_like(errors)
     status = np.zeros(columns.size, dtype=np.int16)
-    compiled(syndromes, erased, columns, tables.places, tables.place_of, factors(), found, status)
+    compiled(syndromes, erased, columns, tables.locators, tables.place_of, tables.scale_of, found, status)
     expected = np.where(within, np.count_nonzero(errors * (1 - erased), axis=0), FAILED)
     return np.array_equal(status, expected) and np.array_equal(found, errors * within)
 
 
 @kernel(
-    "void(Array(uint8, 2, 'C', True), Array(uint8, 2, 'C', True), int64[::1], uint8[:, ::1], uint8[::1], "
-    "uint64[:, ::1], uint8[:, :], int16[::1])",
+    "void(Array(uint8, 2, 'C', True), Array(uint8, 2, 'C', True), int64[::1], uint8[::1], uint8[::1], "
+    "uint8[::1], uint8[:, :], int16[::1])",
     self_test=_self_test,
     purpose="the column decoder",
 )
 def decode_columns(
-    syndromes: Bytes, erased: Bytes, columns: Integers, places: Bytes, place_of: Bytes, factors: Words,
+    syndromes: Bytes, erased: Bytes, columns: Integers, locators: Bytes, place_of: Bytes, scale_of: Bytes,
     magnitudes: Bytes, status: NDArray[np.int16],
 ) -> None:  # fmt: skip
     """Write the magnitudes of the chosen `columns` into magnitudes[n, L] and their status into status[L].
 
-    `columns` are in rising order. erased[n, L] may have no rows: nothing is erased. `places` and `place_of`
-    as in `Tables`, `factors` as from `roots.factors`.
+    `columns` are in rising order. erased[n, L] may have no rows: nothing is erased. The three tables
+    are those of `Tables`.
     """
     r = syndromes.shape[0]
     blocks = np.zeros((r, BLOCK_WORDS), dtype=np.uint64)
@@ -219,17 +217,15 @@ def decode_columns(
     for first in range(0, columns.size, LANES):
         group = columns[first : first + LANES]
         _load_syndromes(syndromes, group, gathered, blocks)
-        _load_erasures(erased, group, places[_LOCATOR], gathered, flags, staged, erasures)
+        _load_erasures(erased, group, locators, gathered, flags, staged, erasures)
         most = find_starts(erasures, r, starts)
         find_erasure_locator(staged, most, locator, control)
         degree = find_locator(blocks, starts, most, locator, previous, control, flags)
         size = expand(locator, degree, constants)
-        find_roots(constants, size, factors, place_of, flags, values, roots, found)
+        find_roots(constants, degree, size, place_of, flags, values, roots, found)
         lanes.to_bytes(gathered, 0, control, COUNTER)
         _reject_lost(erasures, r, gathered, flags, found)
         if degree:
             find_evaluator(locator, degree, blocks, evaluator)
-            find_magnitudes(
-                locator, degree, evaluator, places[_INVERSE], places[_SCALE], roots, found, control, staged
-            )
-        _store(group, erased, roots, found, staged, magnitudes, status)
+            find_magnitudes(locator, degree, evaluator, scale_of, roots, found, control, staged)
+        _store(group, erased, place_of, roots, found, staged, magnitudes, status)

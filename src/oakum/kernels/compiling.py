@@ -52,7 +52,7 @@ class Kernel:
     def __init__(
         self,
         function: Callable[..., Any],
-        signature: str,
+        signature: Any,
         self_test: Callable[[Callable[..., Any]], bool],
         purpose: str,
     ) -> None:
@@ -96,7 +96,7 @@ class Kernel:
         """Compile in a folder of our own and move it to its place when it is whole and sealed."""
         partial = Path(tempfile.mkdtemp(prefix=f"{self.name}.", dir=folder.parent))
         try:
-            self._announce()
+            self._announce("later runs will find it ready")
             compiled: Callable[..., Any] = _jit(self.function, self.signature, partial)
             if not self.self_test(compiled):
                 return None
@@ -108,7 +108,7 @@ class Kernel:
             shutil.rmtree(partial, ignore_errors=True)
 
     def _uncached(self) -> Callable[..., Any]:
-        self._announce()
+        self._announce("it cannot be kept for later runs")
         compiled: Callable[..., Any] = _jit(self.function, self.signature, None)
         if not self.self_test(compiled):
             raise RuntimeError(
@@ -117,18 +117,18 @@ class Kernel:
             )
         return compiled
 
-    def _announce(self) -> None:
+    def _announce(self, prospect: str) -> None:
         if on_compile is not None:
-            on_compile(f"compiling {self.purpose} for this CPU; later runs will find it ready")
+            on_compile(f"compiling {self.purpose} for this CPU; {prospect}")
 
 
 def kernel(
-    signature: str, *, self_test: Callable[[Callable[..., Any]], bool], purpose: str
+    signature: Any, *, self_test: Callable[[Callable[..., Any]], bool], purpose: str
 ) -> Callable[[Callable[..., Any]], Kernel]:
     """Decorator that makes a function of numba's subset of Python a `Kernel`.
 
-    `signature` in numba's notation, such as ``"void(intp, intp)"``; `purpose` completes the sentence
-    "compiling ... for this CPU".
+    `signature` as numba takes it: in its notation, such as ``"void(intp, intp)"``, or of its types.
+    `purpose` completes the sentence "compiling ... for this CPU".
     """
 
     def decorate(function: Callable[..., Any]) -> Kernel:
@@ -137,18 +137,19 @@ def kernel(
     return decorate
 
 
-def _jit(function: Callable[..., Any], signature: str, folder: Path | None) -> Any:
+def _jit(function: Callable[..., Any], signature: Any, folder: Path | None) -> Any:
     """The numba dispatcher of `function`, compiled for `signature` (through `folder`, if given)."""
     import numba
     from numba.core import config
 
+    options = {"nogil": True, "no_cfunc_wrapper": True}
     if folder is None:
-        return numba.njit(signature, nogil=True)(function)
+        return numba.njit(signature, **options)(function)
     with _lock:
         before = config.CACHE_DIR
         config.CACHE_DIR = str(folder)  # read once, when the function is decorated
         try:
-            return numba.njit(signature, nogil=True, cache=True)(function)
+            return numba.njit(signature, cache=True, **options)(function)
         finally:
             config.CACHE_DIR = before
 
@@ -182,8 +183,10 @@ def cache_home() -> Path | None:
         home = parent / name
         try:
             parent.mkdir(mode=0o700, parents=True, exist_ok=True)
+            if not _only_ours(parent):
+                continue
             home.mkdir(mode=0o700, exist_ok=True)
-            if _only_ours(parent) and _only_ours(home):
+            if _only_ours(home):
                 os.utime(home)
                 _forget_old(parent, keep=home)
                 return home

@@ -25,21 +25,22 @@ def find_evaluator(locator: Words, degree: int, syndromes: Words, evaluator: Wor
 
 @subroutine
 def find_magnitudes(
-    locator: Words, degree: int, evaluator: Words, inverses: Bytes, scales: Bytes, roots: Bytes,
-    found: Integers, work: Words, staged: Bytes,
+    locator: Words, degree: int, evaluator: Words, scale_of: Bytes, roots: Bytes, found: Integers,
+    work: Words, staged: Bytes,
 ) -> None:  # fmt: skip
-    """staged[e, lane] = the magnitude at the place roots[e, lane], for e < found[lane].
+    """staged[e, lane] = the magnitude at the place whose 1/X is point roots[e, lane], for e < found[lane].
 
     For a magnitude Y at locator X, Y = X^(-first root) W(z) / D(z) with z = 1/X, where D(x), the terms of
-    odd degree of L(x), is x times the derivative (Blahut, section 7.5). `inverses` and `scales` hold
-    1/X and X^(-first root) for every place.
+    odd degree of L(x), is x times the derivative (Blahut, section 7.5). `scale_of` holds X^(-first root) for
+    every point, or nothing where that is 1. Lanes with fewer roots get what has no meaning.
     """
     last_odd = degree - 1 + degree % 2
     most = 0
     for lane in range(LANES):
         most = max(most, found[lane])
     for e in range(most):
-        _look_up(inverses, roots, found, e, staged, work)
+        lanes.from_bytes(work, _NUMERATOR, roots, e, 0)
+        lanes.point(work, _Z, work, _NUMERATOR)
         lanes.square(work, _SQUARE, work, _Z)
         lanes.copy(work, _NUMERATOR, evaluator, degree - 1)
         for j in range(degree - 2, -1, -1):
@@ -50,17 +51,12 @@ def find_magnitudes(
         lanes.multiply(work, _DENOMINATOR, work, _DENOMINATOR, work, _Z)
         _invert(work, _INVERSE, _DENOMINATOR)
         lanes.multiply(work, _NUMERATOR, work, _NUMERATOR, work, _INVERSE)
-        _look_up(scales, roots, found, e, staged, work)
-        lanes.multiply(work, _NUMERATOR, work, _NUMERATOR, work, _Z)
+        if scale_of.size:
+            for lane in range(LANES):
+                staged[e, lane] = scale_of[roots[e, lane]]
+            lanes.from_bytes(work, _Z, staged, e, 0)
+            lanes.multiply(work, _NUMERATOR, work, _NUMERATOR, work, _Z)
         lanes.to_bytes(staged, e, work, _NUMERATOR)
-
-
-@subroutine
-def _look_up(table: Bytes, roots: Bytes, found: Integers, e: int, staged: Bytes, work: Words) -> None:
-    """work[_Z] = the entry of `table` for each lane's root e, 0 in lanes without; by way of staged[e]."""
-    for lane in range(LANES):
-        staged[e, lane] = table[roots[e, lane]] if e < found[lane] else 0
-    lanes.from_bytes(work, _Z, staged, e, 0)
 
 
 @subroutine

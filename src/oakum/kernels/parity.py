@@ -35,6 +35,7 @@ from oakum.algebra.outer import OuterCode
 from oakum.kernels import parity_kernels as kernels
 from oakum.kernels import tiers
 from oakum.kernels.scratch import scratch
+from oakum.kernels.simd import Arrays
 from oakum.kernels.stripmap import StripMap, affine_matrices, check_rows, nibble_tables
 
 CHUNK = 16 * 1024
@@ -166,13 +167,11 @@ class Transform:
         self, kernel: Callable[..., Any], source: Bytes, out: Bytes, first: int, accumulate: bool
     ) -> None:
         """Call a kernel on arrays that have been checked."""
-        inputs, length = source.shape
-        if not length:
+        if not out.size:
             return
         kernel(
-            out.ctypes.data, out.strides[0], len(out), source.ctypes.data, source.strides[0], first, inputs,
-            length, int(accumulate), self.order.ctypes.data, self.lambdas.ctypes.data, self.layers,
-            scratch(kernels.scratch_size(self.layers)),
+            Arrays.of(source, out, accumulate), first, self.order.ctypes.data, self.lambdas.ctypes.data,
+            self.layers, scratch(kernels.scratch_size(self.layers)),
         )  # fmt: skip
 
 

@@ -30,9 +30,11 @@ from numba.core import cgutils, types
 
 from oakum.kernels.compiling import kernel
 from oakum.kernels.simd import (
+    ARRAYS,
     I8,
     I32,
     I64,
+    Arrays,
     Builder,
     Value,
     byte_vector,
@@ -152,92 +154,46 @@ def prefetch(builder: Builder, address: Value) -> None:
     call(builder, "llvm.prefetch.p0", ir.VoidType(), [pointer, reading, keep_in_all_caches, data])
 
 
-@intrinsic
-def first4_gfni(typingctx: Any, target: Any, addresses: Any, lambdas: Any, width: Any) -> Any:
-    """Layers 0 and 1 of 4 rows, by the affine instruction."""
+def first_pass(count: int, lanes: Callable[[], int], multiple: Multiplier) -> Callable[..., Any]:
+    """The intrinsic of the first pass, of `count` rows."""
 
-    def generate(context: Any, builder: Builder, sig: Any, arguments: Sequence[Value]) -> Value:
-        emit_first(builder, arguments, 4, 32, affine_multiple)
-        return nothing(context)
+    @intrinsic
+    def first(typingctx: Any, target: Any, addresses: Any, lambdas: Any, width: Any) -> Any:
+        def generate(context: Any, builder: Builder, sig: Any, arguments: Sequence[Value]) -> Value:
+            emit_first(builder, arguments, count, lanes(), multiple)
+            return nothing(context)
 
-    return signature(4), generate
+        return signature(4), generate
 
-
-@intrinsic
-def first8_gfni(typingctx: Any, target: Any, addresses: Any, lambdas: Any, width: Any) -> Any:
-    """Layers 0 to 2 of 8 rows, by the affine instruction."""
-
-    def generate(context: Any, builder: Builder, sig: Any, arguments: Sequence[Value]) -> Value:
-        emit_first(builder, arguments, 8, 32, affine_multiple)
-        return nothing(context)
-
-    return signature(4), generate
+    return first
 
 
-@intrinsic
-def inner_gfni(typingctx: Any, target: Any, source: Any, distance: Any, lambdas: Any, width: Any) -> Any:
-    """Two layers of 4 rows, by the affine instruction."""
+def later_pass(add: bool, lanes: Callable[[], int], multiple: Multiplier) -> Callable[..., Any]:
+    """The intrinsic of a later pass, XORed onto its target with `add`."""
 
-    def generate(context: Any, builder: Builder, sig: Any, arguments: Sequence[Value]) -> Value:
-        emit_later(builder, arguments, 32, affine_multiple, add=False)
-        return nothing(context)
+    @intrinsic
+    def later(typingctx: Any, target: Any, source: Any, distance: Any, lambdas: Any, width: Any) -> Any:
+        def generate(context: Any, builder: Builder, sig: Any, arguments: Sequence[Value]) -> Value:
+            emit_later(builder, arguments, lanes(), multiple, add)
+            return nothing(context)
 
-    return signature(5), generate
+        return signature(5), generate
 
-
-@intrinsic
-def last_gfni(typingctx: Any, target: Any, source: Any, distance: Any, lambdas: Any, width: Any) -> Any:
-    """The last two layers of 4 rows, XORed onto the sums, by the affine instruction."""
-
-    def generate(context: Any, builder: Builder, sig: Any, arguments: Sequence[Value]) -> Value:
-        emit_later(builder, arguments, 32, affine_multiple, add=True)
-        return nothing(context)
-
-    return signature(5), generate
+    return later
 
 
-@intrinsic
-def first4_shuffle(typingctx: Any, target: Any, addresses: Any, lambdas: Any, width: Any) -> Any:
-    """Layers 0 and 1 of 4 rows, by nibble tables."""
-
-    def generate(context: Any, builder: Builder, sig: Any, arguments: Sequence[Value]) -> Value:
-        emit_first(builder, arguments, 4, shuffle_lanes(), table_multiple)
-        return nothing(context)
-
-    return signature(4), generate
-
-
-@intrinsic
-def first8_shuffle(typingctx: Any, target: Any, addresses: Any, lambdas: Any, width: Any) -> Any:
-    """Layers 0 to 2 of 8 rows, by nibble tables."""
-
-    def generate(context: Any, builder: Builder, sig: Any, arguments: Sequence[Value]) -> Value:
-        emit_first(builder, arguments, 8, shuffle_lanes(), table_multiple)
-        return nothing(context)
-
-    return signature(4), generate
+def passes(lanes: Callable[[], int], multiple: Multiplier) -> tuple[Callable[..., Any], ...]:
+    """The passes of a tier: the first of 4 and of 8 rows, one in place, and the last."""
+    return (
+        first_pass(4, lanes, multiple),
+        first_pass(8, lanes, multiple),
+        later_pass(False, lanes, multiple),
+        later_pass(True, lanes, multiple),
+    )
 
 
-@intrinsic
-def inner_shuffle(typingctx: Any, target: Any, source: Any, distance: Any, lambdas: Any, width: Any) -> Any:
-    """Two layers of 4 rows, by nibble tables."""
-
-    def generate(context: Any, builder: Builder, sig: Any, arguments: Sequence[Value]) -> Value:
-        emit_later(builder, arguments, shuffle_lanes(), table_multiple, add=False)
-        return nothing(context)
-
-    return signature(5), generate
-
-
-@intrinsic
-def last_shuffle(typingctx: Any, target: Any, source: Any, distance: Any, lambdas: Any, width: Any) -> Any:
-    """The last two layers of 4 rows, XORed onto the sums, by nibble tables."""
-
-    def generate(context: Any, builder: Builder, sig: Any, arguments: Sequence[Value]) -> Value:
-        emit_later(builder, arguments, shuffle_lanes(), table_multiple, add=True)
-        return nothing(context)
-
-    return signature(5), generate
+first4_gfni, first8_gfni, inner_gfni, last_gfni = passes(lambda: VECTOR, affine_multiple)
+first4_shuffle, first8_shuffle, inner_shuffle, last_shuffle = passes(shuffle_lanes, table_multiple)
 
 
 @intrinsic
@@ -262,10 +218,8 @@ def store_word(typingctx: Any, address: Any, word: Any) -> Any:
 
 
 @inlined
-def locate(
-    addresses: int, order: int, source: int, stride: int, first: int, inputs: int, width: int, scratch: int
-) -> None:
-    """Where the row of each point begins: in the source; at zeros, if there is none.
+def locate(addresses: int, order: int, arrays: Any, start: int, first: int, width: int, scratch: int) -> None:
+    """Where the row of each point begins, from column `start` on: in the source; at zeros, if there is none.
 
     Rows whose width is not a multiple of the vectors are copied, for nothing beyond their end may be read.
     """
@@ -273,8 +227,8 @@ def locate(
     for point in range(POINTS):
         row = load_word(order + 8 * point) - first
         address = scratch
-        if 0 <= row < inputs:
-            address = source + row * stride
+        if 0 <= row < arrays.inputs:
+            address = arrays.source + row * arrays.source_stride + start
             if width % VECTOR:
                 copy(copies + point * TILE, address, width)
                 address = copies + point * TILE
@@ -312,43 +266,28 @@ def transform(
 
 @inlined
 def moments(
-    passes: Any,
-    unit: int,
-    out: int,
-    out_stride: int,
-    outputs: int,
-    source: int,
-    source_stride: int,
-    first: int,
-    inputs: int,
-    length: int,
-    accumulate: int,
-    order: int,
-    lambdas: int,
-    layers: int,
-    scratch: int,
+    passes: Any, unit: int, arrays: Any, first: int, order: int, lambdas: int, layers: int, scratch: int
 ) -> None:
-    """The kernel of a tier, whose four passes are given."""
+    """The kernel of a tier, whose passes and bytes of a lambda are given."""
     sums = scratch + 8 * POINTS
     work = sums + (TILE << layers)
     rest = work + (TILE << layers)
     clear(rest, TILE)
-    for start in range(0, length, TILE):
-        width = min(TILE, length - start)
-        locate(scratch, order, source + start, source_stride, first, inputs, width, rest)
+    for start in range(0, arrays.length, TILE):
+        width = min(TILE, arrays.length - start)
+        locate(scratch, order, arrays, start, first, width, rest)
         clear(sums, TILE << layers)
-        if accumulate:
-            for row in range(outputs):
-                copy(sums + row * TILE, out + row * out_stride + start, width)
+        if arrays.accumulate:
+            for row in range(arrays.rows):
+                copy(sums + row * TILE, arrays.out + row * arrays.out_stride + start, width)
         transform(passes, sums, work, scratch, lambdas, unit, layers, width)
-        for row in range(outputs):
-            copy(out + row * out_stride + start, sums + row * TILE, width)
+        for row in range(arrays.rows):
+            copy(arrays.out + row * arrays.out_stride + start, sums + row * TILE, width)
 
 
-ARGUMENTS = "intp, intp, intp, intp, intp, intp, intp, intp, intp, intp, intp, intp, intp"
-"""The two kernels' arguments, all addresses or sizes in bytes: out, its row stride, rows, source, its row
-stride, the symbol that is its first row, its rows, length, whether to accumulate, the symbol of each point
-(int64), lambdas, layers, and scratch memory."""
+SIGNATURE = types.void(ARRAYS, types.intp, types.intp, types.intp, types.intp, types.intp)
+"""The arrays, the symbol that is the first row of the source, the symbol of each point (int64), lambdas,
+layers, and scratch memory."""
 
 
 def self_test(name: str) -> Callable[[Callable[..., Any]], bool]:
@@ -362,47 +301,13 @@ def self_test(name: str) -> Callable[[Callable[..., Any]], bool]:
     return agrees
 
 
-@kernel(f"void({ARGUMENTS})", self_test=self_test("gfni"), purpose="the parity transform")
-def moments_gfni(
-    out: int,
-    out_stride: int,
-    outputs: int,
-    source: int,
-    source_stride: int,
-    first: int,
-    inputs: int,
-    length: int,
-    accumulate: int,
-    order: int,
-    lambdas: int,
-    layers: int,
-    scratch: int,
-) -> None:
+@kernel(SIGNATURE, self_test=self_test("gfni"), purpose="the parity transform")
+def moments_gfni(arrays: Arrays, first: int, order: int, lambdas: int, layers: int, scratch: int) -> None:
     passes = first4_gfni, first8_gfni, inner_gfni, last_gfni
-    moments(
-        passes, 8, out, out_stride, outputs, source, source_stride, first, inputs, length, accumulate,
-        order, lambdas, layers, scratch,
-    )  # fmt: skip
+    moments(passes, 8, arrays, first, order, lambdas, layers, scratch)
 
 
-@kernel(f"void({ARGUMENTS})", self_test=self_test("shuffle"), purpose="the parity transform")
-def moments_shuffle(
-    out: int,
-    out_stride: int,
-    outputs: int,
-    source: int,
-    source_stride: int,
-    first: int,
-    inputs: int,
-    length: int,
-    accumulate: int,
-    order: int,
-    lambdas: int,
-    layers: int,
-    scratch: int,
-) -> None:
+@kernel(SIGNATURE, self_test=self_test("shuffle"), purpose="the parity transform")
+def moments_shuffle(arrays: Arrays, first: int, order: int, lambdas: int, layers: int, scratch: int) -> None:
     passes = first4_shuffle, first8_shuffle, inner_shuffle, last_shuffle
-    moments(
-        passes, 32, out, out_stride, outputs, source, source_stride, first, inputs, length, accumulate,
-        order, lambdas, layers, scratch,
-    )  # fmt: skip
+    moments(passes, 32, arrays, first, order, lambdas, layers, scratch)

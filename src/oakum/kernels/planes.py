@@ -6,15 +6,19 @@ give planes as values of LLVM's intermediate code and write instructions where `
 
 from __future__ import annotations
 
+from collections.abc import Sequence
+from functools import cache
 from typing import Any
 
+import numpy as np
 from llvmlite import ir
 from numba import types
 
-from oakum.algebra.field import Field
+from oakum.algebra.field import Bytes, Field
 from oakum.kernels.simd import I1, I8, I32, I64, Builder, Value
 
 FIELD = Field(0x11D)
+POINTS = 256
 LANES = 256
 PLANE_WORDS = LANES // 64
 BLOCK_WORDS = 8 * PLANE_WORDS
@@ -25,6 +29,22 @@ PLANE = ir.VectorType(I64, PLANE_WORDS)
 BYTES = ir.VectorType(I8, 64)
 FLAGS = ir.VectorType(I1, 64)
 NO_LANES = ir.Constant(PLANE, [0] * PLANE_WORDS)
+
+
+@cache
+def points() -> Bytes:
+    """uint8[256]: the field's elements in the order of a Cantor basis b_0 = 1, b_(i+1)^2 + b_(i+1) = b_i.
+
+    Point q is the sum of b_i over the bits i of q.
+    """
+    elements = np.arange(POINTS, dtype=np.uint8)
+    images = FIELD.multiply(elements, elements) ^ elements
+    span = np.zeros(1, dtype=np.uint8)
+    basis = np.ones(1, dtype=np.uint8)
+    while span.size < POINTS:
+        span = np.concatenate([span, span ^ basis])
+        basis = elements[images == basis][:1]  # none is left after the last
+    return span
 
 
 def number(value: int) -> Value:
@@ -42,15 +62,22 @@ def all_words(builder: Builder, word: Value) -> Value:
     return builder.shuffle_vector(vector, ir.Constant(PLANE, ir.Undefined), zeros)
 
 
-class Rows:
-    """An array argument of an intrinsic: a matrix of bytes or words in C order."""
+def plain(context: Any, builder: Builder, kind: Any, argument: Value) -> list[Value]:
+    """An argument of numba's as numbers and addresses: of a matrix, its data and the length of its rows."""
+    if not isinstance(kind, types.Array):
+        return [argument]
+    view = context.make_array(kind)(context, builder, value=argument)
+    return [view.data, builder.extract_value(view.shape, 1)]
 
-    def __init__(self, context: Any, builder: Builder, kind: types.Array, array: Value) -> None:
-        view = context.make_array(kind)(context, builder, value=array)
+
+class Rows:
+    """A matrix of bytes or words in C order, from what `plain` gives."""
+
+    def __init__(self, builder: Builder, kind: types.Array, data: Value, width: Value) -> None:
         self._builder = builder
         self._element = I8 if kind.dtype == types.uint8 else I64
-        self._data = view.data
-        self._width = builder.extract_value(view.shape, 1)
+        self._data = data
+        self._width = width
 
     def address(self, row: Value, column: Value, pointed: Any) -> Value:
         """The address of [row, column], to load or store a value of the type `pointed` there."""
@@ -85,6 +112,19 @@ def multiply(builder: Builder, a: Planes, b: Planes) -> Planes:
     return reduce(builder, join(builder, products(builder, a, b)))
 
 
+def linear(builder: Builder, a: Planes, images: Sequence[int]) -> Planes:
+    """The image of `a` under the linear map that takes x^b to images[b]: nothing but sums of planes."""
+    total = [NO_LANES] * 8
+    for plane, image in zip(a, images, strict=True):
+        total = [builder.xor(t, plane) if image >> p & 1 else t for p, t in enumerate(total)]
+    return total
+
+
+def multiply_by(builder: Builder, a: Planes, factor: int) -> Planes:
+    """The product by one element, the same in all lanes."""
+    return linear(builder, a, [int(FIELD.multiply(1 << b, factor)) for b in range(8)])
+
+
 def square(builder: Builder, a: Planes) -> Planes:
     spread = [plane for original in a for plane in (original, NO_LANES)]
     return reduce(builder, spread[:-1])
@@ -102,9 +142,9 @@ def products(builder: Builder, a: Planes, b: Planes) -> list[Planes]:
     return [schoolbook(builder, x, y) for x, y in factors]
 
 
-def schoolbook(builder: Builder, a: Planes, b: Planes) -> Planes:
-    """The product as polynomials over GF(2): an AND for every pair of planes."""
-    product = [NO_LANES] * (len(a) + len(b) - 1)
+def schoolbook(builder: Builder, a: Planes, b: Planes, total: Planes | None = None) -> Planes:
+    """`total` and the product as polynomials over GF(2): an AND for every pair of planes."""
+    product = list(total or [NO_LANES] * (len(a) + len(b) - 1))
     for i, x in enumerate(a):
         for j, y in enumerate(b):
             product[i + j] = builder.xor(product[i + j], builder.and_(x, y))

@@ -2,46 +2,25 @@
 
 A polynomial of 2^h coefficients is evaluated at all 256 elements by h * 128 multiplications, instead of 255
 for each coefficient (Cantor 1989; Gao and Mateer, Additive fast Fourier transforms over finite fields, 2010).
-The points are ordered by a Cantor basis b_0 = 1, b_(i+1)^2 + b_(i+1) = b_i: point q is the sum of b_i
-over the bits i of q, so that point 2q + 1 is point 2q plus 1, and x^2 + x of both is point q.
+The points are ordered by a Cantor basis (see `oakum.kernels.planes.points`), so that point 2q + 1 is point 2q
+plus 1, and x^2 + x of both is point q.
 """
 
 from __future__ import annotations
-
-from functools import lru_cache
 
 import numpy as np
 from numpy.typing import NDArray
 
 from oakum.algebra.field import Bytes
 from oakum.kernels import lanes
-from oakum.kernels.lanes import ALL, FIELD, NONE, ONE, PLANE_WORDS, subroutine
+from oakum.kernels.lanes import NONE, ONE, PLANE_WORDS, subroutine
 from oakum.kernels.locator import CHOSEN, LOST
+from oakum.kernels.planes import POINTS
 
 Words = NDArray[np.uint64]
 Integers = NDArray[np.int64]
 
-POINTS = 256
 NO_PLACE = 255
-
-
-@lru_cache(maxsize=1)
-def points() -> Bytes:
-    """uint8[256]: the points in order."""
-    elements = np.arange(256, dtype=np.uint8)
-    images = FIELD.multiply(elements, elements) ^ elements
-    span = np.zeros(1, dtype=np.uint8)
-    basis = np.ones(1, dtype=np.uint8)
-    while span.size < POINTS:
-        span = np.concatenate([span, span ^ basis])
-        basis = elements[images == basis][:1]  # none is left after the last
-    return span
-
-
-@lru_cache(maxsize=1)
-def factors() -> Words:
-    """uint64[128, 8]: the even points, each as the words of its planes (see `lanes.butterfly`)."""
-    return np.where(points()[::2, None] >> np.arange(8) & 1 == 1, ALL, NONE)
 
 
 @subroutine
@@ -72,35 +51,46 @@ def expand(locator: Words, degree: int, constants: Words) -> int:
 
 
 @subroutine
-def _evaluate(constants: Words, size: int, first: int, factors: Words, values: Words) -> None:
+def _evaluate(constants: Words, degree: int, size: int, first: int, values: Words) -> None:
     """The way up: values[q] = the locator at point first + q, for q < size.
 
     With y = x^2 + x, f(x) = f0(y) + x f1(y) and f(x + 1) = f(x) + f1(y). In a Cantor basis, points 2q and
-    2q + 1 of one step have y = point q of the step before, which stands in the same rows.
+    2q + 1 of one step have y = point q of the step before, which stands in the same rows. The way down moves
+    coefficients only to lower rows, so that above the degree f1 is zero in the first step.
     """
-    for row in range(size):
+    half = size // 2
+    lanes.copy(values, 0, constants, 0)
+    for row in range(half):
         lanes.copy(values, row, constants, row)
-    stride = size // 2
+        if row + half <= degree:
+            lanes.copy(values, row + half, constants, row + half)
+            lanes.butterfly(values, row, row + half, first // size)
+        else:
+            lanes.copy(values, row + half, constants, row)
+    stride = half // 2
     while stride:
         for start in range(0, size, 2 * stride):
             q = (first + start) // (2 * stride)
             for row in range(start, start + stride):
-                lanes.butterfly(values, row, row + stride, factors, q)
+                lanes.butterfly(values, row, row + stride, q)
         stride //= 2
 
 
 @subroutine
 def find_roots(
-    constants: Words, size: int, factors: Words, place_of: Bytes, flags: Words, values: Words,
-    roots: Bytes, found: Integers,
+    constants: Words, degree: int, size: int, place_of: Bytes, flags: Words, values: Words, roots: Bytes,
+    found: Integers,
 ) -> None:  # fmt: skip
-    """roots[0..found[lane], lane] = the places at which the locator is zero, in lanes that are not lost."""
+    """roots[0..found[lane], lane] = the points at which the locator is zero, in lanes that are not lost.
+
+    They are given by their numbers; those at which the code has no place are left out.
+    """
     found[:] = 0
-    for first in range(0, 256, size):
-        _evaluate(constants, size, first, factors, values)
+    for first in range(0, POINTS, size):
+        _evaluate(constants, degree, size, first, values)
         for row in range(size):
-            place = place_of[first + row]
-            if place == NO_PLACE:
+            point = np.uint8(first + row)
+            if place_of[point] == NO_PLACE:
                 continue
             lanes.nonzero(flags, CHOSEN, values, row)
             for w in range(PLANE_WORDS):
@@ -108,5 +98,5 @@ def find_roots(
                 while zeros:
                     lane = 64 * w + lanes.lowest_bit(zeros)
                     zeros &= zeros - ONE
-                    roots[found[lane], lane] = place
+                    roots[found[lane], lane] = point
                     found[lane] += 1

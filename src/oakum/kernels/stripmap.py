@@ -18,6 +18,7 @@ from oakum.algebra.field import Field
 from oakum.kernels import stripmap_kernels as kernels
 from oakum.kernels import tiers
 from oakum.kernels.scratch import scratch
+from oakum.kernels.simd import Arrays
 
 Bytes = NDArray[np.uint8]
 
@@ -146,23 +147,14 @@ def run(
     compiled: Callable[..., Any], prepared: Prepared, source: Bytes, out: Bytes, first: int, accumulate: bool
 ) -> None:
     """Call a kernel on arrays that have been checked."""
-    inputs, length = source.shape
-    rows = out.shape[0]
-    if not length or not rows:
+    if not out.size:
         return
     group_size, entry_size = prepared.coefficients.strides[:2]
     compiled(
-        out.ctypes.data,
-        out.strides[0],
-        rows,
-        source.ctypes.data,
-        source.strides[0],
-        inputs,
-        length,
-        int(accumulate),
+        Arrays.of(source, out, accumulate),
         prepared.address + first * entry_size,
         group_size,
-        scratch(kernels.scratch_size(rows, inputs)),
+        scratch(kernels.scratch_size(len(out), len(source))),
         prepared.constant,
     )
 

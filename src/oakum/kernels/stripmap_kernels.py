@@ -20,13 +20,15 @@ from collections.abc import Callable, Sequence
 from typing import Any
 
 from llvmlite import ir
-from numba.core import cgutils
+from numba.core import cgutils, types
 
 from oakum.kernels.compiling import kernel
 from oakum.kernels.simd import (
+    ARRAYS,
     I8,
     I16,
     I64,
+    Arrays,
     Builder,
     Value,
     byte_vector,
@@ -79,17 +81,20 @@ def pack(target: int, source: int, stride: int, rows: int, width: int) -> None:
 
 
 @inlined
-def unpack(target: int, stride: int, source: int, rows: int, width: int) -> None:
-    for row in range(rows):
-        copy(target + row * stride, source + row * STRIDE, width)
+def begin(arrays: Any, start: int, width: int, scratch: int, packed: int) -> None:
+    """Steps 1 and 2: the strip of the inputs to `scratch`, that of the outputs to `packed`."""
+    pack(scratch, arrays.source + start, arrays.source_stride, arrays.inputs, width)
+    if arrays.accumulate:
+        pack(packed, arrays.out + start, arrays.out_stride, arrays.rows, width)
+    else:
+        clear(packed, arrays.rows * STRIDE)
 
 
 @inlined
-def begin(packed: int, out: int, stride: int, rows: int, width: int, accumulate: int) -> None:
-    if accumulate:
-        pack(packed, out, stride, rows, width)
-    else:
-        clear(packed, rows * STRIDE)
+def finish(arrays: Any, start: int, width: int, packed: int) -> None:
+    """Step 4."""
+    for row in range(arrays.rows):
+        copy(arrays.out + start + row * arrays.out_stride, packed + row * STRIDE, width)
 
 
 def emit_tile(
@@ -239,10 +244,9 @@ def add_multiples(typingctx: Any, out: Any, tables: Any, offsets: Any, inputs: A
     return signature(4), generate
 
 
-ARGUMENTS = "intp, intp, intp, intp, intp, intp, intp, intp, intp, intp, intp, intp"
-"""The three kernels' arguments, all addresses or sizes in bytes: out, its row stride, rows, source, its row
-stride, inputs, length, whether to accumulate, coefficients of the first input, their distance from one
-group of outputs to the next, scratch memory, and the tier's constant (see `stripmap.prepared`)."""
+SIGNATURE = types.void(ARRAYS, types.intp, types.intp, types.intp, types.intp)
+"""The arrays, coefficients of the first input, their distance from one group of outputs to the next, scratch
+memory, and the tier's constant (see `stripmap.prepared`)."""
 
 
 def self_test(name: str) -> Callable[[Callable[..., Any]], bool]:
@@ -256,95 +260,53 @@ def self_test(name: str) -> Callable[[Callable[..., Any]], bool]:
     return agrees
 
 
-@kernel(f"void({ARGUMENTS})", self_test=self_test("gfni"), purpose="the strip map")
-def map_gfni(
-    out: int,
-    out_stride: int,
-    rows: int,
-    source: int,
-    source_stride: int,
-    inputs: int,
-    length: int,
-    accumulate: int,
-    matrices: int,
-    group_size: int,
-    scratch: int,
-    unused: int,
-) -> None:
-    packed = scratch + inputs * STRIDE
-    for start in range(0, length, STRIP):
-        width = min(STRIP, length - start)
-        pack(scratch, source + start, source_stride, inputs, width)
-        begin(packed, out + start, out_stride, rows, width, accumulate)
-        for group in range((rows + TILE_ROWS - 1) // TILE_ROWS):
+@kernel(SIGNATURE, self_test=self_test("gfni"), purpose="the strip map")
+def map_gfni(arrays: Arrays, matrices: int, group_size: int, scratch: int, unused: int) -> None:
+    packed = scratch + arrays.inputs * STRIDE
+    for start in range(0, arrays.length, STRIP):
+        width = min(STRIP, arrays.length - start)
+        begin(arrays, start, width, scratch, packed)
+        for group in range((arrays.rows + TILE_ROWS - 1) // TILE_ROWS):
             for column in range(0, width, TILE_COLUMNS):
                 target = packed + group * TILE_ROWS * STRIDE + column
-                gfni_tile(target, scratch + column, matrices + group * group_size, inputs)
-        unpack(out + start, out_stride, packed, rows, width)
+                gfni_tile(target, scratch + column, matrices + group * group_size, arrays.inputs)
+        finish(arrays, start, width, packed)
 
 
-@kernel(f"void({ARGUMENTS})", self_test=self_test("shuffle"), purpose="the strip map")
-def map_shuffle(
-    out: int,
-    out_stride: int,
-    rows: int,
-    source: int,
-    source_stride: int,
-    inputs: int,
-    length: int,
-    accumulate: int,
-    offsets: int,
-    group_size: int,
-    scratch: int,
-    tables: int,
-) -> None:
-    groups = (rows + TILE_ROWS - 1) // TILE_ROWS
-    packed = scratch + inputs * STRIDE
+@kernel(SIGNATURE, self_test=self_test("shuffle"), purpose="the strip map")
+def map_shuffle(arrays: Arrays, offsets: int, group_size: int, scratch: int, tables: int) -> None:
+    groups = (arrays.rows + TILE_ROWS - 1) // TILE_ROWS
+    packed = scratch + arrays.inputs * STRIDE
     nibbles = packed + groups * TILE_ROWS * STRIDE
-    for start in range(0, length, STRIP):
-        width = min(STRIP, length - start)
-        pack(scratch, source + start, source_stride, inputs, width)
-        begin(packed, out + start, out_stride, rows, width, accumulate)
+    for start in range(0, arrays.length, STRIP):
+        width = min(STRIP, arrays.length - start)
+        begin(arrays, start, width, scratch, packed)
         for column in range(0, width, TILE_COLUMNS):
-            for block in range(0, inputs, NIBBLES_BLOCK):
-                here = min(NIBBLES_BLOCK, inputs - block)
+            for block in range(0, arrays.inputs, NIBBLES_BLOCK):
+                here = min(NIBBLES_BLOCK, arrays.inputs - block)
                 for i in range(here):
                     split_nibbles(nibbles + i * NIBBLES_SIZE, scratch + (block + i) * STRIDE + column)
                 for group in range(groups):
                     target = packed + group * TILE_ROWS * STRIDE + column
                     coefficients = offsets + group * group_size + block * 2 * TILE_ROWS
                     shuffle_tile(target, nibbles, coefficients, here, tables)
-        unpack(out + start, out_stride, packed, rows, width)
+        finish(arrays, start, width, packed)
 
 
-@kernel(f"void({ARGUMENTS})", self_test=self_test("portable"), purpose="the strip map")
-def map_portable(
-    out: int,
-    out_stride: int,
-    rows: int,
-    source: int,
-    source_stride: int,
-    inputs: int,
-    length: int,
-    accumulate: int,
-    offsets: int,
-    row_size: int,
-    scratch: int,
-    reduction: int,
-) -> None:
-    packed = scratch + inputs * STRIDE
-    tables = packed + rows * STRIDE
-    for start in range(0, length, STRIP):
-        width = min(STRIP, length - start)
-        pack(scratch, source + start, source_stride, inputs, width)
-        begin(packed, out + start, out_stride, rows, width, accumulate)
+@kernel(SIGNATURE, self_test=self_test("portable"), purpose="the strip map")
+def map_portable(arrays: Arrays, offsets: int, row_size: int, scratch: int, reduction: int) -> None:
+    packed = scratch + arrays.inputs * STRIDE
+    tables = packed + arrays.rows * STRIDE
+    for start in range(0, arrays.length, STRIP):
+        width = min(STRIP, arrays.length - start)
+        begin(arrays, start, width, scratch, packed)
         for column in range(0, width, TILE_COLUMNS):
-            for block in range(0, inputs, MULTIPLES_BLOCK):
-                here = min(MULTIPLES_BLOCK, inputs - block)
+            for block in range(0, arrays.inputs, MULTIPLES_BLOCK):
+                here = min(MULTIPLES_BLOCK, arrays.inputs - block)
                 for i in range(here):
                     x = scratch + (block + i) * STRIDE + column
                     build_multiples(tables + i * MULTIPLES_SIZE, x, reduction)
-                for row in range(rows):
+                for row in range(arrays.rows):
                     coefficients = offsets + row * row_size + block * 4
                     add_multiples(packed + row * STRIDE + column, tables, coefficients, here)
-        unpack(out + start, out_stride, packed, rows, width)
+        finish(arrays, start, width, packed)

@@ -54,6 +54,7 @@ class WordCodec:
             PARITY_KERNELS[self.tier].prepare()
             if correcting:
                 kernels.correct.prepare()
+                kernels.spread.prepare()
 
     def words(self, cell_length: int) -> int:
         """The number of words in a cell of `cell_length` bytes."""
@@ -132,17 +133,10 @@ class WordCodec:
 
     def spread(self, status: Bytes, staggers: Staggers, width: int) -> Bytes:
         """For each byte of the cells the status of its word: uint8[R, width] from uint8[R, words(width)]."""
-        m = self.inner.m
-        rows = len(status)
-        if not m:
-            return np.zeros((rows, width), np.uint8)
-        spread = np.repeat(status, m, axis=1)[:, :width]
-        if width >= 2 * m:
-            offsets = in_order(staggers, rows) % m
-            for offset in set(offsets.tolist()) - {0}:
-                chosen = offsets == offset
-                spread[chosen] = np.roll(spread[chosen], offset, axis=1)
-        return spread
+        out = np.zeros((len(status), width), np.uint8)
+        if self.inner.p:
+            kernels.spread(status, in_order(staggers, len(status)), self.inner.m, out)
+        return out
 
 
 def in_order(staggers: Staggers, rows: int) -> NDArray[np.int64]:
@@ -287,8 +281,16 @@ def corrects_known_flips(compiled: Callable[..., Any]) -> bool:
     return True
 
 
+def spreads_known_words(compiled: Callable[..., Any]) -> bool:
+    """Whether the words of 7 bytes lie where they should, not staggered and staggered by 2."""
+    out = np.zeros((2, 7), np.uint8)
+    compiled(np.array([[1, 2, 3]] * 2, np.uint8), np.array([0, 5]), 3, out)
+    return out.tolist() == [[1, 1, 1, 2, 2, 2, 3], [2, 3, 1, 1, 1, 2, 2]]
+
+
 SELF_TESTS: dict[str, Callable[[Callable[..., Any]], bool]] = {
     "shuffle": lambda compiled: gives_known_parity(compiled, "shuffle"),
     "portable": lambda compiled: gives_known_parity(compiled, "portable"),
     "correct": corrects_known_flips,
+    "spread": spreads_known_words,
 }

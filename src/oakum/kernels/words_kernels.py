@@ -275,6 +275,23 @@ def parity_portable(
             copy(out + row * out_stride + start // cell * step, scratch + size, words * p)
 
 
+@kernel(
+    "void(uint8[:, :], int64[::1], intp, uint8[:, ::1])",
+    self_test=self_test("spread"),
+    purpose="the inner code",
+)
+def spread(of_words: NDArray[np.uint8], staggers: NDArray[np.int64], m: int, out: NDArray[np.uint8]) -> None:
+    """What `of_words` has for a word goes to all its bytes in `out`, which is zero before."""
+    rows, width = out.shape
+    for row in range(rows):
+        offset = offset_of(staggers[row], width, m)
+        for word in range(of_words.shape[1]):
+            value = of_words[row, word]
+            if value:
+                for place in range(word * m, min((word + 1) * m, width)):
+                    out[row, (offset + place) % width] = value
+
+
 @inlined
 def leader(syndrome: int, starts: NDArray[Any], known: NDArray[Any], places: NDArray[Any]) -> int:
     """The places of the one or two flips that give `syndrome`, packed; 0 if there are none such.
