@@ -32,7 +32,7 @@ class MemoryBlock:
         self.asked: list[list[int]] = []
 
     def _inner(self, strip: int, cell: np.ndarray) -> np.ndarray:
-        """Word by word as the design says: the cell turned by the stagger, the last word filled up."""
+        """Word by word as oakum-sidecar(5) says: the cell turned by the stagger, the last word filled up."""
         m, p = self.geometry.m, self.geometry.p
         if not p:
             return np.empty(0, np.uint8)

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import fields
+
 import numpy as np
 import pytest
 from blocks import MemoryBlock
@@ -9,7 +11,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from oakum.algebra.naming import resolve_code
-from oakum.decoding.block import BlockOutcome, Decoders, decode_block
+from oakum.decoding.block import BlockOutcome, Decoders, decode_block, decode_blocks
 
 CODES = ("shelf", "slim", "stout", "plain", "RS(60,40)+EH(128,120)", "RS(60,40)+EB(128,104)", "RS(20,15)")
 _READY: dict[str, Decoders] = {}
@@ -280,7 +282,7 @@ def test_bursts_over_neighbouring_strips(digests: bool) -> None:
     ("code", "rate"), [("slim", 0.002), ("shelf", 0.005), ("stout", 0.012), ("plain", 0.002)]
 )
 def test_scattered_flips_everywhere(code: str, rate: float) -> None:
-    """Rates at which the check values promise next to no loss; data and all parity are hit."""
+    """Rates at which one pass and feedback lose next to nothing (measured); data and all parity are hit."""
     block = MemoryBlock(code, 4096)
     rng = np.random.default_rng(4)
     for array in (block.strips, block.inner_received):
@@ -316,3 +318,66 @@ def test_margin_is_counted_after_the_inner_code() -> None:
     assert is_back(block).margin == 1.0
     flip(block, 9, columns[5:6])
     assert is_back(block).margin == 1 - 2 / 48
+
+
+# -- several blocks at once ----------------------------------------------------------------------------
+
+
+class Joined:
+    """Blocks as if they were one: the strips of block i have the numbers from i * n on."""
+
+    def __init__(self, blocks: list[MemoryBlock]) -> None:
+        self.blocks = blocks
+        self.geometry, self.number = blocks[0].geometry, 0
+        self.states = np.concatenate([block.states for block in blocks])
+
+    def gather(self, name: str, numbers: np.ndarray) -> list[tuple[np.ndarray, np.ndarray | None]]:
+        n = self.geometry.n
+        parts = [numbers[numbers // n == i] - i * n for i in range(len(self.blocks))]
+        return [getattr(block, name)(part) for block, part in zip(self.blocks, parts, strict=True)]
+
+    def both(self, name: str, numbers: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+        found = self.gather(name, numbers)
+        masks = [np.zeros(a.shape, bool) if mask is None else mask for a, mask in found]
+        return np.concatenate([a for a, _ in found]), np.concatenate(masks)
+
+    def rows(self, numbers: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+        return self.both("rows", numbers)
+
+    def inner(self, numbers: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+        return self.both("inner", numbers)
+
+    def digests(self, numbers: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+        return self.both("digests", numbers)
+
+    def pinned(self, numbers: np.ndarray) -> np.ndarray:
+        n = self.geometry.n
+        return np.concatenate(
+            [b.vouched[numbers[numbers // n == i] - i * n] for i, b in enumerate(self.blocks)]
+        )
+
+
+@pytest.mark.parametrize("code", CODES)
+def test_blocks_at_once_are_as_each_alone(code: str) -> None:
+    """One clean, one with flips, a burst, lost ranges, one past all correction, one without digests."""
+    rng = np.random.default_rng(17)
+    blocks = [MemoryBlock(code, 640, seed) for seed in range(6)]
+    n, r = blocks[0].geometry.n, blocks[0].geometry.r
+    for block in (blocks[1], blocks[3], blocks[5]):
+        for strip in rng.choice(n, n // 2, replace=False).tolist():
+            flip(block, strip, rng.choice(640, 2, replace=False))
+    blocks[2].strips[3 : 3 + r // 2] = rng.integers(0, 256, (r // 2, 640), np.uint8)
+    blocks[3].lost[5, 100:300] = blocks[3].lost_inner[6] = True
+    blocks[3].vouched[7] = True
+    blocks[3].strips[7] = blocks[3].sent[7]
+    blocks[4].strips[: 2 * r] ^= np.uint8(1)
+    blocks[5].withheld[:] = True
+    decoders = Decoders.of(blocks[0].code)
+    together = decode_blocks(Joined(blocks), blocks, decoders)
+    for block, outcome in zip(blocks, together, strict=True):
+        alone = decode_block(block, decoders)
+        for field in fields(alone):
+            name = field.name
+            np.testing.assert_array_equal(getattr(outcome, name), getattr(alone, name), name)
+    assert [o.correctable for o in together[:3]] == [True] * 3
+    assert not together[4].correctable

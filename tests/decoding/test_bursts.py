@@ -8,11 +8,11 @@ import numpy as np
 from hypothesis import given
 from hypothesis import strategies as st
 
-from oakum.decoding.bursts import BurstCounter, burst_bytes, cluster
+from oakum.decoding.bursts import BurstCounter, Flips, burst_bytes, cluster
 
 
 def classify(flips: bytes) -> tuple[int, int, list[int]]:
-    """(bits in bursts, scattered bits, lengths of bursts) by the definition of design section 1.
+    """(bits in bursts, scattered bits, lengths of bursts) as oakum(1) defines them.
 
     A burst is a stretch of at least 32 bytes, more than a quarter of them wrong, with no run of 16 right
     bytes inside; the stretches are the longest ones between wrong bytes that no such run divides.
@@ -49,9 +49,8 @@ def counted(flips: bytes, cuts: list[int], order: int) -> tuple[int, int, list[i
     for i in np.random.default_rng(order).permutation(len(cells)).tolist():
         start, stop = cells[i]
         places = start + np.flatnonzero(data[start:stop]).astype(np.int64)
-        counter.add(
-            places, np.bitwise_count(data[places]).astype(np.int64), np.array([start]), np.array([stop])
-        )
+        found = cluster(places, np.bitwise_count(data[places]).astype(np.int64))
+        counter.add(found, np.array([start]), np.array([stop]))
     counter.finish()
     return counter.burst, counter.scattered, sorted(counter.lengths.tolist())
 
@@ -104,10 +103,41 @@ def test_clusters_are_in_order_and_apart() -> None:
 @given(st.lists(RUNS, min_size=1, max_size=4))
 def test_burst_bytes_row_by_row(rows: list[list[tuple[str, int]]]) -> None:
     lines = [line(runs) for runs in rows]
-    width = max(1, *map(len, lines))
+    width = max(8, -8 * (-max(map(len, lines)) // 8))
     flips = np.stack([np.frombuffer(text.ljust(width, b"\0"), np.uint8) for text in lines])
-    inside = burst_bytes(flips.shape, *np.nonzero(flips))
+    inside = burst_bytes(flips.shape, Flips.of(flips).clusters)
     for text, marked, row in zip(lines, inside, flips, strict=True):
         _, _, lengths = classify(text)
         assert int(np.bitwise_count(row[marked]).sum()) == classify(text)[0]
         assert int(marked.sum()) == sum(lengths)  # Right bytes inside a burst belong to it.
+
+
+@given(st.lists(RUNS, min_size=1, max_size=4))
+def test_flips_of_rows(rows: list[list[tuple[str, int]]]) -> None:
+    """Places, bits and clusters are those of each row alone, wherever the rows begin."""
+    lines = [line(runs) for runs in rows]
+    width = max(8, -8 * (-max(map(len, lines)) // 8))
+    flips = np.stack([np.frombuffer(text.ljust(width, b"\0"), np.uint8) for text in lines])
+    starts = 1000 * np.arange(1, len(lines) + 1)
+    found = Flips.of(flips).at(starts[:-1])
+    expected = [
+        (start + place, value.bit_count())
+        for start, text in zip(starts[:-1].tolist(), lines, strict=False)
+        for place, value in enumerate(text)
+        if value
+    ]
+    assert list(zip(found.places.tolist(), found.bits.tolist(), strict=True)) == expected
+    bounds = [places[[0, -1]] + start for start, places in stretches(lines[:-1], starts)]
+    assert list(zip(found.clusters.start, found.clusters.stop - 1, strict=True)) == [tuple(b) for b in bounds]
+    assert found.clusters.wrong.sum() == len(expected)
+    assert found.clusters.bits.sum() == sum(bits for _, bits in expected)
+
+
+def stretches(lines: list[bytes], starts: np.ndarray) -> list[tuple[int, np.ndarray]]:
+    """The wrong places of each line, cut where 16 right bytes or more stand between two of them."""
+    found = []
+    for start, text in zip(starts.tolist(), lines, strict=False):
+        places = np.flatnonzero(np.frombuffer(text, np.uint8))
+        cuts = np.flatnonzero(np.diff(places) > 16) + 1
+        found += [(start, part) for part in np.split(places, cuts) if len(part)]
+    return found

@@ -79,7 +79,8 @@ def is_back(block: Damaged, decoders: Decoders) -> bool:
 
 @pytest.mark.parametrize(
     ("inner", "r", "as_received", "erased", "full"),
-    # check-values, "Fewest flips that can defeat a decoder" (computed there by shortest paths).
+    # Forney, "Concatenated Codes" (1966), promises all below D d / 2 with all trials: 66, 51 and 99 are the
+    # first beyond. The other two columns have no source; shortest paths gave the same (computed).
     [(EH, 32, 34, 50, 66), (EB, 16, 27, 35, 51), (EB, 32, 51, 67, 99)],
 )
 def test_fewest_flips(inner: InnerCode, r: int, as_received: int, erased: int, full: int) -> None:

@@ -10,6 +10,8 @@ import pytest
 from support import BadSectors, content, flipped_bits, overwritten, plant, rewrite, snapshot, with_flips
 
 from oakum import CannotCheck, UsageError, protect, repair, verify
+from oakum.geometry import CELL
+from oakum.jobs import checking
 from oakum.results import CheckResult, MemberState, Outcome
 
 CODES = ("shelf", "slim", "stout", "plain")
@@ -160,7 +162,7 @@ def test_a_list_of_unreadable_ranges(tree: Path, tmp_path: Path, monkeypatch: py
     protect([tree])
     listed = tmp_path / "bad.csv"
     listed.write_text("path,offset,length\n# seen by the drive\nset/z.tar,1000,500\nset/z.tar,1200,700\n"
-                      "set/z.tar,1290000,20000\nset/none,0,5\n\n")  # fmt: skip
+                      "set/z.tar,1290000,20000\n\n")  # fmt: skip
     rewrite(tree / "z.tar", FILES["z.tar"][:1_295_000])
     BadSectors({tree / "z.tar": [(1000, 1900)]}).install(monkeypatch)
     tried: list[tuple[int, int]] = []
@@ -540,3 +542,28 @@ def test_the_number_of_threads_changes_nothing(tree: Path, tmp_path: Path, jobs:
     result = repair(tree, jobs=jobs, output=tmp_path / "out")
     assert snapshot(tmp_path / "out/set") == original
     assert [(b.window, b.block) for b in result.blocks] == sorted((b.window, b.block) for b in result.blocks)
+
+
+@pytest.mark.parametrize("dense", [0, 20, 10**6], ids=["never", "by default", "always"])
+def test_bytes_come_from_the_decoder_or_are_copied(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch, dense: int
+) -> None:
+    """Five blocks in groups of one: many cells of one are damaged, one of two others, none of the rest."""
+    monkeypatch.setattr(checking, "GROUP", 1)
+    monkeypatch.setattr(checking, "DENSE", dense)
+    first, second = content(2_000_000, 5), content(2_300_000, 6)
+    folder = plant(tmp_path / "set", {"a": first, "b": second})
+    depth = protect([folder]).depth
+    assert depth == 4 * CELL + 2944
+    damaged = bytearray(first + second)
+    for strip in range(0, 200, 4):
+        damaged[strip * depth + CELL + strip] ^= 1
+    damaged[9 * depth + 3 * CELL] ^= 0x81
+    damaged[99 * depth + 4 * CELL + 2943] ^= 2
+    rewrite(folder / "a", bytes(damaged[: len(first)]))
+    rewrite(folder / "b", bytes(damaged[len(first) :]))
+    result = repair(folder, output=tmp_path / "out")
+    assert (tmp_path / "out/set/a").read_bytes() == first
+    assert (tmp_path / "out/set/b").read_bytes() == second
+    assert result.totals.bits_flipped == 53
+    assert result.totals.blocks_correctable == 3

@@ -10,12 +10,13 @@
 
 from __future__ import annotations
 
-import numpy as np
+from collections.abc import Sequence
 
 from oakum.decoding.bursts import burst_bytes
 from oakum.decoding.cells import Cells
 from oakum.decoding.columns import Columns
 from oakum.decoding.source import RIGHT, UNKNOWN, WRONG, BlockOutcome, BlockSource, Bytes, Decoders
+from oakum.decoding.trials import column_counts
 from oakum.kernels.words import FLAGGED
 
 __all__ = ["RIGHT", "UNKNOWN", "WRONG", "BlockOutcome", "BlockSource", "Decoders", "decode_block"]
@@ -26,11 +27,28 @@ ROUNDS = 200
 
 def decode_block(source: BlockSource, decoders: Decoders) -> BlockOutcome:
     """Decode one block as far as it goes. Never raises for damage; what is lost is not `finished`."""
-    cells = Cells(source, decoders.words)
+    return decode_blocks(source, [source], decoders)[0]
+
+
+def decode_blocks(
+    joined: BlockSource, sources: Sequence[BlockSource], decoders: Decoders
+) -> list[BlockOutcome]:
+    """Decode blocks of the same width: the inner code at once, what is left then block by block.
+
+    `joined` is all of them as if they were one block: it numbers the strips of its block i from i * n on.
+    """
+    cells = Cells(joined, decoders.words)
     cells.decode_words()
-    first_value, first_status = cells.value.copy(), cells.status.copy()
+    blocks = cells.split(len(sources))
+    return [_decode(source, block, decoders) for source, block in zip(sources, blocks, strict=True)]
+
+
+def _decode(source: BlockSource, cells: Cells, decoders: Decoders) -> BlockOutcome:
+    """Decode a block whose words have been decoded once."""
+    first_value, first_status = cells.value, cells.status
     rounds = 0
     if not cells.finished.all():
+        first_value, first_status = first_value.copy(), first_status.copy()
         rounds = _feedback(cells, Columns(source, decoders, cells), decoders)
     return _outcome(source.number, cells, first_value, first_status, rounds, decoders.code.inner.t)
 
@@ -63,9 +81,11 @@ def _outcome(
     """What became of the block (step 5); `first_...`: after the inner code alone."""
     complete = cells.pinned.all(axis=1)
     contradicted = complete & cells.digested & ~cells.finished
+    known = cells.pinned
+    known[contradicted] = False
     outcome = BlockOutcome(
         number, cells.strips, cells.raw, cells.value, cells.erased,
-        cells.pinned & ~contradicted[:, np.newaxis], cells.finished | (complete & ~cells.digested),
+        known, cells.finished | (complete & ~cells.digested),
         int(((first_status > 0) & (first_status <= t)).sum()), int((first_status == FLAGGED).sum()),
         rounds=rounds, false_pins=cells.false_pins,
     )  # fmt: skip
@@ -75,7 +95,11 @@ def _outcome(
 
 def _margin(cells: Cells, outcome: BlockOutcome, first_value: Bytes) -> float:
     """1 - max over the columns of (2 wrong + erasures) / r, counted after the inner code."""
-    bad = cells.erased | burst_bytes(cells.raw.shape, *outcome.wrong)
-    wrong = (first_value != cells.value) & ~bad
-    load = 2 * np.count_nonzero(wrong, axis=0) + np.count_nonzero(bad, axis=0)
+    bad = burst_bytes(cells.raw.shape, outcome.wrong.clusters)
+    if cells.erased.any():
+        bad |= cells.erased
+    load = column_counts(bad)
+    if first_value is not cells.value:
+        wrong = first_value != cells.value
+        load += 2 * column_counts(wrong & ~bad if load.any() else wrong)
     return 1.0 - float(load.max(initial=0)) / cells.g.r

@@ -12,6 +12,8 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from oakum.kernels.flips import find_flips
+
 GAP = 16
 LEAST_LENGTH = 32
 DENSITY = 4
@@ -42,6 +44,49 @@ class Clusters:
         return len(self.start)
 
 
+@dataclass(frozen=True)
+class Flips:
+    """Flips in rows of `width` bytes, by number of the byte, row after row.
+
+    `places` are those of all wrong bytes, ascending, `bits` how many are flipped in each; no cluster goes on
+    from one row to the next.
+    """
+
+    width: int
+    places: Integers
+    bits: NDArray[np.uint8]
+    clusters: Clusters
+
+    @staticmethod
+    def of(flips: NDArray[np.uint8]) -> Flips:
+        """What is not zero in uint8[R, W], with W a multiple of 8."""
+        count = np.count_nonzero(flips)
+        places, bits = np.empty(count, np.int64), np.empty(count, np.uint8)
+        clusters = np.empty((4, count), np.int64)
+        used = find_flips(flips, flips.view(np.uint64), GAP, places, bits, clusters)
+        return Flips(flips.shape[1], places, bits, Clusters(*clusters[:, :used].copy()))
+
+    def counts(self, rows: int) -> NDArray[np.intp]:
+        """How many bytes are wrong in each of the first `rows` rows."""
+        return np.diff(np.searchsorted(self.places, self.width * np.arange(rows + 1)))
+
+    def at(self, starts: Integers) -> Flips:
+        """Those of the first rows, numbered anew: row i begins at starts[i], in rising order."""
+        rows = np.arange(len(starts))
+        end = self.width * len(starts)
+        shift = starts - self.width * rows
+        clusters = self.clusters[: int(np.searchsorted(self.clusters.start, end))]
+        moved = shift[clusters.start // max(self.width, 1)]
+        counts = self.counts(len(starts))
+        used = int(counts.sum())
+        return Flips(
+            self.width,
+            self.places[:used] + np.repeat(shift, counts),
+            self.bits[:used],
+            Clusters(clusters.start + moved, clusters.stop + moved, clusters.wrong, clusters.bits),
+        )
+
+
 def cluster(places: Integers, bits: Integers) -> Clusters:
     """Clusters of wrong bytes at ascending `places`, with `bits` flipped in each."""
     if not len(places):
@@ -64,26 +109,14 @@ def _join(parts: Clusters) -> Clusters:
     )
 
 
-def burst_bytes(
-    shape: tuple[int, int], rows: NDArray[np.intp], places: NDArray[np.intp]
-) -> NDArray[np.bool_]:
-    """Which bytes of cells, bool[shape], lie inside a burst, right ones too (seen within the cell alone).
-
-    `rows` and `places` are those of the wrong bytes, row after row.
-    """
-    height, width = shape
-    # One long line, with a gap between the rows that no cluster can bridge.
-    stride = width + 64
-    line = rows.astype(np.int64) * stride + places
-    found = cluster(line, np.zeros_like(line))
-    bursts = found[found.burst]
-    if not len(bursts):
-        return np.zeros(shape, bool)
-    edges = np.zeros(height * stride + 1, np.int8)
-    edges[bursts.start] += 1
-    edges[bursts.stop] -= 1
-    inside = np.cumsum(edges[:-1], dtype=np.int8).reshape(height, stride)
-    return np.asarray(inside[:, :width] > 0)
+def burst_bytes(shape: tuple[int, int], clusters: Clusters) -> NDArray[np.bool_]:
+    """Which bytes of rows, bool[shape], lie inside a burst, right ones too (seen within the row alone)."""
+    inside = np.zeros(shape, bool)
+    line = inside.reshape(-1)
+    bursts = clusters[clusters.burst]
+    for start, stop in zip(bursts.start.tolist(), bursts.stop.tolist(), strict=True):
+        line[start:stop] = True
+    return inside
 
 
 class BurstCounter:
@@ -99,12 +132,11 @@ class BurstCounter:
         self._edges: list[Clusters] = []
         self._lengths: list[Integers] = []
 
-    def add(self, places: Integers, bits: Integers, starts: Integers, stops: Integers) -> None:
-        """The wrong bytes of some cells: ascending `places` in the stream, and `bits` flipped in each.
+    def add(self, found: Clusters, starts: Integers, stops: Integers) -> None:
+        """Clusters of some cells by place in the stream, ascending.
 
-        The cells take up starts[i]..stops[i]-1, in rising order.
+        The cells take up starts[i]..stops[i]-1, in rising order; a cluster may go on in a neighbour.
         """
-        found = cluster(places, bits)
         first = starts[np.searchsorted(starts, found.start, side="right") - 1]
         last = stops[np.searchsorted(starts, found.stop - 1, side="right") - 1]
         inside = (found.start - first >= GAP) & (last - found.stop >= GAP)

@@ -10,7 +10,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from oakum.decoding.cells import Cells
+from oakum.decoding.cells import Cells, flip_rate
 from oakum.decoding.distances import Distances
 from oakum.decoding.source import RIGHT, BlockSource, Bytes, Decoders, Mask, Strips
 from oakum.decoding.trials import (
@@ -22,6 +22,7 @@ from oakum.decoding.trials import (
     Reliability,
     chance_of_acceptance,
     chase_sets,
+    column_counts,
     erasure_trials,
     hopeful,
     neighbouring_rows,
@@ -58,20 +59,30 @@ class Columns:
         others = np.flatnonzero(source.states == RIGHT)
         self.symbols = np.empty((self.g.n, self.width), np.uint8)
         self.symbols[others], lost = source.rows(others)
-        self.others_right = np.ones(self.symbols.shape, bool)
-        self.late_erasures = np.zeros(self.symbols.shape, np.uint8)
+        self.fixed = np.full(self.symbols.shape, 255, np.uint8)
+        self.late_erasures = np.zeros(self.symbols.shape, bool)
         if lost is not None:  # It could be read a moment ago and now cannot.
-            self.others_right[others] = ~lost
+            self.fixed[others] = np.where(lost, np.uint8(0), np.uint8(255))
             self.late_erasures[others] = lost
         self.open = np.arange(self.width)
         self.provisional = np.zeros(self.width, bool)
         self.strict = np.zeros(self.width, bool)
         self.tried_as_received, self.tried_erasures = _Seen(), _Seen()
-        self.flip_rate = cells.flip_rate()
+        self._first_status = cells.status.copy()
         self.chases = MOST_CHASES
         self.suspicions = MOST_SUSPICIONS
         self.erased_together = 0
-        self.random = np.random.default_rng(source.number)  # Decoding twice gives the same twice.
+        self._number = source.number
+
+    @cached_property
+    def flip_rate(self) -> float:
+        """The rate of scattered flips, by what the inner code alone made of the words."""
+        return flip_rate(self._first_status, self.d.code.inner)
+
+    @cached_property
+    def random(self) -> np.random.Generator:
+        """Where random trials come from: decoding twice gives the same twice."""
+        return np.random.default_rng(self._number)
 
     def one_round(self) -> int:
         """Solve some columns: the costlier trials only when the cheaper ones do little. Returns how many."""
@@ -98,27 +109,22 @@ class Columns:
         self.symbols[self.cells.strips] = self.cells.value
         solver = self.d.columns.erasure_solver(self.cells.strips[rows].tolist())
         magnitudes, agree = solver.solve(self.d.columns.syndromes(self.symbols))
-        cells = self.cells.value[rows] ^ magnitudes
         if not agree.all() or (self.cells.given[rows] & (magnitudes != 0)).any():
             return False
-        if any(
-            self.cells.digested[row] and not self.cells.agrees(row, cell)
-            for row, cell in zip(rows.tolist(), cells, strict=True)
-        ):
+        cells = self.cells.value[rows] ^ magnitudes
+        if (self.cells.digested[rows] & ~self.cells.agree(rows, cells)).any():
             return False
-        for row, cell in zip(rows.tolist(), cells, strict=True):
-            self.cells.finish(row, cell)
+        self.cells.replace(rows, cells)
         return True
 
     def _posed(self, places: Strips, known: Reliability) -> _Posed:
         """The columns `places` as a problem for the outer decoder."""
-        symbols = self._at(places, self.symbols)
+        symbols, fixed = self._at(places, self.symbols), self._at(places, self.fixed)
         symbols[self.cells.strips] = self._at(places, self.cells.value)
-        fixed = self._at(places, self.others_right)
-        fixed[self.cells.strips] = ~known.open
+        fixed[self.cells.strips] = known.open.view(np.uint8) - np.uint8(1)
         late = self._at(places, self.late_erasures)
         syndromes = self.d.columns.syndromes(symbols)
-        return _Posed(places, known, symbols, fixed, late, syndromes, self.d.code.inner.d)
+        return _Posed(places, known, fixed, late, syndromes, self.d.code.inner.d)
 
     def _at(self, places: Strips, array: NDArray[Any]) -> NDArray[Any]:
         """Some columns of an array; the array itself, and no copy, when they are all."""
@@ -140,7 +146,7 @@ class Columns:
 
     def _try_erasures(self) -> int:
         """All trials of a round on the unsolved columns. Returns how many were solved."""
-        known = self._reliability()
+        known = self._reliability(weighed=True)
         places = self.tried_erasures.changed(self.open, self.cells.value, known.doubts, known.verdicts)
         if not len(places) or not self.d.later_trials:
             return 0
@@ -158,20 +164,20 @@ class Columns:
         second_best = np.zeros(0, np.uint8)
         sizes = np.full(len(left), -1, np.intp)
         for trial in trials:
-            size = np.count_nonzero(trial, axis=0)
+            size = column_counts(trial)
             # The sets of a family are nested: one of the same size is the same.
             now = left[(size != sizes)[left] & (size <= self.g.r)[left]]
             sizes = size
             if not len(now):
                 continue
-            erased = posed.late.copy()
-            erased[self.cells.strips] |= trial
+            erasures = size + posed.late_count
+            erased = posed.erasing(self.cells.strips, trial) if erasures.any() else None
             magnitudes, errors = self.d.columns.decode(posed.syndromes, erased, only=now)
             good = np.zeros(len(solved), bool)
             good[now] = errors[now] >= 0
-            good &= ~((magnitudes != 0) & posed.fixed).any(axis=0)
-            rivalled = self._rivalled(posed, erased, errors, magnitudes, good)
-            self._weigh(posed, errors, erased, magnitudes, good)
+            good &= ~_meet(magnitudes, posed.fixed)
+            rivalled = self._rivalled(posed, erasures, errors, magnitudes, good)
+            self._weigh(posed, errors, erasures, magnitudes, good)
             if self.d.later_trials and (wait := good & rivalled).any():
                 good &= ~wait
                 second_best = second_best if waiting.any() else np.zeros_like(magnitudes)
@@ -185,46 +191,59 @@ class Columns:
         if complete and (waiting & ~solved).any():
             self._pin(posed, second_best, waiting & ~solved)
             solved |= waiting
-        self.open = np.setdiff1d(self.open, posed.places[solved], assume_unique=True)
+        self._close(posed.places[solved])
         return int(solved.sum())
+
+    def _close(self, places: Strips) -> None:
+        """Columns that are solved are open no longer."""
+        still = np.zeros(self.width, bool)
+        still[self.open] = True
+        still[places] = False
+        self.open = np.flatnonzero(still)
 
     def _chase(self) -> int:
         """Random trial erasures on columns that are just beyond reach. Returns how many were solved."""
-        known = self._reliability().take(self.open)
+        known = self._reliability(weighed=True).take(self.open)
         near = np.flatnonzero(hopeful(known, self.g.r))
         if not len(near):
             return 0
         posed = self._posed(self.open[near], known.take(near))
         count = max(8, min(256, CHASE_COLUMNS // len(near)))
         sets = chase_sets(posed.known, count, self.random)
-        erased = np.repeat(posed.late, count, axis=1)
+        erased = np.repeat(posed.late, count, axis=1).view(np.uint8)
         erased[self.cells.strips] |= sets.reshape(len(self.cells.strips), -1)
         magnitudes, errors = self.d.columns.decode(np.repeat(posed.syndromes, count, axis=1), erased)
-        fine = (errors >= 0) & ~((magnitudes != 0) & np.repeat(posed.fixed, count, axis=1)).any(axis=0)
-        chance = self._chances(np.repeat(posed.doubtful, count), errors, erased)
+        fine = (errors >= 0) & ~_meet(magnitudes, np.repeat(posed.fixed, count, axis=1))
+        chance = self._chances(np.repeat(posed.doubtful, count), errors, np.count_nonzero(erased, axis=0))
         # Any of the trials could have been the one that a wrong word passes.
         chance = np.where(fine, chance + np.log(count), np.inf).reshape(len(near), count)
         best, least = chance.argmin(axis=1), chance.min(axis=1)
         good = (least < BELIEVED) | ((least < USABLE) & ~self.strict[posed.places])
         self.provisional[posed.places[good & (least >= BELIEVED)]] = True
         self._pin(posed, np.take(magnitudes, best + np.arange(len(near)) * count, axis=1), good)
-        self.open = np.setdiff1d(self.open, posed.places[good], assume_unique=True)
+        self._close(posed.places[good])
         return int(good.sum())
 
-    def _reliability(self, *, weighed: bool = True) -> Reliability:
-        """What is known of the symbols of all rows; the chances of being wrong only if `weighed`."""
-        open_ = ~self.cells.pinned
-        status = weights = np.zeros(open_.shape, np.uint8)
+    def _reliability(self, *, weighed: bool) -> Reliability:
+        """What is known of the symbols of all rows; verdicts and chances of being wrong only if `weighed`."""
+        cells = self.cells
+        open_ = ~cells.pinned
+        status = weights = verdicts = np.zeros(open_.shape, np.uint8)
+        erased = dense = status.view(bool)
         if self.g.p:
-            status = np.where(open_, self.cells.spread(self.cells.status), np.uint8(0))
-        if self.g.p and weighed:
-            kept = np.where(self.cells.pinned, self.cells.value, self.cells.raw)
+            status = cells.spread(cells.status) * open_.view(np.uint8)
+        if weighed and self.g.p:
             weights = doubts(
-                self.d.words, kept, self.cells.value, self.cells.parity, self.cells.staggers,
-                self.cells.status, self.cells.pinned.view(np.uint8), self.flip_rate,
+                self.d.words, cells.kept(np.arange(len(open_))), cells.value, cells.parity, cells.staggers,
+                cells.status, cells.pinned.view(np.uint8), self.flip_rate,
             )  # fmt: skip
-        verdicts = np.where(open_, self._verdicts()[:, np.newaxis], np.uint8(0))
-        return Reliability(self.cells.erased & open_, status == DENSE, verdicts, status, weights, open_)
+        if weighed:
+            verdicts = self._verdicts()[:, np.newaxis] * open_.view(np.uint8)
+        if cells.erased.any():
+            erased = cells.erased & open_
+        if (cells.status == DENSE).any():
+            dense = status == DENSE
+        return Reliability(erased, dense, verdicts, status, weights, open_)
 
     def _verdicts(self) -> Bytes:
         """Opinions on which rows are parts of bursts as a whole, uint8[R].
@@ -245,17 +264,16 @@ class Columns:
                 verdicts[rows[neighbouring_rows(self.cells.strips[rows], room, least)]] |= np.uint8(1 << bit)
         return verdicts
 
-    def _chances(self, doubtful: Strips, errors: NDArray[np.int16], erased: Bytes) -> NDArray[np.float64]:
+    def _chances(self, doubtful: Strips, errors: NDArray[np.int16], erasures: Strips) -> NDArray[np.float64]:
         """Log of the chance that random words pass for what was found; `doubtful` counts open symbols."""
-        erasures = np.count_nonzero(erased, axis=0)
         wrong = np.maximum(errors, 0).astype(np.intp)
         return chance_of_acceptance(np.maximum(doubtful - erasures, 0), wrong, self.g.r - erasures)
 
     def _weigh(
-        self, posed: _Posed, errors: NDArray[np.int16], erased: Bytes, magnitudes: Bytes, good: Mask
+        self, posed: _Posed, errors: NDArray[np.int16], erasures: Strips, magnitudes: Bytes, good: Mask
     ) -> None:
         """Keep `good` for the sure solutions, and for the time being for some that are not."""
-        chance = self._chances(posed.doubtful, errors, erased)
+        chance = self._chances(posed.doubtful, errors, erasures)
         unsure = np.flatnonzero(good & (chance >= BELIEVED))
         if not len(unsure):
             return
@@ -267,12 +285,12 @@ class Columns:
         good[unsure[~usable]] = False
 
     def _rivalled(
-        self, posed: _Posed, erased: Bytes, errors: NDArray[np.int16], magnitudes: Bytes, good: Mask
+        self, posed: _Posed, erasures: Strips, errors: NDArray[np.int16], magnitudes: Bytes, good: Mask
     ) -> Mask:
         """The `good` solutions that another codeword, nearer than the guarantee reaches, might beat."""
         distance = self.g.r + 1
         rivalled = np.zeros(len(good), bool)
-        most = np.maximum(errors, 0) + np.count_nonzero(erased, axis=0)
+        most = np.maximum(errors, 0) + erasures
         # The cheap bound first: a rival alters D - `most` others at least, for 2 each less the slack.
         which = np.flatnonzero(good & (posed.least_distance < distance) & (2 * most + posed.slack > distance))
         if len(which):
@@ -286,17 +304,16 @@ class Columns:
 
     def _pin(self, posed: _Posed, magnitudes: Bytes, good: Mask) -> None:
         """The bytes of solved columns are known from now on."""
+        cells = self.cells
         if not good.any():
             return
         if len(good) == self.width:
-            solved = (posed.symbols ^ magnitudes)[self.cells.strips]
-            np.copyto(self.cells.value, solved, where=good)
-            self.cells.pinned |= good
+            cells.value ^= magnitudes[cells.strips] & np.negative(good.view(np.uint8))
+            cells.pinned |= good
             return
         which = np.flatnonzero(good)
-        solved = np.take(posed.symbols, which, axis=1) ^ np.take(magnitudes, which, axis=1)
-        self.cells.value[:, posed.places[which]] = solved[self.cells.strips]
-        self.cells.pinned[:, posed.places[which]] = True
+        cells.value[:, posed.places[which]] ^= np.take(magnitudes, which, axis=1)[cells.strips]
+        cells.pinned[:, posed.places[which]] = True
 
     def reconsider(self) -> bool:
         """Nothing more can be solved: take back verdicts about density, then what is only provisional.
@@ -338,17 +355,36 @@ class Columns:
         return True
 
 
+def _meet(magnitudes: Bytes, fixed: Bytes) -> Mask:
+    """Which columns, bool[columns], a solution alters where they are `fixed`."""
+    return np.asarray(np.bitwise_or.reduce(magnitudes & fixed, axis=0) != 0)
+
+
 @dataclass(frozen=True)
 class _Posed:
-    """Unsolved columns as a problem: their numbers, what is known, the symbols of all n strips."""
+    """Unsolved columns as a problem: their numbers, what is known, and of all n strips what follows.
+
+    `fixed` is 255 for symbols that are right and 0 for others, `late` marks erasures in cells that were
+    right; `syndromes` is uint8[r, columns].
+    """
 
     places: Strips
     known: Reliability
-    symbols: Bytes
-    fixed: Mask
-    late: Bytes
+    fixed: Bytes
+    late: Mask
     syndromes: Bytes
     inner_distance: int
+
+    def erasing(self, strips: Strips, trial: Mask) -> Bytes:
+        """uint8[n, columns]: what a trial on the rows of `strips` erases."""
+        erased = self.late.copy()
+        erased[strips] = trial
+        return erased.view(np.uint8)
+
+    @cached_property
+    def late_count(self) -> Strips:
+        """How many symbols of each column were lost after they had been right."""
+        return column_counts(self.late)
 
     @cached_property
     def distances(self) -> Distances:
@@ -370,14 +406,18 @@ class _Posed:
     @cached_property
     def _unclean(self) -> tuple[Strips, Strips]:
         """How many symbols of each column have no reliability at all, and how many one between 0 and 1."""
+        status = self.known.status
+        if not self.known.erased.any():
+            undecoded = column_counts(status >= UNUSABLE)
+            return column_counts(status >= DENSE), column_counts(status != 0) - undecoded
         void = self.known.erased | (self.known.status >= DENSE)
         corrected = (self.known.status != 0) & (self.known.status < UNUSABLE) & ~void
-        return np.count_nonzero(void, axis=0), np.count_nonzero(corrected, axis=0)
+        return column_counts(void), column_counts(corrected)
 
     @cached_property
     def doubtful(self) -> Strips:
         """How many symbols of each column may be wrong."""
-        return np.asarray(np.count_nonzero(~self.fixed, axis=0))
+        return column_counts(self.fixed == 0)
 
 
 class _Seen:

@@ -13,7 +13,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from oakum.decoding.trials import Bytes, Mask, Reliability
+from oakum.decoding.trials import Bytes, Mask, Reliability, column_counts
 from oakum.kernels.words import FLAGGED
 
 Counts = NDArray[np.intp]
@@ -87,4 +87,4 @@ FIXED = 255
 
 
 def _counts(level: Bytes, levels: int) -> Counts:
-    return np.array([np.count_nonzero(level == number, axis=0) for number in range(levels)])
+    return np.array([column_counts(level == number) for number in range(levels)])

@@ -10,9 +10,11 @@ import numpy as np
 from numpy.typing import NDArray
 
 from oakum.algebra.concatenated import ConcatenatedCode
+from oakum.decoding.bursts import Flips
 from oakum.geometry import Geometry
 from oakum.kernels.columns import ColumnDecoder
 from oakum.kernels.doubts_kernels import weigh_words
+from oakum.kernels.flips import find_flips
 from oakum.kernels.words import WordCodec
 
 Bytes = NDArray[np.uint8]
@@ -61,6 +63,7 @@ class Decoders:
         for codec in (words, columns):
             codec.prepare()
         weigh_words.prepare()
+        find_flips.prepare()
         return Decoders(code, words, columns)
 
 
@@ -101,6 +104,6 @@ class BlockOutcome:
         return flips
 
     @cached_property
-    def wrong(self) -> tuple[Strips, Strips]:
-        """Rows and columns of the bytes that are not zero in `flips`, row after row."""
-        return np.divmod(np.flatnonzero(self.flips.reshape(-1) != 0), max(self.flips.shape[1], 1))
+    def wrong(self) -> Flips:
+        """The bytes that are not zero in `flips`, and how they cluster."""
+        return Flips.of(self.flips)

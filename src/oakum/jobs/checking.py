@@ -7,9 +7,13 @@ the blocks that hold them, a group of neighbouring blocks a work unit.
 from __future__ import annotations
 
 from bisect import bisect_right
+from collections import deque
 from collections.abc import Callable, Iterator, Sequence
-from concurrent.futures import Future
+from concurrent.futures import Future, ThreadPoolExecutor
+from contextvars import copy_context
 from dataclasses import dataclass, field
+from functools import partial
+from itertools import chain, islice
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -17,10 +21,11 @@ import xxhash
 from numpy.typing import NDArray
 
 from oakum.digests import cell_digests
+from oakum.files import aligned
 from oakum.geometry import CELL, Geometry
 from oakum.jobs.opening import ProtectedSet
-from oakum.members import MemberHasher, Span
-from oakum.pools import Pools, wait_all
+from oakum.members import MemberHasher, Span, bytes_of
+from oakum.pools import Meter, Pools, wait_all
 from oakum.progress import Progress
 from oakum.sidecar.layout import Track
 from oakum.sidecar.reading import Wear, examine_records
@@ -28,18 +33,39 @@ from oakum.sidecar.table import Kind
 
 if TYPE_CHECKING:
     from oakum.decoding.block import Decoders
+    from oakum.decoding.bursts import Clusters
 
 Bytes = NDArray[np.uint8]
 Mask = NDArray[np.bool_]
 Range = tuple[int, int]
+Sink = Callable[[int, Bytes], None]
+"""Takes bytes by their place in the stream."""
 
 RIGHT, WRONG, UNKNOWN = 0, 1, 2
 """As in `oakum.decoding.block`, which is not imported where nothing is damaged."""
 
 CHUNK = 8 << 20
+CHUNKS = 3
+"""Chunks of the members that are in memory at a time, read in runs by all threads."""
+
+READERS = 2
+"""Threads that read the sidecar while others work: they mostly wait for the medium."""
+
+RUN = 2 << 20
+"""Bytes that one work unit reads and looks at, while they are still in the CPU's cache."""
+
 MOST_SEEN = 1 << 18
 GROUP = 8
 """Neighbouring blocks that one work unit takes, so that strips are read in longer pieces."""
+
+RECORD_RUN = 64
+"""Blocks whose inner parity and digests are kept together, about 5 MB; no group is in two such runs."""
+
+MOST_BLOCKS = 64
+"""Blocks that all groups under work hold together where there are few threads, about 64 MB."""
+
+DENSE = 20
+"""A group is dense when one in so many of its cells is not right."""
 
 
 @dataclass
@@ -50,7 +76,8 @@ class Finding:
     block: int
     correctable: bool
     places: NDArray[np.int64]
-    bits: NDArray[np.int64]
+    bits: NDArray[np.uint8]
+    clusters: Clusters
     starts: NDArray[np.int64]
     stops: NDArray[np.int64]
     """Ranges in the stream of the data cells that were not right, ascending."""
@@ -68,7 +95,7 @@ class Finding:
     rounds: int
     false_pins: int
     corrected: list[tuple[int, Bytes]] = field(default_factory=list)
-    """Corrected bytes by place in the stream, where they are asked for."""
+    """Corrected bytes by place in the stream, where asked for; a piece may go on in later blocks."""
 
     evidence: list[tuple[int, Bytes, Bytes | None]] = field(default_factory=list)
     """For audits, cells that are not right: place in the stream, as received, as it should be where known."""
@@ -85,12 +112,13 @@ class WindowCheck:
         self.pieces = [p for p in opened.tables[number] if p.kind is Kind.FILE]
         self.g: Geometry = self.section.geometry
         self.start = self.section.bootstrap.start
+        self._opened = opened
         self._members = opened.members
         self._progress = progress
         self._pools = pools
         spans = [Span(p.path, p.offset, p.length) for p in self.pieces]
         self.spans = spans
-        self.stream = opened.stream(spans, self.start, self._known_bad(opened.unreadable))
+        self.stream = opened.stream(spans, self.start, opened.known_bad(spans))
         self.faulty: list[Range] = []
         """Ranges of the window that could not be read."""
 
@@ -99,7 +127,22 @@ class WindowCheck:
         self.parity = np.full(g.r * g.blocks, start_state, np.uint8).reshape(g.blocks, g.r)
         self.inner_suspects: dict[int, set[int]] = {}
         self.wear = Wear()
-        self._body_unreadable = 0
+        self.body_unreadable: dict[int, int] = {}
+        """Ranges of the body that could not be read: from where, and how many bytes."""
+
+        self.looked_to = self.body_done = 0
+        """The byte of the window up to which everything has been looked at, and work units of the body."""
+
+        self.digests: list[bytes] = []
+        """SHA-256 of the pieces, as far as they are known."""
+
+        self.resumed = False
+        """Whether an earlier run has looked at a part of the set, and its last member is to be hashed again."""
+
+        self.mark: Callable[[], None] = lambda: None
+        """Called when the scan has come further."""
+
+        self._meter = Meter()
         self.right_spans: list[Range] = []
         self.auditing = False
         """Whether findings come with evidence, and what digests wrong cells had is kept in `seen`."""
@@ -113,17 +156,6 @@ class WindowCheck:
         """Bytes of the stream and blocks that were looked at."""
         return self.sampled or (self.g.length, self.g.blocks)
 
-    def _known_bad(self, unreadable: dict[bytes, list[Range]]) -> list[Range]:
-        """What the user says cannot be read, as ranges of the window."""
-        ranges, place = [], 0
-        for piece in self.pieces:
-            for start, stop in unreadable.get(piece.path, ()):
-                a, b = max(start, piece.offset), min(stop, piece.offset + piece.length)
-                if a < b:
-                    ranges.append((place + a - piece.offset, place + b - piece.offset))
-            place += piece.length
-        return ranges
-
     # -- scanning ----------------------------------------------------------------------------------
 
     def scan(self, hasher: MemberHasher | None) -> None:
@@ -131,64 +163,88 @@ class WindowCheck:
 
         With a `hasher` (whose state goes on from window to window) the members' SHA-256 are compared too.
         """
-        self._scan_data(hasher)
-        if hasher is not None:
-            self._compare_members(hasher)
-        self._settle_right_members()
-        if self.g.digested:
-            self._scan_parity()
-            self._scan_inner(Track.INNER, self.g.parity_bytes, self.g.data_inner, self._suspect_data_inner)
-            self._scan_inner(
-                Track.PARITY_INNER,
-                self.g.parity_bytes + self.g.data_inner,
-                self.g.parity_inner,
-                self._suspect_parity_inner,
-            )
-        else:
+        body = islice(self._looks_at_body(), self.body_done, None) if self.g.digested else iter(())
+        looking: deque[Future[None]] = deque()
+        with ThreadPoolExecutor(READERS, "oakum-body") as self._beside:
+            self._scan_data(hasher, body, looking)
+            if hasher is not None:
+                self.digests = hasher.digests
+                self._compare_members()
+            self._settle_right_members()
+            while self._go_on(body, looking):
+                wait_all([looking[0]], self._report)
+            self.mark()
+        self._report()
+        if not self.g.digested:
             self._scan_whole_body()
         self.wear = examine_records(self.section)
-        self.wear.unreadable += self._body_unreadable
+        self.wear.unreadable += sum(self.body_unreadable.values())
 
-    def _scan_data(self, hasher: MemberHasher | None) -> None:
+    def _scan_data(
+        self, hasher: MemberHasher | None, body: Iterator[Callable[[], None]], looking: deque[Future[None]]
+    ) -> None:
+        """The members' bytes, chunk by chunk; `body` is what can be done while SHA-256 takes its time."""
         g = self.g
-        if hasher is not None:
+        if hasher is not None and self.resumed:
+            hasher.go_on(self.spans, self.digests, self.looked_to, self._again)
+        elif hasher is not None:
             hasher.expect(self.spans)
-        chunks = (
-            list(g.chunks(min(CHUNK, max(1, -(-g.length // max(g.depth, 1))) * g.depth))) if g.depth else []
-        )
-        buffers = [np.empty(max((b - a for a, b in chunks), default=0), np.uint8) for _ in range(3)]
-        running: list[list[Future[None]]] = [[], [], []]
-        for turn, (start, stop) in enumerate(chunks):
-            slot = turn % 3
-            wait_all(running[slot])
+        buffers = [aligned(min(CHUNK, g.cells_end)) for _ in range(CHUNKS)]
+        running: list[list[Future[None]]] = [[] for _ in buffers]
+        stops = [self.looked_to] * CHUNKS
+        for turn, (start, stop) in enumerate(g.chunks(CHUNK, self.looked_to) if g.depth else ()):
+            slot = turn % CHUNKS
+            wait_all(running[slot], self._report)
+            self.looked_to, stops[slot] = stops[slot], stop
+            self.mark()
             data = buffers[slot][: stop - start]
-            faults = self.stream.read_into(start, data.data)
+            running[slot] = [
+                self._pools.work.submit(self._look, a, data[a - start : b - start], hasher)
+                for a, b in g.chunks(RUN, start, stop)
+            ]
             real = min(stop, g.length) - start
-            self.faulty += [(start + a, start + b) for a, b in faults]
             if hasher is not None:
-                running[slot] = [self._pools.ordered.submit(hasher.update, data.data[:real])]
-            if g.digested:
-                running[slot] += self._compare_cells(start, stop, data)
-            self._progress.advance(real)
+                running[slot].append(
+                    self._pools.ordered.submit_after(running[slot][:], hasher.update, data.data[:real])
+                )
+            self._go_on(body, looking)
+            self._report()
         for futures in running:
-            wait_all(futures)
-        for start, stop in self.faulty:
-            self.data[g.cell_at(start) : g.cell_at(stop - 1) + 1] = WRONG
+            wait_all(futures, self._report)
+        self.looked_to = g.cells_end
+        self.faulty.sort()
 
-    def _compare_cells(self, start: int, stop: int, data: Bytes) -> list[Future[None]]:
-        first = self.g.cell_at(start)
-        expected, known = self.section.digests(Track.DATA, first, self.g.cell_at(stop - 1) + 1 - first)
+    def _again(self, span: Span) -> Iterator[tuple[memoryview, list[Range]]]:
+        """The bytes of a member from its first one on."""
+        start = self._members[span.path].stream_start
+        stream = self._opened.stream([span], start, self._opened.known_bad([span]))
+        return bytes_of(stream, span.length)
 
-        def work(number: int, cells: Bytes) -> None:
-            here = slice(number - first, number - first - (-len(cells) // CELL))
-            self._compare_run(number, cells, expected[here], None if known is None else known[here])
+    def _look(self, start: int, cells: Bytes, hasher: MemberHasher | None = None) -> None:
+        """Read the cells from byte `start` of the window on, and hold them against their digests."""
+        g = self.g
+        faults = self.stream.read_into(start, cells.data, hasher)
+        for run in g.runs(start, start + len(cells), RUN) if g.digested else ():
+            part = cells[run.start - start :][: run.length]
+            number = g.cell_number(run.strip, run.block)
+            self._compare_run(number, part, *self.section.digests(Track.DATA, number, -(-len(part) // CELL)))
+        for a, b in faults:
+            self.data[g.cell_at(start + a) : g.cell_at(start + b - 1) + 1] = WRONG
+            self.faulty.append((start + a, start + b))
+        self._meter.add(min(len(cells), g.length - start))
 
-        return [
-            self._pools.work.submit(
-                work, self.g.cell_number(run.strip, run.block), data[run.start - start :][: run.length]
-            )
-            for run in self.g.runs(start, stop, 1 << 20)
-        ]
+    def _report(self) -> None:
+        """Tell how much has been read."""
+        self._progress.advance(self._meter.take())
+
+    def _go_on(self, body: Iterator[Callable[[], None]], looking: deque[Future[None]]) -> bool:
+        """Have more of the body looked at beside the members; False when there is no more."""
+        while looking and looking[0].done():
+            looking.popleft().result()
+            self.body_done += 1
+        for look in islice(body, 4 * self._pools.jobs - len(looking)):
+            looking.append(self._beside.submit(copy_context().run, look))
+        return bool(looking)
 
     def _compare_run(
         self, number: int, cells: Bytes, expected: NDArray[np.uint64], known: Mask | None
@@ -218,28 +274,19 @@ class WindowCheck:
                 real = min(width, g.strip_length(strip) - start)
                 if real <= 0:
                     break
-                cells = np.empty(min(-(-real // CELL) * CELL, width), np.uint8)
-                faults = self.stream.read_into(strip * g.depth + start, cells.data)
-                number, count = g.cell_number(strip, first), -(-len(cells) // CELL)
-                self._compare_run(number, cells, *self.section.digests(Track.DATA, number, count))
-                for a, b in faults:
-                    self.data[number + a // CELL : number - (-b // CELL)] = WRONG
-                    self.faulty.append((strip * g.depth + start + a, strip * g.depth + start + b))
+                self._look(strip * g.depth + start, aligned(min(-(-real // CELL) * CELL, width)))
                 nbytes += real
-                self._progress.advance(real)
-            expected, known = self.section.digests(Track.PARITY, first * g.r, (end - first) * g.r)
             for j in range(g.r):
-                cells, faults = self.section.body(j * g.depth + start, width)
-                self._compare_parity(first, j, cells, faults, expected[j :: g.r], known)
-            self._progress.advance(g.r * width)
+                self._look_at_parity(first, end - first, j)
+            self._report()
         self.sampled = nbytes, sum(end - first for first, end in groups)
         self.faulty.sort()
         self.wear = examine_records(self.section)
 
-    def _compare_members(self, hasher: MemberHasher) -> None:
+    def _compare_members(self) -> None:
         """Which members are right, and which parts of the window belong to them."""
         place = 0
-        for piece, digest in zip(self.pieces, hasher.digests, strict=True):
+        for piece, digest in zip(self.pieces, self.digests, strict=True):
             member = self._members[piece.path]
             if piece.ends and not member.absent:
                 member.right = digest == piece.digest and not self._has_fault(place, place + piece.length)
@@ -255,7 +302,7 @@ class WindowCheck:
     def _settle_right_members(self) -> None:
         """Cells that lie wholly in right members are right, whatever their digests say."""
         g = self.g
-        if not (self.data != RIGHT).any():
+        if not self.right_spans:
             return
         for number in np.flatnonzero(self.data != RIGHT).tolist():
             start = g.cell_start(number)
@@ -282,62 +329,57 @@ class WindowCheck:
     def _read_body(self, offset: int, length: int) -> tuple[Bytes, list[Range]]:
         """Bytes of the section's body, those that cannot be read counted."""
         data, faults = self.section.body(offset, length)
-        self._body_unreadable += sum(stop - start for start, stop in faults)
+        self.body_unreadable.update((offset + start, stop - start) for start, stop in faults)
+        self._meter.add(length)
         return data, faults
 
-    def _scan_parity(self) -> None:
-        """The parity strips, in pieces of columns as they are digested block by block."""
+    def _looks_at_body(self) -> Iterator[Callable[[], None]]:
+        """Work units for the parity strips, in the order of their digests, and both areas of inner parity."""
         g = self.g
-        step = max(1, (1 << 20) // CELL)
+        step = RUN // CELL
         for first in range(0, g.blocks, step):
-            count = min(step, g.blocks - first)
-            expected, known = self.section.digests(Track.PARITY, first * g.r, count * g.r)
-            width = (
-                sum(g.width(b) for b in (first, first + count - 1)[: min(count, 2)])
-                + max(0, count - 2) * CELL
-            )
-            futures = []
             for j in range(g.r):
-                cells, faults = self._read_body(j * g.depth + first * CELL, width)
-                futures.append(
-                    self._pools.work.submit(
-                        self._compare_parity, first, j, cells, faults, expected[j :: g.r], known
-                    )
-                )
-            wait_all(futures)
-            self._progress.advance(g.r * width)
+                yield partial(self._look_at_parity, first, min(step, g.blocks - first), j)
+        for track, start, length, suspect in (
+            (Track.INNER, g.parity_bytes, g.data_inner, self._suspect_data_inner),
+            (
+                Track.PARITY_INNER,
+                g.parity_bytes + g.data_inner,
+                g.parity_inner,
+                self._suspect_parity_inner,
+            ),
+        ):
+            for offset in range(0, length, RUN):
+                yield partial(self._look_at_inner, track, start, offset, min(RUN, length - offset), suspect)
 
-    def _compare_parity(
-        self,
-        first: int,
-        j: int,
-        cells: Bytes,
-        faults: list[Range],
-        expected: NDArray[np.uint64],
-        known: Mask | None,
-    ) -> None:
-        state = np.where(cell_digests(cells) == expected, np.uint8(RIGHT), np.uint8(WRONG))
+    def _look_at_parity(self, first: int, count: int, j: int) -> None:
+        """The cells of parity strip j in blocks first..first+count-1."""
+        g = self.g
+        start = first * CELL
+        length = min((first + count) * CELL, g.depth) - start
+        cells, faults = self._read_body(j * g.depth + start, length)
+        expected, known = self.section.digests(Track.PARITY, first * g.r, count * g.r)
+        state = np.where(cell_digests(cells) == expected[j :: g.r], np.uint8(RIGHT), np.uint8(WRONG))
         if known is not None:
-            state[~known[j :: self.g.r]] = UNKNOWN
-        for start, stop in faults:
-            state[start // CELL : -(-stop // CELL)] = WRONG
-        self.parity[first : first + len(state), j] = state
+            state[~known[j :: g.r]] = UNKNOWN
+        for a, b in faults:
+            state[a // CELL : -(-b // CELL)] = WRONG
+        self.parity[first : first + count, j] = state
 
-    def _scan_inner(self, track: Track, start: int, length: int, suspect: Callable[[int, int], None]) -> None:
-        """One of the two areas of inner parity: cells that disagree with their digest are looked at later."""
-        for offset in range(0, length, CHUNK):
-            size = min(CHUNK, length - offset)
-            data, faults = self._read_body(start + offset, size)
-            digests = cell_digests(data)
-            expected, known = self.section.digests(track, offset // CELL, len(digests))
-            bad = digests != expected
-            if known is not None:
-                bad |= ~known
-            for a, b in faults:
-                bad[a // CELL : -(-b // CELL)] = True
-            for cell in np.flatnonzero(bad).tolist():
-                suspect(offset + cell * CELL, min(offset + (cell + 1) * CELL, length))
-            self._progress.advance(size)
+    def _look_at_inner(
+        self, track: Track, start: int, offset: int, length: int, suspect: Callable[[int, int], None]
+    ) -> None:
+        """Part of an area of inner parity: cells that disagree with their digest are examined later."""
+        data, faults = self._read_body(start + offset, length)
+        digests = cell_digests(data)
+        expected, known = self.section.digests(track, offset // CELL, len(digests))
+        bad = digests != expected
+        if known is not None:
+            bad |= ~known
+        for a, b in faults:
+            bad[a // CELL : -(-b // CELL)] = True
+        for cell in np.flatnonzero(bad).tolist():
+            suspect(offset + cell * CELL, offset + min((cell + 1) * CELL, length))
 
     def _suspect_data_inner(self, start: int, stop: int) -> None:
         g = self.g
@@ -391,31 +433,54 @@ class WindowCheck:
         """Blocks with a cell that is not right, or with inner parity to be looked at."""
         if not self.g.blocks:
             return []
-        dirty = set(np.unique(np.flatnonzero(self.data != RIGHT) % self.g.blocks).tolist()) | set(
-            np.flatnonzero((self.parity != RIGHT).any(axis=1)).tolist()
-        )
-        return sorted(dirty | set(self.inner_suspects))
+        dirty: Mask = (self.parity != RIGHT).any(axis=1)
+        dirty[np.flatnonzero(self.data != RIGHT) % self.g.blocks] = True
+        dirty[list(self.inner_suspects)] = True
+        return np.flatnonzero(dirty).tolist()
 
-    def findings(self, decoders: Callable[[], Decoders], *, keep: bool) -> Iterator[Finding]:
-        """Decode all dirty blocks, in order. With `keep` the corrected bytes come along."""
-        groups = _grouped(self.dirty_blocks())
+    @property
+    def groups(self) -> list[list[int]]:
+        """The dirty blocks in groups, each of which is read together; larger ones where there is room."""
+        dirty, jobs = self.dirty_blocks(), self._pools.jobs
+        return _grouped(dirty, max(GROUP, min(MOST_BLOCKS // jobs, len(dirty) // (4 * jobs))))
+
+    def is_dense(self, blocks: list[int]) -> bool:
+        """Whether so many cells of a group are not right that decoding it will read most of it anyway."""
+        first, end = blocks[0], blocks[-1] + 1
+        whole = len(self.data) // self.g.blocks * self.g.blocks
+        rows = self.data[:whole].reshape(-1, self.g.blocks)[:, first:end]
+        count = np.count_nonzero(rows) + np.count_nonzero(self.data[whole:][first:end])
+        return bool(count * DENSE >= self.g.k * (end - first))
+
+    def outside_dense_groups(self) -> Iterator[Range]:
+        """The ranges of the window, in order, that no dense group holds."""
+        g = self.g
+        held = [(b[0] * CELL, (b[-1] + 1) * CELL) for b in self.groups if self.is_dense(b)]
+        if not held:
+            yield 0, g.length
+            return
+        starts, stops = [0, *(stop for _, stop in held)], [*(start for start, _ in held), g.depth]
+        for strip in range(g.k):
+            for a, b in zip(starts, stops, strict=True):
+                first, end = strip * g.depth + a, min(strip * g.depth + b, g.length)
+                if first < end:
+                    yield first, end
+
+    def findings(
+        self, decoders: Callable[[], Decoders], *, keep: bool = False, sink: Sink | None = None
+    ) -> Iterator[Finding]:
+        """Decode all dirty blocks, in order. `keep` and `sink` as in `blocks.examine`.
+
+        The sink is called in several threads. What it is given need not be read by whoever writes all bytes.
+        """
+        groups = self.groups
         if not groups:
             return
-        ready = decoders()
-        waiting: list[Future[list[Finding]]] = []
-        for group in groups:
-            waiting.append(self._pools.work.submit(self._work, group, ready, keep))
-            if len(waiting) > self._pools.jobs:
-                yield from waiting.pop(0).result()
-        for future in waiting:
-            yield from future.result()
+        from oakum.jobs.blocks import examine
+        from oakum.jobs.groups import Records
 
-    def _work(self, blocks: list[int], decoders: Decoders, keep: bool) -> list[Finding]:
-        """The work unit: neighbouring blocks, decoded one after the other from strips read together."""
-        from oakum.jobs.blocks import GroupReader, examine
-
-        reader = GroupReader(self, blocks)
-        return [examine(self, reader.block(b), decoders, keep=keep, evidence=self.auditing) for b in blocks]
+        work = partial(examine, Records(self), decoders(), keep=keep, sink=sink, evidence=self.auditing)
+        yield from chain.from_iterable(self._pools.in_turn(work, groups))
 
     def states(self, block: int) -> NDArray[np.uint8]:
         """RIGHT, WRONG or UNKNOWN for the cells of a block, uint8[n]; virtual cells are right."""
@@ -427,27 +492,13 @@ class WindowCheck:
         states[g.k :] = self.parity[block]
         return states
 
-    def digests_of(self, block: int, strips: NDArray[np.intp]) -> tuple[NDArray[np.uint64], Mask]:
-        """Digests of some cells of a block and whether they are known."""
-        g = self.g
-        values, known = np.zeros(len(strips), np.uint64), np.zeros(len(strips), bool)
-        if not g.digested:
-            return values, known
-        for i, strip in enumerate(strips.tolist()):
-            track, number = (Track.DATA, g.cell_number(strip, block)) if strip < g.k else (
-                Track.PARITY, block * g.r + strip - g.k)  # fmt: skip
-            value, sure = self.section.digests(track, number, 1)
-            values[i], known[i] = value[0], sure is None or sure[0]
-        return values, known
-
-    def pinned(self, block: int, strips: NDArray[np.intp]) -> Mask | None:
-        """Bytes of some cells that belong to right members, bool[R, width]."""
+    def pinned(self, strips: NDArray[np.intp], blocks: NDArray[np.intp], width: int) -> Mask | None:
+        """Bytes of cells of so many bytes that belong to right members, bool[R, width]."""
         if not self.right_spans:
             return None
         g = self.g
-        width = g.width(block)
         pinned = np.zeros((len(strips), width), bool)
-        for row, strip in enumerate(strips.tolist()):
+        for row, (strip, block) in enumerate(zip(strips.tolist(), blocks.tolist(), strict=True)):
             if strip < g.k:
                 start = strip * g.depth + block * CELL
                 pinned[row] = True
@@ -460,11 +511,11 @@ class WindowCheck:
         self.stream.close()
 
 
-def _grouped(blocks: list[int]) -> list[list[int]]:
-    """Runs of at most GROUP blocks that lie within GROUP of each other."""
+def _grouped(blocks: list[int], most: int) -> list[list[int]]:
+    """Runs of at most so many blocks that lie within so many of each other."""
     groups: list[list[int]] = []
     for block in blocks:
-        if groups and block - groups[-1][0] < GROUP:
+        if groups and block - groups[-1][0] < most and block // RECORD_RUN == groups[-1][0] // RECORD_RUN:
             groups[-1].append(block)
         else:
             groups.append([block])

@@ -22,12 +22,13 @@ from oakum.files import Fault, NewFile, let_go, read_into, room_in
 from oakum.geometry import CELL
 from oakum.jobs.checking import RIGHT, Bytes, Finding, Range, WindowCheck
 from oakum.jobs.journal import PATCH, Condition, Draft, Entry, Journal, Patch, Thing
+from oakum.jobs.lost import recover_sections
 from oakum.jobs.opening import KnownMember, ProtectedSet
 from oakum.jobs.rebuild import write_sidecar
 from oakum.jobs.replay import Place, finish, refuse_unfit, without
 from oakum.jobs.tally import Tally
 from oakum.jobs.verify import SetCheck
-from oakum.members import MemberStream, Span
+from oakum.members import MemberHasher, MemberStream, Span
 from oakum.results import CheckResult, MemberState, Outcome
 from oakum.sidecar.reading import ByteSource
 from oakum.sidecar.table import Kind
@@ -54,7 +55,7 @@ class Overlay:
         self._patches.sort(key=lambda p: p[0])
         self._starts = np.array([start for start, _, _ in self._patches], np.int64)
 
-    def read_into(self, offset: int, buffer: memoryview) -> list[Fault]:
+    def read_into(self, offset: int, buffer: memoryview, hasher: MemberHasher | None = None) -> list[Fault]:
         """See `oakum.members.Stream`."""
         faults = self._stream.read_into(offset, buffer)
         end = offset + len(buffer)
@@ -105,7 +106,19 @@ class InPlace:
                 tally.add(finding)
                 self._correct(self._draft, window, finding)
                 check.progress.advance(window.block_bytes)
+        if self._opened.incomplete and self._all_at_hand:  # Corrected data may tell what they said.
+            self._recover(self._draft, check)
         return tally
+
+    def _recover(self, draft: Draft, check: SetCheck) -> None:
+        recover_sections(self._opened, lambda spans: self._stream(draft, spans), check.progress)
+        for path, number in self._numbers.items():
+            draft.amend(number, self._opened.members[path].sha256 or bytes(32))
+
+    @property
+    def _all_at_hand(self) -> bool:
+        """Whether every member is right in its place or will be."""
+        return all(m.right or path in self._numbers for path, m in self._opened.members.items())
 
     def _refuse(self, changing: Sequence[KnownMember]) -> None:
         for member in changing:
@@ -238,8 +251,7 @@ class InPlace:
 
     def _draft_sidecar(self, draft: Draft, result: CheckResult, check: SetCheck, memory: int) -> bool:
         """Draft the sidecar as it should be, when it is damaged and every member will be at hand."""
-        whole = all(m.right or m.piece.path in self._numbers for m in self._opened.members.values())
-        if result.sidecar.state is Outcome.INTACT or not whole:
+        if result.sidecar.state is Outcome.INTACT or not self._all_at_hand:
             return False
         path = self._opened.path
         with NewFile(path, overwrite=True) as file:

@@ -46,11 +46,11 @@ def write_sidecar(
 ) -> int | None:
     """Write the sidecar of `opened` anew into `file`, and return its length in bytes.
 
-    None when it did not come out with the identities that its sections had. A sidecar of which whole
-    sections are lost is not written anew: protect makes a new one.
+    None when it did not come out with the identities that its sections had, or when sections are lost of
+    which it is not known what they said (see `oakum.jobs.lost`): then protect makes a new one.
     """
     sections = opened.sections
-    if not sections[-1].bootstrap.last or len(sections) != sections[-1].bootstrap.window + 1:
+    if opened.incomplete:
         return None
     kernels = Kernels.of(check.code)
     hasher = MemberHasher()

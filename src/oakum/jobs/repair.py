@@ -8,26 +8,29 @@ from __future__ import annotations
 
 import hashlib
 import os
+import threading
 import time
 from collections import OrderedDict
-from collections.abc import Sequence
-from contextlib import suppress
+from collections.abc import Iterable, Sequence
+from concurrent.futures import Future
+from contextlib import nullcontext, suppress
 from dataclasses import dataclass, replace
 from pathlib import Path
 
 from oakum.errors import CannotCheck, UsageError
-from oakum.files import Lock, NewFile, reason
-from oakum.jobs.checking import Finding
+from oakum.files import Lock, NewFile, aligned, reason
+from oakum.jobs.checking import Bytes, WindowCheck
 from oakum.jobs.common import DEFAULT_MEMORY, find_sidecar
 from oakum.jobs.inplace import InPlace
+from oakum.jobs.lost import recover_sections
 from oakum.jobs.opening import KnownMember, ProtectedSet, open_set
 from oakum.jobs.rebuild import rebuild_sidecar
 from oakum.jobs.replay import resume, undo
 from oakum.jobs.tally import Tally
 from oakum.jobs.unreadable import read_unreadable
 from oakum.jobs.verify import SetCheck, result_of, verify
-from oakum.members import Folder, open_folder
-from oakum.pools import Pools
+from oakum.members import Folder, MemberStream, open_folder
+from oakum.pools import Meter, Pools, wait_all
 from oakum.progress import Progress, Silent
 from oakum.results import CheckResult, MemberState, Outcome
 from oakum.sidecar.table import Kind
@@ -66,7 +69,7 @@ def repair(
         if in_place and resume(path, root):
             lock.renew()
             progress.note("a repair in place that had been interrupted was finished first")
-        opened = open_set(path, root, read_unreadable(unreadable), target)
+        opened = open_set(path, root, read_unreadable(unreadable), target, progress)
         try:
             wanted = _chosen(opened, members)
             writing = (
@@ -149,6 +152,10 @@ class Mending:
         """Folders made on the way, above the base and below it; they go again unless something is written."""
         self._copies: dict[bytes, Copy] = {}
         self._awake: OrderedDict[bytes, Copy] = OrderedDict()
+        self._files = threading.Lock()
+        """Held while a file is written to that might be put aside meanwhile."""
+
+        self._meter = Meter()
 
     # -- decoding and writing -------------------------------------------------------------------------
 
@@ -159,16 +166,34 @@ class Mending:
             if self.output is not None or self._as_file is not None or not member.right or member.fault:
                 self._begin(member)
         check.progress.phase("writing", sum(c.member.size for c in self._copies.values()))
-        if check.incomplete:
-            self._copy_whole()
+        if self._opened.incomplete:
+            self._copy_whole(self._copies.values())
         tally = Tally(self._opened)
         for window in check.windows:
-            self._copy_received(check, window.section.bootstrap.start)
+            self._copy_received(check, window)
             tally.add_window(window)
-            for finding in window.findings(check.decoders, keep=True):
+            for finding in window.findings(check.decoders, sink=self._put):
                 tally.add(finding)
-                self._correct(finding)
+                check.progress.advance(self._meter.take())
+        if self._opened.incomplete and self._all_at_hand:  # Corrected data may tell what they said.
+            before = set(self._opened.members)
+            recover_sections(self._opened, lambda spans: MemberStream(self, spans), check.progress)
+            new = [m for path, m in self._opened.members.items() if path not in before]
+            if self.output is not None and len(wanted) == len(before):
+                self._copy_whole([self._begin(member) for member in new])
         return tally
+
+    @property
+    def _all_at_hand(self) -> bool:
+        """Whether every member is right in its place or among the copies."""
+        return all(m.right or path in self._copies for path, m in self._opened.members.items())
+
+    def open(self, path: bytes) -> int:
+        """A descriptor for reading the member at `path` as it will be. Raises OSError."""
+        copy = self._copies.get(path)
+        if copy is None or copy.file is None:
+            return self._opened.folder.open(path)
+        return os.dup(self._wake(copy).fd)
 
     def _open_base(self) -> None:
         try:
@@ -180,7 +205,7 @@ class Mending:
                 f"{self._base} cannot be used as the place to write to: {reason(error)}"
             ) from None
 
-    def _begin(self, member: KnownMember) -> None:
+    def _begin(self, member: KnownMember) -> Copy:
         path = member.piece.path
         if self._as_file is not None:
             path = os.fsencode(self._as_file.name)
@@ -193,6 +218,7 @@ class Mending:
         if copy.file is not None:
             copy.file.resize(member.size)
             self._wake(copy)
+        return copy
 
     def _parent_of(self, path: bytes) -> int:
         return open_folder(self._base_fd, os.path.dirname(path), made=self._made)
@@ -208,32 +234,42 @@ class Mending:
                 oldest.file.park()
         return copy.file
 
-    def _copy_whole(self) -> None:
-        """Write what there is of the members that lie in windows whose sections are lost."""
-        for copy in self._copies.values():
+    def _copy_whole(self, copies: Iterable[Copy]) -> None:
+        """Write what there is of members that lie in windows whose sections are lost."""
+        for copy in copies:
             if copy.file is not None and not copy.member.absent:
                 for start, data, _ in self._opened.read(copy.member):
                     self._wake(copy).write(start, data.data)
 
-    def _copy_received(self, check: SetCheck, start: int) -> None:
-        """Write the members' bytes as they were received in the window that begins at `start`."""
-        window = next(w for w in check.windows if w.section.bootstrap.start == start)
-        buffer = bytearray(COPY_STEP)
-        place = 0
-        for piece in window.pieces:
-            copy = self._copies.get(piece.path)
-            for done in range(0, piece.length, COPY_STEP) if copy is not None else ():
-                view = memoryview(buffer)[: min(COPY_STEP, piece.length - done)]
-                window.stream.read_into(place + done, view)
-                self._wake(copy).write(piece.offset + done, view)  # type: ignore[arg-type]
-                check.progress.advance(len(view))
-            place += piece.length
+    def _copy_received(self, check: SetCheck, window: WindowCheck) -> None:
+        """Write the members' bytes as they were received, but for those that come with the findings."""
+        for start, stop in window.outside_dense_groups():
+            for copy, inside, part in self._owners(window.start + start, stop - start):
+                self._copy_part(
+                    check, window, start + part.start, self._wake(copy), inside, part.stop - part.start
+                )
 
-    def _correct(self, finding: Finding) -> None:
-        """Put corrected bytes into the copies that they belong to."""
-        for start, data in finding.corrected:
-            for copy, inside, part in self._owners(start, len(data)):
+    @staticmethod
+    def _copy_part(
+        check: SetCheck, window: WindowCheck, place: int, file: NewFile, inside: int, length: int
+    ) -> None:
+        """Write bytes of the window from `place` on to a file, from `inside` on, as they were received."""
+
+        def work(done: int) -> int:
+            data = aligned(min(COPY_STEP, length - done))
+            window.stream.read_into(place + done, data.data)
+            file.write(inside + done, data.data)
+            return len(data)
+
+        for count in check.pools.in_turn(work, range(0, length, COPY_STEP)):
+            check.progress.advance(count)
+
+    def _put(self, start: int, data: Bytes) -> None:
+        """Put bytes by their place in the stream into the copies that they belong to, in any thread."""
+        for copy, inside, part in self._owners(start, len(data)):
+            with self._files if len(self._copies) > OPEN_AT_A_TIME else nullcontext():
                 self._wake(copy).write(inside, data[part].data)
+            self._meter.add(part.stop - part.start)
 
     def _owners(self, start: int, length: int) -> list[tuple[Copy, int, slice]]:
         """Copies that hold bytes of a range of the stream: (copy, offset in it, which of the bytes)."""
@@ -252,7 +288,7 @@ class Mending:
         """Ask the SHA-256 of every copy, then name them all or none, then mend the sidecar."""
         check.progress.phase("checking what was written", sum(c.member.size for c in self._copies.values()))
         for copy in self._copies.values():
-            copy.right = self._is_right(copy, check.progress)
+            copy.right = self._is_right(copy, check)
         wrong = [c for c in self._copies.values() if not c.right]
         reports = {m.path: m for m in result.members}
         for copy in self._copies.values():
@@ -285,16 +321,19 @@ class Mending:
             return replace(result, outcome=Outcome.UNCORRECTABLE, notes=result.notes + notes)
         return self._mend_sidecar(result, check, memory)
 
-    def _is_right(self, copy: Copy, progress: Progress) -> bool:
+    def _is_right(self, copy: Copy, check: SetCheck) -> bool:
         if copy.file is None:
             return True
         if copy.member.sha256 is None or copy.member.hopeless:
             return False
         digest = hashlib.sha256()
+        hashing: list[Future[None]] = []
         for start in range(0, copy.member.size, COPY_STEP):
             data = self._wake(copy).read(start, min(COPY_STEP, copy.member.size - start))
-            digest.update(data)
-            progress.advance(len(data))
+            wait_all(hashing)
+            hashing = [check.pools.ordered.submit(digest.update, data)]
+            check.progress.advance(len(data))
+        wait_all(hashing)
         return digest.digest() == copy.member.sha256
 
     def _name(self, copy: Copy) -> None:
@@ -333,8 +372,7 @@ class Mending:
         """Write the sidecar anew when it is damaged and every member is at hand as it was."""
         state = result.sidecar.state
         mended = {path: copy.shown for path, copy in self._copies.items() if copy.file is not None}
-        whole = all(m.right or m.piece.path in self._copies for m in self._opened.members.values())
-        if state is Outcome.INTACT or not whole:
+        if state is Outcome.INTACT or not self._all_at_hand:
             return result
         name = os.fsencode(self._opened.path.name)
         if self.output is None:

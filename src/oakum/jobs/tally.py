@@ -57,10 +57,8 @@ class Tally:
         self._sidecar_symbols += finding.sidecar_symbols
         self._sidecar_lost |= finding.sidecar_lost
         self.false_pins += finding.false_pins
-        self._bursts.add(finding.places, finding.bits, finding.starts, finding.stops)
-        if len(finding.places):
-            owners = np.searchsorted(self._starts, finding.places, side="right") - 1
-            np.add.at(self._bits, owners, finding.bits)
+        self._bursts.add(finding.clusters, finding.starts, finding.stops)
+        self._add_bits(finding)
         for start, stop in finding.lost:
             self._add_lost(start, stop)
         if not (len(finding.places) or finding.erased or finding.sidecar_bits) and finding.correctable:
@@ -77,6 +75,14 @@ class Tally:
                 finding.margin if finding.correctable else None,
             )
         )
+
+    def _add_bits(self, finding: Finding) -> None:
+        """Give flipped bits to the members that hold them."""
+        if len(self._starts) == 1:
+            self._bits[0] += finding.bits.sum(dtype=np.int64)
+        else:
+            owners = np.searchsorted(self._starts, finding.places, side="right") - 1
+            np.add.at(self._bits, owners, finding.bits)
 
     @property
     def burst_lengths(self) -> list[int]:
@@ -156,28 +162,23 @@ class Tally:
 
         When every member can be had, so can all of the sidecar whose sections are there: it is written anew.
         """
-        sections = self._opened.sections
-        incomplete = not sections[-1].bootstrap.last or len(sections) <= sections[-1].bootstrap.window
+        incomplete = self._opened.incomplete
+        unknown = bool(incomplete or self._sidecar_lost or self._opened.recovered)
         details = []
         if self._sidecar_unreadable:
             details.append(f"{self._sidecar_unreadable:,} bytes of it could not be read")
-        if incomplete:
+        if incomplete or self._opened.recovered:
             details.append("whole sections of it are lost")
         foreign = self._foreign_bytes()
         if foreign:
             details.append(f"{foreign:,} bytes that are not its own stand before or after it")
         damaged = bool(
-            self._sidecar_bits
-            or self._sidecar_symbols
-            or self._sidecar_unreadable
-            or self._sidecar_lost
-            or foreign
+            self._sidecar_bits or self._sidecar_symbols or self._sidecar_unreadable or unknown or foreign
         )
         if incomplete or (self._sidecar_lost and not members_correctable):
             state = Outcome.UNCORRECTABLE
         else:
             state = Outcome.CORRECTABLE if damaged else Outcome.INTACT
-        unknown = incomplete or self._sidecar_lost
         return SidecarReport(
             path, state, None if unknown else self._sidecar_bits, None if unknown else self._sidecar_symbols,
             "; ".join(details),
