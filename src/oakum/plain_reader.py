@@ -750,8 +750,8 @@ class Section:
         return [read_head(self.sidecar, start) is None for start in starts]
 
     # > When the checksum still disagrees, a column is known only if at least 4 check symbols were left
-    # > over: 2e + s <= 116 for e errors and s erasures. Nothing is known if the identity in the header is
-    # > another.
+    # > over: 2e + s <= 116 for e errors and s erasures. Nothing is known if the identity, the number or the
+    # > track in the header is another.
     def corrected(self, frame: Frame, rows: list[bytes], missing: list[bytes]) -> tuple[bytes, bytes]:
         """The corrected payload, and for each byte whether it is known (1)."""
         corrected, known = [bytearray(row) for row in rows], bytearray(frame.width)
@@ -768,7 +768,8 @@ class Section:
         if self.agrees(frame, payload):
             return payload, b"\1" * len(payload)
         mask = bytes(known) * PAYLOAD_ROWS
-        if all(mask[8:24]) and payload[8:24] != self.bootstrap.identity:
+        place = self.bootstrap.identity + struct.pack("<IHH", frame.number, frame.track, 0)
+        if all(mask[8:32]) and payload[8:32] != place:
             mask = bytes(len(mask))
         return payload, mask
 

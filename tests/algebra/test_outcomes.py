@@ -123,8 +123,8 @@ def test_the_word_decoder_does_what_the_counts_say(inner: InnerCode) -> None:
         assert seen == pytest.approx(expected, abs=5 * (expected / words) ** 0.5)
 
 
-# ---- a whole column in one pass: check values, table "Per outer codeword on a symmetric channel, one pass"
-#      (computed; Monte Carlo agreed within its error)
+# ---- a whole column in one pass. No published table: another program summed the binomial laws of the
+#      better of both ways (computed; its Monte Carlo agreed within its error)
 
 
 def _one_pass(r: int, symbol: SymbolChances) -> float:
@@ -162,9 +162,9 @@ def _fifteen_check_bits(p: float) -> SymbolChances:
     dual[56] = dual[72] = 8128
     dual[64] = 2**15 - 2 - 2 * 8128
     longer = macwilliams(dual)
-    assert (longer[6], longer[8]) == (341376, 87288624)  # check values, "Weight distributions" (computed)
+    assert (longer[6], longer[8]) == (341376, 87288624)  # enumeration of the dual, MacWilliams (computed)
     shorter = [count * (128 - w) // 128 for w, count in enumerate(longer)][:128]
-    assert shorter[6] == 325374  # the same, "Byte-aligned shortenings"
+    assert shorter[6] == 325374  # the same of the shortened code (computed)
     spread = {
         (v, u): Fraction(shorter[v + u] * comb(8, v) * comb(119, u), comb(127, v + u))
         for v in range(9)

@@ -42,7 +42,8 @@ def one_input(data: bytes) -> None:
 def tell() -> None:
     """How it went so far."""
     peak = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss >> 10
-    print(f"{NAME}: {inputs:,} inputs, slowest {slowest:.3f} s, peak {peak} MiB", file=sys.stderr, flush=True)
+    spent = f"{inputs:,} inputs in {time.process_time():,.0f} s of processor time"
+    print(f"{NAME}: {spent}, slowest {slowest:.3f} s, peak {peak} MiB", file=sys.stderr, flush=True)
 
 
 def mutate(data: bytes, most: int, seed: int) -> bytes:

@@ -79,7 +79,7 @@ def unreadable(data: bytes) -> None:
     fd, name = tempfile.mkstemp()
     try:
         os.write(fd, data)
-        for ranges in read_unreadable(Path(name)).values():
+        for ranges in read_unreadable(Path(name)).ranges.values():
             assert all(0 <= a < b < 1 << 62 for a, b in ranges)
     except UsageError:
         pass

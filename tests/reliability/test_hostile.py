@@ -46,7 +46,7 @@ def forge(folder: Path, names: Names, monkeypatch: pytest.MonkeyPatch, **changes
 
     def renamed(paths: list[Path], root: Path) -> tuple[list[Member], list[str]]:
         members, notes = collect(paths, root)
-        return [replace(m, path=names.get(m.path, m.path), **changes) for m in members], notes
+        return [m._replace(path=names.get(m.path, m.path), **changes) for m in members], notes
 
     with monkeypatch.context() as patch:
         patch.setattr(protecting, "collect", renamed)
@@ -226,7 +226,7 @@ def test_a_member_that_claims_to_be_huge(room: Path, tmp_path: Path, monkeypatch
 
     def larger(self: Piece, *args: object) -> bytes:
         huge = self.kind is Kind.FILE and self.path == b"set/b"
-        return true(replace(self, size=1 << 59, ends=False) if huge else self, *args)
+        return true(self._replace(size=1 << 59, ends=False) if huge else self, *args)
 
     with monkeypatch.context() as patch:
         patch.setattr(Piece, "pack", larger)

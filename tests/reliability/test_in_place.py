@@ -10,9 +10,11 @@ import pytest
 from support import BadSectors, content, overwritten, plant, rewrite, snapshot, with_flips
 
 from oakum import CannotCheck, UsageError, protect, repair, roll_back, verify
+from oakum.encoding import RESERVE
 from oakum.files import Lock
 from oakum.jobs import replay
 from oakum.jobs.journal import Journal, journal_path
+from oakum.progress import Silent
 from oakum.results import MemberState, Outcome
 
 FILES = {
@@ -180,6 +182,68 @@ def test_unreadable_sectors_are_written_over(
     assert (tree / "z.tar").read_bytes() == FILES["z.tar"]
     roll_back(tree)
     assert (tree / "z.tar").read_bytes() == with_flips(FILES["z.tar"], 9, within=(0, 50_000))
+
+
+def test_unreadable_past_capacity(tree: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    protect([tree])
+    before = everything(tmp_path)
+    BadSectors({tree / "z.tar": [(0, 400_384)]}).install(monkeypatch)
+    result = repair(tree, in_place=True)
+    assert (result.outcome, result.totals.bytes_erased) == (Outcome.UNCORRECTABLE, 400_384)
+    monkeypatch.undo()
+    assert everything(tmp_path) == before
+
+
+def test_a_large_member_in_little_memory(tmp_path: Path) -> None:
+    """Read twice for the new sidecar; the damage lies before, over and behind the ends of steps of 1 MiB."""
+    data = content(5_300_000)
+    folder = plant(tmp_path / "set", {"large": data})
+    whole = protect([folder]).sidecar.read_bytes()
+    hurt = data
+    for place in ((1 << 20) - 6_000, (2 << 20) - 1_500, (3 << 20) + 10):
+        hurt = overwritten(hurt, place, 3_000)
+    rewrite(folder / "large", hurt)
+    rewrite(tmp_path / "set.oakum", with_flips(whole, 50))
+    result = repair(folder, in_place=True, memory=RESERVE + 255 * 4096)
+    assert (result.outcome, result.sidecar.mended) == (Outcome.CORRECTABLE, tmp_path / "set.oakum")
+    assert ((folder / "large").read_bytes(), (tmp_path / "set.oakum").read_bytes()) == (data, whole)
+
+
+def test_a_medium_that_gets_worse_while_it_is_repaired(
+    tree: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """What is right when it is scanned cannot be read when the corrections are checked: all stays."""
+    protect([tree])
+    damage(tree)
+    before = everything(tmp_path)
+
+    class Failing(Silent):
+        def phase(self, name: str, total: int | None) -> None:
+            if name == "checking the corrections":
+                BadSectors({tree / "z.tar": [(433_152, 433_664)]}).install(monkeypatch)
+
+    assert repair(tree, in_place=True, progress=Failing()).outcome is Outcome.UNCORRECTABLE
+    assert everything(tmp_path) == before
+
+
+def test_a_member_that_cannot_be_read_for_the_new_sidecar(
+    tree: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """It was right a moment ago: the members are put right, and the sidecar stays as it is."""
+    protect([tree])
+    damage(tree)
+    rewrite(tree / "a.tif", FILES["a.tif"])
+    hurt = (tmp_path / "set.oakum").read_bytes()
+
+    class Failing(Silent):
+        def phase(self, name: str, total: int | None) -> None:
+            if name == "writing the sidecar anew":
+                BadSectors({tree / "a.tif": [(4096, 8192)]}).install(monkeypatch)
+
+    result = repair(tree, in_place=True, progress=Failing())
+    assert result.sidecar.mended is None
+    assert (tmp_path / "set.oakum").read_bytes() == hurt
+    assert (tree / "z.tar").read_bytes() == FILES["z.tar"]
 
 
 def test_no_room_is_said_before(tree: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:

@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
+import errno
 import os
+from dataclasses import replace
 from pathlib import Path
 
 import pytest
@@ -67,6 +69,29 @@ def test_a_draft_that_is_given_up_leaves_nothing(tmp_path: Path) -> None:
     with Draft(tmp_path / "x.oakum", SET) as draft:
         draft.add(FILE)
     assert os.listdir(tmp_path) == []
+
+
+def test_a_draft_that_cannot_be_begun_leaves_nothing(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    def full(*_: object) -> int:
+        raise OSError(errno.ENOSPC, os.strerror(errno.ENOSPC))
+
+    monkeypatch.setattr(os, "pwrite", full)
+    with pytest.raises(CannotCheck, match="no space left"):
+        Draft(tmp_path / "x.oakum", SET)
+    assert os.listdir(tmp_path) == []
+
+
+def test_a_digest_that_is_known_later(tmp_path: Path) -> None:
+    path = tmp_path / "x.oakum"
+    with Draft(path, SET) as draft:
+        draft.add(LINK)
+        draft.add(MADE)
+        draft.patch(1, 0, b"", b"made")
+        draft.amend(1, b"d" * 32)
+        draft.commit()
+    with Journal(path) as journal:
+        assert journal.contents.entries == [LINK, replace(MADE, after=replace(MADE.after, digest=b"d" * 32))]
+        assert [len(patches) for patches in journal.contents.patches] == [0, 1]
 
 
 def test_every_flip_is_noticed(sidecar: Path) -> None:

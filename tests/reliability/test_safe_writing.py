@@ -72,6 +72,31 @@ def test_a_file_whose_name_was_taken_while_it_was_open(tmp_path: Path) -> None:
     assert not (tmp_path / "f").exists()
 
 
+def test_a_file_that_was_taken_away_while_it_was_open(tmp_path: Path) -> None:
+    with pytest.raises(CannotCheck, match="another run is writing"), NewFile(tmp_path / "f") as file:
+        (tmp_path / os.fsdecode(temporary_name(b"f"))).unlink()
+        file.commit(0)
+    assert os.listdir(tmp_path) == []
+
+
+def test_a_parked_file_that_cannot_be_opened_for_a_while(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """As when too many files are open: what was written before is not lost by it."""
+    with NewFile(tmp_path / "f") as file:
+        file.write(0, b"one ")
+        file.park()
+        with monkeypatch.context() as patch:
+            patch.setattr(
+                os, "open", failing("open", errno.EMFILE, only=lambda name, *_: b"part" in os.fsencode(name))
+            )
+            with pytest.raises(CannotCheck, match="too many open files"):
+                file.write(4, b"two")
+        file.write(4, b"two")
+        file.commit(7)
+    assert (tmp_path / "f").read_bytes() == b"one two"
+
+
 def test_a_lock_that_comes_too_late(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
     """Somebody locks the temporary file between its making and our lock."""
     monkeypatch.setattr("oakum.files.try_lock", lambda fd, alone=True: False)

@@ -11,7 +11,7 @@ import pytest
 import xxhash
 from hypothesis import given
 from hypothesis import strategies as st
-from support import content
+from support import content, with_flips
 
 from oakum.algebra.naming import NAMED, resolve_code
 from oakum.errors import FormatError
@@ -24,6 +24,7 @@ from oakum.sidecar.bootstrap import (
     Bootstrap,
     CodeParameters,
     decode,
+    decode_all,
     encode,
     unpack,
 )
@@ -61,7 +62,7 @@ def test_every_field_is_recorded() -> None:
 
 
 def test_a_copy_is_under_two_kilobytes_and_very_redundant() -> None:
-    """Design, section 1: records under 2 KB. Singleton: RS(255,100) has distance 156 and corrects 77."""
+    """The sizes of oakum-sidecar(5). Singleton: RS(255,100) has distance 156 and corrects 77."""
     assert (CODED_BYTES, HEAD_BYTES) == (510, 518)
     assert encode(bootstrap().pack())[:RECORD_BYTES] == bootstrap().pack()
 
@@ -79,6 +80,19 @@ def test_up_to_77_wrong_symbols_in_each_codeword(first: int, second: int, seed: 
     assert found is not None
     assert found[0] == record
     assert found[1] == int(np.bitwise_count(received ^ right).sum())
+
+
+def test_many_copies_at_once() -> None:
+    """Each is corrected by itself, whatever becomes of the others."""
+    records = [bootstrap(stretch=i) for i in range(5)]
+    copies = [encode(record.pack()) for record in records]
+    copies[1] = with_flips(copies[1], 60, 1)
+    copies[2] = content(CODED_BYTES)
+    copies[4] = with_flips(copies[4], 60, 4)
+    assert decode_all(copies) == [*records[:2], None, *records[3:]]
+    assert decode_all([]) == []
+    assert decode(copies[1]) == (records[1], 60)
+    assert decode(copies[0]) == (records[0], 0)
 
 
 def test_one_more_than_77_is_no_record() -> None:
@@ -110,6 +124,37 @@ def test_a_newer_version_is_named() -> None:
         decode(encode(mended(bytes(packed))))
 
 
+@pytest.mark.parametrize("changes", [{"version": 0}, {"cell": 4095}, {"cell": 8192}, {"stretch": 16}])
+def test_a_record_that_contradicts_itself_is_refused(changes: dict[str, int]) -> None:
+    """Cells have 4,096 bytes, and sixteen stretches are numbered from 0 to 15."""
+    with pytest.raises(FormatError, match="contradicts itself"):
+        unpack(bootstrap(**changes).pack())
+    assert unpack(bootstrap(stretch=15).pack()) == bootstrap(stretch=15)
+
+
+def test_a_family_of_codes_that_there_is_not() -> None:
+    """They are counted from 0, none, over 1, extended Hamming, to 2, extended BCH."""
+    packed = bytearray(bootstrap("stout").pack())
+    place = packed.index(bytes([2, 14, 2, 6]))  # Family, m, p and d of the code [128,112,6].
+    packed[place] = 3
+    with pytest.raises(FormatError, match="contradicts itself"):
+        unpack(mended(bytes(packed)))
+
+
+def test_a_code_whose_name_is_no_text() -> None:
+    packed = bootstrap().pack().replace(b"shelf\0", b"sh\xe9lf\0")
+    with pytest.raises(FormatError, match="names its code in no readable way"):
+        unpack(mended(packed))
+
+
+def test_bytes_that_are_almost_a_record_are_none() -> None:
+    packed = bootstrap().pack()
+    assert unpack(packed + b"more") == bootstrap()
+    assert unpack(packed[:-1]) is None
+    assert unpack(packed[:-1] + bytes([packed[-1] ^ 1])) is None
+    assert unpack(mended(b"OAKUN" + packed[5:])) is None
+
+
 @given(st.integers(6, RECORD_BYTES - 9), st.integers(1, 255))
 def test_whatever_a_record_says_it_is_read_or_refused(place: int, change: int) -> None:
     """A wrong byte with a checksum that fits: a record that can be checked, or FormatError."""
@@ -129,6 +174,8 @@ def test_another_matrix_is_refused() -> None:
     other = replace(record.code, matrix_digest=record.code.matrix_digest ^ 1)
     with pytest.raises(FormatError, match="inner code of another matrix"):
         other.code()
+    with pytest.raises(FormatError, match="inner code of another matrix"):
+        replace(record.code, d=record.code.d + 2).code()
     with pytest.raises(FormatError, match="does not have"):
         replace(record.code, m=16).code()
 
@@ -151,8 +198,8 @@ def test_identity_is_a_hash_of_record_and_table() -> None:
 # -- the marker ------------------------------------------------------------------------------------
 
 
-def test_marker_against_its_published_chances() -> None:
-    """Check values, "Digests and marker" (computed with the binomial; scipy as the oracle)."""
+def test_marker_against_its_chances() -> None:
+    """False matches and misses by the binomial distribution (computed; scipy as the oracle)."""
     from scipy.stats import binom
 
     assert (len(MARKER), MARKER_ERRORS) == (8, 10)
@@ -171,7 +218,7 @@ def test_marker_is_unlike_itself_shifted() -> None:
 
 
 def sanity_buffer(length: int) -> bytes:
-    """xxHash's own sanity-check buffer (check values, "Digests and marker"; seen, computed)."""
+    """The buffer of xxHash's own sanity check (seen, computed)."""
     out, value = bytearray(), 2_654_435_761
     for _ in range(length):
         out.append(value >> 56)

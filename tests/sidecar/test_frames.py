@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 from support import content
@@ -62,9 +64,11 @@ def test_a_frame_of_another_place_or_sidecar_is_not_taken() -> None:
     assert read_plain(frame, rows[:120], b"j" * 16) is None
     assert read_plain(Frame(Track.DATA, 5, frame.content, 5, 0), rows[:120], IDENTITY) is None
     assert read_plain(Frame(Track.INNER, 4, frame.content, 5, 0), rows[:120], IDENTITY) is None
-    other = correct(frame, rows, None, b"j" * 16)
-    assert other.known is not None
-    assert not other.known.any()
+    for here, identity in ((frame, b"j" * 16), (replace(frame, number=5), IDENTITY),
+                           (replace(frame, track=Track.INNER), IDENTITY)):  # fmt: skip
+        other = correct(here, rows, None, identity)
+        assert other.known is not None
+        assert not other.known.any()
 
 
 @pytest.mark.parametrize("seed", range(3))
@@ -96,16 +100,41 @@ def test_beyond_that_nothing_wrong_is_called_known(lost: int, wrong: int) -> Non
     assert not (difference & found.known).any()
 
 
-def test_columns_are_solved_one_by_one() -> None:
-    """61 wrong rows in half of the columns: the other half is still known."""
-    frame, _, rows = coded(40)
+@pytest.mark.parametrize("first", [20, 32])
+def test_columns_are_solved_one_by_one(first: int) -> None:
+    """61 wrong rows in half of the columns: the other half is still known.
+
+    Bytes 8 to 31 say whose frame it is, and which. Where all of them can be read, and are others, nothing is
+    known.
+    """
+    frame, data, rows = coded(40)
     hurt = rows.copy()
-    hurt[100:161, 20:] ^= 0x5A
+    hurt[100:161, first:] ^= 0x5A
     found = correct(frame, hurt, None, IDENTITY)
     assert found.known is not None
     known = np.concatenate([np.zeros(32, bool), found.known]).reshape(120, 40)
-    assert known[1:, :20].all()
-    assert not known[:, 20:].any()
+    assert known[1:, :first].all()
+    assert not known[:, first:].any()
+    assert found.data[8 : first - 32 + 40] == data[8 : first - 32 + 40]
+    foreign = correct(frame, hurt, None, b"j" * 16)
+    assert foreign.known is not None
+    assert foreign.known.any() == (first == 20)
+
+
+def test_what_is_lost_and_what_is_wrong_are_weighed_against_the_spare_symbols() -> None:
+    """120 check symbols, 4 of them to spare: 2 * wrong + lost may be 116 where the checksum disagrees."""
+    frame, _, rows = coded(40)
+    for lost, wrong, expected in ((116, 0, True), (117, 0, False), (0, 58, True), (0, 59, False),
+                                  (76, 20, True), (77, 20, False)):  # fmt: skip
+        hurt, erased = rows.copy(), np.zeros_like(rows)
+        hurt[60 : 60 + lost + wrong, 25:30] ^= 0x5A
+        erased[60 : 60 + lost, 25:30] = 1
+        hurt[100:170, 35:] ^= 0x5A
+        found = correct(frame, hurt, erased if lost else None, IDENTITY)
+        assert found.known is not None
+        known = np.concatenate([np.zeros(32, bool), found.known]).reshape(120, 40)
+        assert known[1:, :25].all()
+        assert known[1:, 25:30].all() == known[1:, 25:30].any() == expected, (lost, wrong)
 
 
 def test_a_seal_sees_every_check_byte() -> None:

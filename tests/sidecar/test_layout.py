@@ -83,7 +83,7 @@ def test_payload_extents_are_the_first_rows(place: Layout) -> None:
 
 @given(LAYOUTS)
 def test_every_cell_has_a_digest(place: Layout) -> None:
-    """Design, section 5: every byte belongs to a digested cell, parity strips and inner parity included."""
+    """Every byte belongs to a digested cell, parity strips and inner parity included."""
     g, counts = place.geometry, place.cell_counts
     if not g.digested:
         assert not any(counts.values())
@@ -115,8 +115,8 @@ def overhead(code: str, length: int) -> float:
     ("length", "most"),
     [(1 << 20, 0.03), (64 << 20, 0.01), (200_000_000, 0.01), (1 << 32, 0.01), (1 << 40, 0.01)],
 )  # fmt: skip
-def test_overhead_beyond_the_code_is_within_the_design(code: str, length: int, most: float) -> None:
-    """Design, section 5: at most 1 % of the stream from 64 MiB, 3 % at 1 MiB."""
+def test_overhead_beyond_the_code_is_small(code: str, length: int, most: float) -> None:
+    """At most 1 % of the stream from 64 MiB, 3 % at 1 MiB."""
     assert overhead(code, length) <= most
 
 
@@ -127,7 +127,7 @@ def test_overhead_falls_nowhere_short_between_sizes() -> None:
 
 
 def test_a_member_costs_at_most_200_bytes() -> None:
-    """Design, section 5: before wrapping; here with a path of 100 bytes."""
+    """Before wrapping; here with a path of 100 bytes."""
     assert packed_length(b"p" * 100) <= 200
     assert packed_length(b"") == 76
 

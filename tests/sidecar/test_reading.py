@@ -17,7 +17,8 @@ from support import Memory, Range, content, overwritten, with_flips
 
 from oakum import FormatError, protect_pipe
 from oakum.sidecar.bootstrap import MARKER, RECORD_BYTES, Bootstrap, CodeParameters, encode, unpack
-from oakum.sidecar.layout import HEAD_BYTES, TEXT_BYTES, Track
+from oakum.sidecar.frames import Content
+from oakum.sidecar.layout import FRAME_CONTENT, HEAD_BYTES, TEXT_BYTES, Layout, Track
 from oakum.sidecar.reading import Section, examine_records, find_marker, find_sections
 
 CODE = "RS(60,40)+EH(128,120)"
@@ -124,6 +125,30 @@ def test_flips_everywhere(seed: int) -> None:
     assert [s.table() for s in sections] == [s.table() for s in find_sections(Memory(FIVE))]
 
 
+def with_foreign_heads(stretches: Iterable[int]) -> bytes:
+    """ONE with the heads of another sidecar's stretches."""
+    other = pipe(content(WINDOW, 9))
+    out = bytearray(ONE)
+    for t in stretches:
+        start = FIRST.layout.stretch_start(t)
+        out[start : start + HEAD_BYTES] = other[start : start + HEAD_BYTES]
+    return bytes(out)
+
+
+@pytest.mark.parametrize("stretches", [range(1), range(7), range(3, 10), range(9, 16)])
+def test_heads_of_another_sidecar_are_outvoted(stretches: range) -> None:
+    section = only(with_foreign_heads(stretches))
+    assert section.bootstrap == FIRST.bootstrap
+    assert section.table() == FIRST.table()
+
+
+def test_heads_of_another_sidecar_outvote() -> None:
+    section = only(with_foreign_heads(range(9)))
+    assert section.bootstrap.identity != FIRST.bootstrap.identity
+    with pytest.raises(FormatError):
+        section.table()
+
+
 def test_sections_of_another_set_are_left_out() -> None:
     other = pipe(content(3 * WINDOW, 9))
     start, stop = BASES[1], BASES[2]
@@ -165,8 +190,8 @@ def test_marker_at_both_ends_and_in_too_little() -> None:
         assert len(find_marker(mark[:length])) == 0
 
 
-def test_false_matches_are_as_rare_as_published() -> None:
-    """Check values: 1.0e-8 per position; in 8 million positions more than two is a chance of 1e-4."""
+def test_false_matches_are_rare() -> None:
+    """1.0e-8 per position (binomial); in 8 million positions more than two is a chance of 1e-4."""
     data = np.random.default_rng(11).integers(0, 256, 8_000_000, np.uint8)
     assert len(find_marker(data)) <= 2
 
@@ -177,7 +202,7 @@ def test_false_matches_are_as_rare_as_published() -> None:
 @pytest.mark.parametrize("third", range(0, 11))
 @pytest.mark.parametrize("how", ["lost", "zeros", "noise"])
 def test_any_third_may_go(third: int, how: str) -> None:
-    """Design, section 5: member table and digests survive the loss of any third of the sidecar."""
+    """As oakum-sidecar(5) promises, member table and digests survive the loss of any third of the sidecar."""
     length = len(ONE) // 3
     start = third * (len(ONE) - length) // 10
     gone = (start, start + length)
@@ -214,6 +239,111 @@ def test_any_third_of_a_small_sidecar_may_be_overwritten(data: bytes, how: str) 
         assert section.table() == right.table(), start
 
 
+def test_digests_beside_a_hopeless_column_are_still_known() -> None:
+    """All but one of the columns of a frame can be solved: just the digests with a byte in it are unknown."""
+    frame = FIRST.layout.frame(Track.DATA, 0)
+    hurt = bytearray(ONE)
+    for place, row in FIRST.layout.slice_extents(frame):
+        for i in range(FIRST.layout.rows):
+            if row + i < 130:
+                hurt[place + i * frame.width + 2] ^= 0x5A
+    count = FIRST.geometry.data_cells
+    values, known = only(bytes(hurt)).digests(Track.DATA, 0, count)
+    right, _ = FIRST.digests(Track.DATA, 0, count)
+    in_column = {(i - 32) // 8 for i in range(32, 32 + 8 * count) if i % frame.width == 2}
+    assert known is not None
+    assert set(np.flatnonzero(~known).tolist()) == in_column
+    assert np.array_equal(values[known], right[known])
+
+
+def test_guesses_at_what_is_lost_save_what_they_can() -> None:
+    """Six of 16 stretches are noise, heads and all, and in half of the columns 20 more rows are wrong.
+
+    RS(240,120): 90 rows lost leave room for 15 wrong ones, and 90 wrong ones alone are beyond it.
+    """
+    frame, layout = FIRST.layout.frame(Track.DATA, 0), FIRST.layout
+    hurt = bytearray(ONE)
+    for stretch in range(6):
+        start = layout.stretch_start(stretch)
+        hurt[start : start + layout.prefix] = content(layout.prefix, stretch)
+    places = [start for start, _ in layout.slice_extents(frame)]
+    for row in range(200, 220):
+        place = places[row // layout.rows] + row % layout.rows * frame.width
+        for column in range(2, frame.width):
+            hurt[place + column] ^= 0x5A
+    found, right = only(bytes(hurt)).frame(Track.DATA, 0), FIRST.frame(Track.DATA, 0).data
+    assert found.known is not None
+    assert found.known.tolist() == [i % frame.width < 2 for i in range(32, 32 + len(right))]
+    assert all(found.data[i] == right[i] for i in np.flatnonzero(found.known).tolist())
+
+
+def test_guesses_do_not_forget_what_could_not_be_read() -> None:
+    """Four stretches are noise, heads and all; of three more all but the heads cannot be read.
+
+    RS(240,120): 105 rows lost, and 60 rows lost and 45 wrong would be too many.
+    """
+    layout = FIRST.layout
+    hurt = bytearray(ONE)
+    for stretch in range(4):
+        start = layout.stretch_start(stretch)
+        hurt[start : start + layout.prefix] = content(layout.prefix, stretch)
+    starts = [layout.stretch_start(stretch) for stretch in (9, 10, 11)]
+    section = only(bytes(hurt), [(s + HEAD_BYTES, s + layout.prefix) for s in starts])
+    assert section.table() == FIRST.table()
+    count = FIRST.geometry.data_cells
+    values, known = section.digests(Track.DATA, 0, count)
+    assert known is None
+    assert np.array_equal(values, FIRST.digests(Track.DATA, 0, count)[0])
+
+
+def test_digests_of_several_frames(monkeypatch: pytest.MonkeyPatch) -> None:
+    """Each frame says which of its digests are known; a range may begin and end inside of frames."""
+    per_frame = FRAME_CONTENT // 8
+    right = np.random.default_rng(1).integers(0, 1 << 64, 3 * per_frame, np.uint64)
+    unknown = {per_frame - 2, 2 * per_frame + 1}
+
+    def frame(self: Section, track: Track, number: int) -> Content:
+        first = number * per_frame
+        known = np.ones((per_frame, 8), bool)
+        for digest in unknown & set(range(first, first + per_frame)):
+            known[digest - first, 5] = False
+        whole = known.all()
+        return Content(right[first : first + per_frame].tobytes(), None if whole else known.reshape(-1))
+
+    monkeypatch.setattr(Section, "frame", frame)
+    for first, count in ((0, 5), (per_frame - 3, 7), (per_frame, per_frame), (per_frame - 3, per_frame + 6)):
+        values, known = FIRST.digests(Track.DATA, first, count)
+        assert np.array_equal(values, right[first : first + count])
+        expected = [number not in unknown for number in range(first, first + count)]
+        assert ([True] * count if known is None else known.tolist()) == expected
+
+
+def test_frames_that_are_not_kept_are_read_again(monkeypatch: pytest.MonkeyPatch) -> None:
+    section = only(ONE)
+    monkeypatch.setattr("oakum.sidecar.reading.FRAMES_KEPT", 2)
+    for _ in range(2):
+        for track in Track:
+            count = section.layout.content(track) // 8
+            if track is not Track.TABLE:
+                assert np.array_equal(section.digests(track, 0, count)[0], FIRST.digests(track, 0, count)[0])
+        assert section.table() == FIRST.table()
+        assert len(section._kept) == 2
+
+
+def test_what_cannot_be_read_of_the_body() -> None:
+    """A range of two stretches: two places of the body, which is cut where the first stretch ends."""
+    layout = FIRST.layout
+    a, b = layout.stretch_start(3) - 50, layout.stretch_start(3) + layout.prefix + 70
+    body, faults = only(ONE, [(a, b)]).body(100, layout.geometry.body - 100)
+    border = 3 * layout.piece - 100
+    padding = layout.stretch_bytes - layout.prefix - layout.piece
+    assert faults == [(border - 50 + padding, border), (border, border + 70)]
+    right, none = FIRST.body(100, layout.geometry.body - 100)
+    assert (none, set(body[border - 50 + padding : border + 70].tolist())) == ([], {0})
+    assert np.array_equal(np.delete(body, range(border - 50 + padding, border + 70)),
+                          np.delete(right, range(border - 50 + padding, border + 70)))  # fmt: skip
+
+
 def test_digests_are_those_of_the_bytes() -> None:
     data = content(WINDOW)
     g = FIRST.geometry
@@ -248,12 +378,46 @@ def test_wear_counts_every_flip_outside_the_body(place: int, bit: int) -> None:
     assert (wear.bits, wear.symbols, wear.lost) == ((0, 0, 0) if in_body else (1, 1, 0))
 
 
+def places_in_records() -> list[int]:
+    """A byte of the page, of a head, of padding, and of every frame one of header, content and check rows."""
+    layout = FIRST.layout
+    places = [5, layout.stretch_start(2) + 300, next(place for place, n in layout.paddings() if n)]
+    for frame in layout.frames():
+        for offset in (3, 20, 40, 120 * frame.width - 1, 120 * frame.width, 240 * frame.width - 1):
+            stretch, inside = divmod(offset, layout.rows * frame.width)
+            places.append(list(layout.slice_extents(frame))[stretch][0] + inside)
+    return places
+
+
+@pytest.mark.parametrize("place", places_in_records())
+def test_wear_counts_a_byte_of_every_kind(place: int) -> None:
+    hurt = ONE[:place] + bytes([ONE[place] ^ 0x81]) + ONE[place + 1 :]
+    wear = examine_records(only(hurt))
+    assert (wear.bits, wear.symbols, wear.unreadable, wear.lost) == (2, 1, 0, 0)
+    wear = examine_records(only(ONE, [(place, place + 1)]))
+    assert (wear.bits, wear.symbols, wear.unreadable, wear.lost) == (0, 0, 1, 0)
+
+
+def test_wear_of_frames_that_are_lost() -> None:
+    """Nothing is known of their bytes any more; those of the seals' frame are asked without their seals."""
+    for track in (Track.DATA, Track.SEALS):
+        frame = FIRST.layout.frame(track, 0)
+        hurt = bytearray(ONE)
+        for place, _ in FIRST.layout.slice_extents(frame):
+            size = FIRST.layout.rows * frame.width
+            hurt[place : place + size] = content(size, place)
+        wear = examine_records(only(bytes(hurt)))
+        assert (wear.bits, wear.symbols, wear.lost) == (0, 0, 240 * frame.width)
+        assert wear
+
+
 def test_wear_counts_what_could_not_be_read() -> None:
     """A head, a page and a slice of every frame are unreadable; padding and body are not counted twice."""
     layout = FIRST.layout
     start = layout.stretch_start(3)
     wear = examine_records(only(ONE, [(100, 700), (start, start + layout.prefix)]))
     assert (wear.unreadable, wear.bits, wear.lost) == (600 + layout.prefix, 0, 0)
+    assert wear
 
 
 # -- hostile records -------------------------------------------------------------------------------
@@ -275,6 +439,34 @@ def consume(data: bytes) -> None:
         section.bootstrap.code.code()
         section.table()
         examine_records(section)
+
+
+@pytest.mark.parametrize(
+    ("fits", "promises"),
+    [
+        ({"entries": 1}, {"entries": 2}),
+        ({"table_length": 2 * 76, "entries": 2}, {"table_length": 2 * 76 - 1, "entries": 2}),
+        ({"stream_length": WINDOW}, {"stream_length": WINDOW - 1}),
+        ({"start": 7, "stream_length": WINDOW + 7}, {"start": 8, "stream_length": WINDOW + 7}),
+        ({"start": 1 << 60, "stream_length": 1 << 62}, {"start": (1 << 60) + 1, "stream_length": 1 << 62}),
+        ({"section_offset": 1 << 60}, {"section_offset": (1 << 60) + 1}),
+        ({"stretches": 16}, {"stretches": 17}),
+    ],
+)
+def test_records_that_promise_more_than_there_can_be(fits: dict[str, int], promises: dict[str, int]) -> None:
+    """No number is above 2^60; an entry has at least 76 bytes."""
+    assert windows(with_record(**fits)) == [0]
+    with pytest.raises(FormatError, match="promises more than the sidecar can hold"):
+        windows(with_record(**promises))
+
+
+def test_a_section_may_be_four_times_what_is_left_and_a_megabyte() -> None:
+    table = 500_000
+    left = (Layout(FIRST.geometry, table).size - (1 << 20)) // 4
+    data = with_record(table_length=table)[:left].ljust(left, b"\0")
+    assert windows(data) == [0]
+    with pytest.raises(FormatError, match="promises more than the sidecar can hold"):
+        windows(data[:-1])
 
 
 NUMBERS = {f.name: 64 for f in fields(Bootstrap) if f.type == "int"} | {

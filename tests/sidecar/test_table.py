@@ -3,14 +3,13 @@
 from __future__ import annotations
 
 import struct
-from dataclasses import replace
 
 import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
 from oakum.errors import FormatError
-from oakum.sidecar.table import MAX_PATH, Kind, Piece, check_path, unpack_table
+from oakum.sidecar.table import MAX_PATH, Kind, Piece, check_path, packed_length, unpack_table
 
 NAMES = st.lists(
     st.binary(min_size=1, max_size=40).filter(lambda b: b not in (b".", b"..") and not {0, 47} & set(b)),
@@ -21,7 +20,7 @@ NAMES = st.lists(
 
 def file(path: bytes, length: int = 0, **changes: object) -> Piece:
     made = Piece(Kind.FILE, path, 0o644, 10**18, length, 0, length, True, b"d" * 32)
-    return replace(made, **changes)  # type: ignore[arg-type]
+    return made._replace(**changes)  # type: ignore[arg-type]
 
 
 def packed(*pieces: Piece) -> bytes:
@@ -40,6 +39,36 @@ def test_round_trip(members: list[tuple[bytes, int, int]]) -> None:
         else:
             pieces.append(file(path, length, modified_ns=modified))
     assert unpack_table(packed(*pieces), len(pieces), sum(p.length for p in pieces)) == tuple(pieces)
+
+
+def test_lengths_of_entries() -> None:
+    """76 bytes, the path and the target of a link."""
+    link = Piece(Kind.LINK, b"here", 0o777, 0, 0, 0, 0, True, bytes(32), b"there/")
+    assert packed_length(link.path, link.target) == len(link.pack()) == 76 + 4 + 6
+    assert packed_length(b"abc") == len(file(b"abc").pack()) == 79
+
+
+def test_the_digest_may_be_given_when_packing() -> None:
+    assert file(b"a").pack(b"e" * 32) == file(b"a", digest=b"e" * 32).pack()
+
+
+def test_an_entry_of_an_unknown_kind_or_length() -> None:
+    table = packed(file(b"a", 5))
+    for place, value in ((2, 0), (2, 4), (0, 78), (0, 76)):
+        wrong = bytearray(table + b"x")
+        wrong[place] = value
+        with pytest.raises(FormatError, match="contradicts itself"):
+            unpack_table(bytes(wrong), 1, 5)
+
+
+def test_the_largest_member() -> None:
+    piece = file(b"a", 5, offset=(1 << 60) - 5, size=1 << 60)
+    assert unpack_table(packed(piece), 1, 5) == (piece,)
+
+
+def test_bits_beyond_the_permissions_are_dropped() -> None:
+    (piece,) = unpack_table(packed(file(b"a", 5, mode=0o100644)), 1, 5)
+    assert piece.mode == 0o644
 
 
 def test_pieces_of_members_that_go_over_windows() -> None:
@@ -70,11 +99,16 @@ def test_longest_path() -> None:
         (file(b"a", 5, size=4),),
         (file(b"a", 5, offset=1, size=5),),
         (file(b"a", 5, size=1 << 61),),
+        (file(b"a", 5, size=(1 << 60) + 1, ends=False),),
+        (file(b"a", 5, size=4, ends=False),),
+        (file(b"a", 5, offset=3, size=7, ends=False),),
         (file(b"a", 5, size=9),),  # It is said to end here, and does not.
         (file(b"a", 5), file(b"a", 0)),
         (file(b"a", 2, size=9, ends=False), file(b"b", 3)),
         (file(b"a", 2), file(b"b", 3, offset=3, size=6)),
         (Piece(Kind.FOLDER, b"a", 0o755, 0, 5, 0, 5, True),),
+        (Piece(Kind.FOLDER, b"a", 0o755, 0, 5, 0, 0, False), file(b"b", 5)),
+        (Piece(Kind.LINK, b"a", 0o755, 0, 1, 0, 0, False), file(b"b", 5)),
         (file(b"a", 4),),
         (file(b"a", 6),),
         (),

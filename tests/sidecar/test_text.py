@@ -58,7 +58,7 @@ def test_it_fits_whatever_the_figures(code: str, start: int, length: int, table:
 
 @pytest.mark.parametrize("code", CODES)
 def test_exact_figures(code: str) -> None:
-    """Each figure is computed here from the design's own definitions and looked for in its sentence."""
+    """Each figure is computed here from its definition and looked for in its sentence."""
     c = resolve_code(code)
     length, start = min(3_000_000, c.outer.k << 20), 7_777_777
     depth = window_depth(length, c.outer.k, 1 << 20)
@@ -87,6 +87,7 @@ def test_exact_figures(code: str) -> None:
         columns = "".join(f"{v:0{2 * p}x}" for v in c.inner.check_columns[:m].ravel().tolist())
         assert columns in text.replace(" ", "")
         assert f"A word is {m} bytes" in text
+        assert f"the XOR of these {2 * p}-digit numbers" in text
         assert f"the binary code [{8 * (m + p)},{8 * m},{c.inner.d}]" in text
         found = re.search(r"inner parity of the data cells in the order of the stream \((\d+) bytes\)", text)
         assert found is not None

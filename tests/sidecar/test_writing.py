@@ -6,6 +6,7 @@ from dataclasses import replace
 
 import numpy as np
 import pytest
+import xxhash
 from hypothesis import given, settings
 from hypothesis import strategies as st
 from support import Memory, content
@@ -98,6 +99,12 @@ def test_what_is_written_is_read(code: str, length: int) -> None:
         values, known = section.digests(track, 0, count)
         assert known is None
         assert np.array_equal(values, np.arange(count, dtype=np.uint64) * np.uint64(track + 1000))
+    sealed = [frame for frame in layout.frames() if frame.track is not Track.SEALS]
+    seals, known = section.digests(Track.SEALS, 0, len(sealed))
+    assert known is None
+    assert seals.tolist() == [
+        xxhash.xxh3_64_intdigest(section.rows(frame)[0][120:].tobytes()) for frame in sealed
+    ]
     assert not examine_records(section)
     assert section_bytes(code, length, 0, 9) == data
 

@@ -115,10 +115,8 @@ class OuterCode:
         symbols = np.asarray(data, dtype=np.uint8)
         if symbols.ndim == 0 or symbols.shape[-1] != self.k:
             raise ValueError(f"data of shape {symbols.shape} given, the last axis must have {self.k} symbols")
-        parity = np.zeros((*symbols.shape[:-1], self.r), dtype=np.uint8)
-        for i in range(self.k):
-            parity ^= self.field.multiply(symbols[..., i, None], self.parity_matrix[:, i])
-        return parity
+        products = self.field.multiply(symbols[..., None, :], self.parity_matrix)
+        return np.asarray(np.bitwise_xor.reduce(products, axis=-1))
 
 
 @lru_cache(maxsize=16)

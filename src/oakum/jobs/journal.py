@@ -16,7 +16,7 @@ import os
 import stat
 import struct
 from collections.abc import Iterator
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from enum import IntEnum
 from pathlib import Path
 
@@ -122,6 +122,9 @@ class Draft:
         """Begin the journal of `sidecar`; it will replace one that is there. Raises CannotCheck."""
         self.contents = Contents(identity)
         self._file = NewFile(journal_path(sidecar), overwrite=True)
+        self._places: list[int] = []
+        """Where the records of the entries begin."""
+
         self._end = 0
         try:
             self._write(_Kind.SET, 0, 0, identity, b"")
@@ -132,10 +135,19 @@ class Draft:
     def add(self, entry: Entry) -> int:
         """Begin an entry; returns its number."""
         number = len(self.contents.entries)
+        self._places.append(self._end)
         self._write(_Kind.ENTRY, entry.thing, number, _packed(entry), b"")
         self.contents.entries.append(entry)
         self.contents.patches.append([])
         return number
+
+    def amend(self, number: int, digest: bytes) -> None:
+        """Enter the SHA-256 that an entry will have, where it was not known when the entry was begun."""
+        entry = self.contents.entries[number]
+        entry = replace(entry, after=replace(entry.after, digest=digest))
+        record = _record(_Kind.ENTRY, entry.thing, number, _packed(entry), b"", 0)
+        self._file.write(self._places[number], record)
+        self.contents.entries[number] = entry
 
     def patch(self, entry: int, offset: int, old: bytes | None, new: bytes) -> None:
         """Bytes of an entry that will change, at most PATCH; `old` is None where it was unreadable."""

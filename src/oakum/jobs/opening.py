@@ -15,9 +15,12 @@ import numpy as np
 from numpy.typing import NDArray
 
 from oakum.errors import CannotCheck, FormatError
-from oakum.files import FileBytes, reason
+from oakum.files import FileBytes, aligned, reason
 from oakum.jobs.common import absolute
-from oakum.members import Folder, MemberStream, Span
+from oakum.jobs.unreadable import UnreadableList
+from oakum.members import Folder, MemberStream, OpenStream, Span
+from oakum.progress import Progress, Silent
+from oakum.sidecar.bootstrap import FROM_PIPE
 from oakum.sidecar.reading import ByteSource, Section, find_sections
 from oakum.sidecar.table import Kind, Piece
 
@@ -73,16 +76,6 @@ class OpenBytes(ByteSource, Protocol):
         """Close it."""
 
 
-class OpenStream(Protocol):
-    """The bytes of members end to end, to be closed when done."""
-
-    def read_into(self, offset: int, buffer: memoryview) -> list[Range]:
-        """See `MemberStream.read_into`."""
-
-    def close(self) -> None:
-        """Close all members."""
-
-
 @dataclass
 class ProtectedSet:
     """An opened sidecar with its members."""
@@ -94,17 +87,61 @@ class ProtectedSet:
     sections: list[Section]
     tables: list[tuple[Piece, ...]]
     members: dict[bytes, KnownMember]
+    unlisted: list[Section] = field(default_factory=list)
+    """Sections that were found, but whose member tables are lost."""
+
+    once: bool = False
+    """Whether members are read once (but for what is decoded), so that nobody needs them in the cache."""
+
     unreadable: dict[bytes, list[Range]] = field(default_factory=dict)
     notes: list[str] = field(default_factory=list)
+    recovered: int = 0
+    """How many of `sections` are lost in the sidecar and known again from the data."""
 
     def __post_init__(self) -> None:
         files = (m for m in self.members.values() if m.piece.kind is Kind.FILE and m.size)
         self._files = sorted(files, key=lambda m: m.stream_start)
         self._starts = [m.stream_start for m in self._files]
 
+    @property
+    def incomplete(self) -> bool:
+        """Whether sections are lost."""
+        numbers = [s.bootstrap.window for s in self.sections]
+        return numbers != list(range(len(numbers))) or not self.sections[-1].bootstrap.last
+
+    def adopt(self, found: dict[int, tuple[Section, tuple[Piece, ...]]]) -> None:
+        """Take over sections, with their tables, that were lost and are known again, by their windows.
+
+        Their members are right: else nothing would be known again. Others keep the state that they have.
+        """
+        there = {s.bootstrap.window: (s, t) for s, t in zip(self.sections, self.tables, strict=True)} | found
+        self.sections = [there[number][0] for number in sorted(there)]
+        self.tables = [there[number][1] for number in sorted(there)]
+        self.recovered, self.unlisted = len(found), []
+        members = _put_together(self.sections, self.tables)
+        for path, member in members.items():
+            if path in self.members:
+                self.members[path].sha256, self.members[path].covered = member.sha256, member.covered
+            else:
+                _look_at(self.folder, member)
+                member.right = True
+        self.members = {path: self.members.get(path, member) for path, member in members.items()}
+        self.__post_init__()
+
+    def known_bad(self, spans: Sequence[Span]) -> list[Range]:
+        """What the user says cannot be read, as ranges of the stream of some spans."""
+        ranges, place = [], 0
+        for span in spans:
+            for start, stop in self.unreadable.get(span.path, ()):
+                a, b = max(start, span.offset), min(stop, span.offset + span.length)
+                if a < b:
+                    ranges.append((place + a - span.offset, place + b - span.offset))
+            place += span.length
+        return ranges
+
     def stream(self, spans: Sequence[Span], start: int, known_bad: Sequence[Range] = ()) -> OpenStream:
         """The bytes of some spans as they are; the first begins at byte `start` of the whole stream."""
-        return MemberStream(self.folder, spans, known_bad)
+        return MemberStream(self.folder, spans, known_bad, once=self.once)
 
     def read(self, member: KnownMember) -> Iterator[tuple[int, Bytes, list[Range]]]:
         """All of a member's bytes as they are, piece by piece: where, which, and what could not be read.
@@ -117,7 +154,7 @@ class ProtectedSet:
         try:
             there = member.size if member.there is None else member.there
             for start in range(0, min(member.size, there + 1), CHUNK):
-                data = np.empty(min(CHUNK, member.size - start), np.uint8)
+                data = aligned(min(CHUNK, member.size - start))
                 yield start, data, stream.read_into(start, data.data)
         finally:
             stream.close()
@@ -139,17 +176,26 @@ Set = TypeVar("Set", bound=ProtectedSet)
 def open_set(
     path: Path,
     root: Path | None,
-    unreadable: dict[bytes, list[Range]] | None = None,
+    unreadable: UnreadableList | None = None,
     target: Path | None = None,
+    progress: Progress = Silent(),
 ) -> ProtectedSet:
     """Open the sidecar at `path` and look for its members below `root` (None: beside it).
 
+    Where whole sections of it are lost, the members are read for what those said (see `oakum.jobs.lost`).
     Raises CannotCheck when the sidecar cannot be read, protects something else than `target`, or its members
-    are not there at all.
+    are not there at all, UsageError where `unreadable` names what it does not protect.
     """
     opened = assemble(ProtectedSet, path, FileBytes(path), root)
-    opened.unreadable = unreadable or {}
+    listed = unreadable or UnreadableList()
+    opened.unreadable = listed.ranges
     try:
+        if opened.incomplete:
+            from oakum.jobs.lost import recover_sections
+
+            recover_sections(opened, lambda s: opened.stream(s, 0, opened.known_bad(s)), progress)
+        if not opened.incomplete:
+            listed.refuse_others(opened.members)
         if target is not None:
             _refuse_other(opened, absolute(target))
         look_at_members(opened)
@@ -163,17 +209,23 @@ def open_set(
 def assemble(kind: type[Set], path: Path, source: OpenBytes, root: Path | None) -> Set:
     """Read the records of a sidecar; `source` is closed if that fails."""
     try:
-        sections, tables = readable(find_sections(source))
+        found = find_sections(source)
+        sections, tables = readable(found)
         folder = Folder(path.parent if root is None else root)
     except BaseException:
         source.close()
         raise
-    return kind(path, folder.root, source, folder, sections, tables, _put_together(sections, tables))
+    members = _put_together(sections, tables)
+    unlisted = [s for s in found if s not in sections]
+    for record in (s.bootstrap for s in unlisted):
+        if record.last and record.flags & FROM_PIPE:  # Earlier windows do not know how long the stream was.
+            for member in members.values():
+                member.size = record.stream_length
+    return kind(path, folder.root, source, folder, sections, tables, members, unlisted)
 
 
 def look_at_members(opened: ProtectedSet) -> None:
-    """Say what is there of sections and members, without reading the members."""
-    _look_at_sections(opened)
+    """Say what is there of the members, without reading them."""
     for member in opened.members.values():
         _look_at(opened.folder, member)
 
@@ -214,19 +266,35 @@ def _put_together(
     return members
 
 
-def _look_at_sections(opened: ProtectedSet) -> None:
-    """Say which windows no section was found for."""
-    expected = 0
-    for section in opened.sections:
-        if section.bootstrap.window != expected:
-            opened.notes.append(
-                f"the sidecar's sections for windows {expected} to {section.bootstrap.window - 1} are lost"
-            )
-        expected = section.bootstrap.window + 1
-    if not opened.sections[-1].bootstrap.last:
-        opened.notes.append(
-            f"the sidecar ends after window {expected - 1}; what follows there cannot be checked"
+def lost_sections(opened: ProtectedSet) -> Iterator[str]:
+    """Say which windows have no section in the sidecar, and what follows from that."""
+    if opened.recovered:
+        yield (
+            f"of the sidecar's {len(opened.sections):,} sections {opened.recovered:,} can no longer be read; "
+            "all of the data that they are for is as it was protected, so that they can be written anew"
         )
+    expected = 0
+    heads = [s.bootstrap.window + 1 for s in opened.unlisted if s.bootstrap.last]
+    for window in [s.bootstrap.window for s in opened.sections] + heads:
+        if window != expected:
+            which = (
+                f"section for window {expected} is"
+                if window == expected + 1
+                else f"sections for windows {expected} to {window - 1} are"
+            )
+            yield (
+                f"the sidecar's {which} lost; damage there can be neither found nor put right, and the "
+                "sidecar can be written anew only once all of the data there is shown to be as it was"
+            )
+        expected = window + 1
+    if not heads and not opened.sections[-1].bootstrap.last:
+        yield (
+            f"the sidecar ends after window {expected - 1}; what follows there cannot be checked, and "
+            "nothing is left that says what its sections held: repair what can be had, then protect it again"
+        )
+
+
+_IS_KIND = {Kind.FILE: stat.S_ISREG, Kind.FOLDER: stat.S_ISDIR, Kind.LINK: stat.S_ISLNK}
 
 
 def _look_at(folder: Folder, member: KnownMember) -> None:
@@ -243,8 +311,7 @@ def _look_at(folder: Folder, member: KnownMember) -> None:
         member.there = 0
         member.absent, member.fault = True, "is not there; a link stands in its way"
         return
-    kinds = {Kind.FILE: stat.S_ISREG, Kind.FOLDER: stat.S_ISDIR, Kind.LINK: stat.S_ISLNK}
-    if not kinds[piece.kind](found.st_mode):
+    if not _IS_KIND[piece.kind](found.st_mode):
         member.absent, member.in_the_way, member.there = True, True, 0
         member.fault = f"is no {piece.kind.name.lower()} any more"
     elif piece.kind is Kind.LINK:
@@ -282,7 +349,9 @@ def _refuse_missing_medium(opened: ProtectedSet) -> None:
     files = [m for m in opened.members.values() if m.piece.kind is Kind.FILE]
     restorable = sum(s.geometry.r * s.geometry.depth for s in opened.sections)
     if files and all(m.absent for m in files) and sum(m.size for m in files) > restorable:
+        none = "the file" if len(files) == 1 else f"none of the {len(files):,} files"
+        there = "is not in" if len(files) == 1 else "is in"
         raise CannotCheck(
-            f"none of the {len(files):,} files of {opened.path.name} is in {opened.root}; "
+            f"{none} of {opened.path.name} {there} {opened.root}; "
             "check that the medium is mounted, or say with --root where they are"
         )

@@ -9,6 +9,7 @@ from __future__ import annotations
 import struct
 from dataclasses import dataclass
 from functools import lru_cache
+from typing import TYPE_CHECKING
 
 import numpy as np
 import xxhash
@@ -16,6 +17,9 @@ from numpy.typing import NDArray
 
 from oakum.algebra.outer import OuterCode
 from oakum.sidecar.layout import FRAME_HEADER, FRAME_ROWS, PAYLOAD_ROWS, Frame
+
+if TYPE_CHECKING:
+    from oakum.kernels.columns import ColumnDecoder
 
 Rows = NDArray[np.uint8]
 
@@ -33,10 +37,15 @@ def frame_code() -> OuterCode:
 
 def payload(frame: Frame, content: bytes, identity: bytes) -> Rows:
     """The payload rows of a frame, uint8[120, width]: header, content, zeros."""
-    rest = identity + struct.pack("<IHH", frame.number, frame.track, 0) + content
+    rest = _place(frame, identity) + content
     rest = rest.ljust(PAYLOAD_ROWS * frame.width - 8, b"\0")
     whole = struct.pack("<Q", xxhash.xxh3_64_intdigest(rest)) + rest
     return np.frombuffer(whole, np.uint8).reshape(PAYLOAD_ROWS, frame.width)
+
+
+def _place(frame: Frame, identity: bytes) -> bytes:
+    """The header after its checksum: which sidecar's frame it is, and which one of it."""
+    return identity + struct.pack("<IHH", frame.number, frame.track, 0)
 
 
 def check_rows(rows: Rows) -> Rows:
@@ -62,6 +71,10 @@ class Content:
     data: bytes
     known: NDArray[np.bool_] | None
 
+    def count(self) -> int:
+        """How many bytes are known to be right."""
+        return len(self.data) if self.known is None else int(self.known.sum())
+
 
 def read_plain(frame: Frame, rows: Rows, identity: bytes) -> Content | None:
     """Read a frame from its payload rows alone; None unless checksum, identity and place agree."""
@@ -74,15 +87,21 @@ def read_plain(frame: Frame, rows: Rows, identity: bytes) -> Content | None:
     return Content(whole[FRAME_HEADER : FRAME_HEADER + frame.content], None)
 
 
+@lru_cache(maxsize=1)
+def _decoder() -> ColumnDecoder:
+    """The compiled decoder, made when the first damaged frame is met."""
+    from oakum.kernels.columns import ColumnDecoder
+
+    return ColumnDecoder(frame_code())
+
+
 def correct(frame: Frame, rows: Rows, erased: Rows | None, identity: bytes) -> Content:
     """Correct a frame from all its rows uint8[240, width] and read what can be read.
 
     Where columns are beyond help, the bytes of the others are still known: each column is a codeword
     of its own, and with SPARE check symbols left over a wrong one is not accepted by chance.
     """
-    from oakum.kernels.columns import ColumnDecoder
-
-    decoder = ColumnDecoder(frame_code())
+    decoder = _decoder()
     magnitudes, errors = decoder.decode(decoder.syndromes(rows), erased)
     corrected = (rows ^ magnitudes)[:PAYLOAD_ROWS]
     whole = read_plain(frame, corrected, identity)
@@ -93,7 +112,7 @@ def correct(frame: Frame, rows: Rows, erased: Rows | None, identity: bytes) -> C
     solved = np.broadcast_to(sure, (PAYLOAD_ROWS, frame.width)).reshape(-1)
     content = slice(FRAME_HEADER, FRAME_HEADER + frame.content)
     flat = corrected.reshape(-1)
-    owner = flat[8:24].tobytes()
-    if solved[8:24].all() and owner != identity:  # A whole frame of another sidecar says nothing here.
-        solved = np.zeros_like(solved)
+    place = slice(8, FRAME_HEADER)
+    if solved[place].all() and flat[place].tobytes() != _place(frame, identity):
+        solved = np.zeros_like(solved)  # A whole frame of another place or sidecar says nothing here.
     return Content(flat[content].tobytes(), solved[content])

@@ -115,14 +115,14 @@ class Section:
             faults += [(done + a, done + b) for a, b in missing]
         return out, faults
 
-    def rows(self, frame: Frame, first: int = 0, last: int = FRAME_ROWS) -> tuple[Rows, Rows | None]:
-        """Rows first..last-1 of a frame, and where they could not be read (None: everywhere)."""
+    def rows(self, frame: Frame, last: int = FRAME_ROWS) -> tuple[Rows, Rows | None]:
+        """The first `last` rows of a frame, and where they could not be read (None: they all could)."""
         count = self.layout.rows
         rows = np.empty((FRAME_ROWS, frame.width), np.uint8)
         erased: Rows | None = None
         for place, row in self.layout.slice_extents(frame):
-            if not first <= row < last:
-                continue
+            if row >= last:
+                break
             data, faults = self.read(place, count * frame.width)
             rows[row : row + count] = data.reshape(count, frame.width)
             if faults:
@@ -130,7 +130,7 @@ class Section:
                 flat = erased[row : row + count].reshape(-1)
                 for start, stop in faults:
                     flat[start:stop] = 1
-        return rows[first:last], None if erased is None else erased[first:last]
+        return rows[:last], None if erased is None else erased[:last]
 
     def frame(self, track: Track, number: int) -> Content:
         """The content of a frame, corrected where that was necessary."""
@@ -144,7 +144,7 @@ class Section:
             return self._kept[key]
 
     def _read_frame(self, frame: Frame) -> Content:
-        rows, _ = self.rows(frame, 0, PAYLOAD_ROWS)
+        rows, _ = self.rows(frame, PAYLOAD_ROWS)
         content = read_plain(frame, rows, self.bootstrap.identity)
         if content is None:
             rows, erased = self.rows(frame)
@@ -152,10 +152,7 @@ class Section:
         for torn in self._torn if content.known is not None else ():
             more = np.broadcast_to(torn[:, np.newaxis], rows.shape)
             other = correct(frame, rows, more if erased is None else more | erased, self.bootstrap.identity)
-            if other.known is None:
-                return other
-            if content.known is None or other.known.sum() > content.known.sum():
-                content = other
+            content = max(content, other, key=Content.count)
         return content
 
     @cached_property
@@ -203,7 +200,7 @@ class Section:
     def table_bytes(self) -> bytes:
         """The member table as it was written. Raises FormatError where it is lost."""
         frames = [self.frame(Track.TABLE, i) for i in range(self.layout.frame_count(Track.TABLE))]
-        if any(f.known is not None and not f.known.all() for f in frames):
+        if any(f.known is not None for f in frames):
             raise FormatError(
                 "the sidecar's list of members is damaged beyond correction; "
                 "without it nothing can be checked"
@@ -227,13 +224,10 @@ def find_sections(source: ByteSource) -> list[Section]:
     """
     sections: dict[int, Section] = {}
     place = 0
-    while place < source.size:
-        head = _head_at(source, place + TEXT_BYTES) or next(_scan(source, place), None)
-        if head is None:
-            break
+    while head := _head_at(source, place + TEXT_BYTES) or next(_scan(source, place), None):
         section = Section(source, _most_common(source, head))
         sections.setdefault(section.bootstrap.window, section)
-        place = max(section.end, head.place + 1)
+        place = section.end
         if section.bootstrap.last:
             break
     if not sections:
@@ -249,10 +243,10 @@ def _most_common(source: ByteSource, head: Head) -> Head:
         place = head.base + head.layout.stretch_start(stretch) + len(MARKER)
         with suppress(FormatError):
             record = unpack(source.read(place, RECORD_BYTES)[0].tobytes())
-            if record is not None and record.stretch == stretch:
+            if record is not None:
                 found[replace(record, stretch=head.bootstrap.stretch)] += 1
     best = found.most_common(1)
-    if not best or best[0][0] == head.bootstrap or found[head.bootstrap] == best[0][1]:
+    if not best or found[head.bootstrap] == best[0][1]:
         return head
     return _head(source, head.place, best[0][0])
 
@@ -274,8 +268,7 @@ def _head(source: ByteSource, place: int, bootstrap: Bootstrap) -> Head:
 def _read_head(source: ByteSource, place: int) -> Bootstrap | None:
     """The bootstrap record of the head at `place`; None where there is no marker or no record."""
     data, _ = source.read(place, HEAD_BYTES)
-    difference = data[: len(MARKER)] ^ np.frombuffer(MARKER, np.uint8)
-    if int(np.bitwise_count(difference).sum()) > MARKER_ERRORS:
+    if not len(find_marker(data[: len(MARKER)])):
         return None
     found = decode(data[len(MARKER) :].tobytes())
     return None if found is None else found[0]
@@ -313,9 +306,7 @@ def _heads(source: ByteSource, places: list[int]) -> Iterator[Head]:
 
 def find_marker(data: Rows) -> NDArray[np.intp]:
     """Offsets at which the marker stands in uint8[L] with at most MARKER_ERRORS wrong bits."""
-    count = len(data) - len(MARKER) + 1
-    if count <= 0:
-        return np.empty(0, np.intp)
+    count = max(0, len(data) - len(MARKER) + 1)
     distance = np.zeros(count, np.uint8)
     for i, value in enumerate(MARKER):
         distance += np.bitwise_count(data[i : i + count] ^ np.uint8(value))
@@ -336,7 +327,7 @@ class Wear:
     """Bytes of which nothing is known any more."""
 
     def __bool__(self) -> bool:
-        return bool(self.bits or self.symbols or self.unreadable or self.lost)
+        return bool(self.symbols or self.unreadable or self.lost)
 
     def add(self, received: Rows, right: Rows, faults: list[Fault]) -> None:
         """Count the difference between received bytes and the right ones of the same places."""
@@ -354,9 +345,8 @@ def examine_records(section: Section) -> Wear:
     for offset, right in _plain_parts(section):
         received, faults = section.read(offset, len(right))
         wear.add(received, np.frombuffer(right, np.uint8), faults)
-    seals, known = _seals(section)
-    for number, frame in enumerate(section.layout.frames()):
-        _examine_frame(section, frame, seals[number] if known[number] else None, wear)
+    for frame, expected in zip(section.layout.frames(), _seals(section), strict=True):
+        _examine_frame(section, frame, expected, wear)
     return wear
 
 
@@ -371,23 +361,24 @@ def _plain_parts(section: Section) -> Iterator[tuple[int, bytes]]:
         yield place, bytes(length)
 
 
-def _seals(section: Section) -> tuple[list[int | None], list[bool]]:
-    """The digest of the check rows of every frame, and whether it is known. The seals' own have none."""
+def _seals(section: Section) -> list[int | None]:
+    """The digest of the check rows of every frame; None for the seals' own, which have none.
+
+    One that is lost agrees with nothing, so that its frame is looked at more closely.
+    """
     own = section.layout.frame_count(Track.SEALS)
-    count = section.layout.content(Track.SEALS) // DIGEST_BYTES
-    values, known = section.digests(Track.SEALS, 0, count)
-    flags = [True] * count if known is None else [bool(x) for x in known]
-    return [int(v) for v in values] + [None] * own, flags + [False] * own
+    values, _ = section.digests(Track.SEALS, 0, section.layout.content(Track.SEALS) // DIGEST_BYTES)
+    return [*values.tolist(), *[None] * own]
 
 
 def _examine_frame(section: Section, frame: Frame, expected: int | None, wear: Wear) -> None:
     identity = section.bootstrap.identity
     rows, erased = section.rows(frame)
     whole = erased is None and read_plain(frame, rows[:PAYLOAD_ROWS], identity) is not None
-    if whole and expected is not None and seal(rows[PAYLOAD_ROWS:]) == expected:
+    if whole and seal(rows[PAYLOAD_ROWS:]) == expected:
         return
     content = section.frame(frame.track, frame.number)
-    if content.known is not None and not content.known.all():
+    if content.known is not None:
         wear.lost += FRAME_ROWS * frame.width
         return
     right = np.empty_like(rows)

@@ -3,8 +3,8 @@
 from __future__ import annotations
 
 import struct
-from dataclasses import dataclass
 from enum import IntEnum
+from typing import NamedTuple
 
 from oakum.errors import FormatError
 from oakum.geometry import MAX_LENGTH
@@ -24,11 +24,11 @@ class Kind(IntEnum):
     LINK = 3
 
 
-_KINDS = frozenset(Kind)
+_KINDS = {int(kind): kind for kind in Kind}
+_NO_NAMES = frozenset((b"", b".", b".."))
 
 
-@dataclass(frozen=True)
-class Piece:
+class Piece(NamedTuple):
     """One entry: a member, and the piece of it that lies in the window.
 
     `digest` is the SHA-256 of the member from its first byte to the end of the piece; where the member
@@ -100,7 +100,8 @@ def _unpack_entry(table: bytes, place: int) -> tuple[Piece, int]:
         or (kind != Kind.FILE and (length or not ends))
     ):
         raise FormatError("the sidecar's member table gives a member an impossible size")
-    return Piece(Kind(kind), path, mode & 0o7777, modified, size, offset, length, ends, digest, target), total
+    member = _KINDS[kind]
+    return Piece(member, path, mode & 0o7777, modified, size, offset, length, ends, digest, target), total
 
 
 def check_path(path: bytes) -> None:
@@ -110,7 +111,8 @@ def check_path(path: bytes) -> None:
         not path
         or len(path) > MAX_PATH
         or b"\0" in path
-        or any(p in (b"", b".", b"..") or len(p) > 255 for p in parts)
+        or not _NO_NAMES.isdisjoint(parts)
+        or len(max(parts, key=len)) > 255
     ):
         raise FormatError(
             "the sidecar names a member in a way that no file can be named; nothing was written"

@@ -15,6 +15,8 @@ from oakum.sidecar.layout import DIGEST_BYTES, FRAME_CONTENT, FRAME_HEADER, PAYL
 from oakum.sidecar.text import page
 
 Data = bytes | bytearray | memoryview
+Kept = dict[Track, tuple[int, bytes]]
+"""Frames of a track that have been laid down, and the content of the next one."""
 
 
 class Sink(Protocol):
@@ -63,6 +65,15 @@ class SectionWriter:
             data += b"".join(self._sink.read(place, length) for place, _, length in extents)
             first, count = first + size, count - size
         return np.frombuffer(data, "<u8")
+
+    def kept(self, *tracks: Track) -> Kept:
+        """How far some tracks have come, for `go_on` in a later run with the same sink."""
+        return {track: (self._laid[track], bytes(self._pending[track])) for track in tracks}
+
+    def go_on(self, kept: Kept) -> None:
+        """Begin where tracks had come to."""
+        for track, (laid, pending) in kept.items():
+            self._laid[track], self._pending[track] = laid, bytearray(pending)
 
     def write_body(self, offset: int, data: NDArray[np.uint8]) -> None:
         """Put contiguous bytes at `offset` of the body."""
