@@ -8,9 +8,11 @@ from __future__ import annotations
 
 import errno
 import fcntl
+import mmap
 import os
 import stat
 import struct
+import threading
 from collections.abc import Callable
 from contextlib import suppress
 from pathlib import Path
@@ -19,6 +21,7 @@ import numpy as np
 import xxhash
 from numpy.typing import NDArray
 
+from oakum import pagecache, throttle
 from oakum.errors import CannotCheck, UsageError
 
 Fault = tuple[int, int]
@@ -26,18 +29,45 @@ Fault = tuple[int, int]
 _PAGE = 4096
 _SECTOR = 512
 
+_LONG = 1 << 20
+"""Reads of this size are worth going past the system's cache."""
+
+_ANONYMOUS = 4 << 20
+"""Buffers of this size come straight from the system."""
+
+WRITE_BEHIND = 16 << 20
+"""After so many bytes the system is asked to begin writing them to the medium."""
+
+
+def aligned(length: int) -> NDArray[np.uint8]:
+    """uint8[length] of any content that begins at a page, as a buffer to read into.
+
+    Reading copies from the system's pages. Where the target lies 1 to 31 bytes further inside its page than
+    the source, `rep movsb` takes four times as long (Zen 3), and that is where malloc puts large arrays.
+    numpy asks for huge pages for large arrays, which a virtual machine may have to wait for.
+    """
+    if length >= _ANONYMOUS:
+        return np.frombuffer(mmap.mmap(-1, length), np.uint8)
+    room = np.empty(length + _PAGE, np.uint8)
+    return room[-room.ctypes.data % _PAGE :][:length]
+
 
 def read_into(fd: int, offset: int, buffer: memoryview) -> list[Fault]:
     """Fill `buffer` from `offset` of a file. What cannot be read is zero and its ranges are returned.
 
     A read error is narrowed down to pages of 4 KiB and then to sectors of 512 bytes. Bytes past the end
-    of the file count as unreadable.
+    of the file count as unreadable. What limits reading (`oakum.throttle`) is minded.
     """
     faults: list[Fault] = []
     done = 0
+    limit = throttle.current.get()
     while done < len(buffer):
+        part = buffer[done:]
+        if limit is not None:
+            part = part[: limit.portion]
+            limit.take(len(part))
         try:
-            got = os.preadv(fd, [buffer[done:]], offset + done)
+            got = os.preadv(fd, [part], offset + done)
         except OSError as error:
             if error.errno not in (errno.EIO, errno.ENODATA, errno.EREMOTEIO):
                 raise
@@ -75,6 +105,26 @@ def _add(faults: list[Fault], start: int, stop: int) -> None:
         faults.append((start, stop))
 
 
+def _open_directly(path: Path) -> int:
+    """A descriptor that reads past the system's cache; -1 where there is no such thing."""
+    try:
+        return os.open(path, os.O_RDONLY | os.O_CLOEXEC | os.O_DIRECT)
+    except (OSError, AttributeError):
+        return -1
+
+
+def _read_directly(fd: int, offset: int, length: int) -> NDArray[np.uint8] | None:
+    """uint8[length] from `offset` of such a descriptor, which reads whole pages; None if it cannot."""
+    before = offset % _PAGE
+    room = aligned(-(-(before + length) // _PAGE) * _PAGE)
+    throttle.take(len(room))
+    try:
+        got = os.preadv(fd, [room.data], offset - before)
+    except OSError:
+        return None
+    return room[before : before + length] if got >= before + length else None
+
+
 class FileBytes:
     """A file as a source of bytes that may be missing; satisfies the sidecar reader's `ByteSource`."""
 
@@ -90,11 +140,18 @@ class FileBytes:
             raise CannotCheck(f"{path} is not a file; name the sidecar itself")
         self.path = path
         self.size = found.st_size
+        self._passing = pagecache.is_passing_through(self._fd)
+        self._direct = _open_directly(path) if self._passing else -1
 
     def read(self, offset: int, length: int) -> tuple[NDArray[np.uint8], list[Fault]]:
         """uint8[length] from `offset` (which may be negative or past the end), and what is missing."""
-        out = np.zeros(length, np.uint8)
+        if self._direct >= 0 and length >= _LONG and 0 <= offset <= self.size - length:
+            found = _read_directly(self._direct, offset, length)
+            if found is not None:
+                return found, []
+        out = aligned(length)
         before = min(max(0, -offset), length)
+        out[:before] = 0
         faults = [(0, before)] if before else []
         if before < length:
             for start, stop in read_into(self._fd, offset + before, out.data[before:]):
@@ -102,7 +159,11 @@ class FileBytes:
         return out, faults
 
     def close(self) -> None:
-        """Close the file."""
+        """Close the file; the system's cache is left as it was found."""
+        if self._passing:
+            pagecache.drop(self._fd)
+        if self._direct >= 0:
+            let_go(self._direct)
         let_go(self._fd)
 
     def __enter__(self) -> FileBytes:
@@ -203,8 +264,13 @@ class NewFile:
         overwrite: bool = False,
         open_folder: Callable[[], int] | None = None,
         advice: str = "move it away, choose another name or give --overwrite",
+        go_on: bool = False,
+        run: str = "",
     ) -> None:
         """Begin a file that will be `path`. Raises UsageError when it exists and must not be replaced.
+
+        With `go_on`, what a dead run left behind under the temporary name is kept, to be gone on with. Such
+        runs have a name, `run`, so that nobody else takes it away or has written to it.
 
         `open_folder` gives a descriptor of the folder that the file goes to; by default it is opened by name.
         `advice` says what to do about a file that exists.
@@ -214,10 +280,22 @@ class NewFile:
         self._advice = advice
         self._folder_opener = open_folder
         self._name = os.fsencode(path.name)
-        self._temporary = temporary_name(self._name)
+        self._temporary = temporary_name(self._name, run)
         self._folder = self._fd = -1
+        self._writing = threading.Lock()
+        """Threads that write at a time would wait for the file in the system, which lets them spin."""
+
+        self._unsent = self._sent = 0
+        """Bytes that the system has not been, and has been, asked to write to the medium."""
+
         self._begun = False
         """Whether there may be a temporary file of ours."""
+
+        self.keep = False
+        """Whether it stays under its temporary name when the run is interrupted, for a later one."""
+
+        self.found = False
+        """Whether something was there to be gone on with."""
 
         self._identity = (-1, -1)
         """Device and number of the temporary file, once it is ours."""
@@ -226,7 +304,7 @@ class NewFile:
             self._folder = self._open_folder()
             if not overwrite and self._exists():
                 raise self._taken()
-            self._create()
+            self._create(go_on)
         except OSError as error:
             self.discard()
             raise CannotCheck(f"{path} cannot be written: {reason(error)}") from None
@@ -239,24 +317,33 @@ class NewFile:
             return self._folder_opener()
         return os.open(self.path.parent, os.O_RDONLY | os.O_DIRECTORY | os.O_CLOEXEC)
 
-    def _create(self) -> None:
-        """Make the temporary file; one that a dead run left behind goes first."""
+    def _create(self, go_on: bool) -> None:
+        """Make the temporary file; one that a dead run left behind goes first, or is ours with `go_on`."""
         flags = os.O_RDWR | os.O_CREAT | os.O_EXCL | os.O_CLOEXEC | os.O_NOFOLLOW
         self._begun = True
         try:
             self._fd = os.open(self._temporary, flags, 0o666, dir_fd=self._folder)
         except FileExistsError:
-            self._take_away_leftover()
-            self._fd = os.open(self._temporary, flags, 0o666, dir_fd=self._folder)
+            if go_on:
+                self._fd, self.found = self._open_leftover(), True
+            else:
+                self._take_away_leftover()
+                self._fd = os.open(self._temporary, flags, 0o666, dir_fd=self._folder)
         self._identity = _identity(self._fd)
         self._lock()
 
-    def _take_away_leftover(self) -> None:
+    def _open_leftover(self) -> int:
+        """A descriptor of what a dead run left behind, locked."""
         flags = os.O_RDWR | os.O_CLOEXEC | os.O_NOFOLLOW | os.O_NONBLOCK
         fd = os.open(self._temporary, flags, dir_fd=self._folder)
+        if not try_lock(fd):
+            let_go(fd)
+            raise self._in_use()
+        return fd
+
+    def _take_away_leftover(self) -> None:
+        fd = self._open_leftover()
         try:
-            if not try_lock(fd):
-                raise self._in_use()
             os.unlink(self._temporary, dir_fd=self._folder)
         finally:
             let_go(fd)
@@ -305,8 +392,23 @@ class NewFile:
 
     def write(self, offset: int, data: bytes | bytearray | memoryview) -> None:
         """Put all of `data` at `offset`."""
+        with self._writing:
+            try:
+                write_all(self.fd, offset, data)
+            except OSError as error:
+                raise self._failed(reason(error)) from None
+            self._unsent += len(data)
+            if self._unsent >= WRITE_BEHIND:
+                self._sent += self._unsent
+                self._unsent = 0
+                pagecache.begin_writing(self.fd)
+                if pagecache.is_much(self._sent):
+                    pagecache.drop(self.fd)
+
+    def sync(self) -> None:
+        """Bring what was written so far to the medium, for a state that speaks of it."""
         try:
-            write_all(self.fd, offset, data)
+            os.fsync(self.fd)
         except OSError as error:
             raise self._failed(reason(error)) from None
 
@@ -413,15 +515,33 @@ class NewFile:
     def __enter__(self) -> NewFile:
         return self
 
-    def __exit__(self, *_: object) -> None:
+    def __exit__(self, kind: type[BaseException] | None, *_: object) -> None:
+        if self.keep and kind is not None and not issubclass(kind, Exception):
+            self._begun = False
+            self._close()
         self.discard()
 
 
-def temporary_name(name: bytes) -> bytes:
-    """The name under which a file is made that will be called `name`."""
-    if len(name) > 230:
-        name = name[:200] + b"-" + xxhash.xxh3_64_hexdigest(name).encode()
-    return b".%s.oakum-part" % name
+def temporary_name(name: bytes, run: str = "") -> bytes:
+    """The name under which a file is made that will be called `name`, by a run of the name `run`."""
+    if len(name) > 200:
+        name = name[:180] + b"-" + xxhash.xxh3_64_hexdigest(name).encode()
+    return b".%s%s.oakum-part" % (name, b"." + run.encode() if run else b"")
+
+
+def take_away_leftovers(path: Path, *, but: str) -> None:
+    """Remove what dead runs with names, all but one, have left of the file at `path`."""
+    kept = temporary_name(os.fsencode(path.name), but)
+    start = kept[: -len(f"{but}.oakum-part")]
+    for name in os.listdir(os.fsencode(path.parent)):
+        if (
+            name.startswith(start)
+            and name.endswith(b".oakum-part")
+            and len(name) == len(kept)
+            and name != kept
+        ):
+            with suppress(OSError, CannotCheck), Lock(path.parent / os.fsdecode(name)):
+                os.unlink(os.path.join(os.fsencode(path.parent), name))
 
 
 def _identity(fd: int) -> tuple[int, int]:

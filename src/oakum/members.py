@@ -7,24 +7,30 @@ import hashlib
 import os
 import stat
 import threading
-from bisect import bisect_right
+from bisect import bisect_left, bisect_right
 from collections import Counter, OrderedDict
-from collections.abc import Sequence
+from collections.abc import Callable, Iterable, Iterator, Sequence
 from contextlib import suppress
-from dataclasses import dataclass
 from itertools import accumulate
 from pathlib import Path
-from typing import Protocol
+from typing import NamedTuple, Protocol
 
+from oakum import pagecache, throttle
 from oakum.errors import CannotCheck, UsageError
-from oakum.files import Fault, let_go, read_into, reason
+from oakum.files import Fault, aligned, let_go, read_into, reason
 from oakum.sidecar.table import Kind
 
 OPEN_FILES = 64
 
+SMALL = 64 << 10
+"""Bytes up to which a member is opened, read, hashed and closed in one go."""
 
-@dataclass(frozen=True)
-class Member:
+
+PIECE = 8 << 20
+"""Bytes of a member that are read at a time where it is read alone."""
+
+
+class Member(NamedTuple):
     """What is recorded of one file, folder or link. `path` is relative to the root, raw bytes."""
 
     kind: Kind
@@ -92,7 +98,7 @@ class Folder:
 
     def open(self, path: bytes) -> int:
         """A descriptor for reading the file at `path`. Raises OSError (ELOOP where a link is in the way)."""
-        parent, name = os.path.split(path)
+        parent, _, name = path.rpartition(b"/")
         with self._lock:
             return os.open(
                 name, os.O_RDONLY | os.O_CLOEXEC | os.O_NOFOLLOW | os.O_NONBLOCK, dir_fd=self._enter(parent)
@@ -100,13 +106,13 @@ class Folder:
 
     def stat(self, path: bytes) -> os.stat_result:
         """What is at `path`, links not followed. Raises OSError."""
-        parent, name = os.path.split(path)
+        parent, _, name = path.rpartition(b"/")
         with self._lock:
             return os.stat(name, dir_fd=self._enter(parent), follow_symlinks=False)
 
     def readlink(self, path: bytes) -> bytes:
         """The target of the link at `path`. Raises OSError."""
-        parent, name = os.path.split(path)
+        parent, _, name = path.rpartition(b"/")
         with self._lock:
             return os.readlink(name, dir_fd=self._enter(parent))
 
@@ -154,8 +160,7 @@ def open_folder(root: int, path: bytes, *, made: list[bytes] | None = None) -> i
     return fd
 
 
-@dataclass(frozen=True)
-class Span:
+class Span(NamedTuple):
     """A piece of a member that is part of a stream."""
 
     path: bytes
@@ -173,52 +178,81 @@ class Opener(Protocol):
 class Stream(Protocol):
     """Bytes of a window by their offset in it."""
 
-    def read_into(self, offset: int, buffer: memoryview) -> list[Fault]:
-        """Fill `buffer`; what could not be read is zero and its ranges (in `buffer`) are returned."""
+    def read_into(self, offset: int, buffer: memoryview, hasher: MemberHasher | None = None) -> list[Fault]:
+        """Fill `buffer`; what could not be read is zero and its ranges (in `buffer`) are returned.
+
+        Small members that the buffer holds as a whole may be given to `hasher` on the way.
+        """
 
     def fetch(self, offset: int, length: int) -> None:
         """Let the system know that these bytes will be asked for soon."""
+
+
+class OpenStream(Protocol):
+    """The bytes of members end to end, to be closed when done."""
+
+    def read_into(self, offset: int, buffer: memoryview, hasher: MemberHasher | None = None) -> list[Fault]:
+        """See `Stream`."""
+
+    def close(self) -> None:
+        """Close all members."""
 
 
 class MemberStream:
     """The spans of many members end to end. May be read from several threads."""
 
     def __init__(
-        self, folder: Opener, spans: Sequence[Span], known_bad: Sequence[tuple[int, int]] = ()
+        self,
+        folder: Opener,
+        spans: Sequence[Span],
+        known_bad: Sequence[tuple[int, int]] = (),
+        *,
+        once: bool = False,
     ) -> None:
-        """`known_bad`: ranges (start, stop) of the stream that must not even be tried."""
+        """`known_bad`: ranges (start, stop) of the stream that must not even be tried.
+
+        `once`: what has been read will not be asked for again. Then large members that were not in the
+        system's cache leave it behind the reader, and otherwise when they are closed.
+        """
         self._folder = folder
         self._spans = [s for s in spans if s.length]
         self._starts = list(accumulate((s.length for s in self._spans), initial=0))
         self._known_bad = _joined(known_bad)
         self._open: OrderedDict[bytes, int | None] = OrderedDict()
         self._users: Counter[bytes] = Counter()
+        self._once = once
+        self._passing: set[bytes] = set()
+        """Members to be dropped from the cache."""
+
         self._lock = threading.Lock()
+        self._small = threading.Lock()
 
     @property
     def length(self) -> int:
         """Bytes of the whole stream."""
         return self._starts[-1]
 
-    def read_into(self, offset: int, buffer: memoryview) -> list[Fault]:
+    def read_into(self, offset: int, buffer: memoryview, hasher: MemberHasher | None = None) -> list[Fault]:
         """See `Stream`. Bytes past the end of the stream are zeros and no fault: they are virtual."""
         faults: list[Fault] = []
         done = 0
         for start, stop in self._known_bad:
             a, b = max(start - offset, 0), min(stop - offset, len(buffer))
             if a < b:
-                faults += self._try(offset, buffer, done, a)
+                faults += self._try(offset, buffer, done, a, hasher)
                 faults.append((a, b))
                 buffer[a:b] = bytes(b - a)
                 done = b
-        return faults + self._try(offset, buffer, done, len(buffer))
+        return faults + self._try(offset, buffer, done, len(buffer), hasher)
 
-    def _try(self, offset: int, buffer: memoryview, start: int, stop: int) -> list[Fault]:
+    def _try(
+        self, offset: int, buffer: memoryview, start: int, stop: int, hasher: MemberHasher | None
+    ) -> list[Fault]:
         """Read the bytes start..stop-1 of `buffer`, none of which is known to be bad."""
-        faults = self._read_spans(offset + start, buffer[start:stop])
+        faults = self._read_spans(offset + start, buffer[start:stop], hasher)
         return [(start + a, start + b) for a, b in faults]
 
-    def _read_spans(self, offset: int, buffer: memoryview) -> list[Fault]:
+    def _read_spans(self, offset: int, buffer: memoryview, hasher: MemberHasher | None) -> list[Fault]:
         faults: list[Fault] = []
         done = 0
         number = bisect_right(self._starts, offset) - 1
@@ -226,12 +260,50 @@ class MemberStream:
             span = self._spans[number]
             inside = offset + done - self._starts[number]
             size = min(len(buffer) - done, span.length - inside)
+            if size == span.length <= SMALL:
+                number, done = self._read_small(number, done, buffer, faults, hasher)
+                continue
             missing = self._read_member(span.path, span.offset + inside, buffer[done : done + size])
             faults += [(done + a, done + b) for a, b in missing]
             done += size
             number += 1
         buffer[done:] = bytes(len(buffer) - done)
         return faults
+
+    def _read_small(
+        self, number: int, done: int, buffer: memoryview, faults: list[Fault], hasher: MemberHasher | None
+    ) -> tuple[int, int]:
+        """Read small spans from `number` on into `buffer` from `done` on, as many as follow and fit.
+
+        One thread at a time: calls of a few microseconds each from several threads would make Python's
+        threads wait for one another at every call, and take several times as long.
+        """
+        with self._small:
+            while number < len(self._spans):
+                span = self._spans[number]
+                stop = done + span.length
+                if span.length > SMALL or stop > len(buffer):
+                    break
+                part = buffer[done:stop]
+                if not self._read_once(span, part):
+                    missing = self._read_member(span.path, span.offset, part)
+                    faults += [(done + a, done + b) for a, b in missing]
+                if hasher is not None and not span.offset:
+                    hasher.take(span.path, part)
+                number, done = number + 1, stop
+        return number, done
+
+    def _read_once(self, span: Span, buffer: memoryview) -> bool:
+        """Open, read, close; False when that does not give all bytes."""
+        throttle.take(len(buffer))
+        try:
+            fd = self._folder.open(span.path)
+            try:
+                return os.preadv(fd, [buffer], span.offset) == len(buffer)
+            finally:
+                os.close(fd)
+        except OSError:
+            return False
 
     def _read_member(self, path: bytes, offset: int, buffer: memoryview) -> list[Fault]:
         with self._lock:
@@ -241,7 +313,10 @@ class MemberStream:
             if fd is None:
                 buffer[:] = bytes(len(buffer))
                 return [(0, len(buffer))]
-            return read_into(fd, offset, buffer)
+            faults = read_into(fd, offset, buffer)
+            if self._once and path in self._passing:
+                pagecache.drop(fd, offset, len(buffer))
+            return faults
         except OSError as error:
             raise CannotCheck(f"{os.fsdecode(path)} cannot be read: {reason(error)}") from None
         finally:
@@ -263,6 +338,8 @@ class MemberStream:
         if fd is not None and not stat.S_ISREG(os.fstat(fd).st_mode):
             let_go(fd)
             fd = None
+        if fd is not None and pagecache.is_passing_through(fd):
+            self._passing.add(path)
         self._open[path] = fd
         return fd
 
@@ -274,38 +351,47 @@ class MemberStream:
         if not self._users[oldest]:
             fd = self._open.pop(oldest)
             del self._users[oldest]
-            if fd is not None:
-                let_go(fd)
+            self._let_go(oldest, fd)
+
+    def _let_go(self, path: bytes, fd: int | None) -> None:
+        """Close a member; the cache is left as it was found."""
+        if fd is None:
+            return
+        if path in self._passing:
+            pagecache.drop(fd)
+        let_go(fd)
 
     def fetch(self, offset: int, length: int) -> None:
         """See `Stream`. Only of a member that is open already: opening others ahead would cost more."""
         number = bisect_right(self._starts, offset) - 1
-        if not hasattr(os, "posix_fadvise") or not 0 <= number < len(self._spans):
+        if not 0 <= number < len(self._spans):
             return
         span = self._spans[number]
         with self._lock:
             fd = self._open.get(span.path)
-            if fd is not None:
-                inside = span.offset + offset - self._starts[number]
-                os.posix_fadvise(fd, inside, length, os.POSIX_FADV_WILLNEED)
+            if fd is not None and span.path in self._passing:
+                pagecache.fetch(fd, span.offset + offset - self._starts[number], length)
 
     def forget(self) -> None:
         """Let the system drop what it keeps of open members, so that they are read from the medium again."""
-        if hasattr(os, "posix_fadvise"):
-            with self._lock:
-                for fd in self._open.values():
-                    if fd is not None:
-                        os.posix_fadvise(fd, 0, 0, os.POSIX_FADV_DONTNEED)
+        with self._lock:
+            for fd in self._open.values():
+                if fd is not None:
+                    pagecache.drop(fd)
 
     def path_at(self, offset: int) -> bytes:
         """The member that holds byte `offset` of the stream."""
         return self._spans[bisect_right(self._starts, offset) - 1].path
 
+    def paths(self, start: int, stop: int) -> list[bytes]:
+        """The members that hold bytes of a range of the stream, in order."""
+        first = bisect_right(self._starts, start) - 1
+        return [span.path for span in self._spans[first : bisect_left(self._starts, stop)]]
+
     def close(self) -> None:
         """Close all open members."""
-        for fd in self._open.values():
-            if fd is not None:
-                let_go(fd)
+        for path, fd in self._open.items():
+            self._let_go(path, fd)
         self._open.clear()
 
 
@@ -320,6 +406,20 @@ def _joined(ranges: Sequence[tuple[int, int]]) -> list[tuple[int, int]]:
     return joined
 
 
+def bytes_of(stream: OpenStream, length: int) -> Iterator[tuple[memoryview, list[Fault]]]:
+    """The first bytes of a stream, piece by piece, and what could not be read of each; then it is closed."""
+    try:
+        buffer = aligned(min(PIECE, length)).data
+        for start in range(0, length, PIECE):
+            part = buffer[: length - start]
+            yield part, stream.read_into(start, part)
+    finally:
+        stream.close()
+
+
+Again = Callable[[Span], Iterable[tuple[memoryview, list[Fault]]]]
+
+
 class MemberHasher:
     """SHA-256 of members whose bytes come in order, span by span."""
 
@@ -329,11 +429,14 @@ class MemberHasher:
         self._current = hashlib.sha256()
         self._path: bytes | None = None
         self._left = 0
+        self._early: dict[bytes, bytes] = {}
+        """Digests of members that came before their turn, as a whole."""
 
     def expect(self, spans: Sequence[Span]) -> None:
         """Announce the spans whose bytes come next; the digests of earlier ones are forgotten."""
         self._spans = list(spans)
         self._digests = []
+        self._early.clear()
         self._begin()
 
     def _begin(self) -> None:
@@ -348,15 +451,50 @@ class MemberHasher:
                 return
             self._digests.append(self._current.digest())
 
+    def go_on(self, spans: Sequence[Span], digests: Sequence[bytes], position: int, again: Again) -> bool:
+        """Like `expect`, where an earlier run came as far as byte `position` and gave `digests` (see below).
+
+        A member that it had begun is hashed from its first byte, since SHA-256 half done cannot be kept;
+        `again` gives the bytes. False when some of them could not be read.
+        """
+        self.expect(spans)
+        self._digests, self._path = list(digests), None
+        self._begin()
+        if len(self._digests) == len(self._spans):
+            return True
+        span = self._spans[len(self._digests)]
+        inside = position - sum(s.length for s in self._spans[: len(self._digests)])
+        whole = True
+        for data, faults in again(Span(span.path, 0, span.offset + inside)):
+            self._current.update(data)
+            whole = whole and not faults
+        self._left -= inside
+        return whole
+
+    def digests_before(self, position: int) -> list[bytes]:
+        """The digests of the spans that end at or before byte `position`, which has been hashed."""
+        ends = list(accumulate(span.length for span in self._spans))
+        return self._digests[: bisect_right(ends, position)]
+
+    def take(self, path: bytes, data: memoryview) -> None:
+        """All bytes of a member whose turn may not have come. Any thread may call this."""
+        self._early[path] = hashlib.sha256(data).digest()
+
     def update(self, data: memoryview) -> None:
-        """The next bytes of the stream."""
-        while data:
-            part = data[: self._left]
-            self._current.update(part)
-            data = data[len(part) :]
-            self._left -= len(part)
+        """The next bytes of the stream, those that were taken before included."""
+        at = 0
+        while at < len(data):
+            span = self._spans[len(self._digests)]
+            size = min(self._left, len(data) - at)
+            # The last one may go on in the next window: then all of its bytes are needed here.
+            whole = size == span.length and len(self._digests) + 1 < len(self._spans)
+            digest = self._early.pop(span.path, None) if whole else None
+            if digest is None:
+                self._current.update(data[at : at + size])
+            at += size
+            self._left -= size
             if not self._left:
-                self._digests.append(self._current.digest())
+                self._digests.append(digest or self._current.digest())
                 self._begin()
 
     @property

@@ -6,9 +6,11 @@ import typer
 
 from oakum import __version__
 from oakum.cli import audit, describe, history, plan, protect, rehearse, repair, verify
+from oakum.cli.values import Command, Group
 
 app = typer.Typer(
     name="oakum",
+    cls=Group,
     help=(
         "Keep archived files whole: write a sidecar of parity beside them, find every flipped bit years "
         "later, and put the bytes right."
@@ -38,11 +40,11 @@ def oakum(
     """Options before the command; the help text stands above."""
 
 
-app.command("plan")(plan.plan)
-app.command("protect")(protect.protect)
-app.command("verify")(verify.verify)
-app.command("repair")(repair.repair)
-app.command("audit")(audit.audit)
-app.command("history")(history.history)
-app.command("rehearse")(rehearse.rehearse)
-app.command("describe")(describe.describe)
+app.command("plan", cls=Command)(plan.plan)
+app.command("protect", cls=Command)(protect.protect)
+app.command("verify", cls=Command)(verify.verify)
+app.command("repair", cls=Command)(repair.repair)
+app.command("audit", cls=Command)(audit.audit)
+app.command("history", cls=Command)(history.history)
+app.command("rehearse", cls=Command)(rehearse.rehearse)
+app.command("describe", cls=Command)(describe.describe)

@@ -5,10 +5,11 @@ from typing import Annotated
 
 import typer
 
-from oakum.cli.options import DEFAULT_MEMORY, Jobs, Json, Memory, Root, Sidecar, Unreadable
+from oakum.cli.options import DEFAULT_MEMORY, Jobs, Json, Memory, ReadRate, Root, Sidecar, Unreadable
 from oakum.cli.output import complain, emit
 from oakum.cli.progress import reporting
 from oakum.results import Outcome
+from oakum.throttle import reading_at
 
 _STATUS = {Outcome.INTACT: 0, Outcome.CORRECTABLE: 10, Outcome.UNCORRECTABLE: 20, Outcome.UNCHECKED: 30}
 
@@ -88,6 +89,7 @@ def audit(
     ] = False,
     memory: Memory = DEFAULT_MEMORY,
     jobs: Jobs = None,
+    read_rate: ReadRate = None,
 ) -> int:  # fmt: skip
     """Read everything, estimate error rates, name likely causes, and enter it all in the ledger."""
     from oakum.jobs.audit import AuditOptions
@@ -107,7 +109,7 @@ def audit(
         sidecar, root, unreadable, sample, seed, medium_id or "", counters, ledger or default_path(),
         resume, memory, jobs,
     )  # fmt: skip
-    with reporting(quiet) as progress:
+    with reporting(quiet) as progress, reading_at(read_rate):
         result = job(targets, options, progress=progress)
     if json:
         emit(documents.dump(audit_json.audit_document(result)) + "\n")

@@ -8,16 +8,23 @@ from oakum.cli.progress import reporting
 from oakum.errors import OakumError
 from oakum.progress import Progress
 from oakum.results import CheckResult
+from oakum.throttle import reading_at
 
 
 def check(
-    command: str, target: Path, *, as_json: bool, quiet: bool, job: Callable[[Progress], CheckResult]
+    command: str,
+    target: Path,
+    *,
+    as_json: bool,
+    quiet: bool,
+    read_rate: int | None,
+    job: Callable[[Progress], CheckResult],
 ) -> CheckResult:
     """Runs `job` under a progress display and writes its report; a failed one gets its document too."""
     from oakum.report import json, text
 
     try:
-        with reporting(quiet) as progress:
+        with reporting(quiet) as progress, reading_at(read_rate):
             result = job(progress)
     except OakumError as error:
         if as_json:

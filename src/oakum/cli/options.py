@@ -30,6 +30,14 @@ def parse_size(text: str | int) -> int:
     return nbytes
 
 
+def parse_rate(text: str) -> int:
+    """Bytes a second, as `parse_size` has them. Raises `typer.BadParameter`."""
+    rate = parse_size(text)
+    if not rate:
+        raise typer.BadParameter("at a rate of 0 nothing is ever read; give more")
+    return rate
+
+
 Json = Annotated[
     bool, typer.Option("--json", help="Print one JSON document instead of text.", show_default=False)
 ]
@@ -58,6 +66,16 @@ Jobs = Annotated[
     int | None,
     typer.Option("--jobs", "-j", metavar="N", min=1, help="Threads; as many as processors if not given."),
 ]
+ReadRate = Annotated[
+    int | None,
+    typer.Option(
+        "--read-rate",
+        metavar="SIZE",
+        parser=parse_rate,
+        help="Read at most so many bytes a second; as fast as possible if not given.",
+        show_default=False,
+    ),
+]
 Target = Annotated[Path, typer.Argument(metavar="TARGET", help="A protected file or folder, or a sidecar.")]
 Sidecar = Annotated[
     Path | None,
@@ -66,6 +84,12 @@ Sidecar = Annotated[
 Root = Annotated[
     Path | None,
     typer.Option("--root", metavar="FOLDER", help="Where the members are, if not beside the sidecar."),
+]
+Fresh = Annotated[
+    bool,
+    typer.Option(
+        "--fresh", help="Start afresh, also where an earlier run was interrupted.", show_default=False
+    ),
 ]
 Unreadable = Annotated[
     Path | None,

@@ -7,12 +7,13 @@ from typing import Annotated
 
 import typer
 
-from oakum.cli.options import DEFAULT_MEMORY, Depth, Jobs, Json, Memory, Quiet, parse_size
+from oakum.cli.options import DEFAULT_MEMORY, Depth, Fresh, Jobs, Json, Memory, Quiet, ReadRate, parse_size
 from oakum.cli.output import emit, tell
 from oakum.cli.progress import reporting
 from oakum.errors import UsageError
 from oakum.progress import Progress
 from oakum.results import ProtectResult
+from oakum.throttle import reading_at
 
 PIPE = Path("-")
 PIPE_DEPTH = 1 << 20
@@ -51,10 +52,12 @@ def protect(
             show_default=False,
         ),
     ] = False,
+    fresh: Fresh = False,
     json: Json = False,
     quiet: Quiet = False,
     memory: Memory = DEFAULT_MEMORY,
     jobs: Jobs = None,
+    read_rate: ReadRate = None,
 ) -> None:
     """Write the sidecar that protects files and folders."""
     options = _Options(code=code, depth=depth, overwrite=overwrite, memory=memory, jobs=jobs)
@@ -69,13 +72,13 @@ def protect(
             raise UsageError("--bag needs files that lie in a bag; what comes through a pipe lies nowhere")
         if read_back:
             raise UsageError("--read-back needs files; check what came through a pipe with oakum verify")
-        with reporting(quiet) as progress:
+        with reporting(quiet) as progress, reading_at(read_rate):
             result = _protect_pipe(name, output, options, progress)
     else:
         if name is not None:
             raise UsageError("--name is for what comes through a pipe; files keep their own names")
-        with reporting(quiet) as progress:
-            result = _protect_files(paths, output, read_back, bag, options, progress)
+        with reporting(quiet) as progress, reading_at(read_rate):
+            result = _protect_files(paths, output, read_back, bag, fresh, options, progress)
     _report(result, as_json=json, quiet=quiet, on_stderr=output == PIPE)
 
 
@@ -95,6 +98,7 @@ def _protect_files(
     output: Path | None,
     read_back: bool,
     bag: bool,
+    fresh: bool,
     options: _Options,
     progress: Progress,
 ) -> ProtectResult:
@@ -110,6 +114,7 @@ def _protect_files(
         overwrite=options.overwrite,
         read_back=read_back,
         bag=bag,
+        fresh=fresh,
         memory=options.memory,
         jobs=options.jobs,
         progress=progress,

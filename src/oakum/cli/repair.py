@@ -6,7 +6,18 @@ from typing import Annotated
 import typer
 
 from oakum.cli.checking import check
-from oakum.cli.options import DEFAULT_MEMORY, Jobs, Json, Memory, Quiet, Root, Sidecar, Target, Unreadable
+from oakum.cli.options import (
+    DEFAULT_MEMORY,
+    Jobs,
+    Json,
+    Memory,
+    Quiet,
+    ReadRate,
+    Root,
+    Sidecar,
+    Target,
+    Unreadable,
+)
 from oakum.cli.verify import STATUS as CHECKED
 from oakum.errors import UsageError
 from oakum.results import Outcome
@@ -66,6 +77,7 @@ def repair(
     quiet: Quiet = False,
     memory: Memory = DEFAULT_MEMORY,
     jobs: Jobs = None,
+    read_rate: ReadRate = None,
 ) -> int:
     """Write the corrected files beside the damaged ones, or put them right where they are."""
     _refuse_together(in_place, even_newer, undo, output=output, member=member, accept_loss=accept_loss)
@@ -77,6 +89,7 @@ def repair(
             target,
             as_json=json,
             quiet=quiet,
+            read_rate=read_rate,
             job=lambda progress: roll_back(
                 target, sidecar=sidecar, root=root, memory=memory, jobs=jobs, progress=progress
             ),
@@ -89,6 +102,7 @@ def repair(
         target,
         as_json=json,
         quiet=quiet,
+        read_rate=read_rate,
         job=lambda progress: job(
             target,
             sidecar=sidecar,

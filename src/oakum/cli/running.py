@@ -1,5 +1,6 @@
 """Runs the application: exit status, signals, and errors as one plain sentence."""
 
+import gc
 import io
 import os
 import signal
@@ -20,12 +21,21 @@ COULD_NOT = OakumError.status
 # A second signal within this time is the same wish once more; it must not break the tidying up.
 _SAME_WISH_SECONDS = 2.0
 
+_CYCLES_AFTER = 100_000
+"""Objects made before Python looks for cycles among them: it would do so after 700, over and over, while the
+list of a large set's members grows, in which there are none."""
+
 
 def main() -> NoReturn:
     """The console script. Signals end it with 128 + their number, after the jobs have tidied up."""
     for stream in (sys.stdout, sys.stderr):
         if isinstance(stream, io.TextIOWrapper):  # it is None where the parent has closed it
             stream.reconfigure(errors="backslashreplace")
+    gc.set_threshold(_CYCLES_AFTER)
+    # No command has a use for scipy, and for threads of BLAS; numba and numpy would spend a fifth of a second
+    # on getting them ready.
+    sys.modules.setdefault("scipy", None)  # type: ignore[arg-type]
+    os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
     _turn_signals_into_exceptions()
     try:
         status = run(sys.argv[1:])

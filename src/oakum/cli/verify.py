@@ -5,7 +5,19 @@ from typing import Annotated
 import typer
 
 from oakum.cli.checking import check
-from oakum.cli.options import DEFAULT_MEMORY, Jobs, Json, Memory, Quiet, Root, Sidecar, Target, Unreadable
+from oakum.cli.options import (
+    DEFAULT_MEMORY,
+    Fresh,
+    Jobs,
+    Json,
+    Memory,
+    Quiet,
+    ReadRate,
+    Root,
+    Sidecar,
+    Target,
+    Unreadable,
+)
 from oakum.results import Outcome
 
 STATUS = {Outcome.INTACT: 0, Outcome.CORRECTABLE: 10, Outcome.UNCORRECTABLE: 20, Outcome.UNCHECKED: 30}
@@ -24,10 +36,12 @@ def verify(
         ),
     ] = False,
     unreadable: Unreadable = None,
+    fresh: Fresh = False,
     json: Json = False,
     quiet: Quiet = False,
     memory: Memory = DEFAULT_MEMORY,
     jobs: Jobs = None,
+    read_rate: ReadRate = None,
 ) -> int:
     """Find damage and say whether it can be corrected; writes nothing."""
     from oakum.jobs.verify import verify as job
@@ -37,12 +51,14 @@ def verify(
         target,
         as_json=json,
         quiet=quiet,
+        read_rate=read_rate,
         job=lambda progress: job(
             target,
             sidecar=sidecar,
             root=root,
             digests_only=digests_only,
             unreadable=unreadable,
+            fresh=fresh,
             memory=memory,
             jobs=jobs,
             progress=progress,

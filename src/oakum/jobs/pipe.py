@@ -11,11 +11,12 @@ from typing import BinaryIO
 import numpy as np
 from numpy.typing import NDArray
 
+from oakum import throttle
 from oakum.algebra.concatenated import ConcatenatedCode
 from oakum.algebra.naming import resolve_code
 from oakum.encoding import RESERVE, Kernels, WindowEncoder, plan_reading
 from oakum.errors import OakumError, UsageError
-from oakum.files import Fault, NewFile
+from oakum.files import Fault, NewFile, aligned
 from oakum.geometry import Window, check_depth, window_depth
 from oakum.jobs.common import DEFAULT_MEMORY, absolute, announce_compiling, summarise
 from oakum.jobs.protect import geometry_of, make_bootstrap, pack_table
@@ -107,7 +108,7 @@ class _PipeJob:
                 f"windows of a depth of {depth} bytes need --memory {need}MiB or more; "
                 "give that, or a smaller --depth"
             ) from None
-        self._buffer = np.empty(step, np.uint8)
+        self._buffer = aligned(step)
 
     def sections(self, stream: BinaryIO, pools: Pools) -> Iterator[bytearray]:
         """The sections of the sidecar in order."""
@@ -135,7 +136,9 @@ class _PipeJob:
     def _fill(self, stream: BinaryIO, filled: int) -> int:
         view = self._buffer.data
         while filled < len(view):
-            data = stream.read(min(len(view) - filled, 1 << 20))
+            size = min(len(view) - filled, 1 << 20)
+            throttle.take(size)
+            data = stream.read(size)
             if not data:
                 break
             view[filled : filled + len(data)] = data
@@ -178,7 +181,9 @@ class HeldStream:
     def __init__(self, data: NDArray[np.uint8]) -> None:
         self._data = data.data
 
-    def read_into(self, offset: int, buffer: memoryview) -> list[Fault]:
+    def read_into(
+        self, offset: int, buffer: memoryview, hasher: MemberHasher | None = None
+    ) -> list[Fault]:
         """See `oakum.members.Stream`; what lies past the end is virtual zeros."""
         part = self._data[offset : offset + len(buffer)]
         buffer[: len(part)] = part

@@ -5,18 +5,22 @@ from __future__ import annotations
 import os
 import shutil
 import time
-from collections.abc import Sequence
-from dataclasses import dataclass
+from collections.abc import Iterator, Sequence
+from contextlib import closing, suppress
+from dataclasses import replace
+from functools import partial
+from itertools import accumulate, islice
 from pathlib import Path
+from typing import Any
 
-import numpy as np
-
+from oakum import __version__, pagecache
 from oakum.algebra.concatenated import ConcatenatedCode
 from oakum.algebra.naming import resolve_code
-from oakum.encoding import Changed, Kernels, ReadingPlan, Unreadable, WindowEncoder, plan_reading
+from oakum.encoding import Changed, Kernels, Leg, ReadingPlan, Unreadable, WindowEncoder, plan_reading
 from oakum.errors import CannotCheck, UsageError
-from oakum.files import NewFile
+from oakum.files import Fault, NewFile, take_away_leftovers
 from oakum.geometry import Geometry, Window, plan_windows
+from oakum.jobs import resuming
 from oakum.jobs.bag import into_bag, refuse_in_bag
 from oakum.jobs.common import (
     DEFAULT_MEMORY,
@@ -26,8 +30,10 @@ from oakum.jobs.common import (
     sidecar_path,
     summarise,
 )
+from oakum.jobs.halfway import Halfway, Keeper
 from oakum.jobs.replay import replacing
-from oakum.members import Folder, Member, MemberHasher, MemberStream, Span, collect
+from oakum.jobs.resuming import State, beside, key_of
+from oakum.members import Folder, Member, MemberHasher, MemberStream, Span, bytes_of, collect
 from oakum.pools import Pools
 from oakum.progress import Progress, Silent
 from oakum.results import ProtectResult
@@ -37,6 +43,9 @@ from oakum.sidecar.table import Kind, Piece, packed_length
 from oakum.sidecar.writing import Data, SectionWriter
 
 _NOT_BESIDE = "the sidecar does not lie beside what it protects; give --root when verifying"
+
+_NAMED = 3
+_AGAIN = "run protect again when nothing writes to it"
 
 
 def protect(
@@ -50,6 +59,7 @@ def protect(
     bag: bool = False,
     memory: int = DEFAULT_MEMORY,
     jobs: int | None = None,
+    fresh: bool = False,
     progress: Progress = Silent(),
 ) -> ProtectResult:
     """Protect files and folders with one sidecar.
@@ -59,6 +69,9 @@ def protect(
     `depth` in bytes cuts the stream into windows; None makes the whole stream one. `memory` bounds the
     buffers, in bytes. Raises UsageError for what cannot be meant and CannotCheck for what cannot be read or
     written; in both cases nothing is left behind and an older sidecar is untouched.
+
+    A run over a large set that is interrupted (KeyboardInterrupt and the like, or a kill) leaves a state
+    behind, and the next one goes on from there, unless it is to start `fresh`.
     """
     begin = time.monotonic()
     announce_compiling(progress)
@@ -79,16 +92,30 @@ def protect(
         notes.append(_NOT_BESIDE)
     length = sum(m.size for m in members)
     windows = plan_windows(length, chosen.outer.k, depth)
-    with replacing(sidecar, overwrite), NewFile(sidecar, overwrite=overwrite) as file, Pools(jobs) as pools:
-        folder = Folder(root)
-        try:
+    with closing(Folder(root)) as folder:
+        state = _state(sidecar, folder, members, (chosen.name, CodeParameters.of(chosen), depth, memory))
+        begun = None if fresh else state.load()
+        run = state.key[:16]
+        with (
+            replacing(sidecar, overwrite),
+            NewFile(sidecar, overwrite=overwrite, go_on=begun is not None, run=run) as file,
+            Pools(jobs) as pools,
+        ):
             job = _Job(chosen, members, windows, depth or 0, memory, pools, progress)
-            size = job.write(folder, file)
-            _refuse_changed(folder, members)
-        finally:
-            folder.close()
-        progress.phase("bringing the sidecar to the medium", None)
-        file.commit(size)
+            halfway = _usable(begun, file, windows) if begun is not None else None
+            if halfway is not None:
+                file.keep = True
+                notes.append(job.skipped(halfway))
+                progress.note(notes[-1])
+            elif run:
+                notes += [state.of_no_use] if state.there and not fresh else []
+                state.remove()  # Before anything is written that it does not speak of.
+                take_away_leftovers(sidecar, but=run)
+            with state.needed():
+                size = job.write(folder, file, state, halfway or Halfway())
+                _refuse_changed(folder, members)
+                progress.phase("bringing the sidecar to the medium", None)
+                file.commit(size)
     if holder is not None:
         holder.enter(sidecar)
     if read_back:
@@ -99,6 +126,24 @@ def protect(
     )  # fmt: skip
 
 
+def _state(sidecar: Path, folder: Folder, members: Sequence[Member], facts: tuple[object, ...]) -> State:
+    """The state file of this run; small sets have none, but one that is there is taken away in the end."""
+    place = beside(sidecar)
+    if sum(m.size for m in members) < resuming.LEAST and not os.path.lexists(place):
+        return State([], "")
+    return State([place], key_of(folder, (m.path for m in members), __version__, *facts))
+
+
+def _usable(begun: dict[str, Any], file: NewFile, windows: Sequence[Window]) -> Halfway | None:
+    """The state of an earlier run if it belongs to the unfinished sidecar; otherwise that is emptied."""
+    with suppress(KeyError, TypeError, ValueError):
+        halfway = Halfway.unpack(begun)
+        if file.found and 0 <= halfway.window < len(windows):
+            return halfway
+    file.resize(0)
+    return None
+
+
 def _refuse_inside(sidecar: Path, places: Sequence[Path]) -> None:
     for place in places:
         if place.is_dir() and not place.is_symlink() and sidecar.is_relative_to(place):
@@ -107,6 +152,13 @@ def _refuse_inside(sidecar: Path, places: Sequence[Path]) -> None:
             )
         if sidecar == place:
             raise UsageError(f"{sidecar} cannot be both what is protected and the sidecar")
+
+
+def _one_of(paths: Sequence[bytes]) -> str:
+    names = [os.fsdecode(path) for path in paths[:_NAMED]]
+    if len(paths) > _NAMED:
+        names.append(f"one of {len(paths) - _NAMED:,} others")
+    return " or ".join(names)
 
 
 def _refuse_changed(folder: Folder, members: Sequence[Member]) -> None:
@@ -120,10 +172,7 @@ def _refuse_changed(folder: Folder, members: Sequence[Member]) -> None:
                 "run protect again when nothing changes"
             ) from None
         if member.kind is Kind.FILE and (now.st_size, now.st_mtime_ns) != (member.size, member.modified_ns):
-            raise CannotCheck(
-                f"{os.fsdecode(member.path)} changed while it was read; "
-                "run protect again when nothing writes to it"
-            )
+            raise CannotCheck(f"{os.fsdecode(member.path)} changed while it was read; {_AGAIN}")
 
 
 def _read_back(sidecar: Path, root: Path, memory: int, jobs: int | None, progress: Progress) -> None:
@@ -135,14 +184,6 @@ def _read_back(sidecar: Path, root: Path, memory: int, jobs: int | None, progres
         raise CannotCheck(
             f"what was read back from {sidecar} is not what was written; do not trust this medium"
         )
-
-
-@dataclass
-class _Extent:
-    """A member and where it begins in the stream."""
-
-    member: Member
-    start: int
 
 
 class _Job:
@@ -165,35 +206,58 @@ class _Job:
         self._pools = pools
         self._progress = progress
         self._hasher = MemberHasher()
+        self._hashing = False
         self._kernels = Kernels.of(code)
-        starts = np.cumsum([0] + [m.size for m in members]).tolist()
-        self._extents = [_Extent(m, start) for m, start in zip(members, starts, strict=False)]
-        self._total = starts[-1]
+        self._members = members
+        self._total = sum(m.size for m in members)
         geometries = [geometry_of(code, w) for w in windows]
         self._plans = [plan_reading(g, memory) for g in geometries]
         self._geometries = geometries
         self.reads = max(plan.reads for plan in self._plans)
         self.burst = min((g.guaranteed_burst for g in geometries[:-1] or geometries), default=0)
 
-    def write(self, folder: Folder, file: NewFile) -> int:
-        """Write the sidecar into `file`; returns its length in bytes."""
+    @property
+    def _to_read(self) -> int:
+        """Bytes to be read in all."""
+        return sum(w.length * p.reads for w, p in zip(self._windows, self._plans, strict=True))
+
+    def _read_before(self, halfway: Halfway) -> int:
+        """Those of them that were read when a run had come so far."""
+        number = halfway.window
+        done = sum(w.length * p.reads for w, p in zip(self._windows[:number], self._plans, strict=False))
+        if halfway.legs is not None:
+            g, (first, second) = self._geometries[number], halfway.legs
+            done += min(first.at, g.length) + g.length * second.at // g.depth
+        return done
+
+    def skipped(self, halfway: Halfway) -> str:
+        """A sentence on what need not be done again."""
+        return (
+            f"an earlier run was interrupted; {self._read_before(halfway):,} of "
+            f"{self._to_read:,} bytes need not be read again"
+        )
+
+    def write(self, folder: Folder, file: NewFile, state: State, halfway: Halfway) -> int:
+        """Write the sidecar into `file`, from `halfway` on; returns its length in bytes."""
         self._progress.phase(
-            "reading" if self.reads == 1 else "reading twice", sum(
-                w.length * p.reads for w, p in zip(self._windows, self._plans, strict=True)
-            )
-        )  # fmt: skip
+            "reading" if self.reads == 1 else "reading twice", self._to_read - self._read_before(halfway)
+        )
         self._refuse_full(file)
-        place, first, parent = 0, bytes(16), bytes(16)
-        at = 0
-        for window, geometry, plan in zip(self._windows, self._geometries, self._plans, strict=True):
-            pieces, at = self._pieces(window, at)
-            layout = Layout(geometry, sum(packed_length(p.path, p.target) for p in pieces))
+        begin, keeper = halfway.window, Keeper(file, state)
+        place, first, parent = halfway.place, halfway.first, halfway.parent
+        tables = pieces_of(self._members, self._windows)
+        rows = zip(self._windows, self._geometries, self._plans, tables, strict=True)
+        for window, geometry, plan, pieces in islice(rows, begin, None):
+            layout = Layout(geometry, table_length(pieces))
             bootstrap = make_bootstrap(
                 self._code, layout, window, self._set_depth, self._total, place, len(pieces),
                 LAST_SECTION if window is self._windows[-1] else 0, parent, first,
             )  # fmt: skip
             writer = SectionWriter(bootstrap, layout, Placed(file, place))
-            done = self._encode(folder, writer, geometry, plan, pieces)
+            if window.index > halfway.window:
+                halfway = Halfway(window.index, place, first, parent)
+                keeper.keep(partial(replace, halfway))
+            done = self._encode(folder, writer, geometry, plan, pieces, halfway, keeper)
             parent = done.identity
             first = first if window.index else done.identity
             place += layout.size
@@ -206,61 +270,54 @@ class _Job:
         geometry: Geometry,
         plan: ReadingPlan,
         pieces: Sequence[Piece],
+        halfway: Halfway,
+        keeper: Keeper,
     ) -> Bootstrap:
         spans = [Span(p.path, p.offset, p.length) for p in pieces if p.kind is Kind.FILE]
-        stream = MemberStream(folder, spans)
+        once = plan.reads == 1 or not pagecache.holds(geometry.length)
+        stream = MemberStream(folder, spans, once=once)
+
+        def mark(first: Leg, second: Leg) -> None:
+            digests = partial(self._hasher.digests_before, first.at)
+            keeper.keep(lambda: replace(halfway, digests=digests(), legs=(first, second)))
+
         try:
-            self._hasher.expect(spans)
+            self._expect(folder, spans, halfway)
             encoder = WindowEncoder(
-                geometry, self._kernels, writer, stream, self._hasher, self._pools, self._progress.advance
-            )
-            encoder.run(plan)
-        except (Unreadable, Changed) as error:
+                geometry, self._kernels, writer, stream, self._hasher, self._pools,
+                self._progress.advance, mark,
+            )  # fmt: skip
+            encoder.run(plan, halfway.legs)
+        except Unreadable as error:
             name = os.fsdecode(stream.path_at(error.offset))
-            what = (
-                "could not be read to its end"
-                if isinstance(error, Unreadable)
-                else "changed while it was read"
-            )
-            raise CannotCheck(f"{name} {what}; run protect again when nothing writes to it") from None
+            raise CannotCheck(f"{name} could not be read to its end; {_AGAIN}") from None
+        except Changed as error:
+            _refuse_changed(folder, self._members)
+            raise CannotCheck(
+                f"{_one_of(stream.paths(error.start, error.stop))} changed while it was read; {_AGAIN}"
+            ) from None
         finally:
             stream.close()
         return writer.finish(pack_table(pieces, self._hasher.digests))
 
-    def _pieces(self, window: Window, at: int) -> tuple[list[Piece], int]:
-        """The entries of one window, from extent `at` on; returns where the next window begins."""
-        end = window.start + window.length
-        last = window is self._windows[-1]
-        pieces = []
-        while at < len(self._extents):
-            extent = self._extents[at]
-            m, stop = extent.member, extent.start + extent.member.size
-            if extent.start >= end and not last:
-                break
-            offset = max(0, window.start - extent.start)
-            length = max(0, min(stop, end) - extent.start - offset)
-            pieces.append(
-                Piece(
-                    m.kind,
-                    m.path,
-                    m.mode,
-                    m.modified_ns,
-                    m.size,
-                    offset,
-                    length,
-                    stop <= end,
-                    target=m.target,
-                )
-            )
-            if stop > end:
-                break
-            at += 1
-        return pieces, at
+    def _expect(self, folder: Folder, spans: Sequence[Span], halfway: Halfway) -> None:
+        """Tell the hasher what comes; at the beginning of a run it has to catch up with an earlier one."""
+        if self._hashing:
+            self._hasher.expect(spans)
+            return
+        self._hashing = True
+        done = halfway.legs[0].at if halfway.legs else 0
+
+        def again(span: Span) -> Iterator[tuple[memoryview, list[Fault]]]:
+            return bytes_of(MemberStream(folder, [span]), span.length)
+
+        if not self._hasher.go_on(spans, halfway.digests, done, again):
+            raise Unreadable(done)
 
     def _refuse_full(self, file: NewFile) -> None:
         """Say before the work that there is no room, not after it."""
         need = sum(g.body for g in self._geometries)
-        free = shutil.disk_usage(file.path.parent).free
+        free = shutil.disk_usage(file.path.parent).free + os.fstat(file.fd).st_blocks * 512
         if need > free:
             raise CannotCheck(
                 f"{file.path.parent} has room for {free:,} bytes and the sidecar "
@@ -304,6 +361,35 @@ def make_bootstrap(
         window.depth, set_depth, total, place, layout.table_length, 0, entries, flags,
         parent, first,
     )  # fmt: skip
+
+
+def pieces_of(members: Sequence[Member], windows: Sequence[Window]) -> Iterator[list[Piece]]:
+    """The entries of the member tables of one window after the other, without digests.
+
+    A member that is empty, or no file, belongs to the window in which the next byte lies.
+    """
+    starts = list(accumulate((m.size for m in members), initial=0))
+    at = 0
+    for window in windows:
+        end, last = window.start + window.length, window is windows[-1]
+        pieces = []
+        while at < len(members) and (starts[at] < end or last):
+            m, start, stop = members[at], starts[at], starts[at + 1]
+            offset = max(0, window.start - start)
+            length = max(0, min(stop, end) - start - offset)
+            pieces.append(
+                Piece(m.kind, m.path, m.mode, m.modified_ns, m.size, offset, length, stop <= end,
+                      target=m.target)
+            )  # fmt: skip
+            if stop > end:
+                break
+            at += 1
+        yield pieces
+
+
+def table_length(pieces: Sequence[Piece]) -> int:
+    """Bytes of the member table of some entries."""
+    return sum(packed_length(p.path, p.target) for p in pieces)
 
 
 def pack_table(pieces: Sequence[Piece], digests: Sequence[bytes]) -> bytes:

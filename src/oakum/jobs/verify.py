@@ -3,18 +3,23 @@
 from __future__ import annotations
 
 import hashlib
+import os
 import time
 from collections.abc import Iterator
 from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import TYPE_CHECKING
 
+from oakum import __version__
 from oakum.algebra.concatenated import ConcatenatedCode
 from oakum.errors import FormatError
+from oakum.jobs import resuming
 from oakum.jobs.checking import UNKNOWN, Finding, WindowCheck
 from oakum.jobs.common import DEFAULT_MEMORY, announce_compiling, find_sidecar, summarise
-from oakum.jobs.opening import KnownMember, ProtectedSet, open_set
+from oakum.jobs.opening import KnownMember, ProtectedSet, lost_sections, open_set
 from oakum.jobs.replay import unfinished
+from oakum.jobs.resuming import State, beside, in_state_folder, key_of
+from oakum.jobs.scanned import Scanned
 from oakum.jobs.unreadable import read_unreadable
 from oakum.members import MemberHasher
 from oakum.pools import Pools
@@ -36,26 +41,60 @@ def verify(
     unreadable: Path | None = None,
     memory: int = DEFAULT_MEMORY,
     jobs: int | None = None,
+    fresh: bool = False,
     progress: Progress = Silent(),
 ) -> CheckResult:
     """Check a protected set against its sidecar and say what could be corrected.
 
     `digests_only` leaves out the members' SHA-256. `unreadable` names a CSV of `path,offset,length` that
     must not be read. Raises CannotCheck where nothing can be said at all.
+
+    A run over a large set that is interrupted (KeyboardInterrupt and the like, or a kill) leaves a state
+    behind, and the next one goes on from there, unless it is to start `fresh`.
     """
     begin = time.monotonic()
-    opened = open_set(find_sidecar(target, sidecar), root, read_unreadable(unreadable), target)
+    opened = open_set(find_sidecar(target, sidecar), root, read_unreadable(unreadable), target, progress)
+    opened.once = True
     try:
         with Pools(jobs) as pools:
             check = SetCheck(opened, pools, progress)
+            state = _state(opened, digests_only)
+            check.scanned = Scanned(state, opened.sections, fresh=fresh)
+            if check.scanned.skipped:
+                opened.notes.append(_skipped(check.scanned.skipped, opened))
+                progress.note(opened.notes[-1])
+            elif state.there and not fresh:
+                opened.notes.append(state.of_no_use)
             try:
-                tally = check.run(hashing=not digests_only)
+                with state.needed():
+                    tally = check.run(hashing=not digests_only)
             finally:
                 check.close()
         result = result_of("verify", target, check, tally, time.monotonic() - begin)
         return replace(result, notes=(*result.notes, *_warnings(check)))
     finally:
         opened.close()
+
+
+def _state(opened: ProtectedSet, digests_only: bool) -> State:
+    """The state file of this run, beside the sidecar or in the user's state folder; small sets have none."""
+    sidecar = opened.path
+    places = [beside(sidecar), *filter(None, [in_state_folder(sidecar)])]
+    if sum(s.geometry.length for s in opened.sections) < resuming.LEAST:
+        places = [place for place in places if os.path.lexists(place)]
+    if not places:
+        return State([], "")
+    found = os.stat(sidecar)
+    as_it_is = found.st_dev, found.st_ino, found.st_size, found.st_mtime_ns, found.st_ctime_ns
+    identities = [s.bootstrap.identity for s in opened.sections]
+    facts = __version__, as_it_is, identities, digests_only, sorted(opened.unreadable.items())
+    return State(places, key_of(opened.folder, opened.members, *facts))
+
+
+def _skipped(nbytes: int, opened: ProtectedSet) -> str:
+    """A sentence on what need not be read again."""
+    length = sum(s.geometry.length for s in opened.sections)
+    return f"an earlier run was interrupted; {nbytes:,} of {length:,} bytes need not be read again"
 
 
 def _warnings(check: SetCheck) -> Iterator[str]:
@@ -94,6 +133,7 @@ class SetCheck:
             raise FormatError("the sections of this sidecar use different codes; it was pieced together")
         self._decoders: Decoders | None = None
         self.windows: list[WindowCheck] = []
+        self.scanned: Scanned | None = None
 
     def decoders(self) -> Decoders:
         """The compiled decoders, made when first needed: intact sets never wait for them."""
@@ -107,11 +147,14 @@ class SetCheck:
     def scan(self, *, hashing: bool) -> None:
         """Read everything in order, and note what is not right."""
         opened = self.opened
-        self.progress.phase("reading", sum(s.geometry.length + s.geometry.body for s in opened.sections))
+        total = sum(s.geometry.length + s.geometry.body for s in opened.sections)
+        self.progress.phase("reading", total - (0 if self.scanned is None else self.scanned.skipped))
         hasher = MemberHasher() if hashing else None
         for number in range(len(opened.sections)):
             window = WindowCheck(opened, number, self.progress, self.pools)
             self.windows.append(window)
+            if self.scanned is not None:
+                self.scanned.begin(window, hasher)
             self.scan_window(window, hasher)
         self._settle_members(hashing=hashing)
 
@@ -126,6 +169,8 @@ class SetCheck:
         """Without SHA-256, members are right when all their cells are and nothing else speaks against it."""
         damaged: set[bytes] = set()
         for window in self.windows:
+            if not window.g.length or not window.has_damage(0, window.g.length, unknown=hashing):
+                continue
             place = 0
             for piece in window.pieces:
                 if piece.length and window.has_damage(place, place + piece.length, unknown=hashing):
@@ -139,14 +184,9 @@ class SetCheck:
                 member.presumed = sound
             elif sound and not member.right and member.sha256 is None:  # Its last window is lost.
                 member.right = True
-            elif sound and not member.right and self.incomplete:  # An earlier one is.
+            elif sound and not member.right and self.opened.incomplete:  # An earlier one is.
                 member.right = self._has_its_sha256(member)
             member.checked = member.right or member.presumed or not sound
-
-    @property
-    def incomplete(self) -> bool:
-        """Whether sections between others are lost."""
-        return [s.bootstrap.window for s in self.opened.sections] != list(range(len(self.opened.sections)))
 
     def _has_its_sha256(self, member: KnownMember) -> bool:
         digest = hashlib.sha256()
@@ -167,7 +207,7 @@ class SetCheck:
             self.progress.phase("decoding", sum(len(w.dirty_blocks()) * w.block_bytes for w in self.windows))
         for window in self.windows:
             tally.add_window(window)
-            for finding in window.findings(self.decoders, keep=False):
+            for finding in window.findings(self.decoders):
                 tally.add(finding)
                 self.take(finding)
                 self.progress.advance(window.block_bytes)
@@ -192,7 +232,8 @@ def result_of(command: str, target: Path, check: SetCheck, tally: Tally, seconds
         outcome = Outcome.CORRECTABLE
     return CheckResult(
         command, target, outcome, summarise(check.code), tally.totals,
-        tuple(sorted(tally.blocks, key=_order)), members, sidecar, seconds, tuple(check.opened.notes),
+        tuple(sorted(tally.blocks, key=_order)), members, sidecar, seconds,
+        (*lost_sections(check.opened), *check.opened.notes),
     )  # fmt: skip
 
 
