@@ -18,6 +18,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from oakum.errors import UsageError
+from oakum.results import Assumption
 
 Bytes = NDArray[np.uint8]
 Range = tuple[int, int]
@@ -247,27 +248,18 @@ PUBLISHED, SECOND_HAND, MEMORY, ASSUMED = "published", "second-hand", "memory", 
 
 
 @dataclass(frozen=True)
-class Figure:
-    """One number that a preset rests on: what it says, its source, and how well we know it."""
-
-    text: str
-    source: str
-    mark: str
-
-
-@dataclass(frozen=True)
 class Medium:
     """A kind of medium: the damage that stands for it, and the figures behind that."""
 
     name: str
     title: str
     runs: tuple[Runs, ...]
-    figures: tuple[Figure, ...]
+    figures: tuple[Assumption, ...]
     flip_rate: float = 0.0
 
 
 _SECTOR = 4096
-_ONE_READ = Figure("every bit is read once a year", "our assumption", ASSUMED)
+_ONE_READ = Assumption("every bit is read once a year", "our assumption", ASSUMED)
 _HOST = "as the host sees it, after the drive's own correction"
 
 MEDIA = {
@@ -279,18 +271,18 @@ MEDIA = {
             # 33,024 of 37,856 bytes of a product code word are lost together: sixteen sectors of 2,048.
             (Runs(((16 * 2048, 1.0),), 1.0, readable=False, cluster=4, within=64 * 16 * 2048),),
             (
-                Figure(
+                Assumption(
                     "a product code word of a DVD holds 33,024 bytes, which fall together",
                     "ECMA-267",
                     PUBLISHED,
                 ),
-                Figure(
+                Assumption(
                     "act now at a DVD PI SUM8 of 280, a BD symbol error rate of 1e-3: rates on the disc, "
                     "before the drive's correction",
                     "JIS Z 6017",
                     SECOND_HAND,
                 ),
-                Figure(
+                Assumption(
                     f"past it 1 group of 16 sectors per TB and year is lost, {_HOST}, in clusters of 4",
                     "no figure for this is known to us",
                     ASSUMED,
@@ -302,9 +294,11 @@ MEDIA = {
             "LTO-9 tape",
             (Runs(((1 << 20, 1.0),), 8 * TB * 1e-20, readable=False),),
             (
-                Figure(f"1 uncorrectable bit in 1e20 read, {_HOST}", "makers' data sheets", SECOND_HAND),
-                Figure("LTO-8 ten times worse; LTO-3 under 1 in 1e17", "makers' data sheets", SECOND_HAND),
-                Figure("an error takes 1 MiB with it", "our assumption", ASSUMED),
+                Assumption(f"1 uncorrectable bit in 1e20 read, {_HOST}", "makers' data sheets", SECOND_HAND),
+                Assumption(
+                    "LTO-8 ten times worse; LTO-3 under 1 in 1e17", "makers' data sheets", SECOND_HAND
+                ),
+                Assumption("an error takes 1 MiB with it", "our assumption", ASSUMED),
                 _ONE_READ,
             ),
         ),
@@ -316,19 +310,19 @@ MEDIA = {
                 Runs(((1, 0.1), (512, 0.1), (64 << 10, 0.8)), 1e-3),
             ),
             (
-                Figure(f"1 sector in 1e15 bits read, {_HOST}", "makers' data sheets", PUBLISHED),
-                Figure(
+                Assumption(f"1 sector in 1e15 bits read, {_HOST}", "makers' data sheets", PUBLISHED),
+                Assumption(
                     "consumer disks 1 in 1e14, 15K SAS 1 in 1e16; a second bad sector lies mostly within 100",
                     "makers' data sheets; studies of latent sector errors",
                     SECOND_HAND,
                 ),
-                Figure("clusters of 2 sectors on average", "our assumption", ASSUMED),
-                Figure(
+                Assumption("clusters of 2 sectors on average", "our assumption", ASSUMED),
+                Assumption(
                     "silently wrong runs: a tenth single bits, a tenth 512 bytes, most others 64 KiB",
                     "a study of disks, 2007",
                     SECOND_HAND,
                 ),
-                Figure("0.001 such runs per TB and year", "our assumption", ASSUMED),
+                Assumption("0.001 such runs per TB and year", "our assumption", ASSUMED),
                 _ONE_READ,
             ),
         ),
@@ -337,10 +331,10 @@ MEDIA = {
             "flash without power, within its retention time",
             (Runs(((_SECTOR, 1.0),), 8 * TB * 1e-15, readable=False),),
             (
-                Figure(
+                Assumption(
                     f"1 sector in 1e15 bits read (client), {_HOST}; enterprise 1e16", "JESD218", SECOND_HAND
                 ),
-                Figure(
+                Assumption(
                     "held only for the retention at rated wear: 1 year unpowered at 30 C (client), 3 months "
                     "at 40 C (enterprise); later we know of no figure",
                     "JESD218",

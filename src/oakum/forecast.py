@@ -25,7 +25,7 @@ from oakum.algebra.inner import InnerCode
 from oakum.algebra.outcomes import Floats, log_sum, symbol_chances
 from oakum.channel import Channel, Runs
 from oakum.geometry import CELL, whole_depth, window_depth
-from oakum.measured import MeasuredCurve, measured_curve
+from oakum.measured import measured_curve
 from oakum.probability import (
     IMPOSSIBLE,
     ColumnChances,
@@ -121,12 +121,14 @@ def forecast(shape: Shape, channel: Channel) -> Loss:
     total = sum(exposed * windows.columns for windows in shape.alike)
     parts = [_Forecast(windows, channel, shape.length, exposed, total).loss() for windows in shape.alike]
     measured = [part.measured for part in parts if part.measured is not None]
+    expected = [part.expected for part in parts if part.expected is not None]
     worst = max(parts, key=lambda part: part.column)
     return Loss(
         worst.column,
         (max(p.block[0] for p in parts), max(p.block[1] for p in parts)),
         (max(p.stream[0] for p in parts), _capped(*(p.stream[1] for p in parts))),
         _capped(*measured) if len(measured) == len(parts) else None,
+        _capped(*expected) if len(expected) == len(parts) else None,
     )
 
 
@@ -186,7 +188,7 @@ class _Forecast:
                 in_block + np.log(s.blocks), swamped + np.log(s.number), self._crossings + np.log(s.number)
             ),
         )
-        return Loss(column, _ordered(column, block), _ordered(column, stream), self._measured())
+        return Loss(column, _ordered(column, block), _ordered(column, stream), *self._with_feedback())
 
     @cached_property
     def _columns(self) -> ColumnChances:
@@ -290,25 +292,24 @@ class _Forecast:
 
     # -- feedback
 
-    def _measured(self) -> float | None:
-        """ln of the most that the stream's chance can be, by the measured curve of the code."""
-        if self._families or self.channel.spare_sidecar:
-            return None
+    def _with_feedback(self) -> tuple[float | None, float | None]:
+        """ln of the stream's chance by the measured curve of the code: the most it can be, and what it is.
+
+        Blocks share neither words nor columns: they are lost independently.
+        """
+        rate, blocks = self.channel.final_flip_rate, self.windows.blocks
         curve = measured_curve(self.windows.code, self.windows.width)
-        if curve is None or not self.channel.final_flip_rate:
-            return None
-        return _of_many(curve, self.channel.final_flip_rate, self.windows.blocks)
+        if curve is None or not rate or self._families or self.channel.spare_sidecar:
+            return None, None
+        most = log_any(float(np.log(min(1.0, curve.at_most(rate)))), blocks)
+        estimate = curve.estimate(rate) if curve.width == self.windows.width else None
+        return most, None if estimate is None else log_any(float(np.log(estimate)), blocks)
 
 
 @lru_cache(64)
 def _column_chances(n: int, inner: InnerCode, rate: float) -> ColumnChances:
     """Shared by all outer codes of one length: the chances of the symbols are the same."""
     return ColumnChances(n, symbol_chances(inner, rate))
-
-
-def _of_many(curve: MeasuredCurve, rate: float, blocks: int) -> float:
-    """Blocks share neither words nor columns: they are lost independently."""
-    return log_any(float(np.log(min(1.0, curve.at_most(rate)))), blocks)
 
 
 def _capped(*terms: float) -> float:

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass, field
 from enum import StrEnum
+from math import log
 from pathlib import Path
 
 
@@ -171,6 +172,8 @@ class Description:
 
 # -- plan and rehearse
 
+_SURE = 0.9999
+
 
 @dataclass(frozen=True)
 class Loss:
@@ -179,13 +182,14 @@ class Loss:
     `column` is that of one outer codeword in one pass of the decoder. Columns that share words are lost
     together rather than one by one; `block` and `stream` are therefore bounds, (at least, at most), in one
     pass. `measured` is the most that the stream's chance can be with feedback, by the decoder's measured
-    curve; None where there is none.
+    curve, and `expected` what it is by that; None where there is none, or it does not go so far.
     """
 
     column: float
     block: tuple[float, float]
     stream: tuple[float, float]
     measured: float | None = None
+    expected: float | None = None
 
     @property
     def at_most(self) -> float:
@@ -250,6 +254,11 @@ class PlanResult:
     seconds: float = 0.0
     notes: tuple[str, ...] = ()
 
+    @property
+    def hopeless(self) -> bool:
+        """Whether loss is as good as certain even with the recommended code."""
+        return self.recommended.period.at_most > log(_SURE)
+
 
 @dataclass(frozen=True)
 class Trial:
@@ -290,6 +299,9 @@ class RehearsalResult:
     level: float
     interval: tuple[float, float] | None
     predicted: Loss | None
+    flip_rate: float = 0.0
+    """The chance of a bit to differ at the time of reading."""
+
     limit: Limit | None = None
     seconds: float = 0.0
     notes: tuple[str, ...] = ()

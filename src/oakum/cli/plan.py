@@ -1,48 +1,29 @@
 """`oakum plan`."""
 
 from pathlib import Path
-from typing import Annotated
+from typing import TYPE_CHECKING, Annotated
 
 import typer
 
-from oakum.cli.damage import (
-    BurstLength,
-    Bursts,
-    BurstsPerTb,
-    FlipRate,
-    LostShare,
-    Medium,
-    SectorCluster,
-    SectorSize,
-    SectorsPerTb,
-    SpareSidecar,
-    Years,
-    parse_lengths,
-    parse_share,
-)
+from oakum.cli.damage import parse_share, takes_damage
 from oakum.cli.options import DEFAULT_MEMORY, Depth, Jobs, Json, Memory, Quiet, parse_size
 from oakum.cli.output import emit
 from oakum.errors import CannotCheck
 
+if TYPE_CHECKING:
+    from oakum.jobs.damage import Wishes
 
+
+@takes_damage
 def plan(
     path: Annotated[
-        Path | None, typer.Argument(metavar="[PATH]", help="What is to be protected; or give --size.")
+        Path | None, typer.Argument(metavar="PATH", help="What is to be protected; or give --size.")
     ] = None,
     size: Annotated[
         int | None, typer.Option("--size", metavar="SIZE", parser=parse_size, help="Plan for so much data.")
     ] = None,
-    medium: Medium = None,
-    flip_rate: FlipRate = None,
-    burst_length: BurstLength = None,
-    bursts_per_tb: BurstsPerTb = None,
-    bursts: Bursts = None,
-    sector_size: SectorSize = None,
-    sectors_per_tb: SectorsPerTb = None,
-    sector_cluster: SectorCluster = None,
-    lost_share: LostShare = None,
-    years: Years = None,
-    spare_sidecar: SpareSidecar = False,
+    *,
+    wishes: "Wishes",
     overhead: Annotated[
         float | None,
         typer.Option("--overhead", metavar="SHARE", parser=parse_share, help="Most parity there may be."),
@@ -61,15 +42,10 @@ def plan(
     _jobs: Jobs = None,
 ) -> None:
     """Choose a code for a medium, a period and a budget; gives the chance of loss."""
-    from oakum.jobs.damage import Wishes
     from oakum.jobs.plan import plan as job
     from oakum.report import json as json_report
     from oakum.report import plan_json, text
 
-    wishes = Wishes(
-        medium, flip_rate, parse_lengths(burst_length), bursts_per_tb, bursts, sector_size, sectors_per_tb,
-        sector_cluster, lost_share, years, spare_sidecar,
-    )  # fmt: skip
     result = job(
         path,
         wishes,

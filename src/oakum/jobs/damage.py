@@ -63,7 +63,7 @@ class Wishes:
                 Assumption("the sidecar ages like the data", "--spare-sidecar says otherwise", "assumed")
             )
         figures = preset.figures if preset is not None else ()
-        return channel, (*(Assumption(f.text, f.source, f.mark) for f in figures), *said)
+        return channel, (*figures, *said)
 
     def _flip_rate(self, preset: Medium | None, said: list[Assumption]) -> float:
         if self.flip_rate is None:

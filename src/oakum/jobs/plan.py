@@ -65,13 +65,14 @@ def plan(
     ]
     candidates = [_candidate(shape, channel) for shape in shapes]
     reached = [c for c in candidates if c.period.at_most <= np.log(target)]
-    chosen = reached[0] if reached else min(candidates, key=lambda c: c.period.at_most)
+    chosen = reached[0] if reached else min(candidates, key=lambda c: (c.period.at_most, c.period.column))
     shown = _around(_frontier(candidates, chosen), chosen)
     by_notation = {shape.code.notation: shape for shape in shapes}
     return PlanResult(
         path, length, channel.years, target, overhead, _with_size(assumptions, length, path, depth), shown,
         chosen, bool(reached), _command(chosen, path, depth),
-        _curves([by_notation[c.notation] for c in shown], channel), channel.final_flip_rate,
+        _curves([by_notation[c.notation] for c in shown], shown.index(chosen), channel),
+        channel.final_flip_rate,
         time.monotonic() - begin, _notes(channel, depth),
     )  # fmt: skip
 
@@ -105,7 +106,7 @@ def _codes(overhead: float | None) -> list[ConcatenatedCode]:
         return codes
     if not overhead > 0:
         raise UsageError(
-            f"an overhead of {overhead:g} leaves no room for parity; give one above 0, such as 25%"
+            f"an overhead of {100 * overhead:g} % leaves no room for parity; give one above 0, such as 25%"
         )
     within = [code for code in codes if code.overhead <= overhead]
     if not within:
@@ -145,19 +146,19 @@ def _around(frontier: list[Candidate], chosen: Candidate) -> tuple[Candidate, ..
     return tuple(frontier[max(0, at - SHOWN_BELOW) : at + SHOWN_ABOVE + 1])
 
 
-def _curves(shapes: Sequence[Shape], channel: Channel) -> tuple[Curve, ...]:
-    """Loss against the flip rate at the time of reading, everything else as planned."""
+def _curves(shapes: Sequence[Shape], chosen: int, channel: Channel) -> tuple[Curve, ...]:
+    """Loss against the flip rate at the time of reading, all else as planned: the chosen code and others."""
     planned = channel.final_flip_rate
     lowest = max(min(planned / 10, 1e-4), 1e-5) if planned else 1e-5
     rates = np.geomspace(lowest, HIGHEST_RATE, CURVE_POINTS).tolist()
-    step = max(1, -(-len(shapes) // CURVES))
+    start = max(0, min(chosen - 1, len(shapes) - CURVES))
     return tuple(
         Curve(
             shape.code.name,
             tuple(rates),
             tuple(forecast(shape, channel.with_final_flip_rate(rate)).stream[1] for rate in rates),
         )
-        for shape in shapes[::-step][::-1]
+        for shape in shapes[start : start + CURVES]
     )
 
 

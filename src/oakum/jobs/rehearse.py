@@ -25,10 +25,10 @@ from oakum.geometry import CELL
 from oakum.jobs.checking import Finding, Range
 from oakum.jobs.common import announce_compiling, find_sidecar, summarise
 from oakum.jobs.damage import Wishes
-from oakum.jobs.opening import OpenBytes, OpenStream, ProtectedSet, assemble, look_at_members, open_set
+from oakum.jobs.opening import OpenBytes, ProtectedSet, assemble, look_at_members, open_set
 from oakum.jobs.tally import Tally
 from oakum.jobs.verify import SetCheck, result_of
-from oakum.members import MemberStream, Span
+from oakum.members import MemberHasher, MemberStream, OpenStream, Span
 from oakum.pools import Pools
 from oakum.probability import clopper_pearson
 from oakum.progress import Progress, Silent
@@ -82,8 +82,8 @@ def rehearse(
     survived = sum(trial.survived for trial in ran)
     return RehearsalResult(
         target, summarise(stage.code), stage.stream_bytes, stage.shape.blocks, seed, assumptions, tuple(ran),
-        LEVEL, clopper_pearson(survived, len(ran), LEVEL) if ran else None, predicted, limit,
-        time.monotonic() - begin,
+        LEVEL, clopper_pearson(survived, len(ran), LEVEL) if ran else None, predicted,
+        channel.final_flip_rate, limit, time.monotonic() - begin,
     )  # fmt: skip
 
 
@@ -120,8 +120,8 @@ class DamagedStream:
         self._start = start
         self._damage = damage
 
-    def read_into(self, offset: int, buffer: memoryview) -> list[Range]:
-        """See `MemberStream.read_into`."""
+    def read_into(self, offset: int, buffer: memoryview, hasher: MemberHasher | None = None) -> list[Range]:
+        """See `MemberStream.read_into`. Nothing is hashed before the damage is done."""
         faults = self._stream.read_into(offset, buffer)
         real = min(len(buffer), self._stream.length - offset)  # What lies behind the end is virtual.
         if real <= 0:
@@ -220,7 +220,7 @@ class _Stage:
                 try:
                     return self._run(number, check, truth, to_first_loss)
                 finally:
-                    pools.work.shutdown(wait=True, cancel_futures=True)
+                    pools.close()
                     check.close()
 
     def _run(self, number: int, check: SetCheck, truth: MemberStream, to_first_loss: bool) -> Trial:

@@ -9,6 +9,7 @@ from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 from itertools import pairwise
 from math import ceil, floor, isfinite, log, log10
+from textwrap import fill, indent
 
 from oakum.results import Curve
 
@@ -91,15 +92,13 @@ def chart_lines(curves: Sequence[Curve], marked_rate: float) -> list[str]:
     lines += [f"  {'':>6} +{''.join(axis)}", f"  {'':>6}  {''.join(names).rstrip()}"]
     named = ", ".join(f"{letter} {curve.label}" for letter, curve in zip(LETTERS, curves, strict=False))
     mark = f"; the dotted line is the planned rate, {marked_rate:.2g}" if marked_rate > 0 else ""
-    return [*lines, f"  {named}{mark}"]
+    return [*lines, *indent(fill(f"{named}{mark}", WIDTH + 12), "  ").splitlines()]
 
 
 def _cells(line: list[tuple[float, float]]) -> Iterator[tuple[int, int]]:
     """The character cells that a line goes through, (column, row), one or more a column."""
     for (x0, y0), (x1, y1) in pairwise(line):
-        columns = abs(round((x1 - x0) * (WIDTH - 1)))
-        rows = abs(round((y1 - y0) * (HEIGHT - 1)))
-        steps = max(columns, rows, 1)
+        steps = ceil(max(abs(x1 - x0) * (WIDTH - 1), abs(y1 - y0) * (HEIGHT - 1), 1))
         for i in range(steps + 1):
             x, y = x0 + (x1 - x0) * i / steps, y0 + (y1 - y0) * i / steps
             yield round(x * (WIDTH - 1)), round((1 - min(y, 1.0)) * (HEIGHT - 1))

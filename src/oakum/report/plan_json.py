@@ -45,6 +45,7 @@ def rehearsal_document(result: RehearsalResult) -> Document:
         "code": code_document(result.code),
         "stream_bytes": result.stream_bytes,
         "blocks": result.blocks,
+        "flip_rate": result.flip_rate,
         "seed": result.seed,
         "survived": result.survived,
         "interval": None
@@ -84,6 +85,7 @@ def _loss(loss: Loss) -> Document:
         "block": {"at_least": _chance(loss.block[0]), "at_most": _chance(loss.block[1])},
         "stream": {"at_least": _chance(loss.stream[0]), "at_most": _chance(loss.stream[1])},
         "measured_at_most": None if loss.measured is None else _chance(loss.measured),
+        "measured": None if loss.expected is None else _chance(loss.expected),
     }
 
 

@@ -12,9 +12,20 @@ FILES_SHOWN = 40
 Section = Sequence[str]
 
 
-def paragraph(text: str) -> list[str]:
-    """`text` wrapped into lines; words, and with them paths without blanks, are never broken."""
-    return textwrap.wrap(text, LINE_WIDTH, break_long_words=False, break_on_hyphens=False)
+def paragraph(text: str, bullet: str = "") -> list[str]:
+    """`text` wrapped into lines; words, and with them paths without blanks, are never broken.
+
+    Nor is a number from its percent sign. A `bullet` stands before the first line, and blanks under it.
+    """
+    lines = textwrap.wrap(
+        text.replace(" %", "\N{NO-BREAK SPACE}%"),
+        LINE_WIDTH,
+        initial_indent=bullet,
+        subsequent_indent=" " * len(bullet),
+        break_long_words=False,
+        break_on_hyphens=False,
+    )
+    return [line.replace("\N{NO-BREAK SPACE}%", " %") for line in lines]
 
 
 def notes(texts: Iterable[str]) -> list[list[str]]:

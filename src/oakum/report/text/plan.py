@@ -2,8 +2,9 @@
 
 from __future__ import annotations
 
+from collections import Counter
 from collections.abc import Sequence
-from math import exp, log
+from math import exp, inf, log
 
 from oakum.report.chances import between, chance
 from oakum.report.chart import chart_lines
@@ -11,7 +12,7 @@ from oakum.report.terminal import safe
 from oakum.report.text.layout import Section, and_more, joined, notes, paragraph, table
 from oakum.report.text.strength import code_phrase
 from oakum.report.units import counted, duration, exact_size, percent, size
-from oakum.results import Assumption, Candidate, Limit, PlanResult, RehearsalResult, Trial
+from oakum.results import Assumption, Candidate, Limit, Loss, PlanResult, RehearsalResult, Trial
 
 TRIALS_SHOWN = 40
 
@@ -21,7 +22,7 @@ def plan_text(result: PlanResult) -> str:
     return joined(
         [
             paragraph(recommendation(result)),
-            [f"  {safe(result.command)}"],
+            [] if result.hopeless else [f"  {safe(result.command)}"],
             *notes(result.notes),
             _frontier(result),
             _guarantees(result.frontier),
@@ -35,19 +36,24 @@ def plan_text(result: PlanResult) -> str:
 def recommendation(result: PlanResult) -> str:
     """One sentence: which code, and why."""
     best = result.recommended
-    what = f"{size(result.size)} within {_years(result.years)}"
+    data, period = size(result.size), f"within {_years(result.years)}"
     loss = f"at most {chance(best.period.at_most)}"
     code = f"{code_phrase(best.code)}, overhead {percent(best.code.overhead, 1)}"
     target = chance(log(result.target))
     if result.reached:
         return (
-            f"Take {code}: of the codes that keep the chance to lose anything of {what} below {target} it "
-            f"needs the least space ({loss})."
+            f"Take {code}: of the codes that keep the chance to lose anything of {data} {period} below "
+            f"{target} it needs the least space ({loss})."
         )
     budget = "" if result.budget is None else f" within an overhead of {percent(result.budget, 1)}"
+    if result.hopeless:
+        return (
+            f"No code tried{budget} keeps {data} from loss {period}; {code}, comes nearest ({loss}). "
+            "It takes less damage, or a further copy."
+        )
     return (
-        f"No code tried{budget} keeps the chance to lose anything of {what} below {target}; {code}, comes "
-        f"nearest ({loss})."
+        f"No code tried{budget} keeps the chance to lose anything of {data} {period} below {target}; "
+        f"{code}, comes nearest ({loss})."
     )
 
 
@@ -97,8 +103,7 @@ def assumptions(figures: Sequence[Assumption]) -> Section:
         return []
     lines = ["What this rests on"]
     for figure in figures:
-        wrapped = paragraph(f"{safe(figure.text)} ({safe(figure.source)}; {figure.mark})")
-        lines += [("  - " if i == 0 else "    ") + line for i, line in enumerate(wrapped)]
+        lines += paragraph(f"{safe(figure.text)} ({safe(figure.source)}; {figure.mark})", "  - ")
     return lines
 
 
@@ -110,7 +115,7 @@ def rehearsal_text(result: RehearsalResult) -> str:
     if result.trials:
         sections.append(paragraph(_survival(result)))
     sections += notes(result.notes)
-    sections += [_trials(result.trials), assumptions(result.assumptions)]
+    sections += [_trials(result.trials), _reasons(result.trials), assumptions(result.assumptions)]
     sections.append(
         paragraph(
             f"The code is {code_phrase(result.code)}; {exact_size(result.stream_bytes)} in "
@@ -123,10 +128,11 @@ def rehearsal_text(result: RehearsalResult) -> str:
 
 def _survival(result: RehearsalResult) -> str:
     tries, survived = len(result.trials), result.survived
-    lead = f"All came back whole in {survived:,} of {counted(tries, 'trial')}."
+    lead = f"Everything came back whole in {survived:,} of {counted(tries, 'trial')}."
     margins = [t.margin for t in result.trials if t.margin is not None]
     if margins:
-        lead += f" The weakest block of those kept {percent(max(0.0, min(margins)))} of its margin."
+        kept = f"kept {percent(min(margins))} of its margin" if min(margins) > 0 else "had no margin left"
+        lead += f" The weakest block of those {kept}."
     if result.interval is not None:
         low, high = result.interval
         lead += (
@@ -134,14 +140,29 @@ def _survival(result: RehearsalResult) -> str:
             f"(exact {percent(result.level)} interval)."
         )
     if result.predicted is not None:
-        high_loss = result.predicted.at_most
-        low_loss = min(result.predicted.stream[0], high_loss)
-        lead += f" Predicted chance of loss: {between((low_loss, high_loss))}."
+        low_loss, high_loss, words = _prediction(result.predicted, result.flip_rate)
+        lead += f" Predicted chance of loss: {words}."
         if result.interval is not None and not (
             exp(low_loss) <= 1 - result.interval[0] and exp(high_loss) >= 1 - result.interval[1]
         ):
             lead += " That lies outside the interval of what was seen."
     return lead
+
+
+def _prediction(loss: Loss, flip_rate: float) -> tuple[float, float, str]:
+    """Bounds of the chance of loss as natural logarithms, and both in words.
+
+    Under flips feedback saves more than one pass, and nothing tells how much at the least.
+    """
+    high = loss.at_most
+    if not flip_rate:
+        low = min(loss.stream[0], high)
+        return low, high, between((low, high))
+    if loss.measured is not None and loss.measured <= loss.stream[1]:
+        most = f"at most {chance(high)}"
+        shown = most if loss.expected is None else f"about {chance(loss.expected)}, {most}"
+        return -inf, high, f"{shown}, as far as the decoder was measured"
+    return -inf, high, f"at most {chance(high)} in one pass of the decoder; feedback saves more"
 
 
 def _limit(limit: Limit) -> str:
@@ -175,3 +196,12 @@ def _trials(trials: Sequence[Trial]) -> Section:
     ]
     head = ("trial", "files", "margin", "bits corrected", "bytes erased", "blocks hit", "lost", "sidecar")
     return ["The trials", *table(head, rows, left=(1, 7)), *and_more(len(trials) - len(rows))]
+
+
+def _reasons(trials: Sequence[Trial]) -> Section:
+    """Why something was lost, the commonest first."""
+    counts = Counter(t.reason for t in trials if t.reason)
+    lines: list[str] = []
+    for reason, count in counts.most_common():
+        lines += paragraph(f"In {counted(count, 'trial')}: {safe(reason)}.")
+    return lines
