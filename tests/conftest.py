@@ -19,6 +19,12 @@ def pytest_addoption(parser: pytest.Parser) -> None:
     parser.addoption("--long", action="store_true", help="run the long versions of sweeps (hours)")
 
 
+def pytest_collection_modifyitems(config: pytest.Config, items: list[pytest.Item]) -> None:
+    """Long versions may take as long as they need."""
+    for item in items if config.getoption("--long") else ():
+        item.add_marker(pytest.mark.timeout(0))
+
+
 @pytest.fixture(scope="session")
 def long(request: pytest.FixtureRequest) -> bool:
     """Whether the long versions are wanted."""

@@ -151,7 +151,8 @@ def test_every_figure_of_a_medium_has_a_source_and_a_mark() -> None:
 
 
 def test_presets_carry_the_published_figures() -> None:
-    # LTO-9: 1 bit in 1e20; nearline disk: 1 sector in 1e15 bits; JESD218 client: 1e-15 (check values, Media).
+    # As their makers' data sheets and the standard say (quoted by others, but for the nearline disk).
+    # LTO-9: 1 bit in 1e20; nearline disk: 1 sector in 1e15 bits; JESD218 client: 1e-15.
     assert MEDIA["tape"].runs[0].expected(TB, 1) == pytest.approx(8e-8)
     assert MEDIA["disk"].runs[0].expected(TB, 1) == pytest.approx(8e-3)
     assert MEDIA["flash"].runs[0].expected(TB, 1) == pytest.approx(8e-3)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import os
 from pathlib import Path
 
 import numpy as np
@@ -12,9 +13,10 @@ from support import content, plant
 from oakum import UsageError, protect
 from oakum.algebra.inner import InnerCode
 from oakum.algebra.naming import resolve_code
-from oakum.encoding import RESERVE, CellCutter, plan_reading
+from oakum.encoding import CHUNK, CHUNKS, RESERVE, RUN, CellCutter, ReadingPlan, plan_reading
 from oakum.files import FileBytes
 from oakum.geometry import CELL, Geometry, whole_depth
+from oakum.jobs.common import DEFAULT_MEMORY
 from oakum.sidecar.layout import Track
 from oakum.sidecar.reading import Section, find_sections
 
@@ -146,6 +148,65 @@ def test_buffers_fit_the_memory(code: str, length: int, memory: int) -> None:
     assert plan.reads == 1 or plan.columns % CELL == 0
     if RESERVE + (g.r + 2 * 16) * g.depth <= memory:
         assert plan.reads == 1
+
+
+def plan_of(length: int, memory: int = DEFAULT_MEMORY, code: str = "shelf") -> tuple[Geometry, ReadingPlan]:
+    c = resolve_code(code)
+    g = Geometry(c.outer.n, c.outer.k, c.inner.m, c.inner.p, length, whole_depth(length, c.outer.k))
+    return g, plan_reading(g, memory)
+
+
+@pytest.mark.parametrize("length", [8 << 30, 100 << 30, (1 << 40) + 12345])
+@pytest.mark.parametrize("code", ["slim", "shelf", "plain"])
+def test_large_files_are_read_twice_in_long_pieces(length: int, code: str) -> None:
+    """At least 1 MiB at a time, but for the end of the file, and every column of the window once."""
+    g, plan = plan_of(length, code=code)
+    assert plan.reads == 2
+    pieces = list(plan.pieces(g))
+    assert [first for first, _ in pieces] == [0, *(first + width for first, width in pieces[:-1])]
+    assert sum(pieces[-1]) == g.depth
+    assert 1 << 20 <= min(width for _, width in pieces) <= max(width for _, width in pieces) <= plan.columns
+    assert all(first % CELL == 0 for first, _ in pieces)
+    first_read = g.chunks(RUN, 5 * CHUNK, 5 * CHUNK + 64 * CHUNK)
+    assert {stop - start for start, stop in first_read} == {1 << 20}
+
+
+def test_memory_is_the_same_for_every_large_file() -> None:
+    """What is held at a time: strips and parity of some columns, and the chunks of the first read."""
+    held = []
+    for length in (4 << 30, 8 << 30, 100 << 30, 1 << 40):
+        g, plan = plan_of(length)
+        held.append((g.k + g.r) * plan.columns + CHUNKS * CHUNK)
+    assert max(held) < 300 << 20
+    assert max(held) - min(held) < 16 << 20
+
+
+class Reads:
+    """Counts what `os.preadv` reads of one file."""
+
+    def __init__(self, file: Path, patch: pytest.MonkeyPatch) -> None:
+        self.file, self.sizes, self.true = file.stat(), list[int](), os.preadv
+        patch.setattr(os, "preadv", self)
+
+    def __call__(self, fd: int, buffers: list[memoryview], offset: int) -> int:
+        got = self.true(fd, buffers, offset)
+        if os.path.samestat(os.fstat(fd), self.file):
+            self.sizes.append(got)
+        return got
+
+
+@pytest.mark.parametrize(
+    "options, times", [({}, 1), ({"depth": 8192}, 1), ({"memory": RESERVE + (1 << 20)}, 2)]
+)
+def test_bytes_are_read_once_or_twice_and_never_more(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch, options: dict[str, int], times: int
+) -> None:
+    file = tmp_path / "f"
+    file.write_bytes(content(5_000_000))
+    reads = Reads(file, monkeypatch)
+    result = protect([file], **options)  # type: ignore[arg-type]
+    assert sum(reads.sizes) == times * 5_000_000
+    assert result.reads == times
 
 
 def test_too_little_memory_is_said() -> None:

@@ -143,8 +143,8 @@ def test_more_of_anything_is_never_better() -> None:
 def test_chances_below_1e_300_keep_their_digits(name: str, fewest: int) -> None:
     """At a tiny rate the likeliest loss is all that counts: the chance goes with rate^(its flips).
 
-    Those are the fewest flips that can defeat both ways of one pass (check values, "Fewest flips that can
-    defeat a decoder", erase only: computed there by a shortest path).
+    Those are the fewest flips that can defeat both ways of one pass (computed by shortest paths over patterns
+    of flips in the words through one column, where flagged words are erased).
     """
     shape = Shape.of(resolve_code(name), 10**13)
     at = [forecast(shape, Channel(rate)).column for rate in (1e-24, 1e-25)]
@@ -169,7 +169,7 @@ CURVE = MeasuredCurve(4096, ((0.010, 200, 0), (0.011, 100, 1), (0.012, 100, 37),
 
 
 def test_below_the_measured_rates_only_the_limit_holds() -> None:
-    # None of 200: one-sided 95 % limit 2.9957/n (check values, "0 of n"); exactly 1 - 0.05^(1/200).
+    # None of 200: one-sided 95 % limit 1 - 0.05^(1/200) (Clopper and Pearson 1934), about 2.9957/n.
     limit = 1 - 0.05 ** (1 / 200)
     assert CURVE.at_most(0.010) == pytest.approx(limit)
     assert CURVE.at_most(0.002) == pytest.approx(limit)
@@ -211,6 +211,10 @@ def test_measured_curves_only_ever_lower_the_bound() -> None:
     loss = forecast(shape, Channel(0.0115))
     assert loss.stream[1] == pytest.approx(0, abs=1e-6)  # one pass loses everything
     assert loss.measured is not None and loss.at_most == loss.measured
+    # Between measured rates the chance itself is known too; nothing is extrapolated.
+    known = forecast(shape, Channel(0.0121))
+    assert known.expected is not None and known.measured is not None and known.expected < known.measured
+    assert forecast(shape, Channel(1e-4)).expected is None
     # With bursts beside the flips nothing was measured.
     assert forecast(shape, Channel(0.0115, (Runs(((1000, 1.0),), 1.0),))).measured is None
     assert forecast(shape, Channel(1e-4)).at_most < -50

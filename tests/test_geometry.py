@@ -149,7 +149,7 @@ def test_a_depth_that_no_window_can_have(depth: int) -> None:
     [(0, 223, 0), (1, 223, 64), (64 * 223, 223, 64), (64 * 223 + 1, 223, 128), (LARGE - 1, 223, 300_992),
      (LARGE, 223, 303_104)],
 )  # fmt: skip
-def test_whole_depth_is_rounded_as_the_design_says(length: int, k: int, depth: int) -> None:
+def test_whole_depth_is_rounded_up(length: int, k: int, depth: int) -> None:
     """S = ceil(F / k), rounded up to 4,096 from 64 MiB of stream and to 64 below."""
     assert whole_depth(length, k) == depth
 

@@ -5,6 +5,7 @@ from __future__ import annotations
 import errno
 import hashlib
 import os
+import tempfile
 from pathlib import Path
 
 import pytest
@@ -13,7 +14,7 @@ from hypothesis import strategies as st
 from support import BadSectors, content, plant
 
 from oakum.errors import CannotCheck, UsageError
-from oakum.members import Folder, MemberHasher, MemberStream, Span, collect, open_folder
+from oakum.members import SMALL, Folder, MemberHasher, MemberStream, Span, collect, open_folder
 from oakum.sidecar.table import Kind
 
 
@@ -254,3 +255,65 @@ def test_hasher_over_windows(sizes: list[int], step: int) -> None:
         for span, digest in zip(here, hasher.digests, strict=True):
             so_far = members[span.path][: span.offset + span.length]
             assert digest == hashlib.sha256(so_far).digest()
+
+
+@given(st.data())
+def test_small_members_are_hashed_while_they_are_read(data: st.DataObject) -> None:
+    """Pieces of the stream in any order, then the stream in order: digests as of the members one by one."""
+    sizes = data.draw(st.lists(st.sampled_from([0, 1, 300, 5000, SMALL, SMALL + 1]), min_size=1, max_size=8))
+    with tempfile.TemporaryDirectory() as place:
+        root = Path(place)
+        contents = {f"{i}": content(size, i) for i, size in enumerate(sizes)}
+        plant(root, contents)
+        spans = [Span(name.encode(), 0, len(held)) for name, held in contents.items()]
+        spans[-1] = Span(spans[-1].path, 0, spans[-1].length // 2)  # It goes on in another window.
+        folder, hasher = Folder(root), MemberHasher()
+        stream = MemberStream(folder, spans)
+        hasher.expect(spans)
+        step = data.draw(st.sampled_from([700, 10_000, 1 << 20]))
+        buffer = bytearray(stream.length)
+        starts = data.draw(st.permutations(range(0, stream.length, step)))
+        for start in starts:
+            part = memoryview(buffer)[start : start + step]
+            assert stream.read_into(start, part, hasher) == []
+        hasher.update(memoryview(buffer))
+        expected = [hashlib.sha256(contents[s.path.decode()][: s.length]).digest() for s in spans]
+        assert hasher.digests == expected
+        later = Span(spans[-1].path, spans[-1].length, sizes[-1] - spans[-1].length)
+        hasher.expect([later])
+        hasher.update(memoryview(contents[later.path.decode()][later.offset :]))
+        assert hasher.digests == [hashlib.sha256(contents[later.path.decode()]).digest()]
+        stream.close()
+        folder.close()
+
+
+@pytest.mark.parametrize("trouble", ["short read", "read error", "cut short", "a folder instead"])
+def test_a_small_member_that_gives_trouble_is_read_again(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch, trouble: str
+) -> None:
+    plant(tmp_path, {"a": content(1000), "b": content(2000, 1)})
+    if trouble == "cut short":
+        os.truncate(tmp_path / "b", 1500)
+    if trouble == "a folder instead":
+        (tmp_path / "b").unlink()
+        (tmp_path / "b").mkdir()
+    true, calls = os.preadv, 0
+
+    def preadv(fd: int, buffers: list[memoryview], offset: int) -> int:
+        nonlocal calls
+        calls += 1
+        if calls == 1 and trouble == "read error":
+            raise OSError(errno.EIO, "Input/output error")
+        return true(fd, [buffers[0][:1]] if calls == 1 and trouble == "short read" else buffers, offset)
+
+    monkeypatch.setattr(os, "preadv", preadv)
+    folder = Folder(tmp_path)
+    stream = MemberStream(folder, [Span(b"a", 0, 1000), Span(b"b", 0, 2000)])
+    buffer = bytearray(3000)
+    faults = stream.read_into(0, memoryview(buffer))
+    lost = {"cut short": 500, "a folder instead": 2000}.get(trouble, 0)
+    assert faults == ([(3000 - lost, 3000)] if lost else [])
+    whole = content(1000) + content(2000, 1)
+    assert bytes(buffer) == whole[: 3000 - lost] + bytes(lost)
+    stream.close()
+    folder.close()

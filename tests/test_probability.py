@@ -21,7 +21,7 @@ from oakum.probability import (
     log_power,
 )
 
-# ---- binomial tails: check values, section Probability (computed with the binomial survival function)
+# ---- binomial tails (computed with the survival function of scipy)
 
 
 @pytest.mark.parametrize(

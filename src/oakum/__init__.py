@@ -23,6 +23,7 @@ if TYPE_CHECKING:
     from oakum.jobs.rehearse import rehearse
     from oakum.jobs.repair import repair, roll_back
     from oakum.jobs.verify import verify
+    from oakum.throttle import reading_at
 
 __version__ = "0.1.0"
 
@@ -35,6 +36,7 @@ _LAZY = {
     "plan": "oakum.jobs.plan",
     "protect": "oakum.jobs.protect",
     "protect_pipe": "oakum.jobs.pipe",
+    "reading_at": "oakum.throttle",
     "rehearse": "oakum.jobs.rehearse",
     "repair": "oakum.jobs.repair",
     "roll_back": "oakum.jobs.repair",
@@ -43,8 +45,8 @@ _LAZY = {
 
 __all__ = [
     "AuditOptions", "CannotCheck", "FormatError", "OakumError", "UsageError", "Wishes", "__version__",
-    "audit", "describe", "history", "plan", "protect", "protect_pipe", "rehearse", "repair", "roll_back",
-    "verify",
+    "audit", "describe", "history", "plan", "protect", "protect_pipe", "reading_at", "rehearse", "repair",
+    "roll_back", "verify",
 ]  # fmt: skip
 
 

@@ -178,9 +178,12 @@ class Geometry:
         strip, block = self.cell_place(self.data_cells - 1)
         return strip * self.depth + block * CELL + self.width(block)
 
-    def chunks(self, size: int) -> Iterator[tuple[int, int]]:
-        """Ranges (start, stop) of at most `size` bytes, all ends of cells, that make up the window."""
-        start, end = 0, self.cells_end
+    def chunks(self, size: int, start: int = 0, end: int | None = None) -> Iterator[tuple[int, int]]:
+        """Ranges (start, stop) of at most `size` bytes, all ends of cells, that make up the window.
+
+        With `start` and `end`, which are ends of cells too, that part of the window.
+        """
+        end = self.cells_end if end is None else end
         while start < end:
             stop = min(end, start + size)
             if stop < end:

@@ -1,7 +1,7 @@
 """The pattern of errors: what was received against what is right, reduced to what tells causes apart.
 
 Cells come in as they are decoded, in any order. Bytes that are wrong among right ones are kept one by one, up
-to a bound; dense stretches of them become *runs*, in the sense in which the design speaks of bursts. Offsets
+to a bound; dense stretches of them become *runs*, in the sense of the bursts of oakum(1). Offsets
 are those in the file: memory, sectors and buffers are aligned to files and not to the protected stream.
 """
 

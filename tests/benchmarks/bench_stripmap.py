@@ -64,7 +64,9 @@ def addresses(array: Bytes, column: int) -> ctypes.Array[ctypes.c_void_p]:
 
 def galois_encoder(source: Bytes) -> Callable[[], object]:
     import galois
+    import numba
 
+    numba.set_num_threads(1)
     code = galois.ReedSolomon(255, 223, c=0)
     messages = code.field(source[:, :GALOIS_COLUMNS].T.copy())
     return lambda: code.encode(messages, output="parity")

@@ -10,6 +10,7 @@ from faked_jobs import RESULTS, Oakum, check_result
 from oakum.errors import CannotCheck, FormatError, OakumError, UsageError
 from oakum.progress import Silent
 from oakum.results import Outcome
+from oakum.throttle import Throttle, current
 
 MIB = 1 << 20
 
@@ -17,7 +18,7 @@ MIB = 1 << 20
 def test_protect_hands_over_everything(oakum: Oakum) -> None:
     call = oakum(
         *"protect a b --output s.oakum --code stout --depth 64K --overwrite --read-back".split(),
-        *"--memory 1GiB --jobs 3 --quiet".split(),
+        *"--fresh --memory 1GiB --jobs 3 --quiet".split(),
     )
     assert (call.status, call.out, call.err) == (0, "", "")
     assert call.arguments == ([Path("a"), Path("b")],)
@@ -29,6 +30,7 @@ def test_protect_hands_over_everything(oakum: Oakum) -> None:
         "overwrite": True,
         "read_back": True,
         "bag": False,
+        "fresh": True,
         "memory": 1024 * MIB,
         "jobs": 3,
     }
@@ -45,6 +47,7 @@ def test_protect_defaults(oakum: Oakum) -> None:
         "overwrite": False,
         "read_back": False,
         "bag": False,
+        "fresh": False,
         "memory": 512 * MIB,
         "jobs": None,
     }
@@ -120,7 +123,7 @@ def test_exit_status_follows_the_outcome(oakum: Oakum, command: str, outcome: Ou
 
 def test_verify_hands_over_everything(oakum: Oakum) -> None:
     call = oakum(
-        *"verify x.tar --sidecar s --root r --digests-only --unreadable u.csv --memory 64M -j 1 -q".split()
+        *"verify x.tar --sidecar s --root r --digests-only --unreadable u.csv --memory 64M --fresh -j 1 -q".split()
     )
     assert call.arguments == (Path("x.tar"),)
     del call.options["progress"]
@@ -129,6 +132,7 @@ def test_verify_hands_over_everything(oakum: Oakum) -> None:
         "root": Path("r"),
         "digests_only": True,
         "unreadable": Path("u.csv"),
+        "fresh": True,
         "memory": 64 * MIB,
         "jobs": 1,
     }
@@ -218,3 +222,23 @@ def test_every_command_takes_what_all_take(oakum: Oakum) -> None:
         assert oakum(command, "x", "--json", "--quiet", "--memory", "1M", "--jobs", "2").status == 0
         help_text = oakum(command, "--help").out
         assert all(option in help_text for option in ("--json", "--quiet", "--memory", "--jobs"))
+
+
+@pytest.mark.parametrize("command", ["protect", "verify", "repair"])
+@pytest.mark.parametrize("text, rate", [("5M", 5 << 20), ("20MB", 20_000_000)])
+def test_the_read_rate_holds_for_the_job(oakum: Oakum, command: str, text: str, rate: int) -> None:
+    limits: list[Throttle | None] = []
+
+    def job(**_: object) -> object:
+        limits.append(current.get())
+        return RESULTS[command]
+
+    assert oakum(command, "x", "--read-rate", text, result=job).status == 0
+    assert [limit.rate for limit in limits if limit] == [rate]
+    assert current.get() is None
+
+
+def test_nothing_can_be_read_at_no_rate(oakum: Oakum) -> None:
+    call = oakum("verify", "x", "--read-rate", "0")
+    assert call.status == 2
+    assert "rate of 0" in call.err

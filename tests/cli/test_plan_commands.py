@@ -64,7 +64,7 @@ def test_rehearse(tmp_path: Path, capfd: Captured) -> None:
     protect([path])
     arguments = ["rehearse", str(path), "--burst-length", "2K", "--trials", "3", "--seed", "4"]
     assert run(arguments) == 0
-    assert "All came back whole in 3 of 3 trials." in capfd.readouterr().out
+    assert "Everything came back whole in 3 of 3 trials." in capfd.readouterr().out
     assert run([*arguments, "--json", "--quiet"]) == 0
     document = json.loads(capfd.readouterr().out)
     assert document["survived"] == 3 and document["seed"] == 4 and document["limit"] is None

@@ -11,7 +11,7 @@ from pathlib import Path
 import pytest
 
 OAKUM = [sys.executable, "-m", "oakum"]
-HEAVY = ("numpy", "numba", "llvmlite", "galois", "scipy", "rich", "xxhash")
+HEAVY = ("numpy", "numba", "llvmlite", "galois", "scipy", "rich", "xxhash", "pydantic", "matplotlib")
 
 
 def loaded_after(arguments: list[str]) -> set[str]:
@@ -32,6 +32,12 @@ def test_help_and_version_load_nothing_heavy() -> None:
     assert loaded_after(["--help"]) == set()
     assert loaded_after(["verify", "--help"]) == set()
     assert loaded_after(["--version"]) == set()
+
+
+def test_a_verify_that_finds_no_damage_loads_little(tmp_path: Path) -> None:
+    (tmp_path / "a.bin").write_bytes(bytes(range(256)) * 1000)
+    subprocess.run([*OAKUM, "protect", "--quiet", str(tmp_path / "a.bin")], check=True)
+    assert loaded_after(["verify", "--quiet", str(tmp_path / "a.bin")]) == {"numpy", "xxhash"}
 
 
 def test_version() -> None:

@@ -78,7 +78,7 @@ def test_counts_equal_what_was_injected(tmp_path: Path, depth: int | None) -> No
 
 
 def burst_bits(before: bytes, after: bytes) -> int:
-    """Flips in bursts by the words of the design: at least 32 bytes, more than a quarter of them wrong."""
+    """Flips in bursts as oakum(1) defines them: at least 32 bytes, more than a quarter of them wrong."""
     wrong = [i for i, (a, b) in enumerate(zip(before, after, strict=True)) if a != b]
     bits, cluster = 0, wrong[:1]
     for place in [*wrong[1:], 1 << 60]:

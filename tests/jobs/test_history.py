@@ -135,7 +135,8 @@ def test_audits_within_a_month_fix_no_trend(tmp_path: Path) -> None:
 
 def test_nothing_found_is_a_limit_and_not_zero(tmp_path: Path) -> None:
     found = trend(book(tmp_path / "l", [row()] * 4), 3)
-    # 2.995732 over the exposure of all audits: check-values, "0 of n: one-sided upper limit" (computed).
+    # 2.995732 = -ln 0.05 over the exposure of all audits: the one-sided 95 % limit of a Poisson law with no
+    # events (Garwood 1936; computed).
     limit = 2.995732 / (4 * 8 * STREAM)
     assert any(f"{limit:.2g}" in text for text in found.conclusions)
     assert found.chance_now > 0 or math.isclose(found.chance_now, 0, abs_tol=1e-15)

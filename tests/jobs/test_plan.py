@@ -154,7 +154,8 @@ def test_a_burst_length_alone_means_one_burst() -> None:
 def test_curves_are_of_the_codes_shown_and_rise() -> None:
     result = plan(None, FLIPS, size=TEN_TB)
     names = [c.code.name for c in result.frontier]
-    assert result.curves and all(curve.label in names for curve in result.curves)
+    assert all(curve.label in names for curve in result.curves)
+    assert result.recommended.code.name in {curve.label for curve in result.curves}
     for curve in result.curves:
         assert list(curve.rates) == sorted(curve.rates)
         assert all(a <= b for a, b in zip(curve.losses, curve.losses[1:], strict=False))

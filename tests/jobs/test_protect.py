@@ -6,13 +6,25 @@ import errno
 import io
 import os
 import shutil
+import time
 from collections.abc import Callable
 from pathlib import Path
 
 import pytest
 from support import BadSectors, content, plant, rewrite, snapshot, with_flips
 
-from oakum import CannotCheck, OakumError, UsageError, describe, protect, protect_pipe, repair, verify
+from oakum import (
+    CannotCheck,
+    OakumError,
+    UsageError,
+    describe,
+    encoding,
+    pools,
+    protect,
+    protect_pipe,
+    repair,
+    verify,
+)
 from oakum.encoding import RESERVE
 from oakum.results import Outcome
 
@@ -336,11 +348,102 @@ def test_a_source_that_changes_ends_the_run(tmp_path: Path, how: str, memory: in
     assert os.listdir(tmp_path) == ["set"]
 
 
-def test_content_that_changes_between_two_reads(tmp_path: Path) -> None:
-    """Size and time stay the same; only the digests of the first read can tell."""
+class Changing:
+    """Stands in for `os.preadv`: from the second time on, one byte of a file reads otherwise."""
+
+    def __init__(self, file: Path, place: int, patch: pytest.MonkeyPatch) -> None:
+        self.file, self.place, self.times = file.stat(), place, 0
+        self.true = os.preadv
+        patch.setattr(os, "preadv", self)
+
+    def __call__(self, fd: int, buffers: list[memoryview], offset: int) -> int:
+        got = self.true(fd, buffers, offset)
+        if os.path.samestat(os.fstat(fd), self.file) and offset <= self.place < offset + got:
+            self.times += 1
+            if self.times > 1:
+                buffers[0][self.place - offset] ^= 1
+        return got
+
+
+@pytest.mark.parametrize(
+    "name, place", [("a", 0), ("a", 2_999_999), ("b", 0), ("b", 40_000), ("c", 2_999_999)]
+)
+def test_content_that_changes_between_two_reads(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch, name: str, place: int
+) -> None:
+    """Size and time stay the same; only the digests of the two reads can tell, and which file it was."""
+    folder = plant(
+        tmp_path / "set", {"a": content(3_000_000), "b": content(100_000), "c": content(3_000_000)}
+    )
+    changing = Changing(folder / name, place, monkeypatch)
+    with pytest.raises(CannotCheck, match=f"set/{name}.* changed while it was read"):
+        protect([folder], memory=TIGHT)
+    assert changing.times > 1
+    assert os.listdir(tmp_path) == ["set"]
+
+
+def test_content_that_changed_for_one_read_only(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    """Nobody can say which file it was any more."""
+    folder = plant(tmp_path / "set", {name: content(1_500_000, i) for i, name in enumerate("abcde")})
+    weigh, more = encoding.weighted, iter([0, 1])
+    monkeypatch.setattr(
+        encoding, "weighted", lambda digests, first: weigh(digests, first) + (next(more) if first == 0 else 0)
+    )
+    with pytest.raises(CannotCheck, match="set/a or set/b or set/c or one of 2 others changed"):
+        protect([folder], memory=TIGHT)
+
+
+def test_a_write_that_shows_in_the_time_only(tmp_path: Path) -> None:
+    """The same bytes written again: nobody knows what was read in between."""
+    folder = plant(tmp_path / "set", {"a": content(6_000_000), "z": content(90_000)})
+    act = During(lambda: os.utime(folder / "z"))
+    with pytest.raises(CannotCheck, match="set/z changed while it was read"):
+        protect([folder], progress=act)
+    assert os.listdir(tmp_path) == ["set"]
+
+
+class Advances:
+    """A `Progress` that keeps what it is told."""
+
+    def __init__(self) -> None:
+        self.total: int | None = None
+        self.told: list[int] = []
+
+    def phase(self, name: str, total: int | None) -> None:
+        if name.startswith("reading"):
+            self.total, self.told = total, []
+
+    def advance(self, nbytes: int) -> None:
+        self.told.append(nbytes)
+
+    def note(self, text: str) -> None:
+        pass
+
+
+@pytest.mark.parametrize("memory", [512 << 20, TIGHT])
+def test_a_slow_source_keeps_the_progress_honest(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch, memory: int
+) -> None:
+    """Nothing is told as read that is not, and while nothing comes that is told too."""
     file = tmp_path / "f"
     file.write_bytes(content(6_000_000))
-    act = During(lambda: rewrite(file, with_flips(content(6_000_000), 1)))
-    with pytest.raises(CannotCheck, match="f changed while it was read"):
-        protect([file], memory=TIGHT, progress=act)
-    assert os.listdir(tmp_path) == ["f"]
+    waited: list[int] = []
+    true = os.preadv
+
+    def slow(fd: int, buffers: list[memoryview], offset: int) -> int:
+        if not waited:
+            waited.append(sum(progress.told))
+            time.sleep(0.3)
+        return true(fd, buffers, offset)
+
+    monkeypatch.setattr(pools, "PATIENCE", 0.02)
+    monkeypatch.setattr(os, "preadv", slow)
+    progress = Advances()
+    protect([file], memory=memory, jobs=1, progress=progress)
+    assert waited == [0]
+    assert 0 in progress.told
+    assert sum(progress.told) == progress.total == 6_000_000 * (1 if memory > TIGHT else 2)
+    waited.clear()
+    verify(file, jobs=1, progress=progress)
+    assert 0 in progress.told
+    assert sum(progress.told) == progress.total

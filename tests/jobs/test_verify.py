@@ -169,12 +169,14 @@ def test_losing_a_section_between_others_costs_only_its_window(tmp_path: Path) -
     sidecar.write_bytes(overwritten(whole, start, stop - start))
     result = verify(folder)
     assert set(states(result).values()) == {MemberState.INTACT}
-    assert "windows 1 to 1 are lost" in result.notes[0]
-    assert result.sidecar.state is Outcome.UNCORRECTABLE
+    assert "of the sidecar's 5 sections 1 can no longer be read" in result.notes[0]
+    assert result.sidecar.state is Outcome.CORRECTABLE
     rewrite(folder / "a", with_flips(data, 9, within=(2 * WINDOW, 3 * WINDOW)))
     result = repair(folder)
     assert (folder / "a.mended").read_bytes() == data
     assert result.totals.bits_flipped == 9
+    assert result.sidecar.mended is not None
+    assert result.sidecar.mended.read_bytes() == whole
 
 
 def test_losing_the_end_costs_only_what_the_last_window_says(tmp_path: Path) -> None:

@@ -90,6 +90,13 @@ def test_a_target_that_no_code_reaches_is_said() -> None:
     assert text.startswith("No code tried within an overhead of 14.0 % keeps the chance")
 
 
+def test_no_line_is_given_to_run_where_loss_is_certain() -> None:
+    lost = replace(CANDIDATES[0], period=Loss(0.0, (0.0, 0.0), (0.0, 0.0)))
+    text = plan_text(replace(PLAN, reached=False, recommended=lost))
+    assert "comes nearest (at most 100 %)" in " ".join(text.split())
+    assert "oakum protect" not in text
+
+
 def test_terminal_codes_never_reach_a_terminal() -> None:
     assert "\x1b" not in plan_text(PLAN)
     assert "\x1b" not in dump(plan_document(PLAN))
@@ -97,6 +104,15 @@ def test_terminal_codes_never_reach_a_terminal() -> None:
 
 def test_every_figure_is_shown_with_source_and_mark() -> None:
     assert "- a rate (the command" in plan_text(PLAN) and "given)" in plan_text(PLAN)
+
+
+def test_long_figures_keep_within_the_line_and_percent_signs_with_their_numbers() -> None:
+    figure = Assumption("figures " + "99 % " * 40, "a source", "given")
+    lines = plan_text(replace(PLAN, assumptions=(figure,))).splitlines()
+    assert max(map(len, lines)) <= 79
+    assert not any(line.endswith("99") or line.lstrip().startswith("%") for line in lines)
+    bullet = next(i for i, line in enumerate(lines) if line.startswith("  - figures"))
+    assert lines[bullet + 1].startswith("    99 %")
 
 
 def test_the_chart_goes_where_the_curves_go() -> None:
@@ -133,12 +149,29 @@ def test_the_picture_is_sound_and_says_what_it_shows() -> None:
 
 def test_the_rehearsal_says_how_many_came_back_beside_what_was_predicted() -> None:
     text = " ".join(rehearsal_text(REHEARSAL).split())
-    assert text.startswith("All came back whole in 1 of 2 trials.")
+    assert text.startswith("Everything came back whole in 1 of 2 trials.")
     assert "kept 61 % of its margin" in text
     assert "between 1.3 % and 98.7 % (exact 95 % interval)" in text
     assert "Predicted chance of loss: 40 % to 60 %." in text
     assert "outside the interval" not in text
+    assert "In 1 trial: 1 of the files could not be put right." in text
     assert "Seed 11 repeats this run exactly" in text
+
+
+@pytest.mark.parametrize(
+    ("measured", "sentence"),
+    [
+        (None, "at most 60 % in one pass of the decoder; feedback saves more."),
+        (log(0.55), "at most 55 %, as far as the decoder was measured."),
+        (log(0.9), "at most 60 % in one pass of the decoder; feedback saves more."),
+    ],
+)
+def test_under_flips_a_prediction_is_an_upper_limit(measured: float | None, sentence: str) -> None:
+    """Nothing says how much feedback saves at the least: less loss than in one pass is no surprise."""
+    loss = Loss(0.0, (log(0.999), 0.0), (log(0.999), log(0.6)), measured)
+    text = " ".join(rehearsal_text(replace(REHEARSAL, predicted=loss, flip_rate=1e-2)).split())
+    assert f"Predicted chance of loss: {sentence}" in text
+    assert "outside the interval" not in text
 
 
 def test_a_prediction_that_does_not_hold_is_said() -> None:

@@ -1,4 +1,4 @@
-"""The JSON documents: the keys of the design, and nothing that a parser would choke on."""
+"""The JSON documents: the keys that programs rely on, and nothing that a parser would choke on."""
 
 import base64
 import json

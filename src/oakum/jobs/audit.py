@@ -53,6 +53,8 @@ class AuditOptions:
     resume: bool = False
     memory: int = DEFAULT_MEMORY
     jobs: int | None = None
+    several: bool = False
+    """Whether the list of what is unreadable is for other targets too; `audit` sees to it."""
 
 
 def audit(
@@ -64,6 +66,7 @@ def audit(
     ends an audit: the result says why there is no entry. Raises UsageError for a share that is none.
     """
     _check_options(targets, options)
+    options = replace(options, several=len(targets) > 1)
     begin, begun = time.monotonic(), datetime.now(UTC)
     seed = options.seed if options.seed is not None else begun.toordinal()
     book = _Book.open(options, targets, begun, seed)
@@ -121,7 +124,11 @@ def audit_target(target: Path, options: AuditOptions, seed: int, progress: Progr
     """Audit one target. Raises CannotCheck where nothing can be said at all."""
     begin = time.monotonic()
     path = find_sidecar(target, options.sidecar)
-    opened = open_set(path, options.root, read_unreadable(options.unreadable), target)
+    listed = read_unreadable(options.unreadable)
+    opened = open_set(
+        path, options.root, listed.of_several() if options.several else listed, target, progress
+    )
+    opened.once = True
     try:
         with Pools(options.jobs) as pools:
             check = AuditCheck(opened, pools, progress, options.share, seed)
