@@ -137,7 +137,7 @@ class WindowCheck:
         """SHA-256 of the pieces, as far as they are known."""
 
         self.resumed = False
-        """Whether an earlier run has looked at a part of the set, and its last member is to be hashed again."""
+        """Whether an earlier run has looked at a part, and its last member is to be hashed again."""
 
         self.mark: Callable[[], None] = lambda: None
         """Called when the scan has come further."""
