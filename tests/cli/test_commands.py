@@ -123,7 +123,8 @@ def test_exit_status_follows_the_outcome(oakum: Oakum, command: str, outcome: Ou
 
 def test_verify_hands_over_everything(oakum: Oakum) -> None:
     call = oakum(
-        *"verify x.tar --sidecar s --root r --digests-only --unreadable u.csv --memory 64M --fresh -j 1 -q".split()
+        *"verify x.tar --sidecar s --root r --digests-only --unreadable u.csv".split(),
+        *"--memory 64M --fresh -j 1 -q".split(),
     )
     assert call.arguments == (Path("x.tar"),)
     del call.options["progress"]

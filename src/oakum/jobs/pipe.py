@@ -181,9 +181,7 @@ class HeldStream:
     def __init__(self, data: NDArray[np.uint8]) -> None:
         self._data = data.data
 
-    def read_into(
-        self, offset: int, buffer: memoryview, hasher: MemberHasher | None = None
-    ) -> list[Fault]:
+    def read_into(self, offset: int, buffer: memoryview, hasher: MemberHasher | None = None) -> list[Fault]:
         """See `oakum.members.Stream`; what lies past the end is virtual zeros."""
         part = self._data[offset : offset + len(buffer)]
         buffer[: len(part)] = part
