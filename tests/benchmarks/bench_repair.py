@@ -1,11 +1,12 @@
 """How fast repair is, as a share of the speed of protect of the same file in the same run.
 
-    python tests/benchmarks/bench_repair.py [--size BYTES] [--folder DIR] [--profile]
+    python tests/benchmarks/bench_repair.py [--within] [--runs 3] [--size BYTES] [--folder DIR] [--profile]
 
 One file of 256 MiB, code shelf, in /dev/shm where there is one. Each line damages a fresh copy of file and
 sidecar, repairs it, compares it bit for bit and counts the flips. Protect and repair take turns, since only
-ratios in one run mean anything on a shared machine. `--profile` prints where the time of each line goes, with
-all work in one thread.
+ratios in one run mean anything on a shared machine; medians are given. They are run as commands, start-up and
+all, or with `--within` as functions of this process, which has loaded its kernels by then. `--profile` prints
+where the time of each line goes, within this process and with all work in one thread.
 
     python tests/benchmarks/bench_repair.py --everywhere 0.009 --size 209715200
 
@@ -17,8 +18,12 @@ from __future__ import annotations
 import argparse
 import cProfile
 import filecmp
+import json
+import os
 import pstats
 import shutil
+import statistics
+import subprocess
 import tempfile
 import time
 from contextlib import nullcontext
@@ -26,10 +31,10 @@ from dataclasses import dataclass
 from pathlib import Path
 
 import numpy as np
+from bench_whole import ENVIRONMENT, OAKUM
 
 import oakum
 from oakum import pools
-from oakum.results import CheckResult
 
 MIB = 1 << 20
 PIECE = 16 * MIB
@@ -51,6 +56,9 @@ LINES = (
     Line("flips at 8e-3", 8e-3, 0.0, 1 / 50),
     Line("a burst of 10 %", 0.0, 0.1, 1 / 2),
 )
+
+
+HEAD = "damage               protect    repair   ratio  CPU ratio    goal         flips  margin"
 
 
 def make(path: Path, size: int) -> None:
@@ -94,14 +102,14 @@ def population_count(a: Path, b: Path) -> int:
 
 @dataclass(frozen=True)
 class Cost:
-    """Seconds by the clock, and of CPU time in all threads: the latter where others use the machine too."""
+    """Seconds by the clock, and of CPU time in all threads and processes, which others do not disturb."""
 
     clock: float
     cpu: float
 
     @staticmethod
     def now() -> Cost:
-        return Cost(time.perf_counter(), time.process_time())
+        return Cost(time.perf_counter(), sum(os.times()[:4]))
 
     def __sub__(self, other: Cost) -> Cost:
         return Cost(self.clock - other.clock, self.cpu - other.cpu)
@@ -115,20 +123,26 @@ def at_once(_: object, lane: object, unit: pools.Unit) -> None:
 class Bench:
     """A protected file in a folder, to be damaged and repaired again and again."""
 
-    def __init__(self, folder: Path, size: int) -> None:
+    def __init__(self, folder: Path, size: int, *, within: bool) -> None:
         self.original, self.sidecar = folder / "original", folder / "original.oakum"
         self.work, self.damaged = folder / "work", folder / "work" / "x.img"
+        self.within = within
         self.work.mkdir()
         make(self.original, size)
-        shutil.copy(self.original, self.damaged)
+        self.protect()  # Compiles what has to be compiled.
 
     def protect(self) -> Cost:
         """What it takes to protect the file; its sidecar is kept."""
         shutil.copy(self.original, self.damaged)
+        sidecar = self.work / "x.img.oakum"
+        sidecar.unlink(missing_ok=True)
         start = Cost.now()
-        result = oakum.protect([self.damaged], overwrite=True)
+        if self.within:
+            oakum.protect([self.damaged])
+        else:
+            command("protect", "--quiet", self.damaged)
         cost = Cost.now() - start
-        shutil.copy(result.sidecar, self.sidecar)
+        shutil.copy(sidecar, self.sidecar)
         return cost
 
     def damage(self, line: Line, *, sidecar: bool = False) -> int:
@@ -143,65 +157,97 @@ class Bench:
             flip(self.work / "x.img.oakum", line.flip_rate, 2)
         return population_count(self.damaged, self.original)
 
-    def repair(self) -> tuple[Cost, CheckResult]:
-        """What it takes to repair, and the record."""
+    def repair(self) -> tuple[Cost, int, float]:
+        """What it takes to repair, the flips that were counted, and the weakest block's margin."""
         start = Cost.now()
-        result = oakum.repair(self.damaged, output=self.work / "back")
-        return Cost.now() - start, result
+        if self.within:
+            result = oakum.repair(self.damaged, output=self.work / "back")
+            return Cost.now() - start, result.totals.bits_flipped, result.weakest
+        text = command("repair", "--json", self.damaged, "--output", self.work / "back")
+        cost, document = Cost.now() - start, json.loads(text)
+        weakest = min((block["margin"] for block in document["blocks"]), default=1.0)
+        return cost, document["totals"]["bits_flipped"], weakest
 
-    def is_back(self, result: CheckResult, flips: int) -> str:
+    def is_back(self, counted: int, flips: int) -> str:
         """What is wrong with the result: nothing if the file is back and the flips are counted exactly."""
         if not filecmp.cmp(self.original, self.work / "back", shallow=False):
             return "NOT THE SAME"
-        if result.totals.bits_flipped != flips:
-            return f"COUNTED {result.totals.bits_flipped:,} FLIPS OF {flips:,}"
-        return ""
+        return "" if counted == flips else f"COUNTED {counted:,} FLIPS OF {flips:,}"
 
     def clean(self) -> None:
         for path in self.work.iterdir():
             path.unlink()
 
 
-def run(bench: Bench, line: Line, *, profile: bool, sidecar: bool = False) -> None:
-    """One line of the table."""
-    bench.clean()
-    protecting = bench.protect()
-    flips = bench.damage(line, sidecar=sidecar)
-    profiler = cProfile.Profile()
-    with profiler if profile else nullcontext():
-        repairing, result = bench.repair()
-    clock, cpu = protecting.clock / repairing.clock, protecting.cpu / repairing.cpu
+def command(*arguments: str | Path) -> str:
+    """What a command prints. Raises CalledProcessError when it fails."""
+    ended = subprocess.run(
+        [*OAKUM, *map(str, arguments)], env=ENVIRONMENT, check=True, stdout=subprocess.PIPE, text=True
+    )
+    return ended.stdout
+
+
+def run(bench: Bench, line: Line, runs: int, *, sidecar: bool = False) -> float:
+    """Print one line of the table; gives the speed of repair over that of protect."""
+    took: list[tuple[Cost, Cost]] = []
+    for _ in range(runs):
+        bench.clean()
+        protecting = bench.protect()
+        flips = bench.damage(line, sidecar=sidecar)
+        repairing, counted, weakest = bench.repair()
+        took.append((protecting, repairing))
+        wrong = bench.is_back(counted, flips)
+    protect, repair, clock, cpu = map(
+        statistics.median,
+        zip(*((p.clock, r.clock, p.clock / r.clock, p.cpu / r.cpu) for p, r in took), strict=True),
+    )
     print(
-        f"{line.name:18}{protecting.clock:8.2f} s{repairing.clock:8.2f} s{clock:8.3f}{cpu:10.3f}"
-        f"{line.goal:8.3f}{flips:14,}{result.weakest:8.2f}  {bench.is_back(result, flips)}",
+        f"{line.name:18}{protect:8.2f} s{repair:8.2f} s{clock:8.3f}{cpu:10.3f}"
+        f"{line.goal:8.3f}{flips:14,}{weakest:8.2f}  {wrong}",
         flush=True,
     )
-    if profile:
-        pstats.Stats(profiler).sort_stats("tottime").print_stats(18)
+    return clock
+
+
+def memory_folder() -> Path | None:
+    """Where files are in memory, if anywhere."""
+    memory = Path("/dev/shm")
+    return memory if memory.is_dir() else None
+
+
+def table(size: int, folder: Path | None, runs: int, *, within: bool) -> dict[str, float]:
+    """Print all lines; gives the speed of repair over that of protect by name."""
+    with tempfile.TemporaryDirectory(dir=folder) as place:
+        bench = Bench(Path(place), size, within=within)
+        print(HEAD)
+        return {line.name: run(bench, line, runs) for line in LINES}
 
 
 def main() -> None:
     parser = argparse.ArgumentParser(
         description=__doc__, formatter_class=argparse.RawDescriptionHelpFormatter
     )
-    memory = Path("/dev/shm")
-    parser.add_argument("--folder", type=Path, default=memory if memory.is_dir() else None)
+    parser.add_argument("--folder", type=Path, default=memory_folder())
     parser.add_argument("--size", type=int, default=256 * MIB)
+    parser.add_argument("--runs", type=int, default=3)
     parser.add_argument("--everywhere", type=float)
+    parser.add_argument("--within", action="store_true")
     parser.add_argument("--profile", action="store_true")
     options = parser.parse_args()
+    profiler = cProfile.Profile()
     if options.profile:
         pools.Pools._begin = at_once  # type: ignore[method-assign]
-    with tempfile.TemporaryDirectory(dir=options.folder) as folder:
-        bench = Bench(Path(folder), options.size)
-        bench.protect()  # Compiles what has to be compiled.
-        print("damage               protect    repair   ratio  CPU ratio    goal         flips  margin")
-        if options.everywhere is not None:
-            line = Line(f"{options.everywhere:g} everywhere", options.everywhere, 0.0, 0.0)
-            run(bench, line, profile=options.profile, sidecar=True)
-            return
-        for line in LINES:
-            run(bench, line, profile=options.profile)
+    with profiler if options.profile else nullcontext():
+        if options.everywhere is None:
+            within = options.within or options.profile
+            table(options.size, options.folder, options.runs, within=within)
+        else:
+            with tempfile.TemporaryDirectory(dir=options.folder) as folder:
+                line = Line(f"{options.everywhere:g} everywhere", options.everywhere, 0.0, 0.0)
+                print(HEAD)
+                run(Bench(Path(folder), options.size, within=True), line, 1, sidecar=True)
+    if options.profile:
+        pstats.Stats(profiler).sort_stats("tottime").print_stats(40)
 
 
 if __name__ == "__main__":

@@ -9,7 +9,6 @@ Whole processes that take turns, medians. Compiling is timed once, in an empty c
 from __future__ import annotations
 
 import argparse
-import os
 import statistics
 import subprocess
 import sys
@@ -19,8 +18,8 @@ from collections.abc import Mapping, Sequence
 from pathlib import Path
 
 import numpy as np
+from bench_whole import ENVIRONMENT, OAKUM
 
-OAKUM = [sys.executable, "-m", "oakum"]
 SMALL = 1 << 20
 
 
@@ -65,7 +64,7 @@ def compiling() -> float:
         rng = np.random.default_rng(2)
         for place in rng.choice(8 * SMALL, SMALL // 100, replace=False):
             damaged[place >> 3] ^= 1 << (place & 7)
-        environment = {**os.environ, "XDG_CACHE_HOME": f"{folder}/cache"}
+        environment = {**ENVIRONMENT, "XDG_CACHE_HOME": f"{folder}/cache"}
         for _ in range(2):  # cold, then warm
             file.write_bytes(content)
             begin = seconds([*OAKUM, "protect", "--quiet", "--overwrite", str(file)], environment)

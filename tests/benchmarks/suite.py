@@ -2,7 +2,7 @@
 
     python tests/benchmarks/suite.py [--sizes 1MiB 64MiB 1GiB 8GiB] [--runs 5] [--folder DIR]
 
-About a quarter of an hour, a third of it for 8 GiB; DIR needs three times the greatest size. Files of random
+About a quarter of an hour, half of it for 8 GiB; DIR needs three times the greatest size. Files of random
 bytes (nothing sparse) in the page cache; `openssl`, `cp`, `galois`, `reedsolo` and, where it is installed,
 the storage library libisal take turns with ours. Only the ratios mean anything on another day.
 """
@@ -16,6 +16,7 @@ from pathlib import Path
 
 import bench_columns
 import bench_repair
+import bench_sets
 import bench_start
 import bench_stripmap
 import bench_whole
@@ -61,16 +62,30 @@ def kernels() -> None:
     )
 
 
-def repairs() -> None:
-    """Repair as a share of protect's speed."""
-    rows = []
-    with tempfile.TemporaryDirectory(dir=bench_repair.memory_folder()) as folder:
-        bench = bench_repair.Bench(Path(folder), 256 * bench_repair.MIB)
-        bench.protect()  # compiles what has to be compiled
-        for line in bench_repair.LINES:
-            ratio = bench_repair.median_ratio(bench, line)
-            rows.append((line.name, f"{ratio:.3f}", f"{line.goal:.3g}"))
-    table(("repair of 256 MiB", "speed over protect's", "goal"), rows)
+def repairs(runs: int) -> None:
+    """Repair as a share of protect's speed: as commands, and as functions of one process."""
+    print()
+    folder, size = bench_repair.memory_folder(), 256 * bench_repair.MIB
+    found = [bench_repair.table(size, folder, runs, within=within) for within in (False, True)]
+    table(
+        ("repair of 256 MiB, speed over protect's", "commands", "within a process"),
+        [(name, *(f"{ratios[name]:.3f}" for ratios in found)) for name in found[0]],
+    )
+
+
+def sets(folder: Path | None) -> None:
+    """100,000 small files against one process that walks, reads and hashes them."""
+    with tempfile.TemporaryDirectory(dir=folder) as work:
+        found, recorded = bench_sets.measure(Path(work), 100_000, 3)
+    (unit, _), *others = found.values()
+    table(
+        ("100,000 small files", "over walking, reading and SHA-256", "peak memory"),
+        [
+            (name, f"{took / unit:.2f}", f"{peak:.0f} MiB")
+            for name, (took, peak) in zip(list(found)[1:], others, strict=True)
+        ],
+    )
+    print(f"\n{recorded:.0f} bytes are recorded of a member.")
 
 
 def main() -> None:
@@ -84,7 +99,8 @@ def main() -> None:
     print(bench_whole.heading(options.runs))
     whole(options.sizes, options.runs, options.folder)
     kernels()
-    repairs()
+    repairs(3)
+    sets(options.folder)
     found = bench_start.start_up(15)
     table(
         ("start", "seconds", "over import numpy"),

@@ -68,8 +68,11 @@ class Keeper:
             return
         content = halfway().pack()
         self._file.sync()
-        self._state.save(content)
-        self._file.keep = self._state.path is not None
+        self._file.keep = True  # before there is a state that speaks of it: a signal may come any time
+        try:
+            self._state.save(content)
+        finally:
+            self._file.keep = self._state.there
 
 
 def _pack_leg(leg: Leg) -> list[Any]:

@@ -46,13 +46,7 @@ class State:
         """`paths`: where it may be; the first one that can be written is taken."""
         self._paths = list(paths)
         self.key = key
-        self._path: Path | None = None
         self._due = time.monotonic() + INTERVAL
-
-    @property
-    def path(self) -> Path | None:
-        """Where a state has been written."""
-        return self._path
 
     def load(self) -> dict[str, Any] | None:
         """What an earlier run with the same key left; None where there is nothing of use."""
@@ -93,7 +87,6 @@ class State:
             except (CannotCheck, OSError):
                 self._paths.pop(0)
             else:
-                self._path = path
                 break
         now = time.monotonic()
         self._due = now + max(INTERVAL, SHARE * (now - begin))
