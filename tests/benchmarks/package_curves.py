@@ -1,6 +1,7 @@
 """Gathers the measured curves into the package, for plan: python tests/benchmarks/package_curves.py
 
 From `curves.json` (the codes that are recommended, blocks of full width) and `rehearsals.json` (short codes).
+Rates at which fewer than `LEAST` blocks were measured are left out: they say too little to plan with.
 """
 
 from __future__ import annotations
@@ -12,6 +13,8 @@ from oakum.algebra.naming import resolve_code
 
 HERE = Path(__file__).parent
 PACKAGED = HERE.parents[1] / "src" / "oakum" / "data" / "curves.json"
+
+LEAST = 20
 
 
 def gathered() -> str:
@@ -28,8 +31,9 @@ def gathered() -> str:
         curve.update({rate: [blocks, lost] for rate, blocks, lost in stored["points"]})
     table: dict[str, list[dict[str, object]]] = {}
     for (notation, width), curve in sorted(counts.items()):
-        points = [[rate, *curve[rate]] for rate in sorted(curve)]
-        table.setdefault(notation, []).append({"width": width, "points": points})
+        points = [[rate, *curve[rate]] for rate in sorted(curve) if curve[rate][0] >= LEAST]
+        if points:
+            table.setdefault(notation, []).append({"width": width, "points": points})
     return json.dumps(table, indent=1) + "\n"
 
 
