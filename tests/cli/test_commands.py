@@ -48,7 +48,7 @@ def test_protect_defaults(oakum: Oakum) -> None:
         "read_back": False,
         "bag": False,
         "fresh": False,
-        "memory": 512 * MIB,
+        "memory": 384 * MIB,
         "jobs": None,
     }
     assert oakum("protect", "x.tar", "--depth", "whole").options["depth"] is None
@@ -153,7 +153,7 @@ def test_repair_hands_over_everything(oakum: Oakum) -> None:
         "sidecar": Path("s"),
         "root": Path("r"),
         "unreadable": Path("u"),
-        "memory": 512 * MIB,
+        "memory": 384 * MIB,
         "jobs": None,
     }
 

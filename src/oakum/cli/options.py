@@ -9,7 +9,7 @@ import typer
 _SIZE = re.compile(r"([0-9]+)\s*(?:([kmgt])(i?b)?|b)?", re.IGNORECASE)
 _POWERS = {"k": 1, "m": 2, "g": 3, "t": 4}
 _LARGEST = 1 << 62
-DEFAULT_MEMORY = 512 << 20
+DEFAULT_MEMORY = 384 << 20
 
 
 def parse_size(text: str | int) -> int:
@@ -50,7 +50,7 @@ Memory = Annotated[
         "--memory",
         metavar="SIZE",
         parser=parse_size,
-        help="Memory for buffers; 512MiB if not given.",
+        help="Memory for buffers; 384MiB if not given.",
         show_default=False,
     ),
 ]

@@ -142,6 +142,9 @@ class WindowCheck:
         self.mark: Callable[[], None] = lambda: None
         """Called when the scan has come further."""
 
+        self.on_damage: Callable[[], None] = lambda: None
+        """Called, in any thread, when a cell has turned out to be wrong."""
+
         self._meter = Meter()
         self.right_spans: list[Range] = []
         self.auditing = False
@@ -255,6 +258,8 @@ class WindowCheck:
         if known is not None:
             state[~known] = UNKNOWN
         self.data[number : number + len(digests)] = state
+        if (state == WRONG).any():
+            self.on_damage()
         if self.auditing and len(self.seen) < MOST_SEEN:
             wrong = np.flatnonzero(state == WRONG)
             self.seen.update(zip((number + wrong).tolist(), digests[wrong].tolist(), strict=True))

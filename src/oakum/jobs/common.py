@@ -12,7 +12,7 @@ from oakum.progress import Progress
 from oakum.results import CodeSummary
 
 SUFFIX = ".oakum"
-DEFAULT_MEMORY = 512 << 20
+DEFAULT_MEMORY = 384 << 20
 
 
 def announce_compiling(progress: Progress) -> None:

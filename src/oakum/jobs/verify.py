@@ -4,8 +4,10 @@ from __future__ import annotations
 
 import hashlib
 import os
+import threading
 import time
 from collections.abc import Iterator
+from contextlib import suppress
 from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import TYPE_CHECKING
@@ -132,17 +134,36 @@ class SetCheck:
         if any(s.bootstrap.code != self.opened.sections[0].bootstrap.code for s in self.opened.sections):
             raise FormatError("the sections of this sidecar use different codes; it was pieced together")
         self._decoders: Decoders | None = None
+        self._loading: threading.Thread | None = None
+        self._load_lock = threading.Lock()
         self.windows: list[WindowCheck] = []
         self.scanned: Scanned | None = None
 
     def decoders(self) -> Decoders:
         """The compiled decoders, made when first needed: intact sets never wait for them."""
+        if self._loading is not None:
+            self._loading.join()
         if self._decoders is None:
             from oakum.decoding.block import Decoders
 
             announce_compiling(self.progress)
             self._decoders = Decoders.of(self.code)
         return self._decoders
+
+    def load_decoders(self) -> None:
+        """Damage was found: begin to load the decoders while the rest is read."""
+
+        def load() -> None:
+            with suppress(Exception):  # It is told when they are asked for, and cannot be had.
+                self._decoders = Decoders.of(self.code)
+
+        with self._load_lock:
+            if self._loading is None and self._decoders is None:
+                from oakum.decoding.block import Decoders
+
+                announce_compiling(self.progress)
+                self._loading = threading.Thread(target=load, daemon=True)
+                self._loading.start()
 
     def scan(self, *, hashing: bool) -> None:
         """Read everything in order, and note what is not right."""
@@ -153,6 +174,7 @@ class SetCheck:
         for number in range(len(opened.sections)):
             window = WindowCheck(opened, number, self.progress, self.pools)
             self.windows.append(window)
+            window.on_damage = self.load_decoders
             if self.scanned is not None:
                 self.scanned.begin(window, hasher)
             self.scan_window(window, hasher)
