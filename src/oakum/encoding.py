@@ -247,9 +247,8 @@ class WindowEncoder:
             self._store(surveys[slot])
             strips = buffers[slot][: min(plan.strips, self._used_strips - first)]
             surveys[slot] = survey = self._survey(first * g.depth, strips.reshape(-1), surveys[slot])
-            wait_all(
-                [*survey.filled, *products], self._report
-            )  # The parity of one batch is stored before the next one.
+            # The parity of one batch is stored before the next one.
+            wait_all([*survey.filled, *products], self._report)
             last = first + len(strips) == self._used_strips
             products = self._multiply(self._pools.work, strips, first, parity, last=last)
         wait_all(products)
@@ -297,7 +296,8 @@ class WindowEncoder:
         parity = _rows(g.r, plan.columns)
         buffer = _rows(self._used_strips, plan.columns)
         for begin, width in plan.pieces(g):
-            first, width = max(begin, self._second.at), begin + width - max(begin, self._second.at)
+            first = max(begin, self._second.at)
+            width -= first - begin
             if width <= 0:
                 continue
             total = self._second.sum
@@ -346,9 +346,8 @@ class WindowEncoder:
             start, number = i * g.depth + first, g.cell_number(i, first // CELL)
             self._read(start, row)
             self._stream.fetch(start + width, width)
-            total += weighted(
-                cell_digests(row)[: max(0, g.data_cells - number)], number
-            )  # Others are virtual.
+            real = max(0, g.data_cells - number)  # Others are virtual.
+            total += weighted(cell_digests(row)[:real], number)
         return total
 
     def _find_change(self) -> None:

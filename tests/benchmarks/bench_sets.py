@@ -11,13 +11,12 @@ bytes that the sidecar keeps of a member are those of its entry in the member ta
 from __future__ import annotations
 
 import argparse
-import statistics
 import sys
 import tempfile
 from pathlib import Path
 
 import numpy as np
-from bench_whole import OAKUM, heading, run
+from bench_whole import OAKUM, heading, take_turns
 
 from oakum.files import FileBytes
 from oakum.sidecar.layout import Track
@@ -71,18 +70,12 @@ def measure(folder: Path, count: int, runs: int) -> tuple[dict[str, tuple[float,
         "protect": [*OAKUM, "protect", "--quiet", str(root)],
         "verify": [*OAKUM, "verify", "--quiet", str(root)],
     }
-    found: dict[str, list[tuple[float, float]]] = {name: [] for name in commands}
-    for turn in range(runs + 1):  # The first round warms page cache and kernels and does not count.
-        for name, command in commands.items():
-            if name == "protect":
-                sidecar.unlink(missing_ok=True)
-            result = run(command)
-            if turn:
-                found[name].append(result)
-    medians = {
-        name: (statistics.median(t for t, _ in results), max(m for _, m in results))
-        for name, results in found.items()
-    }
+
+    def before(name: str) -> None:
+        if name == "protect":
+            sidecar.unlink(missing_ok=True)
+
+    medians = take_turns(commands, runs, before)
     with FileBytes(sidecar) as source:
         recorded = sum(s.layout.content(Track.TABLE) for s in find_sections(source))
     return medians, recorded / count

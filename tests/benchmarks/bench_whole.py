@@ -17,7 +17,7 @@ import statistics
 import sys
 import tempfile
 import time
-from collections.abc import Sequence
+from collections.abc import Callable, Mapping, Sequence
 from pathlib import Path
 
 import numpy as np
@@ -55,6 +55,23 @@ def read(path: Path) -> None:
             pass
 
 
+def take_turns(
+    commands: Mapping[str, Sequence[str]], runs: int, before: Callable[[str], None]
+) -> dict[str, tuple[float, float]]:
+    """Median wall seconds and greatest peak memory in MiB of each; `before` is told which comes next."""
+    results: dict[str, list[tuple[float, float]]] = {name: [] for name in commands}
+    for turn in range(runs + 1):  # The first round warms page cache and kernels and does not count.
+        for name, command in commands.items():
+            before(name)
+            found = run(command)
+            if turn:
+                results[name].append(found)
+    return {
+        name: (statistics.median(t for t, _ in found), max(m for _, m in found))
+        for name, found in results.items()
+    }
+
+
 def measure(folder: Path, size: int, runs: int) -> dict[str, tuple[float, float]]:
     """Median wall seconds and greatest peak memory of each command on a file of `size` bytes."""
     file, sidecar = folder / "file", folder / "file.oakum"
@@ -69,23 +86,18 @@ def measure(folder: Path, size: int, runs: int) -> dict[str, tuple[float, float]
         "verify": [*OAKUM, "verify", "--quiet", str(file)],
         "verify --digests-only": [*OAKUM, "verify", "--quiet", "--digests-only", str(file)],
     }
-    results: dict[str, list[tuple[float, float]]] = {name: [] for name in commands}
-    for turn in range(runs + 1):  # The first round warms page cache and kernels and does not count.
-        for name, command in commands.items():
-            if name in ("cp", "protect"):  # Giving old blocks back takes time of its own.
-                for old in (folder / "copy", sidecar):
-                    old.unlink(missing_ok=True)
-            elif name.startswith("verify"):  # protect leaves nothing large in the page cache
-                read(sidecar)
-            found = run(command)
-            if turn:
-                results[name].append(found)
+
+    def before(name: str) -> None:
+        if name in ("cp", "protect"):  # Giving old blocks back takes time of its own.
+            for old in (folder / "copy", sidecar):
+                old.unlink(missing_ok=True)
+        elif name.startswith("verify"):  # protect leaves nothing large in the page cache
+            read(sidecar)
+
+    found = take_turns(commands, runs, before)
     for path in folder.iterdir():
         path.unlink()
-    return {
-        name: (statistics.median(t for t, _ in found), max(m for _, m in found))
-        for name, found in results.items()
-    }
+    return found
 
 
 def cpu_name() -> str:

@@ -1,4 +1,4 @@
-"""The decoding of one block, step by step (the numbers are those of the design).
+"""The decoding of one block, step by step.
 
 1. Symbols of right cells are fixed: never altered, never erased. What cannot be read is erased.
 2. Inner decoding of the other cells; (2a) a cell whose digest now agrees is finished.

@@ -72,7 +72,8 @@ class BlockOutcome:
     """What became of a block: one row for each strip whose cell was not right.
 
     `known` marks the bytes that the decoder vouches for; `finished` the cells whose digest agrees or,
-    where there is none, all of whose bytes are known. `margin` is that of the words of the design.
+    where there is none, all of whose bytes are known. `margin` is 1 - max (2 wrong + erasures) / r over the
+    columns.
     """
 
     number: int

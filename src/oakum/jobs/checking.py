@@ -142,7 +142,7 @@ class WindowCheck:
         self.mark: Callable[[], None] = lambda: None
         """Called when the scan has come further."""
 
-        self.on_damage: Callable[[], None] = lambda: None
+        self.on_damage: Callable[[], object] = lambda: None
         """Called, in any thread, when a cell has turned out to be wrong."""
 
         self._meter = Meter()

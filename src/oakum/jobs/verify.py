@@ -7,7 +7,7 @@ import os
 import threading
 import time
 from collections.abc import Iterator
-from contextlib import suppress
+from concurrent.futures import Future, ThreadPoolExecutor
 from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import TYPE_CHECKING
@@ -133,37 +133,29 @@ class SetCheck:
         self.code: ConcatenatedCode = self.opened.sections[0].bootstrap.code.code()
         if any(s.bootstrap.code != self.opened.sections[0].bootstrap.code for s in self.opened.sections):
             raise FormatError("the sections of this sidecar use different codes; it was pieced together")
-        self._decoders: Decoders | None = None
-        self._loading: threading.Thread | None = None
+        self._decoders: Future[Decoders] | None = None
         self._load_lock = threading.Lock()
         self.windows: list[WindowCheck] = []
         self.scanned: Scanned | None = None
 
     def decoders(self) -> Decoders:
-        """The compiled decoders, made when first needed: intact sets never wait for them."""
-        if self._loading is not None:
-            self._loading.join()
-        if self._decoders is None:
-            from oakum.decoding.block import Decoders
+        """The compiled decoders, loaded when first needed: intact sets never wait for them."""
+        return self.load_decoders().result()
 
-            announce_compiling(self.progress)
-            self._decoders = Decoders.of(self.code)
-        return self._decoders
-
-    def load_decoders(self) -> None:
-        """Damage was found: begin to load the decoders while the rest is read."""
-
-        def load() -> None:
-            with suppress(Exception):  # It is told when they are asked for, and cannot be had.
-                self._decoders = Decoders.of(self.code)
-
+    def load_decoders(self) -> Future[Decoders]:
+        """Begin to load the decoders beside whatever goes on, if that has not begun; damage was found."""
         with self._load_lock:
-            if self._loading is None and self._decoders is None:
-                from oakum.decoding.block import Decoders
+            if self._decoders is None:
+                loader = ThreadPoolExecutor(1, "oakum-decoders")
+                self._decoders = loader.submit(self._load)
+                loader.shutdown(wait=False)
+            return self._decoders
 
-                announce_compiling(self.progress)
-                self._loading = threading.Thread(target=load, daemon=True)
-                self._loading.start()
+    def _load(self) -> Decoders:
+        from oakum.decoding.block import Decoders
+
+        announce_compiling(self.progress)
+        return Decoders.of(self.code)
 
     def scan(self, *, hashing: bool) -> None:
         """Read everything in order, and note what is not right."""
