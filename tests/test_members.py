@@ -6,6 +6,9 @@ import errno
 import hashlib
 import os
 import tempfile
+import threading
+from concurrent.futures import ThreadPoolExecutor
+from contextlib import closing
 from pathlib import Path
 
 import pytest
@@ -13,6 +16,7 @@ from hypothesis import given
 from hypothesis import strategies as st
 from support import BadSectors, content, plant
 
+from oakum import members
 from oakum.errors import CannotCheck, UsageError
 from oakum.members import SMALL, Folder, MemberHasher, MemberStream, Span, collect, open_folder
 from oakum.sidecar.table import Kind
@@ -216,6 +220,36 @@ def test_many_members_do_not_use_up_descriptors(tmp_path: Path) -> None:
     stream.close()
     assert len(os.listdir("/proc/self/fd")) == before
     folder.close()
+
+
+def test_closing_waits_for_no_reader_and_takes_no_descriptor_from_one(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    plant(tmp_path, {"read": bytes(SMALL + 1), "idle": bytes(SMALL + 1)})
+    spans = [Span(name, 0, SMALL + 1) for name in (b"read", b"idle")]
+    reading, go_on, seen = threading.Event(), threading.Event(), []
+
+    def slowly(fd: int, offset: int, buffer: memoryview) -> list[tuple[int, int]]:
+        seen.append(fd)
+        reading.set()
+        assert go_on.wait(60)
+        os.fstat(fd)  # Still that of the member.
+        return []
+
+    with closing(Folder(tmp_path)) as folder:
+        stream = MemberStream(folder, spans)
+        stream.read_into(SMALL + 1, memoryview(bytearray(SMALL + 1)))
+        monkeypatch.setattr(members, "read_into", slowly)
+        with ThreadPoolExecutor() as threads:
+            reader = threads.submit(stream.read_into, 0, memoryview(bytearray(SMALL + 1)))
+            assert reading.wait(60)
+            stream.close()
+            go_on.set()
+            assert reader.result() == []
+            with pytest.raises(OSError):
+                os.fstat(seen[0])
+            with pytest.raises(RuntimeError, match="closed"):
+                stream.read_into(0, memoryview(bytearray(SMALL + 1)))
 
 
 def test_no_permission_is_no_erasure(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:

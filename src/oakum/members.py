@@ -224,6 +224,7 @@ class MemberStream:
         self._passing: set[bytes] = set()
         """Members to be dropped from the cache."""
 
+        self._closed = False
         self._lock = threading.Lock()
         self._small = threading.Lock()
 
@@ -322,10 +323,12 @@ class MemberStream:
         finally:
             with self._lock:
                 self._users[path] -= 1
-                self._close_some()
+                self._close_some(0 if self._closed else OPEN_FILES)
 
     def _descriptor(self, path: bytes) -> int | None:
         """An open descriptor of a member; None when there is no such file (which is remembered)."""
+        if self._closed:
+            raise RuntimeError("these members are closed")
         if path in self._open:
             self._open.move_to_end(path)
             return self._open[path]
@@ -343,15 +346,14 @@ class MemberStream:
         self._open[path] = fd
         return fd
 
-    def _close_some(self) -> None:
-        """Close the member that was not used for longest, when too many are open and nobody reads it."""
-        if len(self._open) <= OPEN_FILES:
+    def _close_some(self, most: int) -> None:
+        """Leave at most so many open; of those that nobody reads, what was not used for longest is closed."""
+        if len(self._open) <= most:
             return
-        oldest = next(iter(self._open))
-        if not self._users[oldest]:
-            fd = self._open.pop(oldest)
-            del self._users[oldest]
-            self._let_go(oldest, fd)
+        idle = [path for path in self._open if not self._users[path]]
+        for path in idle[: len(self._open) - most]:
+            del self._users[path]
+            self._let_go(path, self._open.pop(path))
 
     def _let_go(self, path: bytes, fd: int | None) -> None:
         """Close a member; the cache is left as it was found."""
@@ -389,10 +391,14 @@ class MemberStream:
         return [span.path for span in self._spans[first : bisect_left(self._starts, stop)]]
 
     def close(self) -> None:
-        """Close all open members."""
-        for path, fd in self._open.items():
-            self._let_go(path, fd)
-        self._open.clear()
+        """Close all open members; one that a thread still reads, when it has done so.
+
+        After an interruption there may be such threads: a descriptor closed under one of them could be
+        another file's by the time that it is used.
+        """
+        with self._lock:
+            self._closed = True
+            self._close_some(0)
 
 
 def _joined(ranges: Sequence[tuple[int, int]]) -> list[tuple[int, int]]:
