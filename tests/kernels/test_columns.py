@@ -17,9 +17,9 @@ from tier_runs import ON_X86, gfni_environment, run_tests
 
 from oakum.algebra.field import Field
 from oakum.algebra.outer import OuterCode
-from oakum.kernels import lanes, tiers
+from oakum.kernels import lane_field, tiers
 from oakum.kernels.columns import FAILED, ColumnDecoder
-from oakum.kernels.planes import points
+from oakum.kernels.lane_field import points
 
 FORCED = os.environ.get(tiers.ENVIRONMENT_VARIABLE)
 TIERS = [FORCED] if FORCED else tiers.available_tiers()
@@ -418,18 +418,18 @@ def test_threads_share_a_decoder() -> None:
 
 @pytest.mark.parametrize("poly", [0x11D, 0x12D, 0x187, 0x14D])
 def test_fields_are_mapped_by_an_isomorphism(poly: int) -> None:
-    image, field, everything = lanes.field_map(poly), Field(poly), np.arange(256)
+    image, field, everything = lane_field.field_map(poly), Field(poly), np.arange(256)
     a, b = everything[:, None], everything[None, :]
     assert sorted(image) == list(range(256)) and image[1] == 1
     np.testing.assert_array_equal(image[a ^ b], image[a] ^ image[b])
-    np.testing.assert_array_equal(image[field.multiply(a, b)], lanes.FIELD.multiply(image[a], image[b]))
+    np.testing.assert_array_equal(image[field.multiply(a, b)], lane_field.FIELD.multiply(image[a], image[b]))
 
 
 def test_points_of_the_transform() -> None:
     """A Cantor basis: x^2 + x of points 2q and 2q + 1 is point q, for the first 128 q."""
     x = points()
     assert sorted(x) == list(range(256))
-    np.testing.assert_array_equal(lanes.FIELD.multiply(x, x) ^ x, x[np.arange(256) // 2])
+    np.testing.assert_array_equal(lane_field.FIELD.multiply(x, x) ^ x, x[np.arange(256) // 2])
 
 
 # -- other CPUs ---------------------------------------------------------------------------------------------

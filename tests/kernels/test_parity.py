@@ -20,8 +20,8 @@ from oakum.algebra.field import Field
 from oakum.algebra.outer import OuterCode
 from oakum.errors import UsageError
 from oakum.kernels import parity, tiers
+from oakum.kernels.arrays import Arrays
 from oakum.kernels.parity import ParityEncoder
-from oakum.kernels.simd import Arrays
 
 FORCED = os.environ.get(tiers.ENVIRONMENT_VARIABLE)
 TIERS = [FORCED] if FORCED else list(tiers.available_tiers())

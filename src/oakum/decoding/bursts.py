@@ -12,7 +12,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from oakum.kernels.flips import find_flips
+from oakum.kernels.flips import FIND_FLIPS
 
 GAP = 16
 LEAST_LENGTH = 32
@@ -63,7 +63,7 @@ class Flips:
         count = np.count_nonzero(flips)
         places, bits = np.empty(count, np.int64), np.empty(count, np.uint8)
         clusters = np.empty((4, count), np.int64)
-        used = find_flips(flips, flips.view(np.uint64), GAP, places, bits, clusters)
+        used = FIND_FLIPS(flips, flips.view(np.uint64), GAP, places, bits, clusters)
         return Flips(flips.shape[1], places, bits, Clusters(*clusters[:, :used].copy()))
 
     def counts(self, rows: int) -> NDArray[np.intp]:

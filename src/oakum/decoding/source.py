@@ -13,8 +13,8 @@ from oakum.algebra.concatenated import ConcatenatedCode
 from oakum.decoding.bursts import Flips
 from oakum.geometry import Geometry
 from oakum.kernels.columns import ColumnDecoder
-from oakum.kernels.doubts_kernels import weigh_words
-from oakum.kernels.flips import find_flips
+from oakum.kernels.doubts import WEIGH_WORDS
+from oakum.kernels.flips import FIND_FLIPS
 from oakum.kernels.words import WordCodec
 
 Bytes = NDArray[np.uint8]
@@ -62,8 +62,8 @@ class Decoders:
         words, columns = WordCodec(code.inner), ColumnDecoder(code.outer)
         for codec in (words, columns):
             codec.prepare()
-        weigh_words.prepare()
-        find_flips.prepare()
+        WEIGH_WORDS.prepare()
+        FIND_FLIPS.prepare()
         return Decoders(code, words, columns)
 
 

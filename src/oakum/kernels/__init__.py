@@ -1,5 +1,5 @@
-"""The fast loops: strip map, word codec, column decoder.
+"""The fast loops: strip map, word codec, column decoder, and the digests of cells.
 
-Nothing is imported here: `oakum.kernels.stripmap` and its neighbours import numba, which costs a
-third of a second, so callers import them only where they are about to run one.
+Nothing is imported here. The modules whose names end in `_kernels`, and those that only they use, import
+numba, which costs a third of a second: they are for `oakum.kernels.compiling` alone, when it compiles.
 """

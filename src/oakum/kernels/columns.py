@@ -7,20 +7,30 @@ not wrong elsewhere are solved by one matrix, `ErasureSolver`.
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from functools import lru_cache
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
-from oakum.algebra.field import Bytes
+from oakum.algebra.field import ORDER, Bytes
 from oakum.algebra.outer import OuterCode
-from oakum.kernels.columns_kernels import FAILED, Tables, decode_columns
-from oakum.kernels.lanes import FIELD
+from oakum.kernels.compiling import Kernel
+from oakum.kernels.lane_field import BLOCK_WORDS, FIELD, LANES, PLANE_WORDS, POINTS, field_map, points
 from oakum.kernels.parity import ParityEncoder
 from oakum.kernels.stripmap import StripMap
 
-__all__ = ["FAILED", "ColumnDecoder", "ErasureSolver"]
+FAILED = -1
+"""The status of a column that could not be decoded."""
+
+NO_PLACE = 255
+
+CONTROL_ROWS = 8
+"""Lane blocks that steer the search for the locator, and what follows."""
+
+FLAG_ROWS = 3
+"""Sets of lanes that it keeps."""
 
 
 class ColumnDecoder:
@@ -41,7 +51,7 @@ class ColumnDecoder:
     def prepare(self) -> None:
         """Compile, or load, everything that the methods need, in the calling thread."""
         self._checks.prepare()
-        decode_columns.prepare()
+        DECODE_COLUMNS.prepare()
 
     def syndromes(self, received: Bytes) -> Bytes:
         """The syndromes uint8[r, L] of the columns of `received`, uint8[n, L]. ValueError on other shapes."""
@@ -80,9 +90,9 @@ class ColumnDecoder:
         tables = self._tables
         if self._foreign:
             syndromes = tables.to_lanes[syndromes]
-        decode_columns(
+        DECODE_COLUMNS(
             np.ascontiguousarray(syndromes), np.ascontiguousarray(erased), chosen,
-            tables.locators, tables.place_of, tables.scale_of, magnitudes, status,
+            tables.locators, tables.place_of, tables.scale_of, magnitudes, status, *workspace(self.outer.r),
         )  # fmt: skip
         return tables.from_lanes[magnitudes] if self._foreign else magnitudes, status
 
@@ -101,6 +111,39 @@ class ColumnDecoder:
 
     def _build_solver(self, rows: tuple[int, ...]) -> ErasureSolver:
         return ErasureSolver(self.outer, rows, self._tier)
+
+
+class Tables:
+    """What the kernel has to know about a code.
+
+    locators: uint8[n], for each place its locator X in the lanes' field;
+    place_of: uint8[256], the place whose 1/X is the Fourier transform's point q, or `NO_PLACE`;
+    scale_of: uint8[256], X^(-first root) at point q; nothing, uint8[0], where all are 1;
+    to_lanes, from_lanes: uint8[256], the code's field to the lanes' field and back.
+    """
+
+    def __init__(self, outer: OuterCode) -> None:
+        self.to_lanes = field_map(outer.field_poly)
+        self.from_lanes = np.argsort(self.to_lanes).astype(np.uint8)
+        self.locators = self.to_lanes[outer.locators]
+        self.place_of = np.full(POINTS, NO_PLACE, dtype=np.uint8)
+        self.place_of[np.argsort(points())[FIELD.inverse(self.locators)]] = np.arange(outer.n)
+        scales = FIELD.power(points(), outer.first_root % ORDER)
+        self.scale_of = scales if outer.first_root else scales[:0]
+
+
+def workspace(r: int) -> list[NDArray[Any]]:
+    """Memory for the kernel to work in, as it takes it after its other arguments.
+
+    Lane blocks, uint64[:, 32]: syndromes, evaluator, locator and the one before, constants and values of the
+    Fourier transform, control; sets of lanes, uint64[:, 4]: flags and starts; bytes of a row of columns, of
+    staged locators or magnitudes, of roots; numbers of erasures and of roots.
+    """
+    heights = (r, r, r + 2, r + 2, POINTS, POINTS, CONTROL_ROWS)
+    blocks = [np.zeros((rows, BLOCK_WORDS), np.uint64) for rows in heights]
+    sets = [np.zeros((rows, PLANE_WORDS), np.uint64) for rows in (FLAG_ROWS, r + 1)]
+    rows = [np.zeros((rows, LANES), np.uint8) for rows in (1, r, r)]
+    return [*blocks, *sets, *rows, *np.zeros((2, LANES), np.int64)]
 
 
 class ErasureSolver:
@@ -153,3 +196,32 @@ def _solution(outer: OuterCode, rows: tuple[int, ...]) -> Bytes:
         others[pivot] = 0
         table ^= field.multiply(others[:, None], table[pivot][None, :])
     return np.ascontiguousarray(table[:, len(rows) :])
+
+
+def decodes_known_errors(compiled: Callable[..., Any]) -> bool:
+    """300 columns of RS(255,223) with 0 to 20 wrong symbols, in every other one half of them erased."""
+    outer = OuterCode(255, 223)
+    tables = Tables(outer)
+    columns = np.arange(300)
+    errors, erased = np.zeros((2, outer.n, columns.size), dtype=np.uint8)
+    within = np.zeros(columns.size, dtype=bool)
+    for c in columns:
+        wrong = (c + 11 * np.arange(c % 21)) % outer.n
+        errors[wrong, c] = 1 + (c + 37 * wrong) % 255
+        known = wrong[: wrong.size // 2] if c % 2 else wrong[:0]
+        erased[known, c] = 1
+        within[c] = 2 * wrong.size - known.size <= outer.r
+    syndromes = np.zeros((outer.r, columns.size), dtype=np.uint8)
+    for i in range(outer.n):
+        syndromes ^= outer.field.multiply(outer.check_matrix[:, i, None], errors[i][None, :])
+    found = np.zeros_like(errors)
+    status = np.zeros(columns.size, dtype=np.int16)
+    compiled(
+        syndromes, erased, columns, tables.locators, tables.place_of, tables.scale_of, found, status,
+        *workspace(outer.r),
+    )  # fmt: skip
+    expected = np.where(within, np.count_nonzero(errors * (1 - erased), axis=0), FAILED)
+    return np.array_equal(status, expected) and np.array_equal(found, errors * within)
+
+
+DECODE_COLUMNS = Kernel(".columns_kernels.decode_columns", decodes_known_errors, "the column decoder")

@@ -16,56 +16,27 @@ obey the recurrence that the locator stands for, and agree in the first of its l
 
 from __future__ import annotations
 
-from collections.abc import Callable
-from typing import Any
-
 import numpy as np
 from numpy.typing import NDArray
 
-from oakum.algebra.field import ORDER, Bytes
-from oakum.algebra.outer import OuterCode
+from oakum.algebra.field import Bytes
 from oakum.kernels import lanes
-from oakum.kernels.compiling import kernel
-from oakum.kernels.lanes import BLOCK_WORDS, FIELD, LANES, ONE, PLANE_WORDS, subroutine
+from oakum.kernels.columns import FAILED
+from oakum.kernels.compiling import typed
+from oakum.kernels.lanes import LANES, ONE, PLANE_WORDS, subroutine
 from oakum.kernels.locator import (
     CHOSEN,
-    CONTROL_ROWS,
     COUNTER,
-    FLAG_ROWS,
     LOST,
     find_erasure_locator,
     find_locator,
     find_starts,
 )
 from oakum.kernels.magnitudes import find_evaluator, find_magnitudes
-from oakum.kernels.planes import POINTS, points
-from oakum.kernels.roots import NO_PLACE, expand, find_roots
+from oakum.kernels.roots import expand, find_roots
 
 Words = NDArray[np.uint64]
 Integers = NDArray[np.int64]
-
-FAILED = -1
-"""The status of a column that could not be decoded."""
-
-
-class Tables:
-    """What the kernel has to know about a code.
-
-    locators: uint8[n], for each place its locator X in the lanes' field;
-    place_of: uint8[256], the place whose 1/X is the Fourier transform's point q, or `NO_PLACE`;
-    scale_of: uint8[256], X^(-first root) at point q; nothing, uint8[0], where all are 1;
-    to_lanes, from_lanes: uint8[256], the code's field to the lanes' field and back.
-    """
-
-    def __init__(self, outer: OuterCode) -> None:
-        self.to_lanes = lanes.field_map(outer.field_poly)
-        self.from_lanes = np.argsort(self.to_lanes).astype(np.uint8)
-        self.locators = self.to_lanes[outer.locators]
-        self.place_of = np.full(POINTS, NO_PLACE, dtype=np.uint8)
-        self.place_of[np.argsort(points())[FIELD.inverse(self.locators)]] = np.arange(outer.n)
-        scales = FIELD.power(points(), outer.first_root % ORDER)
-        self.scale_of = scales if outer.first_root else scales[:0]
-
 
 # -- columns to lanes ---------------------------------------------------------------------------------------
 
@@ -161,59 +132,24 @@ def _store(
 # -- the kernel ---------------------------------------------------------------------------------------------
 
 
-def _self_test(compiled: Callable[..., Any]) -> bool:
-    """300 columns of RS(255,223) with 0 to 20 wrong symbols, in every other one half of them erased."""
-    outer = OuterCode(255, 223)
-    tables = Tables(outer)
-    columns = np.arange(300)
-    errors, erased = np.zeros((2, outer.n, columns.size), dtype=np.uint8)
-    within = np.zeros(columns.size, dtype=bool)
-    for c in columns:
-        wrong = (c + 11 * np.arange(c % 21)) % outer.n
-        errors[wrong, c] = 1 + (c + 37 * wrong) % 255
-        known = wrong[: wrong.size // 2] if c % 2 else wrong[:0]
-        erased[known, c] = 1
-        within[c] = 2 * wrong.size - known.size <= outer.r
-    syndromes = np.zeros((outer.r, columns.size), dtype=np.uint8)
-    for i in range(outer.n):
-        syndromes ^= outer.field.multiply(outer.check_matrix[:, i, None], errors[i][None, :])
-    found = np.zeros_like(errors)
-    status = np.zeros(columns.size, dtype=np.int16)
-    compiled(syndromes, erased, columns, tables.locators, tables.place_of, tables.scale_of, found, status)
-    expected = np.where(within, np.count_nonzero(errors * (1 - erased), axis=0), FAILED)
-    return np.array_equal(status, expected) and np.array_equal(found, errors * within)
-
-
-@kernel(
+@typed(
     "void(Array(uint8, 2, 'C', True), Array(uint8, 2, 'C', True), int64[::1], uint8[::1], uint8[::1], "
-    "uint8[::1], uint8[:, :], int16[::1])",
-    self_test=_self_test,
-    purpose="the column decoder",
+    "uint8[::1], uint8[:, :], int16[::1], uint64[:, ::1], uint64[:, ::1], uint64[:, ::1], uint64[:, ::1], "
+    "uint64[:, ::1], uint64[:, ::1], uint64[:, ::1], uint64[:, ::1], uint64[:, ::1], uint8[:, ::1], "
+    "uint8[:, ::1], uint8[:, ::1], int64[::1], int64[::1])"
 )
 def decode_columns(
     syndromes: Bytes, erased: Bytes, columns: Integers, locators: Bytes, place_of: Bytes, scale_of: Bytes,
-    magnitudes: Bytes, status: NDArray[np.int16],
+    magnitudes: Bytes, status: NDArray[np.int16], blocks: Words, evaluator: Words, locator: Words,
+    previous: Words, constants: Words, values: Words, control: Words, flags: Words, starts: Words,
+    gathered: Bytes, staged: Bytes, roots: Bytes, erasures: Integers, found: Integers,
 ) -> None:  # fmt: skip
     """Write the magnitudes of the chosen `columns` into magnitudes[n, L] and their status into status[L].
 
     `columns` are in rising order. erased[n, L] may have no rows: nothing is erased. The three tables
-    are those of `Tables`.
+    are those of `columns.Tables`; from `blocks` on it is memory to work in, see `columns.workspace`.
     """
     r = syndromes.shape[0]
-    blocks = np.zeros((r, BLOCK_WORDS), dtype=np.uint64)
-    evaluator = np.zeros((r, BLOCK_WORDS), dtype=np.uint64)
-    locator = np.zeros((r + 2, BLOCK_WORDS), dtype=np.uint64)
-    previous = np.zeros((r + 2, BLOCK_WORDS), dtype=np.uint64)
-    constants = np.zeros((POINTS, BLOCK_WORDS), dtype=np.uint64)
-    values = np.zeros((POINTS, BLOCK_WORDS), dtype=np.uint64)
-    control = np.zeros((CONTROL_ROWS, BLOCK_WORDS), dtype=np.uint64)
-    flags = np.zeros((FLAG_ROWS, PLANE_WORDS), dtype=np.uint64)
-    starts = np.zeros((r + 1, PLANE_WORDS), dtype=np.uint64)
-    gathered = np.zeros((1, LANES), dtype=np.uint8)
-    staged = np.zeros((r, LANES), dtype=np.uint8)
-    roots = np.zeros((r, LANES), dtype=np.uint8)
-    counts = np.zeros((2, LANES), dtype=np.int64)
-    erasures, found = counts[0], counts[1]
     for first in range(0, columns.size, LANES):
         group = columns[first : first + LANES]
         _load_syndromes(syndromes, group, gathered, blocks)

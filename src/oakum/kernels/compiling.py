@@ -1,34 +1,20 @@
 """How kernels are compiled, kept and trusted.
 
-A kernel is a numba function with one explicit signature. It is compiled when it is first used, kept in
-a cache folder that only the user can write, and has to give a known answer before it is used in a
-process. Whatever is wrong with the cache (no place for it, cut files, flipped bytes, other people's
-files) costs the time to compile again and nothing else.
-
-    <cache>/oakum/kernels-<key>/<kernel>/...    numba's files, and `seal`: their digests
-
-The key hashes the sources of all kernels, the versions of Python, numba and llvmlite, and the CPU's
-features. numba itself looks only at the file that holds a kernel, and would go on using code whose
-intrinsics have changed in another file; nor does it notice a flipped byte. Hence key and seal.
+A kernel is a function of numba's subset of Python with one explicit signature. It is compiled when it is
+first used, kept as machine code (see `oakum.kernels.store` and `machine`), and has to give a known answer
+before it is used in a process. numba is imported only to compile.
 """
 
 from __future__ import annotations
 
 import contextlib
-import hashlib
-import os
-import shutil
-import stat
-import sys
-import tempfile
 import threading
-import time
-from collections.abc import Callable
-from functools import cache
-from pathlib import Path
+from collections.abc import Callable, Iterator
+from importlib import import_module
 from typing import Any
 
-from oakum.kernels import tiers
+from oakum.kernels import machine, store, tiers
+from oakum.kernels.machine import Code, Kind
 
 on_compile: Callable[[str], None] | None = None
 """Called with a sentence for the user before a kernel is compiled (not when it comes from the cache).
@@ -36,205 +22,119 @@ on_compile: Callable[[str], None] | None = None
 A job sets it. It is called in the thread that needs the kernel first; `Kernel.prepare` says which.
 """
 
-KEPT_DAYS = 60
-"""Cache folders of other versions or CPUs are removed when they have not been used for so long."""
+OUTSIDE = ("memcpy", "memmove", "memset", "llvm.")
+"""What names begin with that a kernel may refer to."""
 
-_SEAL = "seal"
+OPTIONS: dict[str, Any] = {
+    "no_cpython_wrapper": True,
+    "no_cfunc_wrapper": True,
+    "error_model": "numpy",
+    "_nrt": False,
+}
+"""What numba is told: no wrappers for calls from Python, no checks of divisors, no memory management."""
+
 _lock = threading.RLock()
+
+
+def typed(signature: Any) -> Callable[[Callable[..., Any]], Callable[..., Any]]:
+    """Marks a function that `Kernel` compiles with its signature.
+
+    As numba takes it: in its notation, such as ``"void(intp, intp)"``, or of its types. Numbers are intp,
+    or tuples of them; arrays may not be made in a kernel.
+    """
+
+    def mark(function: Callable[..., Any]) -> Callable[..., Any]:
+        function.signature = signature  # type: ignore[attr-defined]
+        return function
+
+    return mark
 
 
 class Kernel:
     """A function compiled on first use. Call it like the function itself.
 
-    `self_test` is given the compiled function and says whether its answers are right.
+    `place` is "module.function", the module relative to this package with a leading dot; that module, which
+    may import numba, is imported only to compile. `self_test` is given the compiled function and says whether
+    its answers are right. `purpose` completes the sentence "compiling ... for this CPU".
     """
 
-    def __init__(
-        self,
-        function: Callable[..., Any],
-        signature: Any,
-        self_test: Callable[[Callable[..., Any]], bool],
-        purpose: str,
-    ) -> None:
-        self.name = f"{function.__module__.rpartition('.')[2]}.{function.__name__}"
-        self.function = function
-        self.signature = signature
+    def __init__(self, place: str, self_test: Callable[[Callable[..., Any]], bool], purpose: str) -> None:
+        self.name = place.lstrip(".")
         self.self_test = self_test
         self.purpose = purpose
-        self.__doc__ = function.__doc__
-        self._compiled: Callable[..., Any] | None = None
+        self._place = place
+        self._code: Code | None = None
 
     def __call__(self, *arguments: Any) -> Any:
-        return (self._compiled or self.prepare())(*arguments)
+        return (self._code or self.prepare())(*arguments)
 
-    def prepare(self) -> Callable[..., Any]:
+    def prepare(self) -> Code:
         """Compile now, or load from the cache, and test. Raises RuntimeError if the answers are wrong."""
         with _lock:
-            if self._compiled is None:
-                self._compiled = self._cached() or self._uncached()
-            return self._compiled
+            if self._code is None:
+                self._code = self._kept() or self._compiled()
+            return self._code
 
-    def _cached(self) -> Callable[..., Any] | None:
-        """The kernel by way of the cache folder; None if anything at all is wrong with that."""
-        home = cache_home()
-        if home is None:
-            return None
-        folder = home / self.name
-        try:
-            if not _is_sealed(folder):
-                shutil.rmtree(folder, ignore_errors=True)
-                return self._into_cache(folder)
-            compiled = _jit(self.function, self.signature, folder)
-            if self.self_test(compiled):
-                return compiled  # type: ignore[no-any-return]
-        except Exception:  # unpickling damaged files can raise anything
-            pass
-        shutil.rmtree(folder, ignore_errors=True)
+    def _kept(self) -> Code | None:
+        """The kernel from the cache; None if anything at all is wrong with that."""
+        content = store.load(self.name)
+        with contextlib.suppress(Exception):  # content of another making can raise anything
+            if content is not None and self.self_test(code := Code(content)):
+                return code
         return None
 
-    def _into_cache(self, folder: Path) -> Callable[..., Any] | None:
-        """Compile in a folder of our own and move it to its place when it is whole and sealed."""
-        partial = Path(tempfile.mkdtemp(prefix=f"{self.name}.", dir=folder.parent))
-        try:
-            self._announce("later runs will find it ready")
-            compiled: Callable[..., Any] = _jit(self.function, self.signature, partial)
-            if not self.self_test(compiled):
-                return None
-            (partial / _SEAL).write_text(_digests(partial))
-            with contextlib.suppress(OSError):  # another process was first
-                partial.rename(folder)
-            return compiled
-        finally:
-            shutil.rmtree(partial, ignore_errors=True)
-
-    def _uncached(self) -> Callable[..., Any]:
-        self._announce("it cannot be kept for later runs")
-        compiled: Callable[..., Any] = _jit(self.function, self.signature, None)
-        if not self.self_test(compiled):
+    def _compiled(self) -> Code:
+        if on_compile is not None:
+            kept = store.cache_home() is not None
+            prospect = "later runs will find it ready" if kept else "it cannot be kept for later runs"
+            on_compile(f"compiling {self.purpose} for this CPU; {prospect}")
+        content = self.compile()
+        code = Code(content)
+        if not self.self_test(code):
             raise RuntimeError(
                 f"the kernel {self.name} gives wrong answers on this CPU; "
                 f"set {tiers.ENVIRONMENT_VARIABLE} to another of {', '.join(tiers.TIERS)}"
             )
-        return compiled
+        store.save(self.name, content)
+        return code
 
-    def _announce(self, prospect: str) -> None:
-        if on_compile is not None:
-            on_compile(f"compiling {self.purpose} for this CPU; {prospect}")
+    def compile(self) -> bytes:
+        """The kernel compiled anew, as `machine.packed`."""
+        result = self.compiled_by_numba()
+        library, returns = result.library, str(result.signature.return_type) != "none"
+        if outside := [name for name in _declared(library) if not name.startswith(OUTSIDE)]:
+            raise RuntimeError(f"the kernel {self.name} refers to {', '.join(outside)}")
+        kinds = [_kind_of(argument) for argument in result.signature.args]
+        code, _ = library.serialize_using_object_code()[2]
+        return machine.packed(result.fndesc.llvm_func_name, kinds, returns, code)
 
+    def compiled_by_numba(self) -> Any:
+        """numba's result of compiling the kernel."""
+        import numba
 
-def kernel(
-    signature: Any, *, self_test: Callable[[Callable[..., Any]], bool], purpose: str
-) -> Callable[[Callable[..., Any]], Kernel]:
-    """Decorator that makes a function of numba's subset of Python a `Kernel`.
-
-    `signature` as numba takes it: in its notation, such as ``"void(intp, intp)"``, or of its types.
-    `purpose` completes the sentence "compiling ... for this CPU".
-    """
-
-    def decorate(function: Callable[..., Any]) -> Kernel:
-        return Kernel(function, signature, self_test, purpose)
-
-    return decorate
-
-
-def _jit(function: Callable[..., Any], signature: Any, folder: Path | None) -> Any:
-    """The numba dispatcher of `function`, compiled for `signature` (through `folder`, if given)."""
-    import numba
-    from numba.core import config
-
-    options = {"nogil": True, "no_cfunc_wrapper": True}
-    if folder is None:
-        return numba.njit(signature, **options)(function)
-    with _lock:
-        before = config.CACHE_DIR
-        config.CACHE_DIR = str(folder)  # read once, when the function is decorated
-        try:
-            return numba.njit(signature, cache=True, **options)(function)
-        finally:
-            config.CACHE_DIR = before
+        module, _, name = self._place.rpartition(".")
+        function = getattr(import_module(module, __package__), name)
+        with _lock:
+            dispatcher = numba.njit(function.signature, **OPTIONS)(function)
+        (result,) = dispatcher.overloads.values()
+        return result
 
 
-@cache
-def cache_key() -> str:
-    """Hash of all that compiled code depends on: kernel sources, versions, target CPU.
-
-    Place and times of the sources are in it because numba takes files from other ones for stale.
-    """
-    import llvmlite
-    import numba
-
-    digest = hashlib.sha256()
-    for source in sorted(Path(__file__).parent.rglob("*.py")):
-        digest.update(f"{source} {source.stat().st_mtime_ns}\n".encode())
-        digest.update(hashlib.sha256(source.read_bytes()).digest())
-    facts = (sys.version, numba.__version__, llvmlite.__version__, *tiers.target())
-    digest.update("\n".join(facts).encode())
-    return digest.hexdigest()[:16]
+def _declared(library: Any) -> Iterator[str]:
+    """Names of the functions that a compiled module refers to and does not hold."""
+    for function in library._final_module.functions:
+        if function.is_declaration:
+            yield function.name
 
 
-def cache_home() -> Path | None:
-    """The folder for this version and CPU, made if need be; None if there is no safe place for it.
+def _kind_of(argument: Any) -> Kind:
+    """How numba's type of an argument is passed on."""
+    from numba import types
 
-    Compiled kernels are pickles, and loading one runs what it says: so folders that belong to someone
-    else, or that others may write, are passed over.
-    """
-    name = f"kernels-{cache_key()}"
-    for parent in _cache_parents():
-        home = parent / name
-        try:
-            parent.mkdir(mode=0o700, parents=True, exist_ok=True)
-            if not _only_ours(parent):
-                continue
-            home.mkdir(mode=0o700, exist_ok=True)
-            if _only_ours(home):
-                os.utime(home)
-                _forget_old(parent, keep=home)
-                return home
-        except OSError:
-            continue
-    return None
-
-
-def _cache_parents() -> list[Path]:
-    configured = os.environ.get("XDG_CACHE_HOME", "")
-    try:
-        base = Path(configured) if os.path.isabs(configured) else Path.home() / ".cache"
-        parents = [base / "oakum"]
-    except RuntimeError:  # no home folder
-        parents = []
-    user = os.getuid() if hasattr(os, "getuid") else "user"
-    return [*parents, Path(tempfile.gettempdir()) / f"oakum-{user}"]
-
-
-def _only_ours(folder: Path) -> bool:
-    """Whether `folder` is a real folder that belongs to the user and that nobody else can write."""
-    status = folder.lstat()
-    if not stat.S_ISDIR(status.st_mode):
-        return False
-    if not hasattr(os, "geteuid"):
-        return True
-    return status.st_uid == os.geteuid() and not status.st_mode & (stat.S_IWGRP | stat.S_IWOTH)
-
-
-def _forget_old(parent: Path, keep: Path) -> None:
-    limit = time.time() - KEPT_DAYS * 86400
-    for folder in parent.glob("kernels-*"):
-        if folder != keep and folder.lstat().st_mtime < limit:
-            shutil.rmtree(folder, ignore_errors=True)
-
-
-def _digests(folder: Path) -> str:
-    """One line for each of numba's files in `folder`: digest and relative path."""
-    files = sorted(path for path in folder.rglob("*.nb[ic]") if path.is_file())
-    return "".join(
-        f"{hashlib.sha256(path.read_bytes()).hexdigest()}  {path.relative_to(folder)}\n" for path in files
-    )
-
-
-def _is_sealed(folder: Path) -> bool:
-    """Whether the files in `folder` are those that were there when it was written."""
-    try:
-        seal = (folder / _SEAL).read_text()
-    except (OSError, UnicodeDecodeError):
-        return False
-    return seal != "" and seal == _digests(folder)
+    if isinstance(argument, types.Array):
+        return (str(argument.dtype), argument.ndim, argument.layout == "C", argument.mutable)
+    if isinstance(argument, types.BaseTuple):
+        return len(argument.types)
+    if argument == types.intp:
+        return None
+    raise TypeError(f"a kernel cannot take {argument}")

@@ -19,8 +19,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from oakum.algebra.inner import InnerCode
-from oakum.kernels import doubts_kernels as kernels
-from oakum.kernels.words import WordCodec
+from oakum.kernels.compiling import Kernel
+from oakum.kernels.words import WORD, WordCodec
 
 Bytes = NDArray[np.uint8]
 Floats = NDArray[np.float32]
@@ -50,9 +50,9 @@ def doubts(
     codec.parity_rows(received, staggers, syndromes, cell=received.shape[1])
     syndromes ^= parity
     columns, bit_of = _columns(inner)
-    kernels.weigh_words(
+    WEIGH_WORDS(
         received, corrected, pinned, status, syndromes, staggers, inner.m, inner.p, columns, bit_of,
-        tables(inner, _rounded(rate)), out,
+        tables(inner, _rounded(rate)), out, np.empty(WORD, np.float32),
     )  # fmt: skip
     return out
 
@@ -110,7 +110,10 @@ def gives_known_doubts(compiled: Callable[..., Any]) -> bool:
     table = tables(inner, 0.01)
     found = np.zeros((2, 15), np.uint8)
     staggers = np.zeros(2, np.int64)
-    compiled(received, corrected, pinned, status, syndromes, staggers, 15, 1, columns, bit_of, table, found)
+    compiled(
+        received, corrected, pinned, status, syndromes, staggers, 15, 1, columns, bit_of, table, found,
+        np.empty(WORD, np.float32),
+    )  # fmt: skip
     explained = [pair for pair in _pairs(columns) if columns[pair[0]] ^ columns[pair[1]] == syndromes[0, 0]]
     inside = [pair for pair in explained if any(24 <= bit < 32 for bit in pair)]
     chance = (len(inside) + table[-2, 1] * table[-1, 1]) / (len(explained) + table[-2, 1])
@@ -125,3 +128,6 @@ def _pairs(columns: NDArray[np.uint32]) -> list[tuple[int, int]]:
     """Pairs of bits in byte 3 and the parity of a word."""
     open_bits = [*range(24, 32), *range(len(columns) - 8, len(columns))]
     return [(a, b) for i, a in enumerate(open_bits) for b in open_bits[i + 1 :]]
+
+
+WEIGH_WORDS = Kernel(".doubts_kernels.weigh_words", gives_known_doubts, "the inner code")

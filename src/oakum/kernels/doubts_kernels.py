@@ -2,13 +2,10 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
-from typing import Any
-
 import numpy as np
 from numpy.typing import NDArray
 
-from oakum.kernels.compiling import kernel
+from oakum.kernels.compiling import typed
 from oakum.kernels.simd import inlined
 
 Bytes = NDArray[np.uint8]
@@ -17,12 +14,6 @@ Floats = NDArray[np.float32]
 FLAGGED = 255
 UNDECODED = 250
 """Statuses from here to FLAGGED - 1 are words that were not decoded at all."""
-
-
-def _self_test(compiled: Callable[..., Any]) -> bool:
-    from oakum.kernels.doubts import gives_known_doubts
-
-    return gives_known_doubts(compiled)
 
 
 @inlined
@@ -65,23 +56,20 @@ def count_pairs(
     return pairs
 
 
-@kernel(
+@typed(
     "void(uint8[:, ::1], uint8[:, ::1], uint8[:, ::1], uint8[:, ::1], uint8[:, ::1], int64[::1], intp, intp,"
-    " uint32[::1], int16[::1], float32[:, ::1], uint8[:, ::1])",
-    self_test=_self_test,
-    purpose="the inner code",
+    " uint32[::1], int16[::1], float32[:, ::1], uint8[:, ::1], float32[::1])"
 )
 def weigh_words(
     received: Bytes, corrected: Bytes, pinned: Bytes, status: Bytes, syndromes: Bytes,
     staggers: NDArray[np.int64], m: int, p: int, columns: NDArray[np.uint32],
-    bit_of: NDArray[np.int16], tables: Floats, doubts: Bytes,
+    bit_of: NDArray[np.int16], tables: Floats, doubts: Bytes, touched: Floats,
 ) -> None:  # fmt: skip
     """Write the chance, times 255, that each byte of `corrected` is wrong into doubts[R, W].
 
     `tables` as from `doubts.tables`; `bit_of` gives the bit whose check column is a value (-1: none) and has
-    entries only for p = 1, where pairs of flips are counted one by one.
+    entries only for p = 1, where pairs of flips are counted one by one, in `touched`, float32[16].
     """
-    touched = np.zeros(16, np.float32)
     rows, width = received.shape
     for row in range(rows):
         offset = staggers[row] % m

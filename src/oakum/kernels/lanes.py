@@ -6,10 +6,8 @@ plane b is bit b of lane l's element. Blocks are the rows of arrays uint64[rows,
 the product of two polynomials over GF(2), made of ANDs and XORs of planes: any CPU does both on its widest
 registers, without tables and without branches (Biham 1997, for the idea).
 
-The field is that of 0x11D. The other fields of 256 elements are isomorphic to it: see `field_map`.
-
-All functions but that are for use in numba's subset of Python. A block is given by two arguments, its array
-and its row, and the result comes first.
+The field is that of `oakum.kernels.lane_field`. All functions are for use in numba's subset of Python. A
+block is given by two arguments, its array and its row, and the result comes first.
 """
 
 from __future__ import annotations
@@ -23,36 +21,21 @@ from llvmlite import ir
 from numba import types
 from numba.core import cgutils
 
-from oakum.algebra.field import ORDER, Bytes, Field
 from oakum.kernels import planes
-from oakum.kernels.planes import BLOCK_WORDS, FIELD, LANES, NO_LANES, PLANE_WORDS, Rows, number
+from oakum.kernels.compiling import OPTIONS
+from oakum.kernels.lane_field import BLOCK_WORDS, LANES, PLANE_WORDS, points
+from oakum.kernels.planes import NO_LANES, Rows, number
 from oakum.kernels.simd import I1, I64, Builder, Value, intrinsic, variable
 
-__all__ = ["ALL", "BLOCK_WORDS", "FIELD", "LANES", "NONE", "ONE", "PLANE_WORDS", "field_map", "subroutine"]
+__all__ = ["ALL", "BLOCK_WORDS", "LANES", "NONE", "ONE", "PLANE_WORDS", "subroutine"]
 
 NONE, ONE, ALL = np.uint64(0), np.uint64(1), np.uint64(0xFFFF_FFFF_FFFF_FFFF)
 """Words of sets of lanes: no lane, the first, all."""
 
 
 def subroutine(function: Callable[..., Any]) -> Callable[..., Any]:
-    """Marks a function that only kernels call: without the entries for Python, it compiles faster."""
-    return numba.njit(no_cpython_wrapper=True, no_cfunc_wrapper=True)(function)  # type: ignore[no-any-return]
-
-
-def field_map(poly: int) -> Bytes:
-    """uint8[256]: an isomorphism from GF(2^8) with field polynomial `poly` to the field of the lanes.
-
-    alpha goes to a root g of `poly` in the lanes' field, and alpha^i to g^i (Lidl and Niederreiter, Finite
-    Fields, chapter 2). Sums and products of images are the images of sums and products.
-    """
-    powers_of_x = [i for i in range(9) if poly >> i & 1]
-    for log_g in range(1, ORDER):
-        powers_of_g = FIELD.exp[log_g * np.arange(ORDER) % ORDER]
-        if np.bitwise_xor.reduce(powers_of_g[powers_of_x]) == 0:
-            image = np.zeros(256, dtype=np.uint8)
-            image[Field(poly).exp[:ORDER]] = powers_of_g
-            return image
-    raise ValueError(f"the polynomial {poly:#x} has no root in a field of 256 elements")
+    """Marks a function that only kernels call, and that is no part of each of its callers."""
+    return numba.njit(**OPTIONS)(function)  # type: ignore[no-any-return]
 
 
 # -- how intrinsics are made --------------------------------------------------------------------------------
@@ -158,7 +141,7 @@ def point(typing: Any, out: Any, i: Any, a: Any, j: Any) -> Any:
     """out[i] = the points of the Fourier transform whose numbers are the bytes a[j]"""
 
     def emit(builder: Builder, out: Rows, i: Value, a: Rows, j: Value) -> None:
-        basis = [int(planes.points()[1 << b]) for b in range(8)]
+        basis = [int(points()[1 << b]) for b in range(8)]
         out.store_block(planes.linear(builder, a.load_block(j), basis), i)
 
     return _void(emit, out, None, a, None)
@@ -221,7 +204,7 @@ def butterfly(typing: Any, a: Any, i: Any, j: Any, q: Any) -> Any:
         done = builder.function.append_basic_block("done")
         ways = []
         choice = builder.switch(q, done)  # to `done`, with whatever product, if there is no such point
-        for number_of_point, factor in enumerate(planes.points()[::2]):
+        for number_of_point, factor in enumerate(points()[::2]):
             block = builder.function.append_basic_block()
             choice.add_case(number(number_of_point), block)
             builder.position_at_end(block)

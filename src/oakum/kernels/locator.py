@@ -19,11 +19,9 @@ Integers = NDArray[np.int64]
 
 # rows of the lane blocks that steer the algorithm; rows after these are anyone's
 GAMMA, DELTA, SWAP, COUNTER, FACTOR = range(5)
-CONTROL_ROWS = 8
 
 # rows of the sets of lanes: whose locator is too long, who have used up their erasures, and any other set
 LOST, ACTIVE, CHOSEN = range(3)
-FLAG_ROWS = 3
 
 
 @subroutine

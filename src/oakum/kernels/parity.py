@@ -24,7 +24,7 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass
-from functools import cache
+from functools import cache, partial
 from typing import Any
 
 import numpy as np
@@ -32,11 +32,11 @@ from numpy.typing import NDArray
 
 from oakum.algebra.field import Bytes, Field
 from oakum.algebra.outer import OuterCode
-from oakum.kernels import parity_kernels as kernels
 from oakum.kernels import tiers
+from oakum.kernels.arrays import Arrays, check_rows
+from oakum.kernels.compiling import Kernel
 from oakum.kernels.scratch import scratch
-from oakum.kernels.simd import Arrays
-from oakum.kernels.stripmap import StripMap, affine_matrices, check_rows, nibble_tables
+from oakum.kernels.stripmap import StripMap, affine_matrices, nibble_tables
 
 CHUNK = 16 * 1024
 """Columns whose moments are held at a time, where they are not kept."""
@@ -44,7 +44,17 @@ CHUNK = 16 * 1024
 BUTTERFLY = 2.25
 """Products of the dense map that take as long as one butterfly, measured with AVX2."""
 
-KERNELS = {"gfni": kernels.moments_gfni, "shuffle": kernels.moments_shuffle}
+POINTS = 256
+"""Elements of the field, each of them a row of the transform; most stand for a symbol of the code."""
+
+TILE = 256
+"""Columns worked on at a time: with 5 layers, rows and sums are 16 KiB of the first-level cache."""
+
+VECTOR = 32
+"""Bytes of the widest vector of any tier; the width of a tile is made a multiple of it."""
+
+LAYERS = range(4, 8)
+"""The numbers of layers that the kernels can do."""
 
 
 class ParityEncoder:
@@ -152,7 +162,7 @@ class Transform:
     def of(outer: OuterCode, tier: str) -> Transform:
         """The transform for the locators of `outer`."""
         layers = layers_for(outer.r)
-        order = np.full(kernels.POINTS, 1 << 30, np.int64)
+        order = np.full(POINTS, 1 << 30, np.int64)
         order[outer.locators] = np.arange(outer.n)
         forms = affine_matrices if tier == "gfni" else nibble_tables
         lambdas = forms(outer.field_poly)[lambdas_in_order(outer.field, layers)]
@@ -171,24 +181,29 @@ class Transform:
             return
         kernel(
             Arrays.of(source, out, accumulate), first, self.order.ctypes.data, self.lambdas.ctypes.data,
-            self.layers, scratch(kernels.scratch_size(self.layers)),
+            self.layers, scratch(scratch_size(self.layers)),
         )  # fmt: skip
 
 
 def layers_for(r: int) -> int:
     """m, with 2^m >= r moments; at least what the kernels can do."""
-    return max(kernels.LAYERS.start, (r - 1).bit_length())
+    return max(LAYERS.start, (r - 1).bit_length())
+
+
+def scratch_size(layers: int) -> int:
+    """Bytes of scratch memory for a transform of 2^layers rows."""
+    return 8 * POINTS + (1 + (2 << layers) + POINTS) * TILE
 
 
 def cost(layers: int) -> float:
     """The time of one column's transform, in products of the dense map."""
-    return BUTTERFLY * layers * kernels.POINTS / 2
+    return BUTTERFLY * layers * POINTS / 2
 
 
 def pays(outer: OuterCode, tier: str) -> bool:
     """Whether moments and a small matrix take less time than the dense map."""
     layers = layers_for(outer.r)
-    if tier not in KERNELS or layers not in kernels.LAYERS or outer.first_root:
+    if tier not in KERNELS or layers not in LAYERS or outer.first_root:
         return False
     return cost(layers) + outer.r**2 < outer.r * outer.k
 
@@ -196,7 +211,7 @@ def pays(outer: OuterCode, tier: str) -> bool:
 @cache
 def subspace_polynomials(field: Field) -> Bytes:
     """uint8[8, 256]: s_i / s_i(2^i) at every x. They are linear: that of x + y is the sum of both."""
-    values = [np.arange(kernels.POINTS, dtype=np.uint8)]
+    values = [np.arange(POINTS, dtype=np.uint8)]
     for i in range(7):
         values.append(field.multiply(values[i], values[i] ^ values[i][1 << i]))
     scale = field.inverse([values[i][1 << i] for i in range(8)])
@@ -205,7 +220,7 @@ def subspace_polynomials(field: Field) -> Bytes:
 
 def basis_values(field: Field, count: int) -> Bytes:
     """uint8[count, 256]: P_j at every x, j < count."""
-    values = np.ones((1, kernels.POINTS), np.uint8)
+    values = np.ones((1, POINTS), np.uint8)
     for factor in subspace_polynomials(field):
         values = np.concatenate([values, field.multiply(values, factor)])
     return values[:count]
@@ -227,7 +242,7 @@ def lambdas_in_order(field: Field, layers: int) -> Bytes:
             used.extend(int(values[i, start + (b << i)]) for b in range(0, 1 << (depth + layer - i), 2))
 
     size, opening = 1 << layers, 3 if layers % 2 else 2
-    for coset in range(0, kernels.POINTS, size):
+    for coset in range(0, POINTS, size):
         for layer, depth in [(0, opening), *((layer, 2) for layer in range(opening, layers, 2))]:
             for start in range(coset, coset + size, 1 << (layer + depth)):
                 visit(start, layer, depth)
@@ -266,7 +281,7 @@ def check(source: Bytes, out: Bytes, inputs: int, rows: int, first: int = 0) -> 
 
 def gives_known_answer(compiled: Callable[..., Any], tier: str) -> bool:
     """Whether a kernel finds the moments of columns that hold one symbol each, by every kind of pass."""
-    columns = np.arange(kernels.TILE + 77)
+    columns = np.arange(TILE + 77)
     for outer in (OuterCode(255, 191), OuterCode(255, 127)):
         symbols, weights = columns % outer.n, (columns % 251 + 1).astype(np.uint8)
         source = np.zeros((outer.n, len(columns)), np.uint8)
@@ -279,3 +294,11 @@ def gives_known_answer(compiled: Callable[..., Any], tier: str) -> bool:
         if not np.array_equal(out ^ before, expected):
             return False
     return True
+
+
+def _kernel(tier: str) -> Kernel:
+    known = partial(gives_known_answer, tier=tier)
+    return Kernel(f".parity_kernels.moments_{tier}", known, "the parity transform")
+
+
+KERNELS = {tier: _kernel(tier) for tier in ("gfni", "shuffle")}

@@ -28,13 +28,14 @@ from typing import Any
 from llvmlite import ir
 from numba.core import cgutils, types
 
-from oakum.kernels.compiling import kernel
+from oakum.kernels.arrays import Arrays
+from oakum.kernels.compiling import typed
+from oakum.kernels.parity import POINTS, TILE, VECTOR
 from oakum.kernels.simd import (
     ARRAYS,
     I8,
     I32,
     I64,
-    Arrays,
     Builder,
     Value,
     byte_vector,
@@ -54,25 +55,8 @@ from oakum.kernels.simd import (
     store,
 )
 
-POINTS = 256
-"""Elements of the field, each of them a row of the transform; most stand for a symbol of the code."""
-
-TILE = 256
-"""Columns worked on at a time: with 5 layers, rows and sums are 16 KiB of the first-level cache."""
-
-VECTOR = 32
-"""Bytes of the widest vector of any tier; the width of a tile is made a multiple of it."""
-
-LAYERS = range(4, 8)
-"""The numbers of layers that the kernels can do."""
-
 Multiplier = Callable[[Builder, Value, int, Value], Value]
 """Emits lambda * x, given the address of the lambdas, the number of one of them, and x."""
-
-
-def scratch_size(layers: int) -> int:
-    """Bytes of scratch memory for a transform of 2^layers rows."""
-    return 8 * POINTS + (1 + (2 << layers) + POINTS) * TILE
 
 
 def affine_multiple(builder: Builder, lambdas: Value, number: int, x: Value) -> Value:
@@ -290,24 +274,13 @@ SIGNATURE = types.void(ARRAYS, types.intp, types.intp, types.intp, types.intp, t
 layers, and scratch memory."""
 
 
-def self_test(name: str) -> Callable[[Callable[..., Any]], bool]:
-    """A known answer for the kernel of a tier: the moments of single symbols."""
-
-    def agrees(compiled: Callable[..., Any]) -> bool:
-        from oakum.kernels import parity
-
-        return parity.gives_known_answer(compiled, name)
-
-    return agrees
-
-
-@kernel(SIGNATURE, self_test=self_test("gfni"), purpose="the parity transform")
+@typed(SIGNATURE)
 def moments_gfni(arrays: Arrays, first: int, order: int, lambdas: int, layers: int, scratch: int) -> None:
     passes = first4_gfni, first8_gfni, inner_gfni, last_gfni
     moments(passes, 8, arrays, first, order, lambdas, layers, scratch)
 
 
-@kernel(SIGNATURE, self_test=self_test("shuffle"), purpose="the parity transform")
+@typed(SIGNATURE)
 def moments_shuffle(arrays: Arrays, first: int, order: int, lambdas: int, layers: int, scratch: int) -> None:
     passes = first4_shuffle, first8_shuffle, inner_shuffle, last_shuffle
     moments(passes, 32, arrays, first, order, lambdas, layers, scratch)

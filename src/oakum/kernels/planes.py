@@ -7,21 +7,13 @@ give planes as values of LLVM's intermediate code and write instructions where `
 from __future__ import annotations
 
 from collections.abc import Sequence
-from functools import cache
 from typing import Any
 
-import numpy as np
 from llvmlite import ir
 from numba import types
 
-from oakum.algebra.field import Bytes, Field
+from oakum.kernels.lane_field import FIELD, PLANE_WORDS
 from oakum.kernels.simd import I1, I8, I32, I64, Builder, Value
-
-FIELD = Field(0x11D)
-POINTS = 256
-LANES = 256
-PLANE_WORDS = LANES // 64
-BLOCK_WORDS = 8 * PLANE_WORDS
 
 Planes = list[Value]
 
@@ -29,22 +21,6 @@ PLANE = ir.VectorType(I64, PLANE_WORDS)
 BYTES = ir.VectorType(I8, 64)
 FLAGS = ir.VectorType(I1, 64)
 NO_LANES = ir.Constant(PLANE, [0] * PLANE_WORDS)
-
-
-@cache
-def points() -> Bytes:
-    """uint8[256]: the field's elements in the order of a Cantor basis b_0 = 1, b_(i+1)^2 + b_(i+1) = b_i.
-
-    Point q is the sum of b_i over the bits i of q.
-    """
-    elements = np.arange(POINTS, dtype=np.uint8)
-    images = FIELD.multiply(elements, elements) ^ elements
-    span = np.zeros(1, dtype=np.uint8)
-    basis = np.ones(1, dtype=np.uint8)
-    while span.size < POINTS:
-        span = np.concatenate([span, span ^ basis])
-        basis = elements[images == basis][:1]  # none is left after the last
-    return span
 
 
 def number(value: int) -> Value:

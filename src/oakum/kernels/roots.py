@@ -13,14 +13,13 @@ from numpy.typing import NDArray
 
 from oakum.algebra.field import Bytes
 from oakum.kernels import lanes
+from oakum.kernels.columns import NO_PLACE
+from oakum.kernels.lane_field import POINTS
 from oakum.kernels.lanes import NONE, ONE, PLANE_WORDS, subroutine
 from oakum.kernels.locator import CHOSEN, LOST
-from oakum.kernels.planes import POINTS
 
 Words = NDArray[np.uint64]
 Integers = NDArray[np.int64]
-
-NO_PLACE = 255
 
 
 @subroutine

@@ -8,16 +8,15 @@ sizes that were validated in Python may reach a kernel. Every load and store is 
 from __future__ import annotations
 
 from collections.abc import Callable, Sequence
-from typing import Any, NamedTuple, TypeAlias
+from typing import Any, TypeAlias
 
-import numpy as np
 from llvmlite import ir
 from numba.core import cgutils, types
 from numba.extending import intrinsic as _numba_intrinsic
 from numba.extending import register_jitable as _numba_register_jitable
-from numpy.typing import NDArray
 
 from oakum.kernels import tiers
+from oakum.kernels.arrays import Arrays
 
 I1 = ir.IntType(1)
 I8 = ir.IntType(8)
@@ -29,28 +28,8 @@ Builder: TypeAlias = ir.IRBuilder
 Value: TypeAlias = ir.Value
 
 
-class Arrays(NamedTuple):
-    """What a kernel is told of the rows it reads and the rows it writes; addresses and sizes in bytes."""
-
-    out: int
-    out_stride: int
-    rows: int
-    source: int
-    source_stride: int
-    inputs: int
-    length: int
-    accumulate: int
-
-    @staticmethod
-    def of(source: NDArray[np.uint8], out: NDArray[np.uint8], accumulate: bool) -> Arrays:
-        inputs, length = source.shape
-        return Arrays(
-            out.ctypes.data, out.strides[0], len(out),
-            source.ctypes.data, source.strides[0], inputs, length, int(accumulate),
-        )  # fmt: skip
-
-
 ARRAYS = types.NamedUniTuple(types.intp, len(Arrays._fields), Arrays)  # type: ignore[attr-defined]
+"""numba's type of `Arrays`."""
 
 
 def intrinsic(function: Callable[..., Any]) -> Callable[..., Any]:

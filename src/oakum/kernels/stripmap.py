@@ -8,27 +8,48 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass
-from functools import cache, cached_property
+from functools import cache, cached_property, partial
 from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
 from oakum.algebra.field import Field
-from oakum.kernels import stripmap_kernels as kernels
 from oakum.kernels import tiers
+from oakum.kernels.arrays import Arrays, check_rows
+from oakum.kernels.compiling import Kernel
 from oakum.kernels.scratch import scratch
-from oakum.kernels.simd import Arrays
 
 Bytes = NDArray[np.uint8]
 
-KERNELS = {"gfni": kernels.map_gfni, "shuffle": kernels.map_shuffle, "portable": kernels.map_portable}
+STRIP = 1024
+"""Columns worked on at a time: all inputs of a (255, 223) code fit the second-level cache."""
+
+STRIDE = STRIP + 64
+"""Distance of the rows in scratch memory; not a power of two, or all would share a few cache lines."""
+
+TILE_ROWS = 4
+TILE_COLUMNS = 64
+
+NIBBLES_SIZE = 2 * TILE_COLUMNS
+NIBBLES_BLOCK = 128
+"""Inputs that the shuffle kernel holds at a time, split into nibbles: 16 KiB of the first-level cache."""
+
+MULTIPLES_SIZE = 32 * TILE_COLUMNS
+MULTIPLES_BLOCK = 8
+"""Inputs whose multiples the portable kernel holds at a time: 16 KiB of the first-level cache."""
+
+
+def scratch_size(rows: int, inputs: int) -> int:
+    """Bytes of scratch memory that any of the kernels needs for `rows` outputs and `inputs` inputs."""
+    packed = inputs + -(-rows // TILE_ROWS) * TILE_ROWS
+    return packed * STRIDE + max(NIBBLES_BLOCK * NIBBLES_SIZE, MULTIPLES_BLOCK * MULTIPLES_SIZE)
 
 
 class StripMap:
     """One matrix, made ready for the instructions of one tier.
 
-    `matrix` is uint8[R, K] over the field GF(2^8) of `field_poly`. `tier` as in `oakum.kernels.tiers`; None
+    `matrix` is uint8[R, K] over the field GF(2^8) of `field_poly`. `tier` as in `oakum.tiers`; None
     takes the current one. Raises UsageError for a tier that cannot be used here, ValueError for a `matrix`
     that is not as described. Making the first map of a tier compiles its kernel, or loads it.
     """
@@ -92,7 +113,7 @@ def prepared(matrix: Bytes, field_poly: int, tier: str) -> Prepared:
     if tier == "portable":
         low, high = matrix & 15, matrix >> 4
         entries = np.stack([low, high + np.uint8(16)], axis=-1)
-        return Prepared(entries.astype(np.uint16) * np.uint16(kernels.TILE_COLUMNS), field_poly & 0xFF)
+        return Prepared(entries.astype(np.uint16) * np.uint16(TILE_COLUMNS), field_poly & 0xFF)
     if tier == "gfni":
         return Prepared(grouped(affine_matrices(field_poly)[matrix]), 0)
     tables = nibble_tables(field_poly)
@@ -102,10 +123,10 @@ def prepared(matrix: Bytes, field_poly: int, tier: str) -> Prepared:
 def grouped(coefficients: NDArray[Any]) -> NDArray[Any]:
     """[R, K] as [ceil(R/4), K, 4]: what one register tile reads is together; absent outputs have 0."""
     rows, inputs = coefficients.shape
-    groups = -(-rows // kernels.TILE_ROWS)
-    padded = np.zeros((groups * kernels.TILE_ROWS, inputs), coefficients.dtype)
+    groups = -(-rows // TILE_ROWS)
+    padded = np.zeros((groups * TILE_ROWS, inputs), coefficients.dtype)
     padded[:rows] = coefficients
-    return np.ascontiguousarray(padded.reshape(groups, kernels.TILE_ROWS, inputs).transpose(0, 2, 1))
+    return np.ascontiguousarray(padded.reshape(groups, TILE_ROWS, inputs).transpose(0, 2, 1))
 
 
 @cache
@@ -135,14 +156,6 @@ def affine_matrices(field_poly: int) -> NDArray[np.uint64]:
     )
 
 
-def check_rows(array: Bytes, name: str) -> None:
-    """Raises ValueError unless `array` is two-dimensional, of bytes, with contiguous rows."""
-    if not isinstance(array, np.ndarray) or array.dtype != np.uint8 or array.ndim != 2:
-        raise ValueError(f"{name} is not a two-dimensional array of uint8")
-    if array.size and array.shape[1] > 1 and array.strides[1] != 1:
-        raise ValueError(f"the bytes of a row of {name} are not contiguous")
-
-
 def run(
     compiled: Callable[..., Any], prepared: Prepared, source: Bytes, out: Bytes, first: int, accumulate: bool
 ) -> None:
@@ -154,7 +167,7 @@ def run(
         Arrays.of(source, out, accumulate),
         prepared.address + first * entry_size,
         group_size,
-        scratch(kernels.scratch_size(len(out), len(source))),
+        scratch(scratch_size(len(out), len(source))),
         prepared.constant,
     )
 
@@ -163,7 +176,7 @@ def gives_known_answer(compiled: Callable[..., Any], tier: str) -> bool:
     """Whether a kernel multiplies every byte by every byte as the field does, whole vectors and a tail."""
     field = Field()
     everything = np.arange(256, dtype=np.uint8)
-    source = np.tile(everything, (2, 5))[:, : kernels.STRIP + 77]
+    source = np.tile(everything, (2, 5))[:, : STRIP + 77]
     source[1] = source[1, ::-1]
     matrix = np.stack([everything, everything[::-1]], axis=1)
     products = [field.multiply(matrix[:, i, None], source[i, None]) for i in range(2)]
@@ -173,3 +186,9 @@ def gives_known_answer(compiled: Callable[..., Any], tier: str) -> bool:
         return False
     run(compiled, prepared(matrix[:, :1], field.poly, tier), source[:1], out, 0, True)
     return np.array_equal(out, products[1])
+
+
+KERNELS = {
+    tier: Kernel(f".stripmap_kernels.map_{tier}", partial(gives_known_answer, tier=tier), "the strip map")
+    for tier in tiers.TIERS
+}

@@ -22,13 +22,13 @@ from typing import Any
 from llvmlite import ir
 from numba.core import cgutils, types
 
-from oakum.kernels.compiling import kernel
+from oakum.kernels.arrays import Arrays
+from oakum.kernels.compiling import typed
 from oakum.kernels.simd import (
     ARRAYS,
     I8,
     I16,
     I64,
-    Arrays,
     Builder,
     Value,
     byte_vector,
@@ -49,29 +49,16 @@ from oakum.kernels.simd import (
     store,
     variable,
 )
-
-STRIP = 1024
-"""Columns worked on at a time: all inputs of a (255, 223) code fit the second-level cache."""
-
-STRIDE = STRIP + 64
-"""Distance of the rows in scratch memory; not a power of two, or all would share a few cache lines."""
-
-TILE_ROWS = 4
-TILE_COLUMNS = 64
-
-NIBBLES_SIZE = 2 * TILE_COLUMNS
-NIBBLES_BLOCK = 128
-"""Inputs that the shuffle kernel holds at a time, split into nibbles: 16 KiB of the first-level cache."""
-
-MULTIPLES_SIZE = 32 * TILE_COLUMNS
-MULTIPLES_BLOCK = 8
-"""Inputs whose multiples the portable kernel holds at a time: 16 KiB of the first-level cache."""
-
-
-def scratch_size(rows: int, inputs: int) -> int:
-    """Bytes of scratch memory that any of the kernels needs for `rows` outputs and `inputs` inputs."""
-    packed = inputs + -(-rows // TILE_ROWS) * TILE_ROWS
-    return packed * STRIDE + max(NIBBLES_BLOCK * NIBBLES_SIZE, MULTIPLES_BLOCK * MULTIPLES_SIZE)
+from oakum.kernels.stripmap import (
+    MULTIPLES_BLOCK,
+    MULTIPLES_SIZE,
+    NIBBLES_BLOCK,
+    NIBBLES_SIZE,
+    STRIDE,
+    STRIP,
+    TILE_COLUMNS,
+    TILE_ROWS,
+)
 
 
 @inlined
@@ -249,18 +236,7 @@ SIGNATURE = types.void(ARRAYS, types.intp, types.intp, types.intp, types.intp)
 memory, and the tier's constant (see `stripmap.prepared`)."""
 
 
-def self_test(name: str) -> Callable[[Callable[..., Any]], bool]:
-    """A known answer for the kernel of a tier: a matrix of all bytes times all bytes."""
-
-    def agrees(compiled: Callable[..., Any]) -> bool:
-        from oakum.kernels import stripmap
-
-        return stripmap.gives_known_answer(compiled, name)
-
-    return agrees
-
-
-@kernel(SIGNATURE, self_test=self_test("gfni"), purpose="the strip map")
+@typed(SIGNATURE)
 def map_gfni(arrays: Arrays, matrices: int, group_size: int, scratch: int, unused: int) -> None:
     packed = scratch + arrays.inputs * STRIDE
     for start in range(0, arrays.length, STRIP):
@@ -273,7 +249,7 @@ def map_gfni(arrays: Arrays, matrices: int, group_size: int, scratch: int, unuse
         finish(arrays, start, width, packed)
 
 
-@kernel(SIGNATURE, self_test=self_test("shuffle"), purpose="the strip map")
+@typed(SIGNATURE)
 def map_shuffle(arrays: Arrays, offsets: int, group_size: int, scratch: int, tables: int) -> None:
     groups = (arrays.rows + TILE_ROWS - 1) // TILE_ROWS
     packed = scratch + arrays.inputs * STRIDE
@@ -293,7 +269,7 @@ def map_shuffle(arrays: Arrays, offsets: int, group_size: int, scratch: int, tab
         finish(arrays, start, width, packed)
 
 
-@kernel(SIGNATURE, self_test=self_test("portable"), purpose="the strip map")
+@typed(SIGNATURE)
 def map_portable(arrays: Arrays, offsets: int, row_size: int, scratch: int, reduction: int) -> None:
     packed = scratch + arrays.inputs * STRIDE
     tables = packed + arrays.rows * STRIDE

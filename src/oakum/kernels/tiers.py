@@ -13,8 +13,10 @@ OAKUM_KERNEL_TIER forces another.
 from __future__ import annotations
 
 import os
+from functools import cache
 
 from oakum.errors import UsageError
+from oakum.kernels import store
 
 TIERS = ("gfni", "shuffle", "portable")
 """All tiers, best first."""
@@ -22,16 +24,21 @@ TIERS = ("gfni", "shuffle", "portable")
 ENVIRONMENT_VARIABLE = "OAKUM_KERNEL_TIER"
 
 
+@cache
 def target() -> tuple[str, str, str]:
     """LLVM triple, CPU name and feature string that numba compiles for.
 
     These are what counts, not the CPU's own word: NUMBA_CPU_NAME and NUMBA_CPU_FEATURES may have taken
     features away, and an instruction outside them would end the process instead of raising.
     """
+    if kept := store.load("target"):  # To ask numba takes longer than many a job.
+        triple, name, features = kept.decode().split("\n")
+        return triple, name, features
     from numba.core.registry import cpu_target
 
-    triple, name, features = cpu_target.target_context.codegen().magic_tuple()
-    return str(triple), str(name), str(features)
+    triple, name, features = map(str, cpu_target.target_context.codegen().magic_tuple())
+    store.save("target", "\n".join((triple, name, features)).encode())
+    return triple, name, features
 
 
 def target_features() -> frozenset[str]:

@@ -10,7 +10,7 @@ from __future__ import annotations
 
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
-from functools import cache
+from functools import cache, partial
 from typing import Any
 
 import numpy as np
@@ -18,21 +18,22 @@ from numpy.typing import NDArray
 
 from oakum.algebra.inner import InnerCode
 from oakum.kernels import tiers
-from oakum.kernels import words_kernels as kernels
+from oakum.kernels.arrays import check_rows
+from oakum.kernels.compiling import Kernel
 from oakum.kernels.scratch import scratch
-from oakum.kernels.stripmap import check_rows
 
 Bytes = NDArray[np.uint8]
 Staggers = NDArray[np.integer[Any]] | Sequence[int]
 
 CELL = 4096
-FLAGGED = kernels.FLAGGED
+WORD = 16
+"""Bytes of a word with its parity."""
 
-PARITY_KERNELS = {
-    "gfni": kernels.parity_shuffle,  # as fast as memory already
-    "shuffle": kernels.parity_shuffle,
-    "portable": kernels.parity_portable,
-}
+GROUP = 32
+"""Words whose parity is computed together."""
+
+FLAGGED = 255
+"""Status of a word that holds more flips than can be corrected, or flips in bytes known to be right."""
 
 
 class WordCodec:
@@ -53,8 +54,8 @@ class WordCodec:
         if self.inner.p:
             PARITY_KERNELS[self.tier].prepare()
             if correcting:
-                kernels.correct.prepare()
-                kernels.spread.prepare()
+                CORRECT.prepare()
+                SPREAD.prepare()
 
     def words(self, cell_length: int) -> int:
         """The number of words in a cell of `cell_length` bytes."""
@@ -129,14 +130,24 @@ class WordCodec:
         syndromes ^= parity
         if pinned is None:
             pinned = np.zeros(cells.shape, np.uint8)
-        run_correct(kernels.correct.prepare(), self.inner, cells, parity, syndromes, in_rows, status, pinned)
+        run_correct(CORRECT.prepare(), self.inner, cells, parity, syndromes, in_rows, status, pinned)
 
     def spread(self, status: Bytes, staggers: Staggers, width: int) -> Bytes:
         """For each byte of the cells the status of its word: uint8[R, width] from uint8[R, words(width)]."""
         out = np.zeros((len(status), width), np.uint8)
         if self.inner.p:
-            kernels.spread(status, in_order(staggers, len(status)), self.inner.m, out)
+            SPREAD(status, in_order(staggers, len(status)), self.inner.m, out)
         return out
+
+
+def padded(words: int) -> int:
+    """`words` rounded up to whole groups."""
+    return -(-words // GROUP) * GROUP
+
+
+def scratch_size(words: int, m: int, p: int) -> int:
+    """Bytes of scratch memory for one cell: its words in order, planes of parity, and parity."""
+    return padded(words) * (m + 2 * p) + 2 * WORD
 
 
 def in_order(staggers: Staggers, rows: int) -> NDArray[np.int64]:
@@ -183,7 +194,7 @@ def parity_tables(inner: InnerCode, tier: str) -> NDArray[Any]:
 
     portable: uint32[16, 256]. Otherwise uint8[p, 16, 2, 16]: parity byte j of byte t by low or high nibble.
     """
-    full = np.zeros((kernels.WORD, 256), np.uint32)
+    full = np.zeros((WORD, 256), np.uint32)
     full[: inner.m] = inner.parity_tables
     if tier == "portable":
         return full
@@ -217,7 +228,7 @@ def run_parity(
         m,
         p,
         tables.ctypes.data,
-        scratch(kernels.scratch_size(-(-min(cell, length) // m), m, p)),
+        scratch(scratch_size(-(-min(cell, length) // m), m, p)),
     )
 
 
@@ -288,9 +299,11 @@ def spreads_known_words(compiled: Callable[..., Any]) -> bool:
     return out.tolist() == [[1, 1, 1, 2, 2, 2, 3], [2, 3, 1, 1, 1, 2, 2]]
 
 
-SELF_TESTS: dict[str, Callable[[Callable[..., Any]], bool]] = {
-    "shuffle": lambda compiled: gives_known_parity(compiled, "shuffle"),
-    "portable": lambda compiled: gives_known_parity(compiled, "portable"),
-    "correct": corrects_known_flips,
-    "spread": spreads_known_words,
-}
+def _parity_kernel(tier: str) -> Kernel:
+    return Kernel(f".words_kernels.parity_{tier}", partial(gives_known_parity, tier=tier), "the inner code")
+
+
+PARITY_KERNELS = {tier: _parity_kernel(tier) for tier in ("shuffle", "portable")}
+PARITY_KERNELS["gfni"] = PARITY_KERNELS["shuffle"]  # as fast as memory already
+CORRECT = Kernel(".words_kernels.correct", corrects_known_flips, "the inner code")
+SPREAD = Kernel(".words_kernels.spread", spreads_known_words, "the inner code")

@@ -11,7 +11,7 @@ transposed, so that a vector holds byte t of each, and goes through the nibble t
 
 from __future__ import annotations
 
-from collections.abc import Callable, Sequence
+from collections.abc import Sequence
 from typing import Any
 
 import numpy as np
@@ -19,7 +19,7 @@ from llvmlite import ir
 from numba.core import cgutils
 from numpy.typing import NDArray
 
-from oakum.kernels.compiling import kernel
+from oakum.kernels.compiling import typed
 from oakum.kernels.simd import (
     I32,
     I64,
@@ -38,25 +38,7 @@ from oakum.kernels.simd import (
     signature,
     store,
 )
-
-WORD = 16
-"""Bytes of a word with its parity."""
-
-GROUP = 32
-"""Words whose parity is computed together."""
-
-FLAGGED = 255
-"""Status of a word that holds more flips than can be corrected, or flips in bytes known to be right."""
-
-
-def padded(words: int) -> int:
-    """`words` rounded up to whole groups."""
-    return -(-words // GROUP) * GROUP
-
-
-def scratch_size(words: int, m: int, p: int) -> int:
-    """Bytes of scratch memory for one cell: its words in order, planes of parity, and parity."""
-    return padded(words) * (m + 2 * p) + 2 * WORD
+from oakum.kernels.words import FLAGGED, GROUP, WORD
 
 
 def transposed(builder: Builder, rows: list[Value]) -> list[Value]:
@@ -206,23 +188,12 @@ def offset_of(stagger: int, width: int, m: int) -> int:
     return stagger % m if width >= 2 * m else 0
 
 
-def self_test(name: str) -> Callable[[Callable[..., Any]], bool]:
-    """Known answers for the kernels of this file, see `words.SELF_TESTS`."""
-
-    def agrees(compiled: Callable[..., Any]) -> bool:
-        from oakum.kernels import words
-
-        return words.SELF_TESTS[name](compiled)
-
-    return agrees
-
-
 PARITY_SIGNATURE = "void(intp, intp, intp, intp, int64[::1], intp, intp, intp, intp, intp, intp, intp)"
 """Data, distance of its rows, their length, cell size, stagger of each row, out, distance of its rows,
 distance of the cells' parities in a row, m, p, the tier's tables, scratch memory."""
 
 
-@kernel(PARITY_SIGNATURE, self_test=self_test("shuffle"), purpose="the inner code")
+@typed(PARITY_SIGNATURE)
 def parity_shuffle(
     data: int,
     stride: int,
@@ -249,7 +220,7 @@ def parity_shuffle(
             copy(out + row * out_stride + start // cell * step, computed, words * p)
 
 
-@kernel(PARITY_SIGNATURE, self_test=self_test("portable"), purpose="the inner code")
+@typed(PARITY_SIGNATURE)
 def parity_portable(
     data: int,
     stride: int,
@@ -275,11 +246,7 @@ def parity_portable(
             copy(out + row * out_stride + start // cell * step, scratch + size, words * p)
 
 
-@kernel(
-    "void(uint8[:, :], int64[::1], intp, uint8[:, ::1])",
-    self_test=self_test("spread"),
-    purpose="the inner code",
-)
+@typed("void(uint8[:, :], int64[::1], intp, uint8[:, ::1])")
 def spread(of_words: NDArray[np.uint8], staggers: NDArray[np.int64], m: int, out: NDArray[np.uint8]) -> None:
     """What `of_words` has for a word goes to all its bytes in `out`, which is zero before."""
     rows, width = out.shape
@@ -358,11 +325,9 @@ def flip(found: int, word: int, m: int, p: int, offset: int, cell: NDArray[Any],
     return count
 
 
-@kernel(
+@typed(
     "void(uint8[:, :], uint8[:, :], uint8[:, ::1], int64[::1], uint8[:, :], uint8[:, :],"
-    " intp, intp, intp, uint32[::1], uint32[::1], uint32[::1], uint32[::1])",
-    self_test=self_test("correct"),
-    purpose="the inner code",
+    " intp, intp, intp, uint32[::1], uint32[::1], uint32[::1], uint32[::1])"
 )
 def correct(
     cells: NDArray[np.uint8],
