@@ -23,6 +23,7 @@ from numpy.typing import NDArray
 from oakum.digests import cell_digests
 from oakum.files import aligned
 from oakum.geometry import CELL, Geometry
+from oakum.jobs.common import announce_compiling
 from oakum.jobs.opening import ProtectedSet
 from oakum.members import MemberHasher, Span, bytes_of
 from oakum.pools import Meter, Pools, wait_all
@@ -53,6 +54,9 @@ READERS = 2
 
 RUN = 2 << 20
 """Bytes that one work unit reads and looks at, while they are still in the CPU's cache."""
+
+MUCH = 128 << 20
+"""Bytes of a set for whose digests loading the kernel pays."""
 
 MOST_SEEN = 1 << 18
 GROUP = 8
@@ -104,6 +108,17 @@ class Finding:
     """For audits: cells of data that gave other bytes when they were read again."""
 
 
+def digests_for(opened: ProtectedSet, progress: Progress) -> Callable[[Bytes], NDArray[np.uint64]]:
+    """The digests of cells by the library; where there is much to do, without the interpreter."""
+    if sum(section.geometry.length for section in opened.sections) < MUCH:
+        return cell_digests
+    from oakum.kernels import cells
+
+    announce_compiling(progress)
+    cells.prepare()
+    return cells.cell_digests
+
+
 class WindowCheck:
     """The state of one window while it is checked."""
 
@@ -119,6 +134,7 @@ class WindowCheck:
         spans = [Span(p.path, p.offset, p.length) for p in self.pieces]
         self.spans = spans
         self.stream = opened.stream(spans, self.start, opened.known_bad(spans))
+        self._digests_of = digests_for(opened, progress)
         self.faulty: list[Range] = []
         """Ranges of the window that could not be read."""
 
@@ -141,9 +157,6 @@ class WindowCheck:
 
         self.mark: Callable[[], None] = lambda: None
         """Called when the scan has come further."""
-
-        self.on_damage: Callable[[], object] = lambda: None
-        """Called, in any thread, when a cell has turned out to be wrong."""
 
         self._meter = Meter()
         self.right_spans: list[Range] = []
@@ -253,13 +266,11 @@ class WindowCheck:
         self, number: int, cells: Bytes, expected: NDArray[np.uint64], known: Mask | None
     ) -> None:
         """Consecutive cells of one strip from `number` on against their digests."""
-        digests = cell_digests(cells)
+        digests = self._digests_of(cells)
         state = np.where(digests == expected, np.uint8(RIGHT), np.uint8(WRONG))
         if known is not None:
             state[~known] = UNKNOWN
         self.data[number : number + len(digests)] = state
-        if (state == WRONG).any():
-            self.on_damage()
         if self.auditing and len(self.seen) < MOST_SEEN:
             wrong = np.flatnonzero(state == WRONG)
             self.seen.update(zip((number + wrong).tolist(), digests[wrong].tolist(), strict=True))
@@ -364,7 +375,7 @@ class WindowCheck:
         length = min((first + count) * CELL, g.depth) - start
         cells, faults = self._read_body(j * g.depth + start, length)
         expected, known = self.section.digests(Track.PARITY, first * g.r, count * g.r)
-        state = np.where(cell_digests(cells) == expected[j :: g.r], np.uint8(RIGHT), np.uint8(WRONG))
+        state = np.where(self._digests_of(cells) == expected[j :: g.r], np.uint8(RIGHT), np.uint8(WRONG))
         if known is not None:
             state[~known[j :: g.r]] = UNKNOWN
         for a, b in faults:
@@ -376,7 +387,7 @@ class WindowCheck:
     ) -> None:
         """Part of an area of inner parity: cells that disagree with their digest are examined later."""
         data, faults = self._read_body(start + offset, length)
-        digests = cell_digests(data)
+        digests = self._digests_of(data)
         expected, known = self.section.digests(track, offset // CELL, len(digests))
         bad = digests != expected
         if known is not None:

@@ -7,7 +7,6 @@ import os
 import threading
 import time
 from collections.abc import Iterator
-from concurrent.futures import Future, ThreadPoolExecutor
 from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import TYPE_CHECKING
@@ -133,29 +132,20 @@ class SetCheck:
         self.code: ConcatenatedCode = self.opened.sections[0].bootstrap.code.code()
         if any(s.bootstrap.code != self.opened.sections[0].bootstrap.code for s in self.opened.sections):
             raise FormatError("the sections of this sidecar use different codes; it was pieced together")
-        self._decoders: Future[Decoders] | None = None
+        self._decoders: Decoders | None = None
         self._load_lock = threading.Lock()
         self.windows: list[WindowCheck] = []
         self.scanned: Scanned | None = None
 
     def decoders(self) -> Decoders:
         """The compiled decoders, loaded when first needed: intact sets never wait for them."""
-        return self.load_decoders().result()
-
-    def load_decoders(self) -> Future[Decoders]:
-        """Begin to load the decoders beside whatever goes on, if that has not begun; damage was found."""
         with self._load_lock:
             if self._decoders is None:
-                loader = ThreadPoolExecutor(1, "oakum-decoders")
-                self._decoders = loader.submit(self._load)
-                loader.shutdown(wait=False)
+                from oakum.decoding.block import Decoders
+
+                announce_compiling(self.progress)
+                self._decoders = Decoders.of(self.code)
             return self._decoders
-
-    def _load(self) -> Decoders:
-        from oakum.decoding.block import Decoders
-
-        announce_compiling(self.progress)
-        return Decoders.of(self.code)
 
     def scan(self, *, hashing: bool) -> None:
         """Read everything in order, and note what is not right."""
@@ -166,7 +156,6 @@ class SetCheck:
         for number in range(len(opened.sections)):
             window = WindowCheck(opened, number, self.progress, self.pools)
             self.windows.append(window)
-            window.on_damage = self.load_decoders
             if self.scanned is not None:
                 self.scanned.begin(window, hasher)
             self.scan_window(window, hasher)
