@@ -16,7 +16,7 @@ from oakum.algebra.naming import resolve_code
 from oakum.encoding import CHUNK, CHUNKS, RESERVE, RUN, CellCutter, ReadingPlan, plan_reading
 from oakum.files import FileBytes
 from oakum.geometry import CELL, Geometry, whole_depth
-from oakum.jobs.common import DEFAULT_MEMORY
+from oakum.jobs import DEFAULT_MEMORY
 from oakum.sidecar.layout import Track
 from oakum.sidecar.reading import Section, find_sections
 

@@ -5,9 +5,10 @@ from typing import Annotated
 
 import typer
 
-from oakum.cli.options import DEFAULT_MEMORY, Jobs, Json, Memory, ReadRate, Root, Sidecar, Unreadable
+from oakum.cli.options import Jobs, Json, Memory, ReadRate, Root, Sidecar, Unreadable
 from oakum.cli.output import complain, emit
 from oakum.cli.progress import reporting
+from oakum.jobs import DEFAULT_MEMORY
 from oakum.results import Outcome
 from oakum.throttle import reading_at
 

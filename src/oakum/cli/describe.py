@@ -5,9 +5,10 @@ from typing import Annotated
 
 import typer
 
-from oakum.cli.options import DEFAULT_MEMORY, Jobs, Json, Memory, Quiet
+from oakum.cli.options import Jobs, Json, Memory, Quiet
 from oakum.cli.output import complain, emit, emit_bytes
 from oakum.errors import UsageError
+from oakum.jobs import DEFAULT_MEMORY
 
 
 def describe(

@@ -9,7 +9,6 @@ import typer
 _SIZE = re.compile(r"([0-9]+)\s*(?:([kmgt])(i?b)?|b)?", re.IGNORECASE)
 _POWERS = {"k": 1, "m": 2, "g": 3, "t": 4}
 _LARGEST = 1 << 62
-DEFAULT_MEMORY = 384 << 20
 
 
 def parse_size(text: str | int) -> int:

@@ -6,9 +6,10 @@ from typing import TYPE_CHECKING, Annotated
 import typer
 
 from oakum.cli.damage import parse_share, takes_damage
-from oakum.cli.options import DEFAULT_MEMORY, Depth, Jobs, Json, Memory, Quiet, parse_size
+from oakum.cli.options import Depth, Jobs, Json, Memory, Quiet, parse_size
 from oakum.cli.output import emit
 from oakum.errors import CannotCheck
+from oakum.jobs import DEFAULT_MEMORY
 
 if TYPE_CHECKING:
     from oakum.jobs.damage import Wishes

@@ -7,10 +7,11 @@ from typing import Annotated
 
 import typer
 
-from oakum.cli.options import DEFAULT_MEMORY, Depth, Fresh, Jobs, Json, Memory, Quiet, ReadRate, parse_size
+from oakum.cli.options import Depth, Fresh, Jobs, Json, Memory, Quiet, ReadRate, parse_size
 from oakum.cli.output import emit, tell
 from oakum.cli.progress import reporting
 from oakum.errors import UsageError
+from oakum.jobs import DEFAULT_MEMORY
 from oakum.progress import Progress
 from oakum.results import ProtectResult
 from oakum.throttle import reading_at

@@ -5,9 +5,10 @@ from typing import TYPE_CHECKING, Annotated
 import typer
 
 from oakum.cli.damage import takes_damage
-from oakum.cli.options import DEFAULT_MEMORY, Jobs, Json, Memory, Quiet, Root, Sidecar, Target
+from oakum.cli.options import Jobs, Json, Memory, Quiet, Root, Sidecar, Target
 from oakum.cli.output import emit
 from oakum.cli.progress import reporting
+from oakum.jobs import DEFAULT_MEMORY
 
 if TYPE_CHECKING:
     from oakum.jobs.damage import Wishes

@@ -7,7 +7,6 @@ import typer
 
 from oakum.cli.checking import check
 from oakum.cli.options import (
-    DEFAULT_MEMORY,
     Jobs,
     Json,
     Memory,
@@ -20,6 +19,7 @@ from oakum.cli.options import (
 )
 from oakum.cli.verify import STATUS as CHECKED
 from oakum.errors import UsageError
+from oakum.jobs import DEFAULT_MEMORY
 from oakum.results import Outcome
 
 _STATUS = {Outcome.INTACT: 0, Outcome.CORRECTABLE: 0, Outcome.UNCORRECTABLE: 20, Outcome.UNCHECKED: 30}

@@ -6,7 +6,6 @@ import typer
 
 from oakum.cli.checking import check
 from oakum.cli.options import (
-    DEFAULT_MEMORY,
     Fresh,
     Jobs,
     Json,
@@ -18,6 +17,7 @@ from oakum.cli.options import (
     Target,
     Unreadable,
 )
+from oakum.jobs import DEFAULT_MEMORY
 from oakum.results import Outcome
 
 STATUS = {Outcome.INTACT: 0, Outcome.CORRECTABLE: 10, Outcome.UNCORRECTABLE: 20, Outcome.UNCHECKED: 30}

@@ -16,8 +16,9 @@ from oakum.audits import AuditResult, Distribution, Rate, Statistics, TargetAudi
 from oakum.causes import find_causes
 from oakum.conversions import undone
 from oakum.errors import CannotCheck, OakumError, UsageError
+from oakum.jobs import DEFAULT_MEMORY
 from oakum.jobs.checking import CHUNK, GROUP, Finding, Range, WindowCheck
-from oakum.jobs.common import DEFAULT_MEMORY, find_sidecar
+from oakum.jobs.common import find_sidecar
 from oakum.jobs.history import history
 from oakum.jobs.opening import KnownMember, open_set
 from oakum.jobs.tally import Tally

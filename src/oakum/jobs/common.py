@@ -12,7 +12,6 @@ from oakum.progress import Progress
 from oakum.results import CodeSummary
 
 SUFFIX = ".oakum"
-DEFAULT_MEMORY = 384 << 20
 
 
 def announce_compiling(progress: Progress) -> None:

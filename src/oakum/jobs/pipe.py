@@ -18,7 +18,8 @@ from oakum.encoding import RESERVE, Kernels, WindowEncoder, plan_reading
 from oakum.errors import OakumError, UsageError
 from oakum.files import Fault, NewFile, aligned
 from oakum.geometry import Window, check_depth, window_depth
-from oakum.jobs.common import DEFAULT_MEMORY, absolute, announce_compiling, summarise
+from oakum.jobs import DEFAULT_MEMORY
+from oakum.jobs.common import absolute, announce_compiling, summarise
 from oakum.jobs.protect import geometry_of, make_bootstrap, pack_table
 from oakum.members import MemberHasher, Span
 from oakum.pools import Pools

@@ -20,10 +20,9 @@ from oakum.encoding import Changed, Kernels, Leg, ReadingPlan, Unreadable, Windo
 from oakum.errors import CannotCheck, UsageError
 from oakum.files import Fault, NewFile, take_away_leftovers
 from oakum.geometry import Geometry, Window, plan_windows
-from oakum.jobs import resuming
+from oakum.jobs import DEFAULT_MEMORY, resuming
 from oakum.jobs.bag import into_bag, refuse_in_bag
 from oakum.jobs.common import (
-    DEFAULT_MEMORY,
     absolute,
     announce_compiling,
     members_root,

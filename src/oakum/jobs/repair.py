@@ -19,8 +19,9 @@ from pathlib import Path
 
 from oakum.errors import CannotCheck, UsageError
 from oakum.files import Lock, NewFile, aligned, reason
+from oakum.jobs import DEFAULT_MEMORY
 from oakum.jobs.checking import Bytes, WindowCheck
-from oakum.jobs.common import DEFAULT_MEMORY, find_sidecar
+from oakum.jobs.common import find_sidecar
 from oakum.jobs.inplace import InPlace
 from oakum.jobs.lost import recover_sections
 from oakum.jobs.opening import KnownMember, ProtectedSet, open_set

@@ -14,9 +14,9 @@ from typing import TYPE_CHECKING
 from oakum import __version__
 from oakum.algebra.concatenated import ConcatenatedCode
 from oakum.errors import FormatError
-from oakum.jobs import resuming
+from oakum.jobs import DEFAULT_MEMORY, resuming
 from oakum.jobs.checking import UNKNOWN, Finding, WindowCheck
-from oakum.jobs.common import DEFAULT_MEMORY, announce_compiling, find_sidecar, summarise
+from oakum.jobs.common import announce_compiling, find_sidecar, summarise
 from oakum.jobs.opening import KnownMember, ProtectedSet, lost_sections, open_set
 from oakum.jobs.replay import unfinished
 from oakum.jobs.resuming import State, beside, in_state_folder, key_of
