@@ -123,11 +123,13 @@ def test_every_code_has_a_reference_point() -> None:
 
 
 @pytest.mark.parametrize("point", reference_points(), ids=lambda p: f"{p.code} {p.rate}")
-def test_no_worse_and_no_better_than_stored(point: curve.Point) -> None:
+def test_no_worse_and_no_better_than_stored(point: curve.Point, long: bool) -> None:
     """Fresh blocks at a stored point, within the Monte Carlo error of both.
 
     If the decoder has become better, measure the point again and store it.
     """
+    if point.code == "RS(255,223)+EB(128,112)" and not long:
+        pytest.skip("takes as long as all others together")
     blocks = 8
     now = curve.measure(point.code, point.rate, blocks, width=NARROW, seed=point.seed + 1)
     error = point.spread * (1 / blocks + 1 / len(point.lost)) ** 0.5

@@ -312,7 +312,7 @@ def test_same_as_galois(outer: OuterCode) -> None:
     alpha = field(2) ** outer.root_spacing
     code = galois.ReedSolomon(255, 255 - outer.r, field=field, alpha=alpha, c=outer.first_root)
     t = outer.r // 2
-    errors = np.array([0, 1, 2, t - 1, t, t, t + 1, t + 1])
+    errors = np.array([0, 1, t - 1, t, t + 1])
     pattern, _ = damage(outer, errors, 0 * errors, seed=15)
     received = codewords(outer, len(errors), seed=16) ^ pattern
     magnitudes, status = decoder(outer).decode(decoder(outer).syndromes(received))
@@ -445,4 +445,6 @@ def test_on_a_CPU_with_128_bit_vectors() -> None:
 
 
 def test_on_a_CPU_with_gfni(tmp_path: Path) -> None:
-    run_tests(gfni_environment(tmp_path), "test_columns.py", keyword=HERE_ONLY)
+    """Only syndromes differ there."""
+    keyword = f"{HERE_ONLY} and not every_pattern and not threads"
+    run_tests(gfni_environment(tmp_path), "test_columns.py", keyword=keyword)

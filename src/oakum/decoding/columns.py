@@ -205,10 +205,11 @@ class Columns:
         """Random trial erasures on columns that are just beyond reach. Returns how many were solved."""
         known = self._reliability(weighed=True).take(self.open)
         near = np.flatnonzero(hopeful(known, self.g.r))
-        if not len(near):
+        count = max(8, min(256, CHASE_COLUMNS // max(1, len(near))))
+        # Without an inner code all symbols are equally doubtful: a few trials would gain next to nothing.
+        if not len(near) or (count < 64 and not self.g.p):
             return 0
         posed = self._posed(self.open[near], known.take(near))
-        count = max(8, min(256, CHASE_COLUMNS // len(near)))
         sets = chase_sets(posed.known, count, self.random)
         erased = np.repeat(posed.late, count, axis=1).view(np.uint8)
         erased[self.cells.strips] |= sets.reshape(len(self.cells.strips), -1)
