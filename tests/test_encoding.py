@@ -144,6 +144,8 @@ def test_buffers_fit_the_memory(code: str, length: int, memory: int) -> None:
     buffers = 1 if plan.strips == g.k else 2
     assert RESERVE + (g.r + buffers * plan.strips) * plan.columns <= memory
     assert 1 <= plan.strips <= g.k
+    batches = -(-g.k // plan.strips)
+    assert batches * plan.strips < g.k + batches  # Of nearly the same size.
     assert plan.reads == 2 or plan.columns >= g.depth
     assert plan.reads == 1 or plan.columns % CELL == 0
     if RESERVE + (g.r + 2 * 16) * g.depth <= memory:

@@ -111,7 +111,8 @@ def plan_reading(geometry: Geometry, memory: int) -> ReadingPlan:
         return ReadingPlan(1, g.k, depth)
     strips = (free - g.r * depth) // (2 * depth)
     if strips >= LEAST_BATCH:
-        return ReadingPlan(1, min(strips, BATCH), depth)
+        batches = -(-g.k // min(strips, BATCH))
+        return ReadingPlan(1, -(-g.k // batches), depth)  # All nearly of the same size: none is in vain.
     most = free // (g.k + g.r) // CELL
     if most < 1:
         need = ((g.k + g.r) * CELL + RESERVE) / (1 << 20)

@@ -7,6 +7,7 @@ import hashlib
 import os
 import stat
 import threading
+from array import array
 from bisect import bisect_left, bisect_right
 from collections import Counter, OrderedDict
 from collections.abc import Callable, Iterable, Iterator, Sequence
@@ -18,9 +19,15 @@ from typing import NamedTuple, Protocol
 from oakum import pagecache, throttle
 from oakum.errors import CannotCheck, UsageError
 from oakum.files import Fault, aligned, let_go, read_into, reason
-from oakum.sidecar.table import Kind
+from oakum.sidecar.table import Kind, Piece
 
 OPEN_FILES = 64
+
+_FILE = os.O_RDONLY | os.O_CLOEXEC | os.O_NOFOLLOW | os.O_NONBLOCK
+_FOLDER = os.O_RDONLY | os.O_CLOEXEC | os.O_NOFOLLOW | os.O_DIRECTORY
+
+DIGEST = 32
+"""Bytes of a SHA-256."""
 
 SMALL = 64 << 10
 """Bytes up to which a member is opened, read, hashed and closed in one go."""
@@ -30,24 +37,13 @@ PIECE = 8 << 20
 """Bytes of a member that are read at a time where it is read alone."""
 
 
-class Member(NamedTuple):
-    """What is recorded of one file, folder or link. `path` is relative to the root, raw bytes."""
-
-    kind: Kind
-    path: bytes
-    size: int
-    mode: int
-    modified_ns: int
-    target: bytes = b""
-
-
-def collect(paths: Sequence[Path], root: Path) -> tuple[list[Member], list[str]]:
-    """The members that `paths` (below `root`) stand for, in order, and notes on what was left out.
+def collect(paths: Sequence[Path], root: Path) -> tuple[list[Piece], list[str]]:
+    """The members that `paths` (below `root`) stand for, as whole, and notes on what was left out.
 
     Folders come before what is in them, names in the order of their bytes; links are recorded and never
     followed. Raises UsageError for a path named twice, CannotCheck for one that cannot be read.
     """
-    members: list[Member] = []
+    members: list[Piece] = []
     notes: list[str] = []
     for path in paths:
         if path.exists() and not (path.is_file() or path.is_dir() or path.is_symlink()):
@@ -61,14 +57,14 @@ def collect(paths: Sequence[Path], root: Path) -> tuple[list[Member], list[str]]
     return members, notes
 
 
-def _walk(path: bytes, relative: bytes, members: list[Member], notes: list[str]) -> None:
+def _walk(path: bytes, relative: bytes, members: list[Piece], notes: list[str]) -> None:
     """Append what `path` stands for; its path in the set is `relative`."""
     try:
         found = os.lstat(path)
         if stat.S_ISREG(found.st_mode):
             members.append(_member(Kind.FILE, relative, found, found.st_size))
         elif stat.S_ISLNK(found.st_mode):
-            members.append(_member(Kind.LINK, relative, found, 0, os.readlink(path)))
+            members.append(_member(Kind.LINK, relative, found, 0)._replace(target=os.readlink(path)))
         elif stat.S_ISDIR(found.st_mode):
             members.append(_member(Kind.FOLDER, relative, found, 0))
             for name in sorted(os.listdir(path)):
@@ -79,8 +75,8 @@ def _walk(path: bytes, relative: bytes, members: list[Member], notes: list[str])
         raise CannotCheck(f"{os.fsdecode(path)} cannot be read: {reason(error)}") from None
 
 
-def _member(kind: Kind, path: bytes, found: os.stat_result, size: int, target: bytes = b"") -> Member:
-    return Member(kind, path, size, stat.S_IMODE(found.st_mode), found.st_mtime_ns, target)
+def _member(kind: Kind, path: bytes, found: os.stat_result, size: int) -> Piece:
+    return Piece(kind, path, stat.S_IMODE(found.st_mode), found.st_mtime_ns, size, 0, size, True)
 
 
 class Folder:
@@ -93,46 +89,45 @@ class Folder:
         except OSError as error:
             raise CannotCheck(f"the folder {root} cannot be opened: {reason(error)}") from None
         self.root = root
-        self._parent: tuple[bytes, int] | None = None
+        self._parent, self._entered = b"", self._fd
+        """The folder that was entered last; most members lie in the one of their neighbours."""
+
         self._lock = threading.Lock()
 
     def open(self, path: bytes) -> int:
         """A descriptor for reading the file at `path`. Raises OSError (ELOOP where a link is in the way)."""
         parent, _, name = path.rpartition(b"/")
         with self._lock:
-            return os.open(
-                name, os.O_RDONLY | os.O_CLOEXEC | os.O_NOFOLLOW | os.O_NONBLOCK, dir_fd=self._enter(parent)
-            )
+            if parent != self._parent:
+                self._enter(parent)
+            return os.open(name, _FILE, dir_fd=self._entered)
 
     def stat(self, path: bytes) -> os.stat_result:
         """What is at `path`, links not followed. Raises OSError."""
         parent, _, name = path.rpartition(b"/")
         with self._lock:
-            return os.stat(name, dir_fd=self._enter(parent), follow_symlinks=False)
+            if parent != self._parent:
+                self._enter(parent)
+            return os.stat(name, dir_fd=self._entered, follow_symlinks=False)
 
     def readlink(self, path: bytes) -> bytes:
         """The target of the link at `path`. Raises OSError."""
         parent, _, name = path.rpartition(b"/")
         with self._lock:
-            return os.readlink(name, dir_fd=self._enter(parent))
+            if parent != self._parent:
+                self._enter(parent)
+            return os.readlink(name, dir_fd=self._entered)
 
-    def _enter(self, parent: bytes) -> int:
-        """A descriptor of the folder `parent`; the last one is kept."""
-        if not parent:
-            return self._fd
-        if self._parent is not None and self._parent[0] == parent:
-            return self._parent[1]
-        fd = open_folder(self._fd, parent)
-        if self._parent is not None:
-            let_go(self._parent[1])
-        self._parent = (parent, fd)
-        return fd
+    def _enter(self, parent: bytes) -> None:
+        """Keep a descriptor of the folder `parent` instead of the one before."""
+        fd = open_folder(self._fd, parent) if parent else self._fd
+        left, self._parent, self._entered = self._entered, parent, fd
+        if left != self._fd:
+            let_go(left)
 
     def close(self) -> None:
         """Close all descriptors."""
-        if self._parent is not None:
-            let_go(self._parent[1])
-            self._parent = None
+        self._enter(b"")
         let_go(self._fd)
 
 
@@ -141,7 +136,6 @@ def open_folder(root: int, path: bytes, *, made: list[bytes] | None = None) -> i
 
     With `made`, parts that are missing are made, and their paths appended to it. Raises OSError.
     """
-    flags = os.O_RDONLY | os.O_DIRECTORY | os.O_CLOEXEC | os.O_NOFOLLOW
     fd = os.dup(root)
     try:
         so_far = b""
@@ -151,7 +145,7 @@ def open_folder(root: int, path: bytes, *, made: list[bytes] | None = None) -> i
                 with suppress(FileExistsError):
                     os.mkdir(part, dir_fd=fd)
                     made.append(so_far)
-            below = os.open(part, flags, dir_fd=fd)
+            below = os.open(part, _FOLDER, dir_fd=fd)
             let_go(fd)
             fd = below
     except BaseException:
@@ -166,6 +160,10 @@ class Span(NamedTuple):
     path: bytes
     offset: int
     length: int
+
+
+Part = Span | Piece
+"""What is read of a member: an entry of the member table says it too."""
 
 
 class Opener(Protocol):
@@ -204,7 +202,7 @@ class MemberStream:
     def __init__(
         self,
         folder: Opener,
-        spans: Sequence[Span],
+        spans: Sequence[Part],
         known_bad: Sequence[tuple[int, int]] = (),
         *,
         once: bool = False,
@@ -215,8 +213,8 @@ class MemberStream:
         system's cache leave it behind the reader, and otherwise when they are closed.
         """
         self._folder = folder
-        self._spans = [s for s in spans if s.length]
-        self._starts = list(accumulate((s.length for s in self._spans), initial=0))
+        self._spans = spans
+        self._starts = array("q", accumulate((s.length for s in spans), initial=0))
         self._known_bad = _joined(known_bad)
         self._open: OrderedDict[bytes, int | None] = OrderedDict()
         self._users: Counter[bytes] = Counter()
@@ -286,15 +284,15 @@ class MemberStream:
                 if span.length > SMALL or stop > len(buffer):
                     break
                 part = buffer[done:stop]
-                if not self._read_once(span, part):
+                if span.length and not self._read_once(span, part):
                     missing = self._read_member(span.path, span.offset, part)
                     faults += [(done + a, done + b) for a, b in missing]
                 if hasher is not None and not span.offset:
-                    hasher.take(span.path, part)
+                    hasher.take(number, part)
                 number, done = number + 1, stop
         return number, done
 
-    def _read_once(self, span: Span, buffer: memoryview) -> bool:
+    def _read_once(self, span: Part, buffer: memoryview) -> bool:
         """Open, read, close; False when that does not give all bytes."""
         throttle.take(len(buffer))
         try:
@@ -388,7 +386,7 @@ class MemberStream:
     def paths(self, start: int, stop: int) -> list[bytes]:
         """The members that hold bytes of a range of the stream, in order."""
         first = bisect_right(self._starts, start) - 1
-        return [span.path for span in self._spans[first : bisect_left(self._starts, stop)]]
+        return [span.path for span in self._spans[first : bisect_left(self._starts, stop)] if span.length]
 
     def close(self) -> None:
         """Close all open members; one that a thread still reads, when it has done so.
@@ -423,87 +421,103 @@ def bytes_of(stream: OpenStream, length: int) -> Iterator[tuple[memoryview, list
         stream.close()
 
 
-Again = Callable[[Span], Iterable[tuple[memoryview, list[Fault]]]]
+Again = Callable[[Part], Iterable[tuple[memoryview, list[Fault]]]]
 
 
 class MemberHasher:
     """SHA-256 of members whose bytes come in order, span by span."""
 
     def __init__(self) -> None:
-        self._spans: list[Span] = []
-        self._digests: list[bytes] = []
+        self._spans: Sequence[Part] = ()
+        self._ends = array("q")
+        self._at = self._number = 0
+        """Bytes of the stream that have been hashed, and the span that the next one is in."""
+
         self._current = hashlib.sha256()
         self._path: bytes | None = None
-        self._left = 0
-        self._early: dict[bytes, bytes] = {}
-        """Digests of members that came before their turn, as a whole."""
+        self._digests, self._known = bytearray(), bytearray()
+        """Of the spans, end to end, and 1 for each that is known: some become so before their turn."""
 
-    def expect(self, spans: Sequence[Span]) -> None:
+    def expect(self, spans: Sequence[Part]) -> None:
         """Announce the spans whose bytes come next; the digests of earlier ones are forgotten."""
-        self._spans = list(spans)
-        self._digests = []
-        self._early.clear()
+        self._spans = spans
+        self._ends = array("q", accumulate(span.length for span in spans))
+        self._digests, self._known = bytearray(DIGEST * len(spans)), bytearray(len(spans))
+        self._at = self._number = 0
         self._begin()
 
     def _begin(self) -> None:
-        """Step to the next span that has bytes; empty ones are done at once."""
-        while len(self._digests) < len(self._spans):
-            span = self._spans[len(self._digests)]
+        """Begin the next span that has bytes; empty ones are done at once."""
+        while self._number < len(self._spans):
+            span = self._spans[self._number]
             if span.offset == 0 or span.path != self._path:
                 self._current = hashlib.sha256()
                 self._path = span.path
-            self._left = span.length
             if span.length:
                 return
-            self._digests.append(self._current.digest())
+            self._finish()
 
-    def go_on(self, spans: Sequence[Span], digests: Sequence[bytes], position: int, again: Again) -> bool:
+    def _finish(self) -> None:
+        self._keep(self._number, self._current.digest())
+        self._number += 1
+
+    def _keep(self, number: int, digest: bytes) -> None:
+        self._digests[DIGEST * number : DIGEST * (number + 1)] = digest
+        self._known[number] = 1
+
+    def go_on(self, spans: Sequence[Part], digests: Sequence[bytes], position: int, again: Again) -> bool:
         """Like `expect`, where an earlier run came as far as byte `position` and gave `digests` (see below).
 
         A member that it had begun is hashed from its first byte, since SHA-256 half done cannot be kept;
         `again` gives the bytes. False when some of them could not be read.
         """
         self.expect(spans)
-        self._digests, self._path = list(digests), None
+        for number, digest in enumerate(digests):
+            self._keep(number, digest)
+        self._at, self._number, self._path = position, len(digests), None
         self._begin()
-        if len(self._digests) == len(self._spans):
+        if self._number == len(spans):
             return True
-        span = self._spans[len(self._digests)]
-        inside = position - sum(s.length for s in self._spans[: len(self._digests)])
+        span = spans[self._number]
+        inside = position - (self._ends[self._number] - span.length)
         whole = True
         for data, faults in again(Span(span.path, 0, span.offset + inside)):
             self._current.update(data)
             whole = whole and not faults
-        self._left -= inside
         return whole
 
-    def digests_before(self, position: int) -> list[bytes]:
-        """The digests of the spans that end at or before byte `position`, which has been hashed."""
-        ends = list(accumulate(span.length for span in self._spans))
-        return self._digests[: bisect_right(ends, position)]
-
-    def take(self, path: bytes, data: memoryview) -> None:
-        """All bytes of a member whose turn may not have come. Any thread may call this."""
-        self._early[path] = hashlib.sha256(data).digest()
+    def take(self, number: int, data: memoryview) -> None:
+        """All bytes of a span, one that begins a member. Any thread may call this before its turn."""
+        self._keep(number, hashlib.sha256(data).digest())
 
     def update(self, data: memoryview) -> None:
         """The next bytes of the stream, those that were taken before included."""
-        at = 0
-        while at < len(data):
-            span = self._spans[len(self._digests)]
-            size = min(self._left, len(data) - at)
-            # The last one may go on in the next window: then all of its bytes are needed here.
-            whole = size == span.length and len(self._digests) + 1 < len(self._spans)
-            digest = self._early.pop(span.path, None) if whole else None
-            if digest is None:
-                self._current.update(data[at : at + size])
-            at += size
-            self._left -= size
-            if not self._left:
-                self._digests.append(digest or self._current.digest())
-                self._begin()
+        start, stop = self._at, self._at + len(data)
+        # The last one may go on in the next window: then all of its bytes are needed here.
+        whole = min(bisect_right(self._ends, stop), len(self._spans) - 1)
+        while self._at < stop:
+            if self._number < whole and self._known[self._number]:
+                unknown = self._known.find(0, self._number, whole)
+                self._number = whole if unknown < 0 else unknown
+                self._at = self._ends[self._number - 1]
+            else:
+                end = min(self._ends[self._number], stop)
+                self._current.update(data[self._at - start : end - start])
+                self._at = end
+                if end < self._ends[self._number]:
+                    return
+                self._finish()
+            self._begin()
+
+    def digests_before(self, position: int) -> list[bytes]:
+        """The digests of the spans that end at or before byte `position`, which has been hashed."""
+        return self._first(min(self._number, bisect_right(self._ends, position)))
 
     @property
     def digests(self) -> list[bytes]:
         """One digest a span: SHA-256 of its member from the first byte to the end of the span."""
-        return self._digests
+        return self._first(self._number)
+
+    def _first(self, count: int) -> list[bytes]:
+        digests = bytes(self._digests[: DIGEST * count])
+        return [digests[i : i + DIGEST] for i in range(0, len(digests), DIGEST)]

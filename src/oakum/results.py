@@ -6,6 +6,7 @@ from dataclasses import dataclass, field
 from enum import StrEnum
 from math import log
 from pathlib import Path
+from typing import NamedTuple
 
 
 class Outcome(StrEnum):
@@ -68,8 +69,7 @@ class BlockReport:
     margin: float | None
 
 
-@dataclass(frozen=True)
-class MemberReport:
+class MemberReport(NamedTuple):
     """One member. `bits_flipped` is None where what was flipped is unknown.
 
     `lost` lists byte ranges (offset, length) of the member that could not be corrected.

@@ -18,7 +18,7 @@ from support import content, plant, rewrite, snapshot, with_flips
 import oakum.jobs.protect as protecting
 from oakum import FormatError, OakumError, UsageError, describe, protect, repair, roll_back, verify
 from oakum.cli.running import run
-from oakum.members import Folder, Member, collect
+from oakum.members import Folder, collect
 from oakum.results import Outcome
 from oakum.sidecar.bootstrap import MARKER, encode, unpack
 from oakum.sidecar.layout import TEXT_BYTES
@@ -44,7 +44,7 @@ def forge(folder: Path, names: Names, monkeypatch: pytest.MonkeyPatch, **changes
         def stat(self, path: bytes) -> os.stat_result:
             return super().stat({b: a for a, b in names.items()}.get(path, path))
 
-    def renamed(paths: list[Path], root: Path) -> tuple[list[Member], list[str]]:
+    def renamed(paths: list[Path], root: Path) -> tuple[list[Piece], list[str]]:
         members, notes = collect(paths, root)
         return [m._replace(path=names.get(m.path, m.path), **changes) for m in members], notes
 

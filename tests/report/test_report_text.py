@@ -54,7 +54,7 @@ def test_uncorrectable_says_what_is_lost(uncorrectable: CheckResult) -> None:
 
 
 def test_repair_speaks_of_what_was_done(correctable: CheckResult) -> None:
-    written = replace(correctable.members[0], mended=correctable.target / "a.mended.tif")
+    written = correctable.members[0]._replace(mended=correctable.target / "a.mended.tif")
     whole = MemberReport("plates/c", 1, MemberState.INTACT, 0, mended=correctable.target / "c")
     result = replace(correctable, command="repair", members=(written, correctable.members[1], whole))
     text = check_text(result)

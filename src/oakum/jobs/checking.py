@@ -25,7 +25,7 @@ from oakum.files import aligned
 from oakum.geometry import CELL, Geometry
 from oakum.jobs.common import announce_compiling
 from oakum.jobs.opening import ProtectedSet
-from oakum.members import MemberHasher, Span, bytes_of
+from oakum.members import MemberHasher, Part, bytes_of
 from oakum.pools import Meter, Pools, wait_all
 from oakum.progress import Progress
 from oakum.sidecar.layout import Track
@@ -131,9 +131,7 @@ class WindowCheck:
         self._members = opened.members
         self._progress = progress
         self._pools = pools
-        spans = [Span(p.path, p.offset, p.length) for p in self.pieces]
-        self.spans = spans
-        self.stream = opened.stream(spans, self.start, opened.known_bad(spans))
+        self.stream = opened.stream(self.pieces, self.start, opened.known_bad(self.pieces))
         self._digests_of = digests_for(opened, progress)
         self.faulty: list[Range] = []
         """Ranges of the window that could not be read."""
@@ -202,9 +200,9 @@ class WindowCheck:
         """The members' bytes, chunk by chunk; `body` is what can be done while SHA-256 takes its time."""
         g = self.g
         if hasher is not None and self.resumed:
-            hasher.go_on(self.spans, self.digests, self.looked_to, self._again)
+            hasher.go_on(self.pieces, self.digests, self.looked_to, self._again)
         elif hasher is not None:
-            hasher.expect(self.spans)
+            hasher.expect(self.pieces)
         buffers = [aligned(min(CHUNK, g.cells_end)) for _ in range(CHUNKS)]
         running: list[list[Future[None]]] = [[] for _ in buffers]
         stops = [self.looked_to] * CHUNKS
@@ -230,7 +228,7 @@ class WindowCheck:
         self.looked_to = g.cells_end
         self.faulty.sort()
 
-    def _again(self, span: Span) -> Iterator[tuple[memoryview, list[Range]]]:
+    def _again(self, span: Part) -> Iterator[tuple[memoryview, list[Range]]]:
         """The bytes of a member from its first one on."""
         start = self._members[span.path].stream_start
         stream = self._opened.stream([span], start, self._opened.known_bad([span]))
@@ -301,14 +299,18 @@ class WindowCheck:
 
     def _compare_members(self) -> None:
         """Which members are right, and which parts of the window belong to them."""
-        place = 0
+        start = 0
         for piece, digest in zip(self.pieces, self.digests, strict=True):
+            stop = start + piece.length
+            sound = digest == piece.digest and not (self.faulty and self._has_fault(start, stop))
             member = self._members[piece.path]
             if piece.ends and not member.absent:
-                member.right = digest == piece.digest and not self._has_fault(place, place + piece.length)
-            if piece.length and digest == piece.digest and not self._has_fault(place, place + piece.length):
-                self.right_spans.append((place, place + piece.length))
-            place += piece.length
+                member.right = sound
+            if sound and piece.length:
+                touching = self.right_spans and self.right_spans[-1][1] == start
+                first = self.right_spans.pop()[0] if touching else start
+                self.right_spans.append((first, stop))
+            start = stop
 
     def _has_fault(self, start: int, stop: int) -> bool:
         at = bisect_right(self.faulty, (start, -1))

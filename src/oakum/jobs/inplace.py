@@ -28,7 +28,7 @@ from oakum.jobs.rebuild import write_sidecar
 from oakum.jobs.replay import Place, finish, refuse_unfit, without
 from oakum.jobs.tally import Tally
 from oakum.jobs.verify import SetCheck
-from oakum.members import MemberHasher, MemberStream, Span
+from oakum.members import MemberHasher, MemberStream, Part, Span
 from oakum.results import CheckResult, MemberState, Outcome
 from oakum.sidecar.reading import ByteSource
 from oakum.sidecar.table import Kind
@@ -39,7 +39,7 @@ STEP = 1 << 20
 class Overlay:
     """A stream of members with the new bytes of a draft laid over what is on the medium."""
 
-    def __init__(self, stream: MemberStream, spans: Sequence[Span], draft: Draft, numbers: dict[bytes, int]):
+    def __init__(self, stream: MemberStream, spans: Sequence[Part], draft: Draft, numbers: dict[bytes, int]):
         self._stream = stream
         self._draft = draft
         self._patches: list[tuple[int, int, Patch]] = []
@@ -223,13 +223,13 @@ class InPlace:
             finish(journal, self._place)
             note = f"what stood there before is in {journal.path}; oakum repair --roll-back brings it back"
         members = tuple(
-            replace(m, mended=self._opened.root / m.path) if os.fsencode(m.path) in self._numbers else m
+            m._replace(mended=self._opened.root / m.path) if os.fsencode(m.path) in self._numbers else m
             for m in result.members
         )
         sidecar = replace(result.sidecar, mended=self._opened.path) if sidecar_too else result.sidecar
         return replace(result, members=members, sidecar=sidecar, notes=(*result.notes, note))
 
-    def _stream(self, draft: Draft, spans: Sequence[Span]) -> Overlay:
+    def _stream(self, draft: Draft, spans: Sequence[Part]) -> Overlay:
         return Overlay(MemberStream(self._opened.folder, spans), spans, draft, self._numbers)
 
     def _will_be_right(self, draft: Draft, path: bytes, check: SetCheck) -> bool:
@@ -287,7 +287,7 @@ class InPlace:
 
 def _nothing_written(result: CheckResult, wrong: set[bytes]) -> CheckResult:
     members = tuple(
-        replace(m, state=MemberState.UNCORRECTABLE, bits_flipped=None) if os.fsencode(m.path) in wrong else m
+        m._replace(state=MemberState.UNCORRECTABLE, bits_flipped=None) if os.fsencode(m.path) in wrong else m
         for m in result.members
     )
     note = "nothing was written, since not everything can be corrected; --member names what can be had"

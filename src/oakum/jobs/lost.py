@@ -20,14 +20,14 @@ from oakum.errors import OakumError
 from oakum.geometry import CELL, Window, plan_windows
 from oakum.jobs.opening import CHUNK, ProtectedSet
 from oakum.jobs.protect import geometry_of, make_bootstrap, pieces_of, table_length
-from oakum.members import Member, MemberHasher, OpenStream, Span, collect
+from oakum.members import MemberHasher, OpenStream, Part, collect
 from oakum.progress import Progress
 from oakum.sidecar.bootstrap import FROM_PIPE, LAST_SECTION, UNKNOWN_LENGTH, Bootstrap
 from oakum.sidecar.layout import TEXT_BYTES, Layout
 from oakum.sidecar.reading import Head, Section
 from oakum.sidecar.table import Kind, Piece
 
-StreamOf = Callable[[Sequence[Span]], OpenStream]
+StreamOf = Callable[[Sequence[Part]], OpenStream]
 """Makes the stream of some spans; how it gets at the members' bytes is its own business."""
 
 
@@ -86,18 +86,15 @@ class _Search:
             tables = [[p._replace(size=p.offset + p.length) for p in table] for table in tables]
         return tables
 
-    def _members(self) -> list[Member]:
+    def _members(self) -> list[Piece]:
         """All members in the order of the stream, those of lost windows alone from the folder."""
         known = list(self._opened.members.values())
-        members = [
-            Member(m.piece.kind, m.piece.path, m.size, m.piece.mode, m.piece.modified_ns, m.piece.target)
-            for m in known
-        ]
+        members = [m.piece._replace(size=m.size, offset=0, length=m.size, ends=True) for m in known]
         ends = [m.stream_start + m.size for m in known]
         if not any(self._is_lost(place) for place in (0, *ends)):
             return members
         numbers = {m.path: i for i, m in enumerate(members)}
-        merged: list[Member] = []
+        merged: list[Piece] = []
         place = done = 0
         for member in self._in_folder(members):
             number = numbers.get(member.path)
@@ -112,7 +109,7 @@ class _Search:
         """Whether a member that begins at this byte of the stream begins in a lost window."""
         return min(place // self.windows[0].length, len(self.windows) - 1) in self._lost
 
-    def _in_folder(self, members: Sequence[Member]) -> list[Member]:
+    def _in_folder(self, members: Sequence[Piece]) -> list[Piece]:
         """What protect would find today below the folders, or at the places, of known members."""
         root = self._opened.root
         tops = dict.fromkeys(root / os.fsdecode(m.path.split(b"/")[0]) for m in members)
@@ -130,7 +127,7 @@ class _Search:
         involved = {p.path for number in self._lost for p in tables[number]}
         until = max(self._lost) + 1
         spans = [
-            [Span(p.path, p.offset, p.length) for p in table if p.kind is Kind.FILE and p.path in involved]
+            [piece for piece in table if piece.kind is Kind.FILE and piece.path in involved]
             for table in tables[:until]
         ]
         progress.phase("reading for lost sections", sum(s.length for some in spans for s in some))
@@ -176,7 +173,7 @@ class _Search:
 
 
 def _digests(
-    spans: Sequence[Span], stream_of: StreamOf, hasher: MemberHasher, progress: Progress
+    spans: Sequence[Part], stream_of: StreamOf, hasher: MemberHasher, progress: Progress
 ) -> list[bytes] | None:
     """The SHA-256 of members up to the ends of spans; None when not all of them can be read."""
     hasher.expect(spans)

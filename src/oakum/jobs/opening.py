@@ -18,7 +18,7 @@ from oakum.errors import CannotCheck, FormatError
 from oakum.files import FileBytes, aligned, reason
 from oakum.jobs.common import absolute
 from oakum.jobs.unreadable import UnreadableList
-from oakum.members import Folder, MemberStream, OpenStream, Span
+from oakum.members import Folder, MemberStream, OpenStream, Part, Span
 from oakum.progress import Progress, Silent
 from oakum.sidecar.bootstrap import FROM_PIPE
 from oakum.sidecar.reading import ByteSource, Section, find_sections
@@ -31,7 +31,7 @@ CHUNK = 8 << 20
 """Bytes of a member read at a time."""
 
 
-@dataclass
+@dataclass(slots=True)
 class KnownMember:
     """A member as the sidecar knows it, put together from the windows that it lies in."""
 
@@ -100,8 +100,10 @@ class ProtectedSet:
 
     def __post_init__(self) -> None:
         files = (m for m in self.members.values() if m.piece.kind is Kind.FILE and m.size)
-        self._files = sorted(files, key=lambda m: m.stream_start)
-        self._starts = [m.stream_start for m in self._files]
+        self.files = sorted(files, key=lambda m: m.stream_start)
+        """Those that have bytes, in the order of the stream."""
+
+        self._starts = [m.stream_start for m in self.files]
 
     @property
     def incomplete(self) -> bool:
@@ -128,8 +130,10 @@ class ProtectedSet:
         self.members = {path: self.members.get(path, member) for path, member in members.items()}
         self.__post_init__()
 
-    def known_bad(self, spans: Sequence[Span]) -> list[Range]:
+    def known_bad(self, spans: Sequence[Part]) -> list[Range]:
         """What the user says cannot be read, as ranges of the stream of some spans."""
+        if not self.unreadable:
+            return []
         ranges, place = [], 0
         for span in spans:
             for start, stop in self.unreadable.get(span.path, ()):
@@ -139,7 +143,7 @@ class ProtectedSet:
             place += span.length
         return ranges
 
-    def stream(self, spans: Sequence[Span], start: int, known_bad: Sequence[Range] = ()) -> OpenStream:
+    def stream(self, spans: Sequence[Part], start: int, known_bad: Sequence[Range] = ()) -> OpenStream:
         """The bytes of some spans as they are; the first begins at byte `start` of the whole stream."""
         return MemberStream(self.folder, spans, known_bad, once=self.once)
 
@@ -162,7 +166,7 @@ class ProtectedSet:
     def members_at(self, start: int, length: int) -> list[KnownMember]:
         """The files that hold bytes of a range of the stream, in order."""
         first = max(0, bisect_right(self._starts, start) - 1)
-        return self._files[first : bisect_left(self._starts, start + length)]
+        return self.files[first : bisect_left(self._starts, start + length)]
 
     def close(self) -> None:
         """Close everything."""

@@ -6,10 +6,11 @@ import os
 import shutil
 import time
 from collections.abc import Iterator, Sequence
+from concurrent.futures import Future
 from contextlib import closing, suppress
 from dataclasses import replace
 from functools import partial
-from itertools import accumulate, islice
+from itertools import islice
 from pathlib import Path
 from typing import Any
 
@@ -32,7 +33,7 @@ from oakum.jobs.common import (
 from oakum.jobs.halfway import Halfway, Keeper
 from oakum.jobs.replay import replacing
 from oakum.jobs.resuming import State, beside, key_of
-from oakum.members import Folder, Member, MemberHasher, MemberStream, Span, bytes_of, collect
+from oakum.members import Folder, MemberHasher, MemberStream, Part, bytes_of, collect
 from oakum.pools import Pools
 from oakum.progress import Progress, Silent
 from oakum.results import ProtectResult
@@ -112,7 +113,6 @@ def protect(
                 take_away_leftovers(sidecar, but=run)
             with state.needed():
                 size = job.write(folder, file, state, halfway or Halfway())
-                _refuse_changed(folder, members)
                 progress.phase("bringing the sidecar to the medium", None)
                 file.commit(size)
     if holder is not None:
@@ -125,7 +125,7 @@ def protect(
     )  # fmt: skip
 
 
-def _state(sidecar: Path, folder: Folder, members: Sequence[Member], facts: tuple[object, ...]) -> State:
+def _state(sidecar: Path, folder: Folder, members: Sequence[Piece], facts: tuple[object, ...]) -> State:
     """The state file of this run; small sets have none, but one that is there is taken away in the end."""
     place = beside(sidecar)
     if sum(m.size for m in members) < resuming.LEAST and not os.path.lexists(place):
@@ -160,7 +160,7 @@ def _one_of(paths: Sequence[bytes]) -> str:
     return " or ".join(names)
 
 
-def _refuse_changed(folder: Folder, members: Sequence[Member]) -> None:
+def _refuse_changed(folder: Folder, members: Sequence[Piece]) -> None:
     """End the run when a file is not what it was at the start."""
     for member in members:
         try:
@@ -191,7 +191,7 @@ class _Job:
     def __init__(
         self,
         code: ConcatenatedCode,
-        members: Sequence[Member],
+        members: Sequence[Piece],
         windows: Sequence[Window],
         set_depth: int,
         memory: int,
@@ -208,6 +208,9 @@ class _Job:
         self._hashing = False
         self._kernels = Kernels.of(code)
         self._members = members
+        self._unchanged: Future[None]
+        """A last look at the members, taken while the records are written."""
+
         self._total = sum(m.size for m in members)
         geometries = [geometry_of(code, w) for w in windows]
         self._plans = [plan_reading(g, memory) for g in geometries]
@@ -260,6 +263,7 @@ class _Job:
             parent = done.identity
             first = first if window.index else done.identity
             place += layout.size
+        self._unchanged.result()
         return place
 
     def _encode(
@@ -272,7 +276,7 @@ class _Job:
         halfway: Halfway,
         keeper: Keeper,
     ) -> Bootstrap:
-        spans = [Span(p.path, p.offset, p.length) for p in pieces if p.kind is Kind.FILE]
+        spans = [piece for piece in pieces if piece.kind is Kind.FILE]
         once = plan.reads == 1 or not pagecache.holds(geometry.length)
         stream = MemberStream(folder, spans, once=once)
 
@@ -297,9 +301,11 @@ class _Job:
             ) from None
         finally:
             stream.close()
+        if geometry is self._geometries[-1]:
+            self._unchanged = self._pools.work.submit(_refuse_changed, folder, self._members)
         return writer.finish(pack_table(pieces, self._hasher.digests))
 
-    def _expect(self, folder: Folder, spans: Sequence[Span], halfway: Halfway) -> None:
+    def _expect(self, folder: Folder, spans: Sequence[Part], halfway: Halfway) -> None:
         """Tell the hasher what comes; at the beginning of a run it has to catch up with an earlier one."""
         if self._hashing:
             self._hasher.expect(spans)
@@ -307,7 +313,7 @@ class _Job:
         self._hashing = True
         done = halfway.legs[0].at if halfway.legs else 0
 
-        def again(span: Span) -> Iterator[tuple[memoryview, list[Fault]]]:
+        def again(span: Part) -> Iterator[tuple[memoryview, list[Fault]]]:
             return bytes_of(MemberStream(folder, [span]), span.length)
 
         if not self._hasher.go_on(spans, halfway.digests, done, again):
@@ -362,27 +368,26 @@ def make_bootstrap(
     )  # fmt: skip
 
 
-def pieces_of(members: Sequence[Member], windows: Sequence[Window]) -> Iterator[list[Piece]]:
-    """The entries of the member tables of one window after the other, without digests.
+def pieces_of(members: Sequence[Piece], windows: Sequence[Window]) -> Iterator[list[Piece]]:
+    """The entries of the member tables of one window after the other, from those of whole members.
 
     A member that is empty, or no file, belongs to the window in which the next byte lies.
     """
-    starts = list(accumulate((m.size for m in members), initial=0))
-    at = 0
+    at = start = 0
     for window in windows:
         end, last = window.start + window.length, window is windows[-1]
         pieces = []
-        while at < len(members) and (starts[at] < end or last):
-            m, start, stop = members[at], starts[at], starts[at + 1]
-            offset = max(0, window.start - start)
-            length = max(0, min(stop, end) - start - offset)
-            pieces.append(
-                Piece(m.kind, m.path, m.mode, m.modified_ns, m.size, offset, length, stop <= end,
-                      target=m.target)
-            )  # fmt: skip
+        while at < len(members) and (start < end or last):
+            piece = members[at]
+            stop = start + piece.size
+            if start < window.start or stop > end:
+                offset = max(0, window.start - start)
+                length = min(stop, end) - start - offset
+                piece = piece._replace(offset=offset, length=length, ends=stop <= end)
+            pieces.append(piece)
             if stop > end:
                 break
-            at += 1
+            at, start = at + 1, stop
         yield pieces
 
 

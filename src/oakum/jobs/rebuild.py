@@ -11,7 +11,7 @@ from oakum.files import NewFile
 from oakum.jobs.opening import ProtectedSet
 from oakum.jobs.protect import Placed, pack_table
 from oakum.jobs.verify import SetCheck
-from oakum.members import MemberHasher, MemberStream, Opener, Span, Stream
+from oakum.members import MemberHasher, MemberStream, Opener, Part, Stream
 from oakum.sidecar.reading import Section
 from oakum.sidecar.table import Kind, Piece
 from oakum.sidecar.writing import SectionWriter
@@ -24,7 +24,7 @@ class Source(Stream, Protocol):
         """Close the members."""
 
 
-StreamOf = Callable[[Sequence[Span]], Source]
+StreamOf = Callable[[Sequence[Part]], Source]
 """Makes the stream of some spans; how it gets at the corrected bytes is its own business."""
 
 
@@ -72,7 +72,7 @@ def _write_section(
     hasher: MemberHasher,
     memory: int,
 ) -> bool:
-    spans = [Span(p.path, p.offset, p.length) for p in table if p.kind is Kind.FILE]
+    spans = [piece for piece in table if piece.kind is Kind.FILE]
     writer = SectionWriter(section.bootstrap, section.layout, Placed(file, section.bootstrap.section_offset))
     stream = stream_of(spans)
     try:

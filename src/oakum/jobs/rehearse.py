@@ -28,7 +28,7 @@ from oakum.jobs.damage import Wishes
 from oakum.jobs.opening import OpenBytes, ProtectedSet, assemble, look_at_members, open_set
 from oakum.jobs.tally import Tally
 from oakum.jobs.verify import SetCheck, result_of
-from oakum.members import MemberHasher, MemberStream, OpenStream, Span
+from oakum.members import MemberHasher, MemberStream, OpenStream, Part, Span
 from oakum.pools import Pools
 from oakum.probability import clopper_pearson
 from oakum.progress import Progress, Silent
@@ -151,7 +151,7 @@ class DamagedSet(ProtectedSet):
 
     damage: Damage = field(default_factory=lambda: Damage(()))
 
-    def stream(self, spans: Sequence[Span], start: int, known_bad: Sequence[Range] = ()) -> OpenStream:
+    def stream(self, spans: Sequence[Part], start: int, known_bad: Sequence[Range] = ()) -> OpenStream:
         return DamagedStream(MemberStream(self.folder, spans, known_bad), start, self.damage)
 
 

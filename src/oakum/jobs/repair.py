@@ -295,9 +295,9 @@ class Mending:
         for copy in self._copies.values():
             report = reports[os.fsdecode(copy.member.piece.path)]
             if not copy.right:
-                report = replace(report, state=MemberState.UNCORRECTABLE, bits_flipped=None)
+                report = report._replace(state=MemberState.UNCORRECTABLE, bits_flipped=None)
             elif report.state is MemberState.UNCORRECTABLE:  # Lost cells that it shares had nothing of it.
-                report = replace(report, state=MemberState.ALTERED, lost=())
+                report = report._replace(state=MemberState.ALTERED, lost=())
             reports[report.path] = report
         if wrong and not self._accept_loss:
             notes = (
@@ -314,7 +314,7 @@ class Mending:
         for copy in self._copies.values():
             self._name(copy)
             report = reports[os.fsdecode(copy.member.piece.path)]
-            reports[report.path] = replace(report, mended=copy.shown)
+            reports[report.path] = report._replace(mended=copy.shown)
         self._restore_folders()
         result = replace(result, members=tuple(reports.values()))
         if wrong:

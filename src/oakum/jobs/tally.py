@@ -13,19 +13,17 @@ from oakum.jobs.opening import KnownMember, ProtectedSet
 from oakum.results import BlockReport, MemberReport, MemberState, Outcome, SidecarReport, Totals
 from oakum.sidecar.table import Kind
 
+_KINDS = {kind: kind.name.lower() for kind in Kind}
+
 
 class Tally:
     """Counts over the whole set. Findings may come in any order within a window."""
 
     def __init__(self, opened: ProtectedSet) -> None:
         self._opened = opened
-        files = sorted(
-            (m for m in opened.members.values() if m.piece.kind is Kind.FILE and m.size),
-            key=lambda m: m.stream_start,
-        )
-        self._number = {m.piece.path: i for i, m in enumerate(files)}
-        self._starts = np.array([m.stream_start for m in files], np.int64)
-        self._bits = np.zeros(len(files), np.int64)
+        self._number = {m.piece.path: i for i, m in enumerate(opened.files)}
+        self._starts = np.array([m.stream_start for m in opened.files], np.int64)
+        self._bits = np.zeros(len(opened.files), np.int64)
         self._lost: dict[bytes, list[tuple[int, int]]] = {}
         self._bursts = BurstCounter()
         self.blocks: list[BlockReport] = []
@@ -146,7 +144,7 @@ class Tally:
         if member.edited and state is not MemberState.INTACT and not member.absent:
             detail = (detail + "; " if detail else "") + "is newer than recorded: edited rather than decayed"
         return MemberReport(
-            os.fsdecode(member.piece.path), member.size, state, bits, member.piece.kind.name.lower(), detail,
+            os.fsdecode(member.piece.path), member.size, state, bits, _KINDS[member.piece.kind], detail,
             member.edited and state is not MemberState.INTACT, tuple((a, b - a) for a, b in lost),
         )  # fmt: skip
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 import struct
 from enum import IntEnum
 from typing import NamedTuple
@@ -25,7 +26,9 @@ class Kind(IntEnum):
 
 
 _KINDS = {int(kind): kind for kind in Kind}
-_NO_NAMES = frozenset((b"", b".", b".."))
+
+_NAME = rb"(?!\.\.?(?:/|\Z))[^/\0]{1,255}"
+_PATH = re.compile(_NAME + rb"(?:/" + _NAME + rb")*")
 
 
 class Piece(NamedTuple):
@@ -106,14 +109,7 @@ def _unpack_entry(table: bytes, place: int) -> tuple[Piece, int]:
 
 def check_path(path: bytes) -> None:
     """Refuse, with FormatError, a path that could leave the folder it belongs to or cannot be a name."""
-    parts = path.split(b"/")
-    if (
-        not path
-        or len(path) > MAX_PATH
-        or b"\0" in path
-        or not _NO_NAMES.isdisjoint(parts)
-        or len(max(parts, key=len)) > 255
-    ):
+    if len(path) > MAX_PATH or not _PATH.fullmatch(path):
         raise FormatError(
             "the sidecar names a member in a way that no file can be named; nothing was written"
         )
