@@ -2,10 +2,13 @@
 
 from __future__ import annotations
 
+import ctypes
 import os
+import signal
 import subprocess
 import sys
 import tempfile
+import threading
 from collections.abc import Callable
 from pathlib import Path
 from typing import Any
@@ -251,3 +254,34 @@ def test_loading_imports_no_compiler(cache: Cache) -> None:
     command = [sys.executable, "-c", code]
     imported = [subprocess.run(command, capture_output=True, check=True).stdout for _ in range(2)]
     assert imported == [b"True\n", b"False\n"]
+
+
+def test_a_signal_is_not_lost_while_it_compiles(cache: Cache, monkeypatch: pytest.MonkeyPatch) -> None:
+    """LLVM calls numba back, and what a signal's handler raised in such a call would be dropped by ctypes."""
+    noticed = threading.Event()
+
+    class Stopped(BaseException):
+        pass
+
+    def stop(*_: object) -> None:
+        noticed.set()
+        raise Stopped
+
+    def called_back() -> None:
+        os.kill(os.getpid(), signal.SIGUSR1)
+        assert noticed.wait(10)
+
+    def compile_(kernel: Kernel) -> bytes:
+        ctypes.CFUNCTYPE(None)(called_back)()
+        return through(kernel)
+
+    through = Kernel.compile
+    before = signal.signal(signal.SIGUSR1, stop)
+    try:
+        with monkeypatch.context() as patch:
+            patch.setattr(Kernel, "compile", compile_)
+            with pytest.raises(Stopped):
+                cache.use()
+    finally:
+        signal.signal(signal.SIGUSR1, before)
+    assert cache.compilations() == 1

@@ -9,12 +9,16 @@ from __future__ import annotations
 
 import contextlib
 import threading
-from collections.abc import Callable, Iterator
+from collections.abc import Callable
+from concurrent.futures import Future
 from importlib import import_module
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 from oakum.kernels import machine, store, tiers
 from oakum.kernels.machine import Code, Kind
+
+if TYPE_CHECKING:
+    from oakum.kernels.compiler import Compiled
 
 on_compile: Callable[[str], None] | None = None
 """Called with a sentence for the user before a kernel is compiled (not when it comes from the cache).
@@ -24,14 +28,6 @@ A job sets it. It is called in the thread that needs the kernel first; `Kernel.p
 
 OUTSIDE = ("memcpy", "memmove", "memset", "llvm.")
 """What names begin with that a kernel may refer to."""
-
-OPTIONS: dict[str, Any] = {
-    "no_cpython_wrapper": True,
-    "no_cfunc_wrapper": True,
-    "error_model": "numpy",
-    "_nrt": False,
-}
-"""What numba is told: no wrappers for calls from Python, no checks of divisors, no memory management."""
 
 _lock = threading.RLock()
 
@@ -72,7 +68,7 @@ class Kernel:
         """Compile now, or load from the cache, and test. Raises RuntimeError if the answers are wrong."""
         with _lock:
             if self._code is None:
-                self._code = self._kept() or self._compiled()
+                self._code = self._kept() or self._made()
             return self._code
 
     def _kept(self) -> Code | None:
@@ -83,12 +79,12 @@ class Kernel:
                 return code
         return None
 
-    def _compiled(self) -> Code:
+    def _made(self) -> Code:
         if on_compile is not None:
             kept = store.cache_home() is not None
             prospect = "later runs will find it ready" if kept else "it cannot be kept for later runs"
             on_compile(f"compiling {self.purpose} for this CPU; {prospect}")
-        content = self.compile()
+        content = _aside(self.compile)
         code = Code(content)
         if not self.self_test(code):
             raise RuntimeError(
@@ -100,31 +96,37 @@ class Kernel:
 
     def compile(self) -> bytes:
         """The kernel compiled anew, as `machine.packed`."""
-        result = self.compiled_by_numba()
-        library, returns = result.library, str(result.signature.return_type) != "none"
-        if outside := [name for name in _declared(library) if not name.startswith(OUTSIDE)]:
+        compiled = self.compiled()
+        if outside := [name for name in compiled.outside() if not name.startswith(OUTSIDE)]:
             raise RuntimeError(f"the kernel {self.name} refers to {', '.join(outside)}")
-        kinds = [_kind_of(argument) for argument in result.signature.args]
-        code, _ = library.serialize_using_object_code()[2]
-        return machine.packed(result.fndesc.llvm_func_name, kinds, returns, code)
+        kinds = [_kind_of(argument) for argument in compiled.arguments]
+        returns = str(compiled.returns) != "none"
+        return machine.packed(compiled.symbol, kinds, returns, compiled.object_code())
 
-    def compiled_by_numba(self) -> Any:
-        """numba's result of compiling the kernel."""
-        import numba
+    def compiled(self) -> Compiled:
+        """The kernel as LLVM's code, made anew."""
+        from oakum.kernels.compiler import Compiled
 
         module, _, name = self._place.rpartition(".")
         function = getattr(import_module(module, __package__), name)
-        with _lock:
-            dispatcher = numba.njit(function.signature, **OPTIONS)(function)
-        (result,) = dispatcher.overloads.values()
-        return result
+        return Compiled(function, function.signature)
 
 
-def _declared(library: Any) -> Iterator[str]:
-    """Names of the functions that a compiled module refers to and does not hold."""
-    for function in library._final_module.functions:
-        if function.is_declaration:
-            yield function.name
+def _aside(work: Callable[[], bytes]) -> bytes:
+    """What comes of work in a thread of its own. A signal ends the waiting for it, not the work.
+
+    Handlers of signals run in the main thread. What they raise would be lost where LLVM calls numba back.
+    """
+    done: Future[bytes] = Future()
+
+    def run() -> None:
+        try:
+            done.set_result(work())
+        except BaseException as error:
+            done.set_exception(error)
+
+    threading.Thread(target=run, daemon=True).start()
+    return done.result()
 
 
 def _kind_of(argument: Any) -> Kind:

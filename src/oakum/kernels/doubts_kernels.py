@@ -5,8 +5,8 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import NDArray
 
+from oakum.kernels.compiler import subroutine
 from oakum.kernels.compiling import typed
-from oakum.kernels.simd import inlined
 
 Bytes = NDArray[np.uint8]
 Floats = NDArray[np.float32]
@@ -16,14 +16,14 @@ UNDECODED = 250
 """Statuses from here to FLAGGED - 1 are words that were not decoded at all."""
 
 
-@inlined
+@subroutine
 def place_of(first: int, t: int, width: int) -> int:
     """Where in the cell byte t of a word stands that begins at `first`: words wrap round."""
     place = first + t
     return place - width if place >= width else place
 
 
-@inlined
+@subroutine
 def count_pairs(
     syndrome: int, first: int, size: int, width: int, pinned: Bytes, columns: NDArray[np.uint32],
     bit_of: NDArray[np.int16], touched: Floats,

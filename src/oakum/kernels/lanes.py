@@ -15,14 +15,13 @@ from __future__ import annotations
 from collections.abc import Callable, Sequence
 from typing import Any
 
-import numba
 import numpy as np
 from llvmlite import ir
 from numba import types
 from numba.core import cgutils
 
 from oakum.kernels import planes
-from oakum.kernels.compiling import OPTIONS
+from oakum.kernels.compiler import subroutine
 from oakum.kernels.lane_field import BLOCK_WORDS, LANES, PLANE_WORDS, points
 from oakum.kernels.planes import NO_LANES, Rows, number
 from oakum.kernels.simd import I1, I64, Builder, Value, intrinsic, variable
@@ -31,11 +30,6 @@ __all__ = ["ALL", "BLOCK_WORDS", "LANES", "NONE", "ONE", "PLANE_WORDS", "subrout
 
 NONE, ONE, ALL = np.uint64(0), np.uint64(1), np.uint64(0xFFFF_FFFF_FFFF_FFFF)
 """Words of sets of lanes: no lane, the first, all."""
-
-
-def subroutine(function: Callable[..., Any]) -> Callable[..., Any]:
-    """Marks a function that only kernels call, and that is no part of each of its callers."""
-    return numba.njit(**OPTIONS)(function)  # type: ignore[no-any-return]
 
 
 # -- how intrinsics are made --------------------------------------------------------------------------------

@@ -29,6 +29,7 @@ from llvmlite import ir
 from numba.core import cgutils, types
 
 from oakum.kernels.arrays import Arrays
+from oakum.kernels.compiler import subroutine
 from oakum.kernels.compiling import typed
 from oakum.kernels.parity import POINTS, TILE, VECTOR
 from oakum.kernels.simd import (
@@ -43,7 +44,6 @@ from oakum.kernels.simd import (
     clear,
     constant_bytes,
     copy,
-    inlined,
     intrinsic,
     load,
     nothing,
@@ -201,7 +201,7 @@ def store_word(typingctx: Any, address: Any, word: Any) -> Any:
     return signature(2), generate
 
 
-@inlined
+@subroutine
 def locate(addresses: int, order: int, arrays: Any, start: int, first: int, width: int, scratch: int) -> None:
     """Where the row of each point begins, from column `start` on: in the source; at zeros, if there is none.
 
@@ -219,7 +219,7 @@ def locate(addresses: int, order: int, arrays: Any, start: int, first: int, widt
         store_word(addresses + 8 * point, address)
 
 
-@inlined
+@subroutine
 def transform(
     passes: Any, sums: int, work: int, addresses: int, lambdas: int, unit: int, layers: int, width: int
 ) -> None:
@@ -248,7 +248,7 @@ def transform(
         lambdas += 3 * unit
 
 
-@inlined
+@subroutine
 def moments(
     passes: Any, unit: int, arrays: Any, first: int, order: int, lambdas: int, layers: int, scratch: int
 ) -> None:

@@ -13,7 +13,6 @@ from typing import Any, TypeAlias
 from llvmlite import ir
 from numba.core import cgutils, types
 from numba.extending import intrinsic as _numba_intrinsic
-from numba.extending import register_jitable as _numba_register_jitable
 
 from oakum.kernels import tiers
 from oakum.kernels.arrays import Arrays
@@ -35,11 +34,6 @@ ARRAYS = types.NamedUniTuple(types.intp, len(Arrays._fields), Arrays)  # type: i
 def intrinsic(function: Callable[..., Any]) -> Callable[..., Any]:
     """numba's `intrinsic`, typed."""
     return _numba_intrinsic(function)  # type: ignore[no-any-return]
-
-
-def inlined(function: Callable[..., Any]) -> Callable[..., Any]:
-    """A Python function that kernels may call; it is compiled into them."""
-    return _numba_register_jitable(function)  # type: ignore[no-any-return]
 
 
 def signature(count: int) -> Any:

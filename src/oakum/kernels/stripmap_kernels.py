@@ -23,6 +23,7 @@ from llvmlite import ir
 from numba.core import cgutils, types
 
 from oakum.kernels.arrays import Arrays
+from oakum.kernels.compiler import subroutine
 from oakum.kernels.compiling import typed
 from oakum.kernels.simd import (
     ARRAYS,
@@ -37,7 +38,6 @@ from oakum.kernels.simd import (
     constant_bytes,
     copy,
     doubled,
-    inlined,
     intrinsic,
     load,
     nothing,
@@ -61,13 +61,13 @@ from oakum.kernels.stripmap import (
 )
 
 
-@inlined
+@subroutine
 def pack(target: int, source: int, stride: int, rows: int, width: int) -> None:
     for row in range(rows):
         copy(target + row * STRIDE, source + row * stride, width)
 
 
-@inlined
+@subroutine
 def begin(arrays: Any, start: int, width: int, scratch: int, packed: int) -> None:
     """Steps 1 and 2: the strip of the inputs to `scratch`, that of the outputs to `packed`."""
     pack(scratch, arrays.source + start, arrays.source_stride, arrays.inputs, width)
@@ -77,7 +77,7 @@ def begin(arrays: Any, start: int, width: int, scratch: int, packed: int) -> Non
         clear(packed, arrays.rows * STRIDE)
 
 
-@inlined
+@subroutine
 def finish(arrays: Any, start: int, width: int, packed: int) -> None:
     """Step 4."""
     for row in range(arrays.rows):

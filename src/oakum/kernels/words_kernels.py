@@ -19,6 +19,7 @@ from llvmlite import ir
 from numba.core import cgutils
 from numpy.typing import NDArray
 
+from oakum.kernels.compiler import subroutine
 from oakum.kernels.compiling import typed
 from oakum.kernels.simd import (
     I32,
@@ -29,7 +30,6 @@ from oakum.kernels.simd import (
     clear,
     constant_bytes,
     copy,
-    inlined,
     intrinsic,
     load,
     nothing,
@@ -158,7 +158,7 @@ def word_parity(typingctx: Any, target: Any, message: Any, tables: Any) -> Any:
     return signature(3), generate
 
 
-@inlined
+@subroutine
 def arrange(target: int, cell: int, width: int, offset: int, size: int) -> None:
     """The cell's bytes from `offset` on and round, then zeros up to `size`."""
     copy(target, cell + offset, width - offset)
@@ -166,7 +166,7 @@ def arrange(target: int, cell: int, width: int, offset: int, size: int) -> None:
     clear(target + width, size - width)
 
 
-@inlined
+@subroutine
 def parities_shuffle(target: int, message: int, words: int, m: int, p: int, tables: int, planes: int) -> None:
     """The parity of `words` words (and of the zeros that fill the last group), p bytes each."""
     size = (words + GROUP - 1) // GROUP * GROUP
@@ -182,10 +182,35 @@ def parities_shuffle(target: int, message: int, words: int, m: int, p: int, tabl
             weave3(target + w * p, planes + w, size)
 
 
-@inlined
+@subroutine
+def parities_portable(target: int, message: int, words: int, m: int, p: int, tables: int, _: int) -> None:
+    """The same; the 4 bytes of each word are overwritten by the next from byte p on."""
+    for w in range(words):
+        word_parity(target + w * p, message + w * m, tables)
+
+
+@subroutine
 def offset_of(stagger: int, width: int, m: int) -> int:
     """Where in a cell of `width` bytes its first word begins."""
     return stagger % m if width >= 2 * m else 0
+
+
+@subroutine
+def cells_parity(
+    parities: Any, data: int, stride: int, length: int, cell: int, staggers: NDArray[np.int64], out: int,
+    out_stride: int, step: int, m: int, p: int, tables: int, scratch: int,
+) -> None:  # fmt: skip
+    """The kernel of a tier, whose `parities` are given."""
+    for row in range(len(staggers)):
+        for start in range(0, length, cell):
+            width = min(cell, length - start)
+            words = (width + m - 1) // m
+            size = (words + GROUP - 1) // GROUP * GROUP
+            offset = offset_of(staggers[row], width, m)
+            arrange(scratch, data + row * stride + start, width, offset, size * m + WORD)
+            computed = scratch + size * m + WORD
+            parities(computed, scratch, words, m, p, tables, computed + size * p)
+            copy(out + row * out_stride + start // cell * step, computed, words * p)
 
 
 PARITY_SIGNATURE = "void(intp, intp, intp, intp, int64[::1], intp, intp, intp, intp, intp, intp, intp)"
@@ -195,55 +220,22 @@ distance of the cells' parities in a row, m, p, the tier's tables, scratch memor
 
 @typed(PARITY_SIGNATURE)
 def parity_shuffle(
-    data: int,
-    stride: int,
-    length: int,
-    cell: int,
-    staggers: NDArray[np.int64],
-    out: int,
-    out_stride: int,
-    step: int,
-    m: int,
-    p: int,
-    tables: int,
-    scratch: int,
-) -> None:
-    for row in range(len(staggers)):
-        for start in range(0, length, cell):
-            width = min(cell, length - start)
-            words = (width + m - 1) // m
-            size = (words + GROUP - 1) // GROUP * GROUP
-            offset = offset_of(staggers[row], width, m)
-            arrange(scratch, data + row * stride + start, width, offset, size * m + WORD)
-            computed = scratch + size * m + WORD
-            parities_shuffle(computed, scratch, words, m, p, tables, computed + size * p)
-            copy(out + row * out_stride + start // cell * step, computed, words * p)
+    data: int, stride: int, length: int, cell: int, staggers: NDArray[np.int64], out: int, out_stride: int,
+    step: int, m: int, p: int, tables: int, scratch: int,
+) -> None:  # fmt: skip
+    cells_parity(
+        parities_shuffle, data, stride, length, cell, staggers, out, out_stride, step, m, p, tables, scratch
+    )
 
 
 @typed(PARITY_SIGNATURE)
 def parity_portable(
-    data: int,
-    stride: int,
-    length: int,
-    cell: int,
-    staggers: NDArray[np.int64],
-    out: int,
-    out_stride: int,
-    step: int,
-    m: int,
-    p: int,
-    tables: int,
-    scratch: int,
-) -> None:
-    for row in range(len(staggers)):
-        for start in range(0, length, cell):
-            width = min(cell, length - start)
-            words = (width + m - 1) // m
-            size = words * m + WORD
-            arrange(scratch, data + row * stride + start, width, offset_of(staggers[row], width, m), size)
-            for w in range(words):  # each word's 4 bytes are overwritten by the next from byte p on
-                word_parity(scratch + size + w * p, scratch + w * m, tables)
-            copy(out + row * out_stride + start // cell * step, scratch + size, words * p)
+    data: int, stride: int, length: int, cell: int, staggers: NDArray[np.int64], out: int, out_stride: int,
+    step: int, m: int, p: int, tables: int, scratch: int,
+) -> None:  # fmt: skip
+    cells_parity(
+        parities_portable, data, stride, length, cell, staggers, out, out_stride, step, m, p, tables, scratch
+    )
 
 
 @typed("void(uint8[:, :], int64[::1], intp, uint8[:, ::1])")
@@ -259,7 +251,7 @@ def spread(of_words: NDArray[np.uint8], staggers: NDArray[np.int64], m: int, out
                     out[row, (offset + place) % width] = value
 
 
-@inlined
+@subroutine
 def leader(syndrome: int, starts: NDArray[Any], known: NDArray[Any], places: NDArray[Any]) -> int:
     """The places of the one or two flips that give `syndrome`, packed; 0 if there are none such.
 
@@ -272,7 +264,7 @@ def leader(syndrome: int, starts: NDArray[Any], known: NDArray[Any], places: NDA
     return 0
 
 
-@inlined
+@subroutine
 def flips(
     syndrome: int,
     t: int,
@@ -295,7 +287,7 @@ def flips(
     return 0
 
 
-@inlined
+@subroutine
 def allowed(found: int, word: int, m: int, offset: int, pinned: NDArray[Any]) -> bool:
     """Whether all flips are in bytes that are there and, as far as is known, may be wrong."""
     width = len(pinned)
@@ -308,7 +300,7 @@ def allowed(found: int, word: int, m: int, offset: int, pinned: NDArray[Any]) ->
     return True
 
 
-@inlined
+@subroutine
 def flip(found: int, word: int, m: int, p: int, offset: int, cell: NDArray[Any], parity: NDArray[Any]) -> int:
     """Turn the bits round; returns how many."""
     count = 0
