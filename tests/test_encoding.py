@@ -170,7 +170,7 @@ def test_large_files_are_read_twice_in_long_pieces(length: int, code: str) -> No
     assert 1 << 20 <= min(width for _, width in pieces) <= max(width for _, width in pieces) <= plan.columns
     assert all(first % CELL == 0 for first, _ in pieces)
     first_read = g.chunks(RUN, 5 * CHUNK, 5 * CHUNK + 64 * CHUNK)
-    assert {stop - start for start, stop in first_read} == {1 << 20}
+    assert min(stop - start for start, stop in first_read) >= 1 << 20
 
 
 def test_memory_is_the_same_for_every_large_file() -> None:

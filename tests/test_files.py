@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import errno
+import fcntl
 import os
 from pathlib import Path
 
@@ -97,6 +98,34 @@ def test_a_source_answers_for_every_offset(
     assert got.tobytes() == bytes(content(200)[offset + i] if there[i] else 0 for i in range(length))
     assert [i for a, b in faults for i in range(a, b)] == [i for i in range(length) if not there[i]]
     assert all(a < b for a, b in faults)
+
+
+@pytest.mark.parametrize("missing", ["O_DIRECT", "open", "preadv"])
+def test_what_cannot_be_read_past_the_cache_is_read_through_it(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch, missing: str
+) -> None:
+    """No such flag, a file system that refuses it, an error in such a read: the bytes come all the same."""
+    (tmp_path / "f").write_bytes(content(3 << 20))
+    monkeypatch.setattr("oakum.pagecache.is_passing_through", lambda fd: True)
+    direct, true_open, true_read = os.O_DIRECT, os.open, os.preadv
+    if missing == "O_DIRECT":
+        monkeypatch.delattr(os, "O_DIRECT")
+
+    def opening(path: Path, flags: int) -> int:
+        if missing == "open" and flags & direct:
+            raise OSError(errno.EINVAL, "invalid argument")
+        return true_open(path, flags)
+
+    def reading(fd: int, buffers: list[memoryview], offset: int) -> int:
+        if missing == "preadv" and fcntl.fcntl(fd, fcntl.F_GETFL) & direct:
+            raise OSError(errno.EIO, "input/output error")
+        return true_read(fd, buffers, offset)
+
+    monkeypatch.setattr(os, "open", opening)
+    monkeypatch.setattr(os, "preadv", reading)
+    with FileBytes(tmp_path / "f") as source:
+        found, faults = source.read(5000, 2 << 20)
+    assert (found.tobytes(), faults) == (content(3 << 20)[5000 : 5000 + (2 << 20)], [])
 
 
 def test_sources_that_are_none(tmp_path: Path) -> None:

@@ -43,7 +43,7 @@ CHUNK = 8 << 20
 CHUNKS = 3
 """Chunks that are in memory at a time."""
 
-RUN = 1 << 20
+RUN = 2 << 20
 """Bytes that one work unit reads and looks at, while they are still in the CPU's cache."""
 
 PIECE = 1 << 20

@@ -88,6 +88,7 @@ def test_signals_end_it_and_leave_nothing(tmp_path: Path, number: signal.Signals
         stdout=subprocess.PIPE,
         stderr=subprocess.PIPE,
         text=True,
+        preexec_fn=lambda: signal.signal(number, signal.SIG_DFL),  # The tests may run under nohup.
     )
     assert process.stdout is not None
     assert process.stdout.readline() == "working\n"

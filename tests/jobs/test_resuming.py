@@ -288,7 +288,11 @@ main()
 def test_a_command_that_is_killed_goes_on(plates: Path, number: signal.Signals) -> None:
     command = [sys.executable, "-c", PROGRAM, "protect", "--memory", "38MiB"]
     protect([plates], output=plates.parent / "whole.oakum", memory=TWICE)
-    process = subprocess.Popen([*command, "--read-rate", "20MiB", str(plates)], stderr=subprocess.PIPE)
+    process = subprocess.Popen(
+        [*command, "--read-rate", "20MiB", str(plates)],
+        stderr=subprocess.PIPE,
+        preexec_fn=lambda: signal.signal(signal.SIGINT, signal.SIG_DFL),  # The tests may run under nohup.
+    )
     while not (plates.parent / STATE).exists():
         assert process.poll() is None
         time.sleep(0.01)

@@ -152,11 +152,24 @@ def test_what_was_changed_after_the_repair_is_not_rolled_back(tree: Path, tmp_pa
     protect([tree])
     rewrite(tree / "z.tar", with_flips(FILES["z.tar"], 3))
     repair(tree, in_place=True)
-    rewrite(tree / "z.tar", with_flips(FILES["z.tar"], 1))
-    before = everything(tmp_path)
-    with pytest.raises(UsageError, match=r"z\.tar was changed after the repair"):
-        roll_back(tree)
-    assert everything(tmp_path) == before
+    for change in (lambda: rewrite(tree / "z.tar", with_flips(FILES["z.tar"], 1)), (tree / "z.tar").unlink):
+        change()
+        before = everything(tmp_path)
+        with pytest.raises(UsageError, match=r"z\.tar was changed after the repair"):
+            roll_back(tree)
+        assert everything(tmp_path) == before
+
+
+def test_a_finished_repair_is_not_finished_again(tree: Path, tmp_path: Path) -> None:
+    """Its journal stays for a roll-back, and makes way for that of the next repair."""
+    protect([tree])
+    for flips in (3, 1):
+        rewrite(tree / "z.tar", with_flips(FILES["z.tar"], flips))
+        before = everything(tmp_path)
+        repair(tree, in_place=True)
+        assert (tree / "z.tar").read_bytes() == FILES["z.tar"]
+    roll_back(tree)
+    assert everything(tmp_path) == {n: d for n, d in before.items() if n != "set.oakum.journal"}
 
 
 def test_hard_links_stay(tree: Path) -> None:
@@ -420,6 +433,42 @@ def test_a_sidecar_that_cannot_be_read_is_not_replaced(
     before.pop("set.oakum.journal")
     assert now["set.oakum"] == before["set.oakum"]
     roll_back(tree)
+
+
+@pytest.mark.parametrize("name", ["open", "preadv", "pread"])
+def test_a_sidecar_that_cannot_be_read_once_is_rolled_back_or_waits(
+    tree: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch, name: str
+) -> None:
+    """It may not count as rolled back already: with its journal what it was would be gone."""
+    sidecar = protect([tree]).sidecar
+    damage(tree)
+    rewrite(sidecar, with_flips(sidecar.read_bytes(), 4))
+    before = snapshot(tmp_path)
+    tried, through, ended = 0, getattr(os, name), False
+    while not ended:
+        repair(tree, in_place=True)
+        tried, calls = tried + 1, 0
+
+        def failing(*args: object, **options: object) -> object:
+            nonlocal calls
+            path = args[0] if isinstance(args[0], Path) else os.readlink(f"/proc/self/fd/{args[0]}")
+            if str(path) == str(sidecar):
+                calls += 1
+                if calls == tried:
+                    raise OSError(5, "Input/output error")
+            return through(*args, **options)
+
+        with monkeypatch.context() as patch:
+            patch.setattr(os, name, failing)
+            try:
+                roll_back(tree)
+            except (CannotCheck, UsageError):
+                assert journal_path(sidecar).exists()
+        ended = calls < tried
+        if journal_path(sidecar).exists():
+            roll_back(tree)
+        assert snapshot(tmp_path) == before
+    assert tried > 2
 
 
 def test_a_folder_that_somebody_filled_stays(tree: Path) -> None:

@@ -1,19 +1,26 @@
 """SIGKILL at every call that changes something: the journal or the old file stands, the next run works.
 
-The command runs in a child process that ends before its N-th such call, as the kernel would end it.
+The command runs in a child process that ends before its N-th such call, as the kernel would end it. Larger
+runs, with several threads and a state to go on from, are killed from outside at random moments.
 """
 
 from __future__ import annotations
 
 import os
 import shutil
+import signal
+import time
+from collections.abc import Callable
 from pathlib import Path
 
+import numpy as np
 import pytest
 from commands import CASES, Case, InPlace, Protect, ProtectAgain, Repair, RollBack, Verify, calls
 from faults import CHANGING, Faults
-from support import snapshot
+from support import content, overwritten, rewrite, snapshot, with_flips
 
+from oakum import encoding, protect, repair, roll_back
+from oakum.jobs import resuming
 from oakum.results import Outcome
 
 
@@ -87,8 +94,6 @@ def _check(case: Case, before: dict[str, bytes | str | None]) -> None:
         case.check(before, not journal)
     elif isinstance(case, InPlace):
         if journal:
-            from oakum import repair
-
             assert repair(case.folder / "set", in_place=True).outcome is Outcome.INTACT
         else:
             assert case.run()
@@ -106,3 +111,69 @@ def _finished(case: InPlace) -> None:
     now = snapshot(case.folder)
     assert now.pop("set.oakum.journal") is not None
     assert {k: v for k, v in now.items() if ".oakum-part" not in k} == {**GOOD, "set.oakum": case.whole}
+
+
+# -- at any moment -----------------------------------------------------------------------------------
+
+RUNS: dict[str, Callable[[Path], object]] = {
+    "protect": lambda path: protect([path], jobs=2, memory=encoding.RESERVE + (4 << 20)),
+    "repair": lambda path: repair(path, jobs=2),
+    "in-place": lambda path: repair(path, in_place=True, jobs=2),
+}
+
+
+def killed_after(seconds: float, run: Callable[[Path], object], path: Path) -> bool:
+    """Run in a child that is killed after some time; whether it was still at work."""
+    child = os.fork()
+    if child == 0:
+        try:
+            run(path)
+        finally:
+            os._exit(0)
+    time.sleep(seconds)
+    os.kill(child, signal.SIGKILL)
+    return os.WIFSIGNALED(os.waitpid(child, 0)[1])
+
+
+@pytest.mark.parametrize("command", RUNS)
+def test_killed_at_any_moment(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch, long: bool, command: str
+) -> None:
+    """After a kill every file is old, or new and whole; the next run ends as if there had been no kill."""
+    monkeypatch.setattr(resuming, "LEAST", 1 << 20)
+    monkeypatch.setattr(resuming, "INTERVAL", 0.0)
+    monkeypatch.setattr(resuming, "SHARE", 0)
+    monkeypatch.setattr(encoding, "CHUNK", 1 << 20)
+    run, folder, data = RUNS[command], tmp_path / "set", content(12 << 20)
+    folder.mkdir()
+    (folder / "f").write_bytes(data)
+    if command != "protect":
+        protect([folder / "f"])
+        rewrite(folder / "f", overwritten(with_flips(data, 2_000), 5_000_000, 300_000))
+    before = snapshot(folder)
+    shutil.copytree(folder, tmp_path / "start")
+
+    def begin_again() -> None:
+        shutil.rmtree(folder)
+        shutil.copytree(tmp_path / "start", folder)
+
+    length = 0.0
+    for _ in range(2):  # The first one loads kernels.
+        begin_again()
+        begin = time.monotonic()
+        run(folder / "f")
+        length, after = time.monotonic() - begin, snapshot(folder)
+    luck, killed = np.random.default_rng(8), 0
+    for _ in range(150 if long else 5):
+        begin_again()
+        killed += killed_after(luck.uniform(0, length), run, folder / "f")
+        now = {n: d for n, d in snapshot(folder).items() if n[0] != "." and not n.endswith(".unfinished")}
+        if "f.oakum.journal" in now:
+            roll_back(folder / "f")
+            assert {n: d for n, d in snapshot(folder).items() if n[0] != "."} == before
+        else:
+            assert now in (before, after)
+        if now != after or command == "in-place":
+            run(folder / "f")
+        assert snapshot(folder) == after
+    assert killed

@@ -69,7 +69,10 @@ def test_signals_in_mid_run(tmp_path: Path, command: str, number: signal.Signals
     part = {"protect": "f.oakum", "repair": "f.mended", "in-place": "f.oakum.journal"}[command]
     arguments = {"protect": ["protect"], "repair": ["repair"], "in-place": ["repair", "--in-place"]}[command]
     process = subprocess.Popen(
-        [*OAKUM, *arguments, "f", "--quiet", "--jobs", "2"], cwd=tmp_path, stderr=subprocess.PIPE
+        [*OAKUM, *arguments, "f", "--quiet", "--jobs", "2"],
+        cwd=tmp_path,
+        stderr=subprocess.PIPE,
+        preexec_fn=lambda: signal.signal(number, signal.SIG_DFL),  # The tests may run under nohup.
     )
     while not (tmp_path / f".{part}.oakum-part").exists() and process.poll() is None:
         time.sleep(0.002)

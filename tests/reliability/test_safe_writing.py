@@ -107,7 +107,7 @@ def test_a_lock_that_comes_too_late(tmp_path: Path, monkeypatch: pytest.MonkeyPa
     assert os.listdir(tmp_path) == []
 
 
-@pytest.mark.parametrize("name", ["pwrite", "ftruncate", "pread", "fstat", "dup", "fchmod", "utime"])
+@pytest.mark.parametrize("name", ["pwrite", "ftruncate", "pread", "fstat", "dup", "fchmod", "utime", "fsync"])
 def test_every_failure_is_one_sentence(tmp_path: Path, monkeypatch: pytest.MonkeyPatch, name: str) -> None:
     with ExitStack() as stack:
         stack.enter_context(pytest.raises(CannotCheck, match="f c.*: input/output error"))
@@ -119,6 +119,7 @@ def test_every_failure_is_one_sentence(tmp_path: Path, monkeypatch: pytest.Monke
             file.write(0, b"1")
             file.resize(1)
             file.read(0, 1)
+            file.sync()
             file.commit(1, mode=0o600, modified_ns=1)
     assert os.listdir(tmp_path) == []
 

@@ -236,27 +236,49 @@ def _replace_sidecar(
     journal: Journal, entry: Entry, patches: list[Patch], place: Place, forward: bool
 ) -> None:
     """Write the sidecar as it is to be, and give it its name; nothing is done where it is so already."""
-    if _is_right(entry, place) == forward:
-        return
     goal = _goal(entry, forward)
-    with FileBytes(place.sidecar) as source, NewFile(place.sidecar, overwrite=True) as file:
-        missing: list[Fault] = []
-        for offset in range(0, min(goal.size, source.size), STEP):
-            data, faults = source.read(offset, min(STEP, min(goal.size, source.size) - offset))
-            file.write(offset, data.data)
-            missing += [(offset + a, offset + b) for a, b in faults]
-        for patch in patches:
-            if forward or not patch.blind:
-                size = patch.new if forward else patch.old
-                missing = without(missing, patch.offset, patch.offset + size)
-        if missing:
-            raise CannotCheck(f"{place.sidecar} cannot be read in full")
-        _put(journal, patches, file.fd, forward)
-        file.resize(goal.size)
-        found = os.stat(place.sidecar)
-        file.commit(
-            goal.size, mode=goal.mode, modified_ns=goal.modified_ns, owner=(found.st_uid, found.st_gid)
-        )
+    with FileBytes(place.sidecar) as source:
+        if _is_new(journal, entry, patches, source) == forward:
+            return
+        with NewFile(place.sidecar, overwrite=True) as file:
+            missing: list[Fault] = []
+            for offset in range(0, min(goal.size, source.size), STEP):
+                data, faults = source.read(offset, min(STEP, min(goal.size, source.size) - offset))
+                file.write(offset, data.data)
+                missing += [(offset + a, offset + b) for a, b in faults]
+            for patch in patches:
+                if forward or not patch.blind:
+                    size = patch.new if forward else patch.old
+                    missing = without(missing, patch.offset, patch.offset + size)
+            if missing:
+                raise CannotCheck(f"{place.sidecar} cannot be read in full")
+            _put(journal, patches, file.fd, forward)
+            file.resize(goal.size)
+            found = os.stat(place.sidecar)
+            file.commit(
+                goal.size, mode=goal.mode, modified_ns=goal.modified_ns, owner=(found.st_uid, found.st_gid)
+            )
+
+
+def _is_new(journal: Journal, entry: Entry, patches: list[Patch], source: FileBytes) -> bool | None:
+    """Whether a sidecar is the new one, not the old one: what can be read where they differ tells.
+
+    None where none of that can be read, though it could be when the journal was drafted: then it does no harm
+    to patch it again.
+    """
+    if source.size != entry.after.size:
+        return False
+    doubtful = False
+    for patch in patches:
+        new = journal.new_bytes(patch)
+        if not patch.blind and journal.old_bytes(patch) != new:
+            found, faults = source.read(patch.offset, len(new))
+            if not faults:
+                return found.tobytes() == new
+            doubtful = True
+    if doubtful:
+        return None
+    return all(not source.read(patch.offset, patch.new)[1] for patch in patches if patch.blind)
 
 
 # -- what a run does with a journal ---------------------------------------------------------------------
