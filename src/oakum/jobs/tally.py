@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import os
+from functools import cached_property
 from pathlib import Path
 
 import numpy as np
@@ -21,7 +22,6 @@ class Tally:
 
     def __init__(self, opened: ProtectedSet) -> None:
         self._opened = opened
-        self._number = {m.piece.path: i for i, m in enumerate(opened.files)}
         self._starts = np.array([m.stream_start for m in opened.files], np.int64)
         self._bits = np.zeros(len(opened.files), np.int64)
         self._lost: dict[bytes, list[tuple[int, int]]] = {}
@@ -120,14 +120,26 @@ class Tally:
                 joined.append((a, b))
         return joined
 
+    @cached_property
+    def _flipped(self) -> dict[bytes, int]:
+        """Flipped bits of the members that have any, when everything has been added."""
+        files = self._opened.files
+        return {files[i].piece.path: int(self._bits[i]) for i in np.flatnonzero(self._bits).tolist()}
+
     def bits_of(self, member: KnownMember) -> int:
-        """Flipped bits of a member."""
-        number = self._number.get(member.piece.path)
-        return 0 if number is None else int(self._bits[number])
+        """Flipped bits of a member. Call it when everything has been added."""
+        return self._flipped.get(member.piece.path, 0)
 
     def members(self) -> list[MemberReport]:
         """One report a member, in the order of the table."""
-        return [self._report(m) for m in self._opened.members.values()]
+        flipped, lost, decode, intact = self._flipped, self._lost, os.fsdecode, MemberState.INTACT
+        return [
+            # Nearly all members of a large set are so, and need no closer look.
+            MemberReport(decode(m.piece.path), m.size, intact, 0, _KINDS[m.piece.kind])
+            if m.right and not m.fault and m.piece.path not in flipped and m.piece.path not in lost
+            else self._report(m)
+            for m in self._opened.members.values()
+        ]
 
     def _report(self, member: KnownMember) -> MemberReport:
         lost = self.lost_of(member)
