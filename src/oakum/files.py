@@ -391,19 +391,20 @@ class NewFile:
                 let_go(fd)
 
     def write(self, offset: int, data: bytes | bytearray | memoryview) -> None:
-        """Put all of `data` at `offset`."""
+        """Put all of `data` at `offset`; several threads may do so at a time."""
+        try:
+            write_all(self.fd, offset, data)
+        except OSError as error:
+            raise self._failed(reason(error)) from None
         with self._writing:
-            try:
-                write_all(self.fd, offset, data)
-            except OSError as error:
-                raise self._failed(reason(error)) from None
             self._unsent += len(data)
-            if self._unsent >= WRITE_BEHIND:
-                self._sent += self._unsent
-                self._unsent = 0
-                pagecache.begin_writing(self.fd)
-                if pagecache.is_much(self._sent):
-                    pagecache.drop(self.fd)
+            if self._unsent < WRITE_BEHIND:
+                return
+            self._sent += self._unsent
+            self._unsent = 0
+        pagecache.begin_writing(self.fd)
+        if pagecache.is_much(self._sent):
+            pagecache.drop(self.fd)
 
     def sync(self) -> None:
         """Bring what was written so far to the medium, for a state that speaks of it."""
@@ -428,6 +429,15 @@ class NewFile:
         if len(data) != length:
             raise self._failed("what was written cannot be read back")
         return data
+
+    def read_into(self, offset: int, buffer: memoryview) -> None:
+        """Fill `buffer` with the bytes written at `offset`."""
+        try:
+            faults = read_into(self.fd, offset, buffer)
+        except OSError as error:
+            raise self._failed(reason(error)) from None
+        if faults:
+            raise self._failed("what was written cannot be read back")
 
     def _failed(self, why: str) -> CannotCheck:
         return CannotCheck(f"{self.path} could not be written: {why}")

@@ -329,11 +329,14 @@ class Mending:
             return False
         digest = hashlib.sha256()
         hashing: list[Future[None]] = []
+        buffers = [aligned(min(COPY_STEP, copy.member.size)).data for _ in range(2)]
         for start in range(0, copy.member.size, COPY_STEP):
-            data = self._wake(copy).read(start, min(COPY_STEP, copy.member.size - start))
+            data = buffers[0][: copy.member.size - start]
+            self._wake(copy).read_into(start, data)
             wait_all(hashing)
             hashing = [check.pools.ordered.submit(digest.update, data)]
             check.progress.advance(len(data))
+            buffers.reverse()
         wait_all(hashing)
         return digest.digest() == copy.member.sha256
 
