@@ -169,11 +169,12 @@ class InPlace(Repair):
         known = dict(before)
         with Journal(self.sidecar, write=False) as journal:
             for entry, patches in zip(journal.contents.entries, journal.contents.patches, strict=True):
-                for patch in (p for p in patches if p.blind):
-                    data = known[os.fsdecode(entry.path)]
-                    assert isinstance(data, bytes)
-                    rest = data[patch.offset + patch.new :]
-                    known[os.fsdecode(entry.path)] = data[: patch.offset] + journal.new_bytes(patch) + rest
+                name = os.fsdecode(entry.path)
+                data = before.get(name)
+                for patch in patches:
+                    if patch.blind and isinstance(data, bytes):
+                        new = journal.new_bytes(patch)
+                        known[name] = data = data[: patch.offset] + new + data[patch.offset + patch.new :]
         return known
 
 

@@ -5,6 +5,7 @@ from __future__ import annotations
 import os
 import shutil
 from pathlib import Path
+from typing import Any
 
 import pytest
 from support import BadSectors, content, overwritten, plant, rewrite, snapshot, with_flips
@@ -158,6 +159,29 @@ def test_what_was_changed_after_the_repair_is_not_rolled_back(tree: Path, tmp_pa
         with pytest.raises(UsageError, match=r"z\.tar was changed after the repair"):
             roll_back(tree)
         assert everything(tmp_path) == before
+
+
+def test_what_cannot_be_read_was_not_changed(
+    tree: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    protect([tree])
+    rewrite(tree / "z.tar", with_flips(FILES["z.tar"], 3))
+    bad = everything(tmp_path)
+    repair(tree, in_place=True)
+    before, through = everything(tmp_path), os.pread
+
+    def failing(fd: int, *args: int) -> bytes:
+        if os.path.samefile(fd, tree / "z.tar"):
+            raise OSError(5, "Input/output error")
+        return through(fd, *args)
+
+    with monkeypatch.context() as patch:
+        patch.setattr(os, "pread", failing)
+        with pytest.raises(CannotCheck, match="cannot be read: input/output error; nothing was changed"):
+            roll_back(tree)
+    assert everything(tmp_path) == before
+    roll_back(tree)
+    assert everything(tmp_path) == bad
 
 
 def test_a_finished_repair_is_not_finished_again(tree: Path, tmp_path: Path) -> None:
@@ -436,39 +460,74 @@ def test_a_sidecar_that_cannot_be_read_is_not_replaced(
 
 
 @pytest.mark.parametrize("name", ["open", "preadv", "pread"])
-def test_a_sidecar_that_cannot_be_read_once_is_rolled_back_or_waits(
+def test_a_sidecar_that_cannot_be_read_does_not_count_as_rolled_back(
     tree: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch, name: str
 ) -> None:
-    """It may not count as rolled back already: with its journal what it was would be gone."""
+    """With its journal what it was would be gone."""
     sidecar = protect([tree]).sidecar
-    damage(tree)
     rewrite(sidecar, with_flips(sidecar.read_bytes(), 4))
     before = snapshot(tmp_path)
-    tried, through, ended = 0, getattr(os, name), False
-    while not ended:
-        repair(tree, in_place=True)
-        tried, calls = tried + 1, 0
+    repair(tree, in_place=True)
+    through, carry_out = getattr(os, name), replay.carry_out
 
-        def failing(*args: object, **options: object) -> object:
-            nonlocal calls
-            path = args[0] if isinstance(args[0], Path) else os.readlink(f"/proc/self/fd/{args[0]}")
-            if str(path) == str(sidecar):
-                calls += 1
-                if calls == tried:
-                    raise OSError(5, "Input/output error")
-            return through(*args, **options)
+    def failing(place: int | Path, *args: object, **options: object) -> object:
+        if os.path.samefile(place, sidecar):
+            raise OSError(5, "Input/output error")
+        return through(place, *args, **options)
 
+    def on_a_bad_medium(*args: Any, **options: Any) -> None:
         with monkeypatch.context() as patch:
             patch.setattr(os, name, failing)
-            try:
+            carry_out(*args, **options)
+
+    with monkeypatch.context() as patch:
+        patch.setattr(replay, "carry_out", on_a_bad_medium)
+        try:
+            roll_back(tree)
+        except CannotCheck:
+            assert journal_path(sidecar).exists()
+    if journal_path(sidecar).exists():
+        roll_back(tree)
+    assert snapshot(tmp_path) == before
+
+
+def test_a_sidecar_that_reads_worse_after_its_repair(
+    tree: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """Every place that was put right became unreadable: they are those of which all is known."""
+    sidecar = protect([tree]).sidecar
+    rewrite(sidecar, with_flips(sidecar.read_bytes(), 4))
+    before = snapshot(tmp_path)
+    repair(tree, in_place=True)
+    with Journal(sidecar, write=False) as journal:
+        places = [(p.offset, p.offset + p.new) for p in journal.contents.patches[0]]
+    BadSectors({sidecar: places}).install(monkeypatch)
+    roll_back(tree)
+    monkeypatch.undo()
+    assert snapshot(tmp_path) == before
+
+
+def test_an_unreadable_sidecar_that_was_not_replaced_yet(
+    tree: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """A repair in place of it was interrupted: it is undone though its bad sectors read no better."""
+    sidecar = protect([tree]).sidecar
+    whole = sidecar.read_bytes()
+    before = snapshot(tmp_path)
+    bad = BadSectors({sidecar: [(8_192, 8_704)]})
+    for replaced in (False, True):
+        with monkeypatch.context() as patch:
+            bad.install(patch)
+            patch.setattr("oakum.jobs.inplace.finish", lambda *_: (_ for _ in ()).throw(KeyboardInterrupt))
+            with pytest.raises(KeyboardInterrupt):
+                repair(tree, in_place=True)
+            if not replaced:
                 roll_back(tree)
-            except (CannotCheck, UsageError):
-                assert journal_path(sidecar).exists()
-        ended = calls < tried
-        if journal_path(sidecar).exists():
+        if replaced:
+            assert repair(tree, in_place=True).outcome is Outcome.INTACT
             roll_back(tree)
         assert snapshot(tmp_path) == before
-    assert tried > 2
+    assert sidecar.read_bytes() == whole
 
 
 def test_a_folder_that_somebody_filled_stays(tree: Path) -> None:

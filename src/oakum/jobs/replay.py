@@ -6,6 +6,7 @@ ownership and everything else about them stay; the sidecar is replaced as a whol
 
 from __future__ import annotations
 
+import errno
 import hashlib
 import os
 import stat
@@ -20,6 +21,9 @@ from oakum.members import open_folder
 from oakum.sidecar.reading import find_sections
 
 STEP = 4 << 20
+
+_SOMETHING_ELSE = (errno.ENOENT, errno.ENOTDIR, errno.ELOOP, errno.EISDIR, errno.EINVAL)
+"""Errors of a name behind which there is nothing, or no file, or no link."""
 
 
 class Place:
@@ -85,7 +89,7 @@ def refuse_unfit(contents: Contents, place: Place) -> None:
 
 
 def first_wrong(contents: Contents, place: Place) -> Path | None:
-    """The first entry that does not stand as after the repair; None when all do."""
+    """The first entry that does not stand as after the repair; None when all do. Raises OSError."""
     for entry in contents.entries:
         if not _is_right(entry, place):
             return place.shown(entry)
@@ -104,7 +108,9 @@ def _is_right(entry: Entry, place: Place) -> bool:
             return stat.S_ISDIR(os.stat(name, dir_fd=folder, follow_symlinks=False).st_mode)
         finally:
             let_go(folder)
-    except OSError:
+    except OSError as error:
+        if error.errno not in _SOMETHING_ELSE:
+            raise
         return False
 
 
@@ -354,7 +360,11 @@ def undo(sidecar: Path, root: Path | None) -> list[Entry]:
     with journal, Place(sidecar.parent if root is None else root, sidecar) as place:
         _refuse_foreign(journal, sidecar)
         if journal.finished:
-            changed = first_wrong(journal.contents, place)
+            try:
+                changed = first_wrong(journal.contents, place)
+            except OSError as error:
+                why = f"what the repair wrote cannot be read: {reason(error)}; nothing was changed"
+                raise CannotCheck(why) from None
             if changed is not None:
                 raise UsageError(
                     f"{changed} was changed after the repair, and rolling back would undo that too; "
