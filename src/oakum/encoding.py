@@ -229,6 +229,7 @@ class WindowEncoder:
         window[g.cells_end :] = 0
         for survey in surveys:
             wait_all(survey.filled, self._report)
+        self._report()
         parity = _rows(g.r, g.depth)
         products = self._multiply(self._pools.work, strips, 0, parity, last=True)
         for survey in surveys:
@@ -250,6 +251,7 @@ class WindowEncoder:
             surveys[slot] = survey = self._survey(first * g.depth, strips.reshape(-1), surveys[slot])
             # The parity of one batch is stored before the next one.
             wait_all([*survey.filled, *products], self._report)
+            self._report()
             last = first + len(strips) == self._used_strips
             products = self._multiply(self._pools.work, strips, first, parity, last=last)
         wait_all(products)

@@ -208,8 +208,11 @@ class _Job:
         self._hashing = False
         self._kernels = Kernels.of(code)
         self._members = members
-        self._unchanged: Future[None]
-        """A last look at the members, taken while the records are written."""
+        self._left = 0
+        """Bytes still to be read."""
+
+        self._unchanged: Future[None] | None = None
+        """A last look at the members, taken when all is read, while there is more to compute and write."""
 
         self._total = sum(m.size for m in members)
         geometries = [geometry_of(code, w) for w in windows]
@@ -241,9 +244,8 @@ class _Job:
 
     def write(self, folder: Folder, file: NewFile, state: State, halfway: Halfway) -> int:
         """Write the sidecar into `file`, from `halfway` on; returns its length in bytes."""
-        self._progress.phase(
-            "reading" if self.reads == 1 else "reading twice", self._to_read - self._read_before(halfway)
-        )
+        self._left = self._to_read - self._read_before(halfway)
+        self._progress.phase("reading" if self.reads == 1 else "reading twice", self._left)
         self._refuse_full(file)
         begin, keeper = halfway.window, Keeper(file, state)
         place, first, parent = halfway.place, halfway.first, halfway.parent
@@ -263,7 +265,10 @@ class _Job:
             parent = done.identity
             first = first if window.index else done.identity
             place += layout.size
-        self._unchanged.result()
+        if self._unchanged is None:
+            _refuse_changed(folder, self._members)
+        else:
+            self._unchanged.result()
         return place
 
     def _encode(
@@ -280,6 +285,12 @@ class _Job:
         once = plan.reads == 1 or not pagecache.holds(geometry.length)
         stream = MemberStream(folder, spans, once=once)
 
+        def advance(nbytes: int) -> None:
+            self._progress.advance(nbytes)
+            self._left -= nbytes
+            if nbytes and not self._left:
+                self._unchanged = self._pools.work.submit(_refuse_changed, folder, self._members)
+
         def mark(first: Leg, second: Leg) -> None:
             digests = partial(self._hasher.digests_before, first.at)
             keeper.keep(lambda: replace(halfway, digests=digests(), legs=(first, second)))
@@ -287,8 +298,7 @@ class _Job:
         try:
             self._expect(folder, spans, halfway)
             encoder = WindowEncoder(
-                geometry, self._kernels, writer, stream, self._hasher, self._pools,
-                self._progress.advance, mark,
+                geometry, self._kernels, writer, stream, self._hasher, self._pools, advance, mark,
             )  # fmt: skip
             encoder.run(plan, halfway.legs)
         except Unreadable as error:
@@ -301,8 +311,6 @@ class _Job:
             ) from None
         finally:
             stream.close()
-        if geometry is self._geometries[-1]:
-            self._unchanged = self._pools.work.submit(_refuse_changed, folder, self._members)
         return writer.finish(pack_table(pieces, self._hasher.digests))
 
     def _expect(self, folder: Folder, spans: Sequence[Part], halfway: Halfway) -> None:
