@@ -14,6 +14,7 @@ import argparse
 import os
 import platform
 import statistics
+import subprocess
 import sys
 import tempfile
 import time
@@ -34,18 +35,26 @@ def size_of(text: str) -> int:
     return int(text[:-3]) * UNITS[text[-3:]]
 
 
+LAUNCHER = """
+import os, sys, time
+silent = [(os.POSIX_SPAWN_OPEN, 1, os.devnull, os.O_WRONLY, 0)]
+begin = time.perf_counter()
+pid = os.posix_spawnp(sys.argv[1], sys.argv[1:], os.environ, file_actions=silent)
+_, status, usage = os.wait4(pid, 0)
+print(time.perf_counter() - begin, usage.ru_maxrss / 1024, os.waitstatus_to_exitcode(status))
+"""
+"""A small process that starts others: the peak of memory of a process includes that of its parent."""
+
+
 def run(command: Sequence[str]) -> tuple[float, float]:
     """Wall seconds and peak memory in MiB of a process; raises RuntimeError when it fails."""
     os.sync()  # Nobody waits for what another one wrote.
-    begin = time.perf_counter()
-    pid = os.posix_spawnp(
-        command[0], command, ENVIRONMENT, file_actions=[(os.POSIX_SPAWN_OPEN, 1, os.devnull, os.O_WRONLY, 0)]
-    )
-    _, status, usage = os.wait4(pid, 0)
-    seconds = time.perf_counter() - begin
-    if status:
-        raise RuntimeError(f"{' '.join(command)} ended with {os.waitstatus_to_exitcode(status)}")
-    return seconds, usage.ru_maxrss / 1024
+    launched = [sys.executable, "-S", "-c", LAUNCHER, *command]
+    told = subprocess.run(launched, env=ENVIRONMENT, stdout=subprocess.PIPE, text=True, check=True).stdout
+    seconds, memory, status = told.split()
+    if status != "0":
+        raise RuntimeError(f"{' '.join(command)} ended with {status}")
+    return float(seconds), float(memory)
 
 
 def read(path: Path) -> None:
