@@ -229,7 +229,6 @@ class WindowEncoder:
         window[g.cells_end :] = 0
         for survey in surveys:
             wait_all(survey.filled, self._report)
-        self._report()
         parity = _rows(g.r, g.depth)
         products = self._multiply(self._pools.work, strips, 0, parity, last=True)
         for survey in surveys:
@@ -251,7 +250,6 @@ class WindowEncoder:
             surveys[slot] = survey = self._survey(first * g.depth, strips.reshape(-1), surveys[slot])
             # The parity of one batch is stored before the next one.
             wait_all([*survey.filled, *products], self._report)
-            self._report()
             last = first + len(strips) == self._used_strips
             products = self._multiply(self._pools.work, strips, first, parity, last=last)
         wait_all(products)
@@ -271,7 +269,6 @@ class WindowEncoder:
             except BaseException:
                 self._abandoned = True
                 raise
-        self._report()
         if (self._first.sum - self._second.sum) % (1 << 64):
             self._find_change()
 
@@ -406,7 +403,6 @@ class WindowEncoder:
         if survey is None:
             return
         wait_all([*survey.filled, survey.hashed], self._report)
-        self._report()
         self._add_digests(Track.DATA, survey.digests)
         self._write_inner(self._g.parity_bytes + survey.inner_start, survey.inner, self._inner_cells)
 

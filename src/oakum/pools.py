@@ -163,9 +163,11 @@ class Meter:
 
 
 def wait_all(futures: Iterable[Future[Any]], meanwhile: Callable[[], None] | None = None) -> None:
-    """Wait for all and pass on the first failure; `meanwhile` is called now and then."""
+    """Wait for all and pass on the first failure; `meanwhile` is called now and then, and at the end."""
     for future in futures:
         while meanwhile is not None and not future.done():
             wait([future], PATIENCE)
             meanwhile()
         future.result()
+    if meanwhile is not None:
+        meanwhile()

@@ -7,7 +7,8 @@ import pytest
 import xxhash
 from guarded import guarded
 
-from oakum.kernels.cells import CELL, cell_digests
+from oakum.kernels.cells import cell_digests
+from oakum.kernels.words import CELL
 
 
 def expected(data: np.ndarray) -> list[int]:

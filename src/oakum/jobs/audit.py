@@ -164,7 +164,6 @@ class AuditCheck(SetCheck):
 
     def __post_init__(self) -> None:
         super().__post_init__()
-        self.length = sum(s.geometry.length for s in self.opened.sections)
         self._along: NDArray[np.int64] = np.zeros(BINS, np.int64)
         self._dice = np.random.default_rng([self.seed, len(self.opened.sections)])
         self._chosen = self._choose_windows()
@@ -198,7 +197,7 @@ class AuditCheck(SetCheck):
     @property
     def coverage(self) -> float:
         """The share of the stream that was read."""
-        return sum(w.extent[0] for w in self.windows) / self.length if self.length else 1.0
+        return sum(w.extent[0] for w in self.windows) / self.opened.length if self.opened.length else 1.0
 
     # -- what was found ----------------------------------------------------------------------------
 
@@ -206,7 +205,7 @@ class AuditCheck(SetCheck):
         """Gather what a block says about its errors."""
         self.unsteady += finding.unsteady
         self.uncorrected += sum(b - a for a, b in finding.lost)
-        bins = finding.places * BINS // max(1, self.length)
+        bins = finding.places * BINS // max(1, self.opened.length)
         np.add.at(self._along, bins, finding.bits)
         for start, received, right in finding.evidence:
             for member in self.opened.members_at(start, len(received)):
@@ -293,7 +292,7 @@ class AuditCheck(SetCheck):
             lowest_margin=None if lost else 1.0 if weakest is None else weakest.margin,
             margin_at=None if lost or weakest is None else (weakest.window, weakest.block),
             coverage=self.coverage,
-            stream_bytes=self.length,
+            stream_bytes=self.opened.length,
             depth=self.opened.sections[0].geometry.depth,
             windows=len(self.opened.sections),
         )

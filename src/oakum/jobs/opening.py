@@ -104,6 +104,8 @@ class ProtectedSet:
         """Those that have bytes, in the order of the stream."""
 
         self._starts = [m.stream_start for m in self.files]
+        self.length = sum(s.geometry.length for s in self.sections)
+        """Bytes of the stream for which there are sections."""
 
     @property
     def incomplete(self) -> bool:

@@ -126,10 +126,6 @@ class Tally:
         files = self._opened.files
         return {files[i].piece.path: int(self._bits[i]) for i in np.flatnonzero(self._bits).tolist()}
 
-    def bits_of(self, member: KnownMember) -> int:
-        """Flipped bits of a member. Call it when everything has been added."""
-        return self._flipped.get(member.piece.path, 0)
-
     def members(self) -> list[MemberReport]:
         """One report a member, in the order of the table."""
         flipped, lost, decode, intact = self._flipped, self._lost, os.fsdecode, MemberState.INTACT
@@ -143,7 +139,7 @@ class Tally:
 
     def _report(self, member: KnownMember) -> MemberReport:
         lost = self.lost_of(member)
-        bits: int | None = self.bits_of(member)
+        bits: int | None = self._flipped.get(member.piece.path, 0)
         detail = member.fault
         if lost or (member.piece.kind is Kind.FILE and not member.right and not member.checked):
             state, bits = MemberState.UNCORRECTABLE, None

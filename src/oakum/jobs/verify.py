@@ -81,7 +81,7 @@ def _state(opened: ProtectedSet, digests_only: bool) -> State:
     """The state file of this run, beside the sidecar or in the user's state folder; small sets have none."""
     sidecar = opened.path
     places = [beside(sidecar), *filter(None, [in_state_folder(sidecar)])]
-    if sum(s.geometry.length for s in opened.sections) < resuming.LEAST:
+    if opened.length < resuming.LEAST:
         places = [place for place in places if os.path.lexists(place)]
     if not places:
         return State([], "")
@@ -94,8 +94,7 @@ def _state(opened: ProtectedSet, digests_only: bool) -> State:
 
 def _skipped(nbytes: int, opened: ProtectedSet) -> str:
     """A sentence on what need not be read again."""
-    length = sum(s.geometry.length for s in opened.sections)
-    return f"an earlier run was interrupted; {nbytes:,} of {length:,} bytes need not be read again"
+    return f"an earlier run was interrupted; {nbytes:,} of {opened.length:,} bytes need not be read again"
 
 
 def _warnings(check: SetCheck) -> Iterator[str]:

@@ -10,8 +10,7 @@ import xxhash
 from numpy.typing import NDArray
 
 from oakum.kernels.compiling import Kernel
-
-CELL = 4096
+from oakum.kernels.words import CELL
 
 
 def prepare() -> None:

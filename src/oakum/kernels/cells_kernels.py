@@ -13,9 +13,9 @@ from typing import Any
 import numpy as np
 from llvmlite import ir
 
-from oakum.kernels.cells import CELL
 from oakum.kernels.compiling import typed
 from oakum.kernels.simd import I32, I64, Builder, Value, intrinsic, load, nothing, signature, store
+from oakum.kernels.words import CELL
 
 STRIPE = 64
 BLOCK = 16
