@@ -13,7 +13,7 @@ from llvmlite import ir
 from numba import types
 
 from oakum.kernels.lane_field import FIELD, PLANE_WORDS
-from oakum.kernels.simd import I1, I8, I32, I64, Builder, Value
+from oakum.kernels.simd import I1, I8, I64, Builder, Value
 
 Planes = list[Value]
 
@@ -29,13 +29,6 @@ def number(value: int) -> Value:
 
 def all_bytes(byte: int) -> Value:
     return ir.Constant(BYTES, [byte] * 64)
-
-
-def all_words(builder: Builder, word: Value) -> Value:
-    """The plane of which every word is `word`."""
-    vector = builder.insert_element(ir.Constant(PLANE, ir.Undefined), word, ir.Constant(I32, 0))
-    zeros = ir.Constant(ir.VectorType(I32, PLANE_WORDS), [0] * PLANE_WORDS)
-    return builder.shuffle_vector(vector, ir.Constant(PLANE, ir.Undefined), zeros)
 
 
 def plain(context: Any, builder: Builder, kind: Any, argument: Value) -> list[Value]:
